@@ -1,0 +1,63 @@
+"""Reaching a Dask cluster: the user's own, or one made here on the loopback interface."""
+
+from __future__ import annotations
+
+import contextlib
+from collections.abc import Iterator
+from pathlib import Path
+
+import dask
+from distributed import Client, LocalCluster
+
+from breakstep.errors import ClusterError
+
+CONNECT_SECONDS = 10
+
+
+@contextlib.contextmanager
+def local_cluster(workers: int, threads: int = 1) -> Iterator[Client]:
+    """A cluster of worker processes on this machine, gone when the context ends.
+
+    Scheduler and workers listen on loopback alone. Each worker's BLAS runs one thread (Dask's own
+    default for its worker processes), so that the tasks are the only parallelism.
+    """
+    quiet = {"distributed.worker.memory.terminate": False, "distributed.admin.large-graph-warning-threshold": "100MB"}
+    with (
+        dask.config.set(quiet),
+        LocalCluster(
+            n_workers=workers,
+            threads_per_worker=threads,
+            processes=True,
+            host="127.0.0.1",
+            dashboard_address=None,
+            silence_logs=50,
+        ) as cluster,
+        Client(cluster) as client,
+    ):
+        yield client
+
+
+@contextlib.contextmanager
+def existing_cluster(address: str | None = None, scheduler_file: Path | None = None) -> Iterator[Client]:
+    """A cluster that the user runs, by address or scheduler file.
+
+    Raises
+    ------
+    ClusterError
+        Nobody answers there.
+    """
+    where = f"at {address}" if address else f"of scheduler file {scheduler_file}"
+    try:
+        if scheduler_file is not None:
+            if not scheduler_file.is_file():
+                raise ClusterError(f"there is no scheduler file {scheduler_file}; is the scheduler running?")
+            client = Client(scheduler_file=str(scheduler_file), timeout=CONNECT_SECONDS)
+        else:
+            client = Client(address, timeout=CONNECT_SECONDS)
+    except (OSError, ValueError, TimeoutError) as error:
+        raise ClusterError(
+            f"no Dask scheduler answers {where} within {CONNECT_SECONDS} s ({type(error).__name__});"
+            " check the address and that the scheduler runs"
+        ) from error
+    with client:
+        yield client

@@ -1,0 +1,218 @@
+"""Executing one task: halos in, kernels, checks, arrays out, with every nanosecond noted.
+
+All dispatches call this, so that the same inputs give the same bits everywhere. Outputs are
+write-protected: a kernel that changes what it was given fails at once.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from breakstep.engine.program import Program
+from breakstep.errors import KernelError
+from breakstep.kernels.finite import first_not_finite
+from breakstep.mesh.fields import Field
+from breakstep.mesh.halo import assemble
+from breakstep.mesh.mesh import Triple
+from breakstep.mesh.tiling import Tile
+from breakstep.steps.step import Array, Call, Step
+
+
+@dataclass(frozen=True)
+class Site:
+    """Which step task this is: a stage of the program at one tile, cycle and iteration."""
+
+    stage: int
+    tile: int
+    cycle: int
+    iteration: int
+
+
+@dataclass
+class Inputs:
+    """Everything a step task waits for.
+
+    Attributes
+    ----------
+    own : mapping of field to ndarray
+        The tile's own zones of every field read.
+    rims : mapping of field to mapping of offset to ndarray
+        Neighbours' zones, cut to what is read.
+    values : mapping of reduction to ndarray
+        Results that the steps use.
+    passes : bool
+        Whether the repeat has already converged, so that fields are handed on as they are.
+    """
+
+    own: Mapping[str, Array]
+    rims: Mapping[str, Mapping[Triple, Array]] = field(default_factory=dict)
+    values: Mapping[str, Array] = field(default_factory=dict)
+    passes: bool = False
+
+
+@dataclass
+class Interval:
+    """A stretch of one task spent on one thing [ns]."""
+
+    what: str
+    step: str
+    start: int
+    end: int
+    cpu: int
+
+
+@dataclass
+class Output:
+    """What a step task made, and how.
+
+    ``partials`` holds each reduction's contribution, or None when the task passed its fields through.
+    """
+
+    fields: dict[str, Array]
+    partials: dict[str, Array | None]
+    skipped: bool = False
+    intervals: list[Interval] = field(default_factory=list)
+    counters: list[tuple[str, str, int]] = field(default_factory=list)
+
+    @property
+    def nbytes(self) -> int:
+        """Bytes of the arrays made by this task (handed-on arrays are somebody else's)."""
+        return 0 if self.skipped else sum(array.nbytes for array in self.fields.values())
+
+
+class Stopwatch:
+    """Notes intervals of wall and thread CPU time."""
+
+    def __init__(self) -> None:
+        self.intervals: list[Interval] = []
+
+    def start(self) -> tuple[int, int]:
+        """Begin; hand the result to :meth:`stop`."""
+        return time.perf_counter_ns(), time.thread_time_ns()
+
+    def stop(self, what: str, step: str, began: tuple[int, int]) -> None:
+        """End an interval."""
+        cpu = time.thread_time_ns() - began[1]
+        self.intervals.append(Interval(what, step, began[0], time.perf_counter_ns(), cpu))
+
+
+def execute(program: Program, site: Site, inputs: Inputs) -> Output:
+    """Run one step task.
+
+    Raises
+    ------
+    KernelError
+        A kernel yielded a wrong shape or a number that is not finite, or says so itself.
+    """
+    stage = program.template.stages[site.stage]
+    if inputs.passes:
+        fields = {name: inputs.own[name] for name in stage.writes}
+        return Output(fields, dict.fromkeys((r.name for r in stage.partials), None), skipped=True)
+    watch = Stopwatch()
+    arrays = dict(inputs.own)
+    output = Output({}, {}, intervals=watch.intervals)
+    for step in stage.steps:
+        call = _call(program, site, step.name, inputs.values, step.fraction)
+        given = _gather(program, site.tile, step, arrays, inputs, watch)
+        began = watch.start()
+        made = dict(step.kernel(given, call))
+        watch.stop("kernel", step.name, began)
+        check_arrays(made, step.writes, program.fields, program.tiling.tiles[site.tile], call.where())
+        arrays.update(made)
+        output.counters += [(step.name, name, amount) for name, amount in call.counters.items()]
+    for reduction in stage.partials:
+        call = _call(program, site, reduction.name, inputs.values, 1.0)
+        began = watch.start()
+        vector = reduction.kernel({read.field: arrays[read.field] for read in reduction.reads}, call)
+        watch.stop("kernel", reduction.name, began)
+        output.partials[reduction.name] = _check_vector(vector, call)
+    output.fields = {name: arrays[name] for name in stage.writes}
+    return output
+
+
+def _call(program: Program, site: Site, step: str, values: Mapping[str, Array], fraction: float) -> Call:
+    tile, mesh = program.tiling.tiles[site.tile], program.problem.mesh
+    return Call(
+        step=step,
+        cycle=site.cycle,
+        iteration=site.iteration,
+        tile=site.tile,
+        origin=tile.origin,
+        shape=tile.shape,
+        widths=mesh.widths,
+        active=mesh.active,
+        values=values,
+        fraction=fraction,
+    )
+
+
+def _gather(
+    program: Program, tile: int, step: Step, arrays: Mapping[str, Array], inputs: Inputs, watch: Stopwatch
+) -> dict[str, Array]:
+    """The arrays one step reads; halos are assembled for the stage's outside reads only."""
+    given = {}
+    for read in step.reads:
+        if read.is_local:
+            given[read.field] = arrays[read.field]
+            continue
+        began = watch.start()
+        plan = program.plans.plan(tile, read)
+        rims = inputs.rims.get(read.field, {})
+        given[read.field] = assemble(plan, program.fields[read.field], arrays[read.field], rims)
+        watch.stop("halo", step.name, began)
+    return given
+
+
+def check_arrays(
+    made: Mapping[str, Array], expected: Sequence[str], fields: Mapping[str, Field], tile: Tile, where: str
+) -> None:
+    """Refuse missing, extra, misshapen or not finite arrays; write-protect the good ones.
+
+    Raises
+    ------
+    KernelError
+    """
+    if set(made) != set(expected):
+        raise KernelError(
+            f"{where}: expected new arrays for {_listed(expected)}, got {_listed(made)};"
+            " return one array for each declared write"
+        )
+    for name, array in made.items():
+        shape = (fields[name].size, *tile.shape)
+        if not isinstance(array, np.ndarray) or array.dtype != np.float64 or array.shape != shape:
+            came = f"{array.dtype} {array.shape}" if isinstance(array, np.ndarray) else type(array).__name__
+            raise KernelError(f"{where}: field {name!r} must be float64 of shape {shape}, got {came}")
+        flat = np.ascontiguousarray(array).reshape(-1)
+        bad = first_not_finite(flat)
+        if bad >= 0:
+            component, *zone = (int(i) for i in np.unravel_index(bad, shape))
+            raise not_finite(fields[name], component, _global(zone, tile), float(flat[bad]), where)
+        array.flags.writeable = False
+
+
+def not_finite(field: Field, component: int, zone: Triple, value: float, where: str) -> KernelError:
+    """The error for a zone that holds NaN or an infinity."""
+    return KernelError(
+        f"{where}: {field.name} {field.components[component]} is {value} in zone {zone};"
+        " the state before it and the time step are the places to look",
+        zone=zone,
+    )
+
+
+def _global(zone: Sequence[int], tile: Tile) -> Triple:
+    return tuple(z + o for z, o in zip(zone, tile.origin, strict=True))  # type: ignore[return-value]
+
+
+def _check_vector(vector: object, call: Call) -> Array:
+    array = np.asarray(vector, dtype=np.float64)
+    if array.ndim != 1:
+        raise KernelError(f"{call.where()}: a reduction's kernel must return a vector, got shape {array.shape}")
+    return array
+
+
+def _listed(names: Sequence[str] | Mapping[str, Array]) -> str:
+    return ", ".join(sorted(names)) or "nothing"

@@ -1,0 +1,296 @@
+"""The client's side of the native dispatch: phases become batches of Dask tasks, a window of cycles ahead.
+
+Dask is used through its public interface alone: graphs go in with ``Client.get(..., sync=False)``, workers
+and priorities by ``dask.annotate``. A batch names tasks of earlier batches by key; futures of phases that
+may still be read keep those alive.
+"""
+
+from __future__ import annotations
+
+import time
+import uuid
+from concurrent.futures import CancelledError
+from dataclasses import dataclass
+from typing import Any
+
+import dask
+from dask._task_spec import Task as DaskTask
+from distributed import Client, Future, KilledWorker, wait
+
+from breakstep.engine.clocks import ClockReading, read_clocks
+from breakstep.engine.native import payload as wire
+from breakstep.engine.native import worker as remote
+from breakstep.engine.native.payload import Arrival, Payload
+from breakstep.engine.native.translate import Translation
+from breakstep.engine.placement import owners
+from breakstep.engine.program import Program
+from breakstep.engine.recording import record_edges
+from breakstep.engine.run import Progress, RunOptions, RunResult, unroller_for
+from breakstep.engine.warm import warm_up
+from breakstep.errors import BreakstepError, ClusterError
+from breakstep.graph.tasks import ANYWHERE, Kind, Task, TaskGraph
+from breakstep.graph.unroll import INITIAL, Need, Phase
+from breakstep.profile.record import RunRecord
+from breakstep.steps.step import Array
+
+POLL_SECONDS = 2.0  # how often a wait looks whether all workers are still there
+BATCH_TASKS = 256  # a batch costs the client about 2 ms, so it should hold many tasks
+
+
+class NativeDispatch:
+    """Runs programs on a Dask cluster.
+
+    Parameters
+    ----------
+    client : distributed.Client
+    workers : int, optional
+        How many of the cluster's workers to use; all by default.
+    """
+
+    name = "native"
+
+    def __init__(self, client: Client, workers: int | None = None) -> None:
+        self.client = client
+        known = sorted(client.scheduler_info(n_workers=-1)["workers"].items(), key=lambda item: str(item[1]["name"]))
+        if not known:
+            raise ClusterError("the Dask cluster has no workers; start some and try again")
+        if workers is not None and workers > len(known):
+            raise ClusterError(f"{workers} workers were asked for, but the Dask cluster has {len(known)}")
+        self.addresses = [address for address, _ in known[:workers]]
+        self.threads = max(int(info["nthreads"]) for _, info in known[:workers])
+        self.workers = len(self.addresses)
+        self._warm: set[int] = set()
+
+    def prepare(self, program: Program) -> None:
+        """Compile kernels once here, then load them on every worker."""
+        if id(program) not in self._warm:
+            warm_up(program)
+            self.client.run(warm_up, program, workers=self.addresses)
+            self._warm.add(id(program))
+
+    def run(self, program: Program, options: RunOptions, progress: Progress | None = None) -> RunResult:
+        """Run a program; errors and interrupts end up in the result."""
+        self.prepare(program)
+        return _NativeRun(self, program, options, progress).run()
+
+
+class _NativeRun:
+    """One run's state on the client.
+
+    ``futures`` holds what later batches may name: steps of live phases and of each cycle's last phase,
+    roots of reductions and releases of barriers until their cycles are well past.
+    """
+
+    def __init__(
+        self, dispatch: NativeDispatch, program: Program, options: RunOptions, progress: Progress | None
+    ) -> None:
+        self.dispatch, self.program, self.options, self.progress = dispatch, program, options, progress
+        self.client = dispatch.client
+        self.name = uuid.uuid4().hex[:8]
+        self.owners = owners(options.placement, len(program.tiling), dispatch.workers)
+        self.graph = TaskGraph(program.tiling, self.owners)
+        self.unroller = unroller_for(program, options)
+        self.barriers = program.template.stages_with_barrier(options.barriers)
+        self.longest_lag = max((r.lag for r in program.problem.splitting.all_reductions()), default=0)
+        self.translate = Translation(self.name, program, self.graph)
+        self.result = RunResult({}, {}, RunRecord(), 0.0, 0)
+        self.futures: dict[int, Future] = {}
+        self.keepers: dict[int, int] = {}  # root or release -> its cycle
+        self.last_steps: dict[int, range] = {}  # cycle -> step tasks of its last phase so far
+        self.batch: list[Task] = []
+
+    def run(self) -> RunResult:
+        """The whole run; what ends it early is noted in the result."""
+        result = self.result
+        clocks = read_clocks(self.client, self.dispatch.addresses)
+        zero = time.perf_counter_ns()
+        try:
+            self._begin(clocks, zero)
+            self._drive()
+            self._finish()
+        except KeyboardInterrupt:
+            result.interrupted = True
+        except BreakstepError as error:
+            result.failure = error
+        except (CancelledError, KilledWorker, OSError) as error:
+            result.failure = ClusterError(f"the Dask cluster lost part of the run ({error}); start the run again")
+        result.seconds = (time.perf_counter_ns() - zero) / 1e9
+        self.futures.clear()
+        self._collect(clocks)
+        return result
+
+    def _begin(self, clocks: list[ClockReading], zero: int) -> None:
+        """Tell the workers of the run, and have them make the initial state."""
+        for number, (address, reading) in enumerate(zip(self.dispatch.addresses, clocks, strict=True)):
+            told = (self.name, self.program, number, zero + reading.offset, self.options.record)
+            self.client.run(remote.begin, *told, workers=[address])
+        tiles = range(len(self.program.tiling))
+        graph = {self.translate.key(-1 - t): self.translate.initial(t, max(self.owners[t], 0)) for t in tiles}
+        where = {self.translate.key(-1 - t): self.owners[t] for t in tiles}
+        futures = self._submit(graph, list(graph), where, dict.fromkeys(graph, 0))
+        self.futures = {-1 - t: future for t, future in zip(tiles, futures, strict=True)}
+        self._wait(futures)
+
+    def _drive(self) -> None:
+        phases = self.unroller.run()
+        answer: list[Array] | None = None
+        while True:
+            try:
+                event = phases.send(answer)
+            except StopIteration:
+                break
+            if isinstance(event, Need):
+                self._flush()
+                roots = [self.futures[self.graph.root(i)] for i in event.instances]
+                answer = [payload.arrays["value"] for payload in self._results(roots)]
+            else:
+                answer = None
+                self._emit(event)
+        self._flush()
+
+    def _emit(self, phase: Phase) -> None:
+        while phase.cycle - self.result.cycles >= self.options.window:
+            self._complete_cycle()
+        tasks = self.graph.expand(phase, barrier_after=phase.stage.index in self.barriers)
+        self.batch += tasks
+        self.last_steps[phase.cycle] = self.graph.step_tasks(phase.number)
+        self.keepers.update({t.number: phase.cycle for t in tasks if t.kind is Kind.RELEASE})
+        self.keepers.update({self.graph.root(making.instance): phase.cycle for making in phase.makes})
+        if len(self.batch) >= BATCH_TASKS:
+            self._flush()
+
+    def _complete_cycle(self) -> None:
+        """Wait for the oldest cycle in flight."""
+        self._flush()
+        self._wait([self.futures[number] for number in self.last_steps.pop(self.result.cycles)])
+        self.last_steps.pop(-1, None)
+        self.result.cycles += 1
+        if self.progress is not None:
+            self.progress(self.result.cycles)
+
+    def _flush(self) -> None:
+        """Send the batch, and let go of what nothing will name again."""
+        tasks, self.batch = self.batch, []
+        if not tasks:
+            return
+        if self.options.record:
+            record_edges(self.result.record, tasks)
+        named = {self.translate.name(task): task for task in tasks}
+        kept = [key for key, task in named.items() if task.kind is Kind.STEP or task.number in self.keepers]
+        futures = self._submit(
+            {key: self.translate.task(task) for key, task in named.items()},
+            kept,
+            {key: task.worker for key, task in named.items()},
+            {key: self._priority(task) for key, task in named.items()},
+        )
+        self.futures.update({named[key].number: future for key, future in zip(kept, futures, strict=True)})
+        self._let_go()
+
+    def _let_go(self) -> None:
+        live = self.unroller.live_phases(self.program.fields)
+        wanted = {number for phase in live if phase for number in self.graph.step_tasks(phase)}
+        if INITIAL in live:
+            wanted |= {-1 - tile for tile in range(len(self.program.tiling))}
+        for numbers in self.last_steps.values():
+            wanted |= set(numbers)
+        oldest = self.result.cycles - self.longest_lag - 2
+        self.keepers = {number: cycle for number, cycle in self.keepers.items() if cycle >= oldest}
+        wanted |= self.keepers.keys()
+        self.graph.forget(live)
+        self.translate.forget(wanted)
+        self.futures = {number: future for number, future in self.futures.items() if number in wanted}
+
+    def _priority(self, task: Task) -> int:
+        """Program order; control, reductions and rims before the steps of their phase."""
+        return -2 * task.phase.number + (0 if task.kind is Kind.STEP else 1)
+
+    def _submit(
+        self, graph: dict[str, DaskTask], keys: list[str], where: dict[str, int], priority: dict[str, int]
+    ) -> list[Future]:
+        addresses = self.dispatch.addresses
+        free = ANYWHERE in where.values()
+        pinned = {} if free else {"workers": LookUp({k: [addresses[w]] for k, w in where.items()})}
+        with dask.annotate(priority=LookUp(priority), **pinned):
+            futures: list[Future] = self.client.get(
+                graph, keys, sync=False, workers=addresses if free else None
+            )
+        return futures
+
+    def _finish(self) -> None:
+        while self.result.cycles in self.last_steps:
+            self._complete_cycle()
+        tiles = range(len(self.program.tiling))
+        for name in self.program.fields:
+            phase = self.unroller.latest(name)
+            numbers = list(self.graph.step_tasks(phase)) if phase else [-1 - t for t in tiles]
+            payloads = self._results([self.futures[n] for n in numbers])
+            self.result.fields[name] = [payload.arrays[name] for payload in payloads]
+        for name, instance in self.unroller.last_values().items():
+            (payload,) = self._results([self.futures[self.graph.root(instance)]])
+            self.result.values[name] = payload.arrays["value"]
+
+    def _results(self, futures: list[Future]) -> list[Payload]:
+        self._wait(futures)
+        results: list[Payload] = self.client.gather(futures)
+        return results
+
+    def _wait(self, futures: list[Future]) -> None:
+        """Wait for all; raise the first error among them, or ClusterError when a worker has gone."""
+        while True:
+            try:
+                wait(futures, timeout=POLL_SECONDS)
+                break
+            except TimeoutError:
+                present = self.client.scheduler_info(n_workers=-1)["workers"]
+                gone = [address for address in self.dispatch.addresses if address not in present]
+                if gone:
+                    raise ClusterError(
+                        f"worker {', '.join(gone)} has gone and took its tiles with it; start the run again"
+                    ) from None
+        for future in futures:
+            if future.status != "finished":
+                future.result()
+
+    def _collect(self, clocks: list[ClockReading]) -> None:
+        """Bring in the workers' records; a cluster that is gone leaves what the client has."""
+        wire.ARRIVALS.clear()  # results gathered here are not transfers between workers
+        record = self.result.record
+        present = self.client.scheduler_info(n_workers=-1)["workers"] if self.client.status == "running" else {}
+        addresses = [address for address in self.dispatch.addresses if address in present]
+        after = read_clocks(self.client, addresses)
+        cpu = {a: r.cpu for a, r in zip(addresses, after, strict=True)}
+        self.result.notes = {
+            "clock_residual_ns": [reading.residual for reading in clocks],
+            "worker_cpu_ns": [
+                cpu.get(a, before.cpu) - before.cpu
+                for a, before in zip(self.dispatch.addresses, clocks, strict=True)
+            ],
+        }
+        answers = self.client.run(remote.collect, self.name, self.dispatch.threads, workers=addresses)
+        parts = [answers[address] for address in addresses]
+        zeros = {part["worker"]: part["zero"] for part in parts}
+        for part in parts:
+            record.add_tables(part["tables"])
+            for arrival in part["arrivals"]:
+                if arrival.producer >= 0 and arrival.sender in zeros:
+                    record.transfers.extend(_transfer_rows(arrival, part["worker"], zeros))
+
+
+def _transfer_rows(arrival: Arrival, receiver: int, zeros: dict[int, int]) -> list[tuple[Any, ...]]:
+    """A row a field; the time of packing and unpacking is booked with the first."""
+    rows = []
+    for place, (name, size) in enumerate(arrival.sizes.items()):
+        spent = (arrival.packed, arrival.unpacked) if place == 0 else (0, 0)
+        moments = (arrival.sent - zeros[arrival.sender], arrival.arrived - zeros[receiver])
+        rows.append((arrival.producer, name, arrival.sender, receiver, size, *spent, *moments))
+    return rows
+
+
+@dataclass(frozen=True)
+class LookUp:
+    """An annotation looked up by key; a class of its own so that it pickles small."""
+
+    table: dict[str, Any]
+
+    def __call__(self, key: str) -> Any:
+        return self.table[key]

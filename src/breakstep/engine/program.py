@@ -1,0 +1,75 @@
+"""What every worker of a run knows: the problem, its tiling, its stages and its halo plans."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+from breakstep.graph.stages import Template, build_template
+from breakstep.graph.tasks import HaloPlans
+from breakstep.mesh.fields import Field
+from breakstep.mesh.halo import Rim
+from breakstep.mesh.mesh import Triple
+from breakstep.mesh.tiling import Tiling
+from breakstep.steps.problem import Problem
+from breakstep.steps.splitting import Repeat
+from breakstep.steps.reduction import Reduction
+from breakstep.steps.step import Array, Read
+
+
+@dataclass
+class Program:
+    """A problem cut into tiles and stages; pickles small and rebuilds its plans on arrival.
+
+    Parameters
+    ----------
+    problem : Problem
+    tile_shape : tuple of int
+        Zones of a tile along each axis of the mesh.
+    fuse : bool
+        Whether steps with no halo between them share a task.
+    """
+
+    problem: Problem
+    tile_shape: tuple[int, ...]
+    fuse: bool = True
+    tiling: Tiling = field(init=False, repr=False)
+    template: Template = field(init=False, repr=False)
+    plans: HaloPlans = field(init=False, repr=False)
+    fields: dict[str, Field] = field(init=False, repr=False)
+
+    def __post_init__(self) -> None:
+        self.tiling = self.problem.cut(self.tile_shape)
+        self.template = build_template(self.problem.splitting, fuse=self.fuse)
+        self.plans = HaloPlans(self.tiling)
+        self.fields = self.problem.by_name()
+        repeats = (item for item in self.problem.splitting.items() if isinstance(item, Repeat))
+        self._reductions = {reduction.name: reduction for reduction in self.problem.splitting.all_reductions()}
+        self._rims: dict[tuple[int, Read, Triple], Rim] = {}
+        self._stops = {repeat.name: repeat.stop for repeat in repeats}
+
+    def __reduce__(self) -> tuple[type[Program], tuple[Problem, tuple[int, ...], bool]]:
+        return Program, (self.problem, self.tile_shape, self.fuse)
+
+    def initial(self, tile: int) -> dict[str, Array]:
+        """The initial state of one tile, checked."""
+        from breakstep.engine.execute import check_arrays
+
+        place = self.tiling.tiles[tile]
+        arrays = dict(self.problem.initial(place, self.problem.mesh))
+        check_arrays(arrays, tuple(self.fields), self.fields, place, f"the initial state of tile {tile}")
+        return arrays
+
+    def stop(self, stage: int, verdict: Array) -> bool:
+        """Whether a verdict ends the repeat that a stage belongs to."""
+        return bool(self._stops[self.template.stages[stage].repeat](verdict))
+
+    def rim(self, tile: int, read: Read, offset: Triple) -> Rim:
+        """The rim of one offset that a tile needs for a read."""
+        key = (tile, read, offset)
+        if key not in self._rims:
+            self._rims.update({(tile, read, rim.offset): rim for rim in self.plans.plan(tile, read).rims})
+        return self._rims[key]
+
+    def reduction(self, name: str) -> Reduction:
+        """A reduction by name."""
+        return self._reductions[name]

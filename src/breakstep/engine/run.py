@@ -1,0 +1,96 @@
+"""What a run is asked for and what it gives back, whichever dispatch carries it out."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from typing import Protocol
+
+import numpy as np
+
+from breakstep.engine.program import Program
+from breakstep.graph.unroll import Unroller
+from breakstep.profile.record import RunRecord
+from breakstep.steps.step import Array
+
+
+@dataclass(frozen=True)
+class RunOptions:
+    """How to run a program.
+
+    Attributes
+    ----------
+    barriers : tuple of str
+        Names of the barriers that are on.
+    placement : str
+        ``"blocks"``: tiles go to workers in contiguous runs of equal length; ``"dask"``: Dask places tasks.
+    window : int
+        Cycles that may be in flight at once.
+    record : bool
+        Whether to keep a record of tasks (results are the same without).
+    """
+
+    barriers: tuple[str, ...] = ()
+    placement: str = "blocks"
+    window: int = 4
+    record: bool = True
+
+
+@dataclass
+class RunResult:
+    """What a run leaves.
+
+    Attributes
+    ----------
+    fields : dict of str to list of ndarray
+        Final arrays of each field, by tile.
+    values : dict of str to ndarray
+        Last result of each cycle-level reduction.
+    record : RunRecord
+    seconds : float
+        Wall time from the first task's start to the last task's end, as the driver saw it.
+    cycles : int
+        Cycles that were completed.
+    interrupted : bool
+        Whether the user stopped the run; the fields are then those of the last completed cycle, if any.
+    failure : Exception or None
+        The error that ended the run early.
+    """
+
+    fields: dict[str, list[Array]]
+    values: dict[str, Array]
+    record: RunRecord
+    seconds: float
+    cycles: int
+    interrupted: bool = False
+    failure: Exception | None = None
+    notes: dict[str, object] = field(default_factory=dict)
+
+
+Progress = Callable[[int], None]
+
+
+class Dispatch(Protocol):
+    """Carries out the tasks of a program."""
+
+    name: str
+    workers: int
+    threads: int
+
+    def run(self, program: Program, options: RunOptions, progress: Progress | None = None) -> RunResult:
+        """Run to the end, to an error or to an interrupt, and say which."""
+        ...
+
+
+def unroller_for(program: Program, options: RunOptions) -> Unroller:
+    """The unrolling of a program under the options' barriers."""
+    problem = program.problem
+    return Unroller(program.template, problem.cycles, options.barriers, problem.ended)
+
+
+def whole_field(program: Program, tiles: list[Array]) -> Array:
+    """One array over the mesh from the arrays of its tiles, shape (components, nx, ny, nz)."""
+    whole = np.empty((tiles[0].shape[0], *program.problem.mesh.zones))
+    for tile, array in zip(program.tiling.tiles, tiles, strict=True):
+        whole[(slice(None), *tile.slices())] = array
+    return whole

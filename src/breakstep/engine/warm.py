@@ -1,0 +1,32 @@
+"""Warming up: loading or compiling every kernel before the clock starts.
+
+Kernels compile once on a machine and then come from the cache, but several cold processes would each
+compile everything. So the driver warms itself up first, then each worker.
+"""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+from breakstep.engine.program import Program
+from breakstep.engine.run import RunOptions
+from breakstep.engine.serial import SerialDispatch
+
+SMALL = 4  # zones along each axis of the copy; at least twice the widest built-in halo
+
+
+def small_copy(program: Program) -> Program:
+    """The same physics on a mesh of a few zones, one tile, for as many cycles as there are orders."""
+    problem = program.problem
+    mesh = replace(problem.mesh, shape=tuple(min(n, SMALL) for n in problem.mesh.shape))
+    small = replace(problem, mesh=mesh, cycles=len(problem.splitting.orders), ended=None)
+    return Program(small, mesh.shape, program.fuse)
+
+
+def warm_up(program: Program) -> str:
+    """Run the small copy; returns the error that ended it, or "".
+
+    An error is no reason to stop: the copy's state is not the problem's, and the real run will tell.
+    """
+    failure = SerialDispatch().run(small_copy(program), RunOptions(record=False)).failure
+    return "" if failure is None else str(failure)

@@ -1,0 +1,245 @@
+"""Unrolling: from the stages of a splitting to the phases of a run, one at a time.
+
+A phase is one stage in one cycle (and iteration); it stands for one task a tile. Data dependencies come
+from Bernstein's conditions on the declared reads and writes. Every task makes new arrays, so a write never
+overtakes a reader of the version before: write-after-read and write-after-write conflicts are gone by
+renaming, and what remains is read-after-write: each read of a field goes to the phase that wrote it last
+in program order.
+
+What happens next can depend on a value: iterations end when a verdict says so, a run when its time is up.
+The generator then yields :class:`Need` and goes on when the value is sent in. What it emits depends on
+those values alone, never on timing. Iterations up to the number that the cycle before needed are emitted
+without waiting; one that turns out to be superfluous passes its fields through.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Generator, Iterable, Sequence
+from dataclasses import dataclass, field
+from typing import TypeAlias
+
+from breakstep.errors import ConvergenceError
+from breakstep.graph.stages import RepeatStages, Stage, Template
+from breakstep.steps.reduction import Reduction
+from breakstep.steps.step import Array
+
+INITIAL = 0  # number of the phase that stands for the initial state
+
+
+@dataclass(frozen=True)
+class ValueRef:
+    """One row of one reduction's result: ``instance`` counts results over the run."""
+
+    instance: int
+    row: int = 0
+
+
+@dataclass(frozen=True)
+class Making:
+    """A reduction made at the end of a phase: its result has ``rows`` rows, each finished from the one before."""
+
+    reduction: Reduction
+    instance: int
+    previous: int | None
+    rows: int = 1
+
+
+@dataclass(frozen=True)
+class Phase:
+    """One stage of one cycle (and iteration), for all tiles.
+
+    Attributes
+    ----------
+    number : int
+        Program order; the initial state is 0.
+    sources : dict of str to int
+        For each field read, the phase that wrote the version to read.
+    values : dict of str to ValueRef
+        For each reduction used, the result to use.
+    gate : ValueRef or None
+        Verdict that turns the phase into a pass-through.
+    makes : tuple of Making
+    waits_for : int or None
+        Phase behind whose barrier this one stands.
+    """
+
+    number: int
+    stage: Stage
+    cycle: int
+    iteration: int = -1
+    sources: dict[str, int] = field(default_factory=dict)
+    values: dict[str, ValueRef] = field(default_factory=dict)
+    gate: ValueRef | None = None
+    makes: tuple[Making, ...] = ()
+    waits_for: int | None = None
+
+
+@dataclass(frozen=True)
+class Need:
+    """The unrolling waits for the results of these reduction instances, to be sent as a list."""
+
+    instances: tuple[int, ...]
+
+
+Unrolling: TypeAlias = Generator[Phase | Need, list[Array] | None, None]
+
+
+@dataclass
+class Unroller:
+    """Generates the phases of a run.
+
+    Parameters
+    ----------
+    template : Template
+    cycles : int
+        Most cycles to run.
+    barriers : sequence of str
+        Names of the barriers that are on.
+    ended : callable, optional
+        ``ended(value of the first reduction for a cycle) -> bool``: stop before that cycle.
+        Costs a look at each cycle's value before the cycle is emitted.
+    """
+
+    template: Template
+    cycles: int
+    barriers: Sequence[str] = ()
+    ended: Callable[[Array], bool] | None = None
+
+    def __post_init__(self) -> None:
+        self._barrier_stages = self.template.stages_with_barrier(self.barriers)
+        self._phase_count = 1
+        self._instance_count = 0
+        self._latest: dict[str, int] = {}
+        self._last_phase: Phase | None = None
+        self._cycle_results: dict[str, list[int]] = {r.name: [] for r in self.template.splitting.reductions}
+        self._iterations: dict[str, int] = {}
+
+    def live_phases(self, fields: Iterable[str]) -> frozenset[int]:
+        """Phases that hold the newest version of a field, hence may still be read."""
+        return frozenset(self.latest(name) for name in fields)
+
+    def latest(self, name: str) -> int:
+        """The phase that wrote a field last."""
+        return self._latest.get(name, INITIAL)
+
+    def iterations(self, repeat: str) -> int:
+        """How many iterations the repeat executed in the last cycle."""
+        return self._iterations.get(repeat, 0)
+
+    def last_values(self) -> dict[str, int]:
+        """For each cycle-level reduction, the newest result's instance."""
+        return {name: made[-1] for name, made in self._cycle_results.items() if made}
+
+    def run(self) -> Unrolling:
+        """Yield phases in program order, and needs where a value decides."""
+        if self.template.start is not None:
+            yield self._phase(self.template.start, -1, makes=self._cycle_makings(first=True))
+        for cycle in range(self.cycles):
+            if self.ended is not None:
+                ref = self._cycle_value(self.template.splitting.reductions[0], cycle)
+                answer = yield Need((ref.instance,))
+                assert answer is not None
+                if self.ended(answer[0][ref.row]):
+                    return
+            yield from self._cycle(cycle)
+
+    def _cycle(self, cycle: int) -> Unrolling:
+        nodes = self.template.orders[cycle % len(self.template.orders)]
+        for place, node in enumerate(nodes):
+            if isinstance(node, RepeatStages):
+                yield from self._repeat(node, cycle)
+            else:
+                last = place == len(nodes) - 1
+                yield self._phase(node, cycle, makes=self._cycle_makings() if last else ())
+
+    def _cycle_makings(self, first: bool = False) -> tuple[Making, ...]:
+        makings = []
+        for reduction in self.template.splitting.reductions:
+            made = self._cycle_results[reduction.name]
+            making = Making(reduction, self._next_instance(), made[-1] if made else None, 1 + reduction.lag if first else 1)
+            made.append(making.instance)
+            makings.append(making)
+        return tuple(makings)
+
+    def _cycle_value(self, reduction: Reduction, cycle: int) -> ValueRef:
+        """The first result has a row for each of the first ``lag`` + 1 cycles."""
+        made = self._cycle_results[reduction.name]
+        if cycle <= reduction.lag:
+            return ValueRef(made[0], cycle)
+        return ValueRef(made[cycle - reduction.lag])
+
+    def _repeat(self, node: RepeatStages, cycle: int) -> Unrolling:
+        repeat, lag = node.repeat, node.repeat.until.lag
+        foreseen = min(repeat.at_most, self._iterations.get(repeat.name, 1 + lag))
+        verdicts: list[int] = []  # instance of each emitted iteration's verdict
+        known, stopped_at = 0, None
+        while stopped_at is None or len(verdicts) <= stopped_at + lag:
+            iteration = len(verdicts)
+            if iteration < repeat.at_most and (iteration < foreseen or iteration - 1 - lag < known):
+                gate = ValueRef(verdicts[iteration - 1 - lag]) if iteration > lag else None
+                yield from self._iteration(node, cycle, iteration, verdicts, gate)
+                continue
+            if stopped_at is not None:
+                break
+            if known == len(verdicts):
+                raise _not_converged(node, cycle, answer[-1])
+            answer = yield Need(tuple(verdicts[known:]))
+            assert answer is not None
+            for value in answer:
+                if stopped_at is None and repeat.stop(value[0]):
+                    stopped_at = known
+                known += 1
+        self._iterations[repeat.name] = min(stopped_at + lag + 1, repeat.at_most)
+
+    def _iteration(
+        self, node: RepeatStages, cycle: int, iteration: int, verdicts: list[int], gate: ValueRef | None
+    ) -> Unrolling:
+        for stage in node.stages:
+            makes: tuple[Making, ...] = ()
+            if stage.partials:
+                previous = verdicts[-1] if verdicts else None
+                makes = (Making(node.repeat.until, self._next_instance(), previous),)
+                verdicts.append(makes[0].instance)
+            yield self._phase(stage, cycle, iteration, makes, gate)
+
+    def _phase(
+        self,
+        stage: Stage,
+        cycle: int,
+        iteration: int = -1,
+        makes: tuple[Making, ...] = (),
+        gate: ValueRef | None = None,
+    ) -> Phase:
+        reductions = {r.name: r for r in self.template.splitting.reductions}
+        before = self._last_phase
+        barrier = before is not None and before.stage.index in self._barrier_stages
+        phase = Phase(
+            number=self._phase_count,
+            stage=stage,
+            cycle=cycle,
+            iteration=iteration,
+            sources={read.field: self.latest(read.field) for read in stage.reads},
+            values={name: self._cycle_value(reductions[name], cycle) for name in stage.uses},
+            gate=gate,
+            makes=makes,
+            waits_for=before.number if before is not None and barrier else None,
+        )
+        self._phase_count += 1
+        self._latest.update(dict.fromkeys(stage.writes, phase.number))
+        self._last_phase = phase
+        return phase
+
+    def _next_instance(self) -> int:
+        self._instance_count += 1
+        return self._instance_count - 1
+
+
+def _not_converged(node: RepeatStages, cycle: int, value: Array) -> ConvergenceError:
+    figures = ", ".join(f"{x:.3g}" for x in value[0])
+    return ConvergenceError(
+        f"{node.repeat.name} did not converge in cycle {cycle}: after {node.repeat.at_most} iterations its"
+        f" {node.repeat.until.name} is {figures}; allow more iterations, relax the tolerance or lower the time step",
+        repeat=node.repeat.name,
+        cycle=cycle,
+        value=[float(x) for x in value[0]],
+    )

@@ -1,0 +1,139 @@
+"""A profile in memory: its tables as frames, its final fields, and the accounts made from them.
+
+Accounts are made when they are first asked for, and kept.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from functools import cached_property
+from pathlib import Path
+from typing import cast
+
+import pandas as pd
+import xarray as xr
+
+from breakstep.errors import ProfileError
+from breakstep.profile.checks import sound_frames
+from breakstep.profile.fields import dataset_of
+from breakstep.profile.frames import Frames
+from breakstep.profile.ledger import Ledger, ledger_of
+from breakstep.profile.manifest import Manifest, first_fault
+from breakstep.profile.memory import LiveBytes, live_bytes
+from breakstep.profile.record import RunRecord
+from breakstep.profile.settle import settled
+from breakstep.profile.traffic import Traffic, traffic_of
+from breakstep.profile.work import counters_by_step, imbalance_by_step, work_by_step
+
+
+class Profile:
+    """A recorded run.
+
+    Parameters
+    ----------
+    manifest : Manifest
+        What was run, where, how, and how it ended.
+    frames : mapping of str to DataFrame
+        The tables of :mod:`breakstep.profile.schema`, found sound.
+    fields : xarray.Dataset
+        One variable per field at the end of the run, dimensions (<field>_component, x, y, z); zone centres
+        [cm] as coordinates x, y, z; units in each variable's attribute ``units``.
+    folder : Path, optional
+        Where it was read from.
+    """
+
+    def __init__(
+        self, manifest: Manifest, frames: Frames, fields: xr.Dataset, folder: Path | None = None
+    ) -> None:
+        self.manifest = manifest
+        self.frames = frames
+        self.fields = fields
+        self.folder = folder
+
+    @classmethod
+    def from_record(cls, record: RunRecord) -> Profile:
+        """The profile of a run that has just ended, without a detour through files.
+
+        Raises
+        ------
+        ProfileError
+            The record contradicts itself.
+        """
+        manifest, tables = settled(record)
+        fault = first_fault(manifest)
+        if fault:
+            raise ProfileError(f"record, manifest: {fault}; the engine must record it", table="manifest")
+        sound = cast(Manifest, manifest)
+        frames = sound_frames(tables, sound, lambda table: f"record, table {table}")
+        return cls(sound, frames, dataset_of(record))
+
+    @property
+    def tasks(self) -> pd.DataFrame:
+        """One row per executed task."""
+        return self.frames["tasks"]
+
+    @property
+    def intervals(self) -> pd.DataFrame:
+        """What went on inside tasks."""
+        return self.frames["intervals"]
+
+    @property
+    def counters(self) -> pd.DataFrame:
+        """What kernels counted, task by task."""
+        return self.frames["counters"]
+
+    @property
+    def edges(self) -> pd.DataFrame:
+        """Which task waited for which."""
+        return self.frames["edges"]
+
+    @property
+    def transfers(self) -> pd.DataFrame:
+        """Bytes that crossed workers."""
+        return self.frames["transfers"]
+
+    @property
+    def threads(self) -> pd.DataFrame:
+        """Every worker thread."""
+        return self.frames["threads"]
+
+    @property
+    def tile_count(self) -> int:
+        """Tiles of the mesh."""
+        return len(self.manifest["mesh"]["tiles"])
+
+    @cached_property
+    def ledger(self) -> Ledger:
+        """Every core-second in one account."""
+        return ledger_of(self.frames)
+
+    @cached_property
+    def work(self) -> pd.DataFrame:
+        """Kernel time by step; see :func:`breakstep.profile.work.work_by_step`."""
+        return work_by_step(self.frames)
+
+    @cached_property
+    def imbalance(self) -> pd.DataFrame:
+        """Unevenness by step; see :func:`breakstep.profile.work.imbalance_by_step`."""
+        return imbalance_by_step(self.frames, self.tile_count)
+
+    @cached_property
+    def counters_by_step(self) -> pd.DataFrame:
+        """Sums of what kernels counted."""
+        return counters_by_step(self.frames)
+
+    @cached_property
+    def traffic(self) -> Traffic:
+        """Bytes moved between workers."""
+        return traffic_of(self.frames)
+
+    @cached_property
+    def live(self) -> LiveBytes:
+        """Live bytes over the run."""
+        return live_bytes(self.frames)
+
+
+def profile_status(manifest: Mapping[str, object]) -> str:
+    """How the run ended, for a heading: its status, with the message where it was cut short."""
+    message = manifest["message"]
+    return f"{manifest['status']}: {message}" if message else str(manifest["status"])

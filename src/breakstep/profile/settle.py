@@ -1,0 +1,35 @@
+"""From a record to what is kept of it: digests and row counts added, leftovers of a cut-short run left out."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import pyarrow as pa
+
+from breakstep.profile.checks import without_unrun
+from breakstep.profile.digest import overall_digest, tile_digests
+from breakstep.profile.record import RunRecord
+from breakstep.profile.schema import SCHEMA_VERSION
+
+
+def settled(record: RunRecord) -> tuple[dict[str, Any], dict[str, pa.Table]]:
+    """The manifest and the tables of a record as they are to be stored.
+
+    A run that was interrupted or failed may have recorded edges and transfers of tasks that never ran; they
+    are left out. In a complete run they stay in, for the checks to find.
+    """
+    manifest, tables = dict(record.manifest), record.tables()
+    if manifest.get("status") != "complete":
+        tables = without_unrun(tables)
+    manifest["schema_version"] = SCHEMA_VERSION
+    manifest["rows"] = {name: table.num_rows for name, table in tables.items()}
+    if "digests" not in manifest:
+        manifest["digests"] = _digests(record)
+    if "digest" not in manifest:
+        manifest["digest"] = overall_digest(manifest["digests"])
+    return manifest, tables
+
+
+def _digests(record: RunRecord) -> dict[str, list[str]]:
+    tiles = record.manifest.get("mesh", {}).get("tiles", [])
+    return {name: tile_digests(name, final.values, tiles) for name, final in record.fields.items()}

@@ -1,0 +1,178 @@
+"""A run as arrays: who ran what when, when each input arrived, and where threads stood idle.
+
+This turns the tables into what :mod:`breakstep.profile.causes` walks on. Tasks are addressed by their
+position in the task table, which ascends with their numbers.
+"""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+
+from breakstep.profile.compiling import compiled_loop
+from breakstep.profile.frames import Frames, Integers, codes_of, integers, positions, thread_keys, words_of
+from breakstep.profile.schema import EDGE_KINDS, TASK_KINDS
+
+#: Earlier than every time stamp: the arrival of an input that does not exist.
+NEVER = -(2**62)
+DATA, REDUCTION, BARRIER = (EDGE_KINDS.index(kind) for kind in ("data", "reduction", "barrier"))
+
+
+class Inputs(NamedTuple):
+    """For each task its input that arrived last, once among its data and reductions, once among its barriers.
+
+    Attributes
+    ----------
+    data_from, data_kind, barrier_from : ndarray of int64, shape (tasks,)
+        Position of the input's task (-1 for none), and DATA or REDUCTION.
+    data_at, barrier_at : ndarray of int64, shape (tasks,)
+        Moment of its arrival [ns], NEVER for none.
+    """
+
+    data_from: Integers
+    data_kind: Integers
+    data_at: Integers
+    barrier_from: Integers
+    barrier_at: Integers
+
+
+class Blocks(NamedTuple):
+    """Each thread's time in tasks, as blocks without idle time inside, in the order of threads, then time.
+
+    Attributes
+    ----------
+    begin, end : ndarray of int64, shape (blocks,)
+        [ns]
+    busy_before : ndarray of int64, shape (blocks,)
+        Time in earlier blocks of the same thread [ns].
+    opener : ndarray of int64, shape (blocks,)
+        Position of the task that opens the block: the one that the idle time before it ends with.
+    first : ndarray of int64, shape (threads + 1,)
+        Where each thread's blocks start.
+    """
+
+    begin: Integers
+    end: Integers
+    busy_before: Integers
+    opener: Integers
+    first: Integers
+
+
+class Timeline(NamedTuple):
+    """Everything that the walk along causes reads.
+
+    Attributes
+    ----------
+    start, end : ndarray of int64, shape (tasks,)
+        [ns]
+    worker, thread, kind, stage : ndarray of int64, shape (tasks,)
+        Worker number; row in the thread table sorted by worker and thread; place in TASK_KINDS; code of the
+        stage's name.
+    """
+
+    start: Integers
+    end: Integers
+    worker: Integers
+    thread: Integers
+    kind: Integers
+    stage: Integers
+    inputs: Inputs
+    blocks: Blocks
+
+
+def timeline_of(frames: Frames) -> Timeline:
+    """Build the timeline of a run whose tables are sound."""
+    tasks = frames["tasks"]
+    start, end = integers(tasks, "start_ns"), integers(tasks, "end_ns")
+    threads = np.sort(thread_keys(frames["threads"]))
+    thread = positions(threads, thread_keys(tasks))
+    return Timeline(
+        start=start,
+        end=end,
+        worker=integers(tasks, "worker"),
+        thread=thread,
+        kind=codes_of(tasks, "kind", TASK_KINDS),
+        stage=words_of(tasks, "stage")[0],
+        inputs=_latest_inputs(frames),
+        blocks=_blocks(start, end, thread, len(threads)),
+    )
+
+
+def _latest_inputs(frames: Frames) -> Inputs:
+    tasks, edges = frames["tasks"], frames["edges"]
+    numbers = integers(tasks, "task")
+    producer = positions(numbers, integers(edges, "producer"))
+    consumer = positions(numbers, integers(edges, "consumer"))
+    kind = codes_of(edges, "kind", EDGE_KINDS)
+    arrival = _arrivals(frames, producer, consumer)
+    return Inputs(*_pick_latest(len(tasks), producer, consumer, kind, arrival))
+
+
+def _arrivals(frames: Frames, producer: Integers, consumer: Integers) -> Integers:
+    """When each edge's input could be used [ns]: its end, or when its last bytes came from another worker."""
+    tasks, transfers = frames["tasks"], frames["transfers"]
+    worker = integers(tasks, "worker")
+    arrival = integers(tasks, "end_ns")[producer]
+    if len(transfers) == 0:
+        return arrival
+    workers = int(integers(frames["threads"], "worker").max()) + 1
+    sender = positions(integers(tasks, "task"), integers(transfers, "producer"))
+    key = sender * workers + integers(transfers, "to_worker")
+    keys, group = np.unique(key, return_inverse=True)
+    came = np.full(len(keys), NEVER, dtype=np.int64)
+    np.maximum.at(came, group, integers(transfers, "arrived_ns"))
+    across = np.flatnonzero(worker[producer] != worker[consumer])
+    place = positions(keys, producer[across] * workers + worker[consumer[across]])
+    arrival[across[place >= 0]] = came[place[place >= 0]]
+    return arrival
+
+
+@compiled_loop
+def _pick_latest(
+    tasks: int, producer: Integers, consumer: Integers, kind: Integers, arrival: Integers
+) -> tuple[Integers, Integers, Integers, Integers, Integers]:
+    """The latest input of each task; of several at the same moment the lowest task, then the lowest kind."""
+    data_from, data_kind = np.full(tasks, -1, np.int64), np.full(tasks, -1, np.int64)
+    data_at = np.full(tasks, NEVER, np.int64)
+    barrier_from, barrier_at = np.full(tasks, -1, np.int64), np.full(tasks, NEVER, np.int64)
+    for edge in range(len(producer)):
+        p, c, k, at = producer[edge], consumer[edge], kind[edge], arrival[edge]
+        if k == BARRIER:
+            if at > barrier_at[c] or (at == barrier_at[c] and p < barrier_from[c]):
+                barrier_from[c], barrier_at[c] = p, at
+        elif at > data_at[c] or (
+            at == data_at[c] and (p < data_from[c] or (p == data_from[c] and k < data_kind[c]))
+        ):
+            data_from[c], data_kind[c], data_at[c] = p, k, at
+    return data_from, data_kind, data_at, barrier_from, barrier_at
+
+
+def _blocks(start: Integers, end: Integers, thread: Integers, threads: int) -> Blocks:
+    order = np.lexsort((end, start, thread))  # stable: of equal times, the lower task number first
+    begin, until, busy_before, opener, owner = _merge(start, end, thread, order)
+    first = np.searchsorted(owner, np.arange(threads + 1)).astype(np.int64)
+    return Blocks(begin, until, busy_before, opener, first)
+
+
+@compiled_loop
+def _merge(
+    start: Integers, end: Integers, thread: Integers, order: Integers
+) -> tuple[Integers, Integers, Integers, Integers, Integers]:
+    """Merge tasks that touch or overlap on their thread."""
+    size = len(order)
+    begin, until = np.empty(size, np.int64), np.empty(size, np.int64)
+    busy_before, opener = np.empty(size, np.int64), np.empty(size, np.int64)
+    owner = np.empty(size, np.int64)
+    count = 0
+    for task in order:
+        last = count - 1
+        same_thread = count > 0 and owner[last] == thread[task]
+        if same_thread and start[task] <= until[last]:
+            until[last] = max(until[last], end[task])
+            continue
+        busy_before[count] = busy_before[last] + until[last] - begin[last] if same_thread else 0
+        begin[count], until[count] = start[task], end[task]
+        opener[count], owner[count] = task, thread[task]
+        count += 1
+    return begin[:count], until[:count], busy_before[:count], opener[:count], owner[:count]

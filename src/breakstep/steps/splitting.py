@@ -1,0 +1,166 @@
+"""The splitting: the order in which steps advance a cycle, what repeats, and what is reduced.
+
+The order of the list is the order of a classical code. Which of it must really be kept is for the graph
+layer to find from the declared reads and writes.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import dataclass, replace
+from typing import TypeAlias
+
+from breakstep.errors import DeclarationError
+from breakstep.mesh.fields import Field
+from breakstep.steps.reduction import Reduction
+from breakstep.steps.step import Array, Read, Step, check_name
+
+
+@dataclass(frozen=True)
+class Repeat:
+    """Steps that repeat until a reduction says stop.
+
+    Parameters
+    ----------
+    name : str
+    body : tuple of Step
+        Run in order, once an iteration.
+    until : Reduction
+        Measured at the end of each iteration.
+    stop : callable
+        ``stop(result) -> bool``; must be False for NaN.
+    at_most : int
+        Iterations after which the run stops with an error.
+    """
+
+    name: str
+    body: tuple[Step, ...]
+    until: Reduction
+    stop: Callable[[Array], bool]
+    at_most: int
+
+    def __post_init__(self) -> None:
+        check_name("repeat", self.name)
+        if self.at_most < 1 + self.until.lag:
+            raise DeclarationError(
+                f"repeat {self.name!r}: at most {self.at_most} iterations with a lag of {self.until.lag}"
+                " can never see its own verdict"
+            )
+
+
+Item: TypeAlias = Step | Repeat
+
+
+@dataclass(frozen=True)
+class Splitting:
+    """One or more orders of the same steps, used in turn cycle by cycle.
+
+    Parameters
+    ----------
+    orders : tuple of tuple of (Step or Repeat)
+        Cycle c runs ``orders[c % len(orders)]``.
+    reductions : tuple of Reduction
+        Measured on the state that each cycle begins with. With lag 0 the cycle uses the value of its own
+        beginning; with lag L that of L cycles before (the first cycles share the first value).
+    """
+
+    orders: tuple[tuple[Item, ...], ...]
+    reductions: tuple[Reduction, ...] = ()
+
+    def __post_init__(self) -> None:
+        if not self.orders or not all(self.orders):
+            raise DeclarationError("a splitting needs at least one step")
+        self._check_names()
+
+    def _check_names(self) -> None:
+        known = [reduction.name for reduction in self.all_reductions()]
+        for name in sorted({name for name in known if known.count(name) > 1}):
+            raise DeclarationError(f"two reductions are named {name!r}")
+        usable = sorted(reduction.name for reduction in self.reductions)
+        for step in self.steps():
+            if step.name in known:
+                raise DeclarationError(f"{step.name!r} names both a step and a reduction")
+            for used in step.uses:
+                if used not in usable:
+                    raise DeclarationError(
+                        f"step {step.name!r} uses reduction {used!r}, which the splitting does not declare"
+                        f" (it declares: {', '.join(usable) or 'none'})"
+                    )
+
+    def items(self) -> Iterator[Item]:
+        """Every step and repeat of every order."""
+        for order in self.orders:
+            yield from order
+
+    def steps(self) -> Iterator[Step]:
+        """Every step, those inside repeats included."""
+        for item in self.items():
+            if isinstance(item, Repeat):
+                yield from item.body
+            else:
+                yield item
+
+    def all_reductions(self) -> Iterator[Reduction]:
+        """Every reduction, those of repeats included."""
+        yield from self.reductions
+        seen: set[str] = set()
+        for item in self.items():
+            if isinstance(item, Repeat) and item.until.name not in seen:
+                seen.add(item.until.name)
+                yield item.until
+
+    def check_fields(self, fields: Mapping[str, Field]) -> None:
+        """Raise DeclarationError when a step or reduction names a field that does not exist."""
+        for owner, names in self._field_names():
+            for name in names:
+                if name not in fields:
+                    raise DeclarationError(
+                        f"{owner} names field {name!r}; the fields are {', '.join(sorted(fields))}"
+                    )
+
+    def _field_names(self) -> Iterator[tuple[str, list[str]]]:
+        for step in self.steps():
+            yield f"step {step.name!r}", [read.field for read in step.reads] + list(step.writes)
+        for reduction in self.all_reductions():
+            yield f"reduction {reduction.name!r}", [read.field for read in reduction.reads]
+
+    def halo_reads(self) -> Iterator[tuple[str, Read]]:
+        """Every read that reaches beyond a tile, with its owner's name."""
+        for step in self.steps():
+            for read in step.reads:
+                if not read.is_local:
+                    yield step.name, read
+
+
+def lie(steps: Sequence[Item], reductions: Sequence[Reduction] = ()) -> Splitting:
+    """First-order splitting: each step once a cycle, in the order given."""
+    return Splitting((tuple(steps),), tuple(reductions))
+
+
+def strang(steps: Sequence[Item], reductions: Sequence[Reduction] = ()) -> Splitting:
+    """Second-order splitting (Strang 1968): half steps forward, a full last step, half steps back.
+
+    A repeat may stand last only, since its matrix belongs to a full step.
+    """
+    *outer, last = steps
+    halves: list[Item] = []
+    for item in outer:
+        if isinstance(item, Repeat):
+            raise DeclarationError(f"repeat {item.name!r} must stand last in a Strang splitting")
+        halves.append(replace(item, fraction=0.5 * item.fraction))
+    return Splitting(((*halves, last, *reversed(halves)),), tuple(reductions))
+
+
+def alternating(
+    steps: Sequence[Item], reductions: Sequence[Reduction] = (), *, swap: Callable[[Sequence[Item]], Sequence[Item]] | None = None
+) -> Splitting:
+    """Forward and backward orders in turn: second order over a pair of cycles with equal time steps.
+
+    Parameters
+    ----------
+    swap : callable, optional
+        How the second order is made from the first; reversal by default. Steps that must stay in order
+        (assemble, solve, exchange) are kept so by a function of the user's.
+    """
+    backward = tuple(swap(steps)) if swap is not None else tuple(reversed(steps))
+    return Splitting((tuple(steps), backward), tuple(reductions))

@@ -1,0 +1,153 @@
+"""A step: one physics operator, as a kernel with everything it reads and writes declared.
+
+Built-in physics and users' own steps are declared through this module alone.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from typing import TypeAlias
+
+import numpy as np
+from numpy.typing import NDArray
+
+from breakstep.errors import DeclarationError
+from breakstep.mesh.mesh import Triple
+
+Array: TypeAlias = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Read:
+    """A field that a step reads, and how far beyond its own zones.
+
+    Parameters
+    ----------
+    field : str
+        Name of the field.
+    halo : tuple of int
+        Ghost zones read along x, y, z.
+    corners : bool
+        Whether ghost zones diagonal to the tile are read; they hold NaN otherwise.
+    """
+
+    field: str
+    halo: Triple = (0, 0, 0)
+    corners: bool = False
+
+    @property
+    def is_local(self) -> bool:
+        """Whether the step reads its own zones only."""
+        return not any(self.halo)
+
+
+@dataclass
+class Call:
+    """What a kernel is told about the one call it serves.
+
+    Attributes
+    ----------
+    step, cycle, iteration : str, int, int
+        Which call this is; ``iteration`` is -1 outside repeats.
+    tile : int
+    origin, shape : tuple of int
+        First zone and extent of the tile.
+    widths : tuple of float
+        Zone widths [cm]; 1 along absent axes.
+    active : tuple of bool
+        Which axes exist.
+    values : mapping of str to ndarray
+        Results of the reductions that the step declared in ``uses``.
+    fraction : float
+        Share of the cycle's time step that this call advances (1/2 for the halves of a Strang splitting).
+    """
+
+    step: str
+    cycle: int
+    iteration: int
+    tile: int
+    origin: Triple
+    shape: Triple
+    widths: tuple[float, float, float]
+    active: tuple[bool, bool, bool]
+    values: Mapping[str, Array]
+    fraction: float = 1.0
+    counters: dict[str, int] = field(default_factory=dict)
+
+    @property
+    def dt(self) -> float:
+        """Time this call advances [s]: the first entry of reduction ``dt`` times ``fraction``."""
+        return float(self.values["dt"][0]) * self.fraction
+
+    def count(self, name: str, amount: int) -> None:
+        """Add to a work counter, which the profile records."""
+        self.counters[name] = self.counters.get(name, 0) + int(amount)
+
+    def where(self) -> str:
+        """The call in words, for error messages."""
+        iteration = f", iteration {self.iteration}" if self.iteration >= 0 else ""
+        return f"step {self.step}, tile {self.tile}, cycle {self.cycle}{iteration}"
+
+
+Kernel: TypeAlias = Callable[[Mapping[str, Array], Call], Mapping[str, Array]]
+
+
+@dataclass(frozen=True)
+class Step:
+    """One operator of the splitting.
+
+    Parameters
+    ----------
+    name : str
+        Appears in every account; letters, digits and underscores.
+    kernel : callable
+        ``kernel(arrays, call) -> new arrays``: gets each declared read as a write-protected array of shape
+        (components, nx + 2 hx, ny + 2 hy, nz + 2 hz), returns a new array of shape (components, nx, ny, nz)
+        for each declared write. Must depend on nothing else.
+    reads, writes : tuple of Read, tuple of str
+        Everything it uses and makes.
+    uses : tuple of str
+        Reductions whose results it needs.
+    fraction : float
+        Share of the time step; set by :func:`breakstep.steps.splitting.strang`.
+    """
+
+    name: str
+    kernel: Kernel
+    reads: tuple[Read, ...]
+    writes: tuple[str, ...]
+    uses: tuple[str, ...] = ()
+    fraction: float = 1.0
+
+    def __post_init__(self) -> None:
+        check_name("step", self.name)
+        if not self.writes:
+            raise DeclarationError(f"step {self.name!r} declares no writes, so nothing would ever use it")
+        check_reads(f"step {self.name!r}", self.reads)
+        if len(set(self.writes)) < len(self.writes):
+            raise DeclarationError(f"step {self.name!r} declares the same write twice")
+
+    @property
+    def is_local(self) -> bool:
+        """Whether it reads no ghost zones at all."""
+        return all(read.is_local for read in self.reads)
+
+
+def check_name(what: str, name: str) -> None:
+    """Refuse names that could not stand in tables, keys and file names."""
+    if not name.isidentifier():
+        raise DeclarationError(f"the name of a {what} must be an identifier, not {name!r}")
+
+
+def check_reads(owner: str, reads: tuple[Read, ...]) -> None:
+    """Refuse repeated fields and halos that are not three whole numbers from 0 up."""
+    fields = [read.field for read in reads]
+    for name in sorted({name for name in fields if fields.count(name) > 1}):
+        raise DeclarationError(f"{owner} declares its read of field {name!r} twice; give the wider halo once")
+    for read in reads:
+        if len(read.halo) != 3 or any(not isinstance(w, int) or w < 0 for w in read.halo):
+            raise DeclarationError(
+                f"{owner} reads field {read.field!r} with halo {read.halo!r};"
+                " expected three whole numbers, 0 or more"
+            )
