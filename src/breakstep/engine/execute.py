@@ -182,7 +182,7 @@ def check_arrays(
             " return one array for each declared write"
         )
     for name, array in made.items():
-        shape = (fields[name].size, *tile.shape)
+        shape = fields[name].shape(tile.shape)
         if not isinstance(array, np.ndarray) or array.dtype != np.float64 or array.shape != shape:
             came = f"{array.dtype} {array.shape}" if isinstance(array, np.ndarray) else type(array).__name__
             raise KernelError(f"{where}: field {name!r} must be float64 of shape {shape}, got {came}")

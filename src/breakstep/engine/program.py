@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 
+import numpy as np
+
 from breakstep.graph.stages import Template, build_template
 from breakstep.graph.tasks import HaloPlans
 from breakstep.mesh.fields import Field
@@ -50,13 +52,27 @@ class Program:
     def __reduce__(self) -> tuple[type[Program], tuple[Problem, tuple[int, ...], bool]]:
         return Program, (self.problem, self.tile_shape, self.fuse)
 
+    @property
+    def state_fields(self) -> tuple[str, ...]:
+        """Fields that make up the state, scratch left out."""
+        return tuple(name for name, field in self.fields.items() if not field.scratch)
+
     def initial(self, tile: int) -> dict[str, Array]:
-        """The initial state of one tile, checked."""
+        """The initial state of one tile, checked; scratch values of a whole tile begin at 0.
+
+        Raises
+        ------
+        KernelError
+            The initial state is incomplete, misshapen or not finite.
+        """
         from breakstep.engine.execute import check_arrays
 
         place = self.tiling.tiles[tile]
         arrays = dict(self.problem.initial(place, self.problem.mesh))
-        check_arrays(arrays, tuple(self.fields), self.fields, place, f"the initial state of tile {tile}")
+        zeros = {n: np.zeros(f.shape(place.shape)) for n, f in self.fields.items() if f.per_tile}
+        arrays = {**zeros, **arrays}
+        expected = {*self.state_fields, *zeros, *(arrays.keys() & self.fields.keys())}
+        check_arrays(arrays, sorted(expected), self.fields, place, f"the initial state of tile {tile}")
         return arrays
 
     def stop(self, stage: int, verdict: Array) -> bool:

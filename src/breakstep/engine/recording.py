@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import threading
-from collections.abc import Sequence
+import zlib
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
 from breakstep.engine.execute import Interval
 from breakstep.graph.tasks import Task
 from breakstep.profile.record import RunRecord
+from breakstep.steps.step import Array
 
 
 @dataclass
@@ -47,6 +49,12 @@ class Recorder:
     def counters(self, number: int, counters: Sequence[tuple[str, str, int]]) -> None:
         """Work counters that kernels reported."""
         self.record.counters.extend((number, step, name, value) for step, name, value in counters)
+
+    def checksums(self, number: int, step: str, arrays: Mapping[str, Array]) -> None:
+        """A checksum of each array a task made, for finding where two runs part."""
+        self.record.counters.extend(
+            (number, step, f"checksum:{name}", zlib.crc32(array.tobytes())) for name, array in arrays.items()
+        )
 
     def thread(self) -> int:
         """Number of the calling thread, in order of appearance."""

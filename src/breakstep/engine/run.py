@@ -28,12 +28,15 @@ class RunOptions:
         Cycles that may be in flight at once.
     record : bool
         Whether to keep a record of tasks (results are the same without).
+    trace : bool
+        Whether to record a checksum of every array that a task makes; slow, for finding differences.
     """
 
     barriers: tuple[str, ...] = ()
     placement: str = "blocks"
     window: int = 4
     record: bool = True
+    trace: bool = False
 
 
 @dataclass

@@ -84,10 +84,10 @@ class _SerialRun:
             self._task(task)
         if self.options.record:
             record_edges(self.recorder.record, tasks)
-        dead = self.graph.forget(self.unroller.live_phases(self.program.fields))
-        live = {n for p in self.unroller.live_phases(self.program.fields) if p for n in self.graph.step_tasks(p)}
+        dead = self.graph.forget(self.unroller.live_phases(self.program.state_fields))
+        live = {n for p in self.unroller.live_phases(self.program.state_fields) if p for n in self.graph.step_tasks(p)}
         if dead:
-            keep_initial = 0 in self.unroller.live_phases(self.program.fields)
+            keep_initial = 0 in self.unroller.live_phases(self.program.state_fields)
             self.outputs = {n: o for n, o in self.outputs.items() if n in live or (n < 0 and keep_initial)}
         if phase.cycle + 1 > self.cycles and phase.cycle >= 0:
             self.cycles = phase.cycle + 1
@@ -148,7 +148,7 @@ class _SerialRun:
 
     def _final(self, unroller: Unroller) -> dict[str, list[Array]]:
         final = {}
-        for name in self.program.fields:
+        for name in self.program.state_fields:
             phase = unroller.latest(name)
             numbers = self.graph.step_tasks(phase) if phase else [-1 - t for t in range(len(self.program.tiling))]
             final[name] = [self.outputs[number].fields[name] for number in numbers]

@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
+from functools import cached_property
 from typing import TypeAlias
 
 from breakstep.errors import DeclarationError
@@ -90,6 +91,18 @@ class Template:
     orders: tuple[tuple[Node, ...], ...]
     stages: tuple[Stage, ...]
     start: Stage | None
+
+    @cached_property
+    def carried(self) -> frozenset[str]:
+        """Fields whose version at the beginning of a cycle is read within it."""
+        found: set[str] = set()
+        for order in self.orders:
+            made: set[str] = set()
+            for node in order:
+                for stage in node.stages if isinstance(node, RepeatStages) else (node,):
+                    found |= {read.field for read in stage.reads} - made
+                    made |= set(stage.writes)
+        return frozenset(found)
 
     def barrier_names(self) -> tuple[str, ...]:
         """Every name by which a barrier can be switched on."""

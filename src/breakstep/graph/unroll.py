@@ -110,13 +110,22 @@ class Unroller:
         self._phase_count = 1
         self._instance_count = 0
         self._latest: dict[str, int] = {}
+        self._written_in: dict[str, int] = {}  # field -> cycle of its newest version
         self._last_phase: Phase | None = None
         self._cycle_results: dict[str, list[int]] = {r.name: [] for r in self.template.splitting.reductions}
         self._iterations: dict[str, int] = {}
 
-    def live_phases(self, fields: Iterable[str]) -> frozenset[int]:
-        """Phases that hold the newest version of a field, hence may still be read."""
-        return frozenset(self.latest(name) for name in fields)
+    def live_phases(self, state: Iterable[str]) -> frozenset[int]:
+        """Phases that a phase still to be emitted may read, and those that hold the newest state.
+
+        Parameters
+        ----------
+        state : iterable of str
+            Fields that are kept whatever reads them.
+        """
+        now = self._last_phase.cycle if self._last_phase is not None else -1
+        passing = {name for name, cycle in self._written_in.items() if cycle == now}
+        return frozenset(self.latest(name) for name in {*state, *self.template.carried, *passing})
 
     def latest(self, name: str) -> int:
         """The phase that wrote a field last."""
@@ -226,6 +235,7 @@ class Unroller:
         )
         self._phase_count += 1
         self._latest.update(dict.fromkeys(stage.writes, phase.number))
+        self._written_in.update(dict.fromkeys(stage.writes, cycle))
         self._last_phase = phase
         return phase
 

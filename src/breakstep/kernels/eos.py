@@ -16,8 +16,8 @@ serves both kinds.
         P_e^2 = P_end^2 + P_ed^2            the interpolation
         f     = dlnP_ed/dlnrho = 4/3 + 1 / (3 r^2)
 
-    No pairs, no Coulomb corrections, no ionization; pressures lie within about 5 % of exact
-    Fermi-Dirac integrals below 1e9 K.
+    No pairs, no Coulomb corrections, no ionization. At the points checked (tests/physics/test_eos.py)
+    P_e lies within 4.5 % of the exact Fermi-Dirac integral.
 
 **The electrons' energy** departs from Paczynski's u_e = P_e / (f - 1). Because f varies with density,
 that form is not the work of compression against P_ed: where f is near 3/2, compressing cold matter by
@@ -61,10 +61,13 @@ K_NONRELATIVISTIC = 9.91e12
 K_RELATIVISTIC = 1.231e15
 """Cold pressure over (rho/mu_e)^(4/3) [cgs]: Paczynski (1983)."""
 
-# Newton's method for gas plus radiation starts within a factor 1.33 above the root of a convex increasing
-# function. From there six iterations reach the last bit for all ratios of gas to radiation (measured in
-# tests/physics/test_eos.py); a fixed number keeps the loop over zones free of branches.
-NEWTON_ITERATIONS = 6
+NEWTON_ITERATIONS = 5
+"""Newton steps for the temperature of gas plus radiation, always all of them.
+
+The start is at most 1.3803 times the root (reached where radiation and an ideal gas hold x^4 and x of the
+energy, x^4 + x = 1), the function is convex and increasing, and the relative errors of the worst case fall
+as 0.38, 0.10, 9e-3, 8e-5, 6e-9, 7e-16. A fixed number keeps the loop over zones free of branches.
+"""
 
 
 @dataclass(frozen=True)
@@ -157,11 +160,15 @@ def electron_pressures(density: float, temperature: float, ye: float) -> tuple[f
 
 @inlined
 def _cold_electrons(y: float) -> tuple[float, float]:
-    """The relativity measure r and the cold pressure [erg/cm^3] at y = density * ye."""
+    """The relativity measure r and the cold pressure [erg/cm^3] at y = density * ye.
+
+    The added 1e-100 changes no bit of any real pressure; without it matter of neutrons alone would
+    divide 0 by 0.
+    """
     root = np.cbrt(y)
     q = K_NONRELATIVISTIC / K_RELATIVISTIC * root
     r = np.sqrt(1.0 + q * q)
-    return r, K_NONRELATIVISTIC * (root * root) * y / r
+    return r, K_NONRELATIVISTIC * (root * root) * y / r + 1e-100
 
 
 @inlined
@@ -178,12 +185,29 @@ def gas_temperature(thermal: float, ions: float, electrons: float, p_ed: float) 
         Pressure of cold electrons [erg/cm^3].
     """
     product = thermal * (thermal + 2.0 * p_ed)
-    root = np.sqrt(electrons * electrons * product + ions * ions * (p_ed * p_ed))
+    root: float = np.sqrt(electrons * electrons * product + ions * ions * (p_ed * p_ed))
     return product / (ions * (thermal + p_ed) + root)
 
 
 @inlined
-def stellar_temperature(a_rad: float, density: float, specific_energy: float, abar: float, zbar: float) -> float:
+def _newton_step(
+    a_rad: float, ions: float, electrons: float, p_ed: float, thermal: float, temperature: float
+) -> float:
+    """One Newton step on the thermal energy density, multiplied out so as to need a single division."""
+    p_end = electrons * temperature
+    p_e: float = np.sqrt(p_end * p_end + p_ed * p_ed)
+    both = p_e + p_ed  # P_e - P_ed is p_end^2 / both, without cancellation
+    cubed = a_rad * (temperature * temperature * temperature)
+    missing = thermal - cubed * temperature
+    excess = (1.5 * (ions * temperature * both + p_end * p_end) - missing * both) * p_e
+    slope = (1.5 * (ions * p_e + electrons * p_end) + 4.0 * cubed * p_e) * both
+    return temperature - excess / slope
+
+
+@inlined
+def stellar_temperature(
+    a_rad: float, density: float, specific_energy: float, abar: float, zbar: float
+) -> float:
     """Temperature [K] of the stellar mixture; nan where the energy does not exceed that at T = 0."""
     ions = GAS_CONSTANT * density / abar
     electrons = ions * zbar
@@ -195,12 +219,7 @@ def stellar_temperature(a_rad: float, density: float, specific_energy: float, ab
     if a_rad > 0.0:
         temperature = min(temperature, np.sqrt(np.sqrt(thermal / a_rad)))
         for _ in range(NEWTON_ITERATIONS):
-            p_end = electrons * temperature
-            p_e = np.sqrt(p_end * p_end + p_ed * p_ed)
-            cubed = a_rad * (temperature * temperature * temperature)
-            energy = 1.5 * (ions * temperature + p_end * p_end / (p_e + p_ed)) + cubed * temperature
-            slope = 1.5 * (ions + electrons * p_end / p_e) + 4.0 * cubed
-            temperature -= (energy - thermal) / slope
+            temperature = _newton_step(a_rad, ions, electrons, p_ed, thermal, temperature)
     return temperature
 
 

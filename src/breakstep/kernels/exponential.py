@@ -7,7 +7,7 @@ the same bits whatever mathematical library a worker has.
 
 from __future__ import annotations
 
-from breakstep.kernels.unmanaged import unmanaged  # isort: skip  (must precede numba)
+from breakstep.kernels.unmanaged import merged  # isort: skip  (must precede numba)
 
 import numpy as np
 from numpy.typing import NDArray
@@ -24,7 +24,7 @@ _EXPONENT_BITS = 52
 _EXPONENT_BIAS = 1023 << 52
 
 
-@unmanaged
+@merged
 def exponentials(arguments: Floats, values: Floats, powers: Floats) -> None:
     """Write exp(arguments) to ``values``; error below 2 units in the last place.
 
@@ -48,7 +48,7 @@ def exponentials(arguments: Floats, values: Floats, powers: Floats) -> None:
         values[i] = _exp_minus_one(values[i]) * powers[i] + powers[i]
 
 
-@unmanaged
+@merged
 def _exp_minus_one(r: float) -> float:
     """Taylor's series to r**13: its first omitted term is below 4e-18 for abs(r) <= ln(2)/2."""
     p = 1.0 / 6227020800.0

@@ -20,6 +20,7 @@ Components of a ``gas`` array: 0 density [g/cm^3]; 1 to 3 momentum density along
 from __future__ import annotations
 
 import math
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -36,10 +37,11 @@ from breakstep.kernels.hydro_gas import (
     pressures,
     primitives,
     signal_speeds,
+    transverse_face_states,
     update,
     weights,
 )
-from breakstep.kernels.hydro_rows import DENSITY, HALO, MOMENTUM, SPECIES, ENERGY, scratch_for
+from breakstep.kernels.hydro_rows import DENSITY, ENERGY, HALO, MOMENTUM, SPECIES, scratch_for
 from breakstep.kernels.hydro_species import face_fractions, fractions, mean_nuclei, species_changes
 
 Array = npt.NDArray[np.float64]
@@ -47,8 +49,11 @@ Array = npt.NDArray[np.float64]
 GAS_COMPONENTS = 5
 """Components before the species."""
 
+
 @compiled
-def _prepare(source: Array, axis: int, s: Array, chunk: Any, eos: Array, mass_numbers: Array, charges: Array) -> None:
+def _prepare(
+    source: Array, axis: int, s: Array, chunk: Any, eos: Array, mass_numbers: Array, charges: Array
+) -> None:
     """Load a chunk; primitive variables, equation of state, fractions."""
     count = chunk.load_pieces * chunk.load_length
     species = mass_numbers.size
@@ -72,6 +77,7 @@ def _advance(s: Array, step: int, count: int, courant: float, species: int) -> N
     differences(s, step, count)
     weights(s, count, 0.5 * courant)
     face_states(s, count, 0.5 * courant)
+    transverse_face_states(s, count)
     fluxes(s, step, count)
     if species > 0:
         face_fractions(s, step, count, species)
@@ -84,7 +90,7 @@ def _advance(s: Array, step: int, count: int, courant: float, species: int) -> N
 def _deliver(source: Array, axis: int, s: Array, chunk: Any, species: int, new: Array) -> None:
     """Write a chunk's interior to the new array."""
     store(s, DENSITY, new[0], chunk)
-    store(s, MOMENTUM + 3, new[4], chunk)
+    store(s, ENERGY, new[4], chunk)
     for k in range(3):
         store(s, MOMENTUM + k, new[1 + (axis + k) % 3], chunk)
     for k in range(species):
@@ -93,7 +99,14 @@ def _deliver(source: Array, axis: int, s: Array, chunk: Any, species: int, new: 
 
 @compiled
 def _sweep(
-    source: Array, axis: int, courant: float, plan: Plan, eos: Array, mass_numbers: Array, charges: Array, new: Array
+    source: Array,
+    axis: int,
+    courant: float,
+    plan: Plan,
+    eos: Array,
+    mass_numbers: Array,
+    charges: Array,
+    new: Array,
 ) -> tuple[float, int]:
     s = scratch_for(mass_numbers.size)
     speed = 0.0
@@ -110,11 +123,11 @@ def _sweep(
     return speed * courant, bad_zone
 
 
-def _read_only(gas: Array) -> Array:
-    """One row a component, flat and read-only, so that numba compiles for one type of argument."""
-    rows = np.ascontiguousarray(gas).reshape(gas.shape[0], -1)
-    rows.flags.writeable = False
-    return rows
+def _constant(values: npt.NDArray[Any]) -> npt.NDArray[Any]:
+    """A read-only view, so that numba compiles once whether or not the caller protects its arrays."""
+    view = np.ascontiguousarray(values).view()
+    view.flags.writeable = False
+    return view
 
 
 def sweep(
@@ -160,8 +173,8 @@ def sweep(
     species = mass_numbers.size
     if gas.ndim != 4 or gas.shape[0] != GAS_COMPONENTS + species or gas.shape[1 + axis] <= 2 * HALO:
         raise KernelError(
-            f"expected gas of {GAS_COMPONENTS + species} components in 3 dimensions with more than {2 * HALO} "
-            f"zones along axis {axis}, got shape {gas.shape}; pad the tile along the sweep axis",
+            f"expected gas of {GAS_COMPONENTS + species} components in 3 dimensions with more than "
+            f"{2 * HALO} zones along axis {axis}, got shape {gas.shape}; pad the tile along the sweep axis",
             shape=gas.shape,
             axis=axis,
         )
@@ -170,7 +183,14 @@ def sweep(
     new = np.empty(shape)
     plan = chunk_plan(math.prod(shape[1 : 1 + axis]), shape[1 + axis], math.prod(shape[2 + axis :]))
     courant, bad_zone = _sweep(
-        _read_only(gas), axis, dt / spacing, plan, eos, mass_numbers, charges, new.reshape(shape[0], -1)
+        _constant(gas).reshape(shape[0], -1),
+        axis,
+        dt / spacing,
+        plan,
+        _constant(eos),
+        _constant(mass_numbers),
+        _constant(charges),
+        new.reshape(shape[0], -1),
     )
     return new, courant, bad_zone
 
@@ -229,5 +249,12 @@ def signal_rate(
         -1, or the first flat index of a zone whose density, internal energy or sound speed is not
         positive or not finite; the rate then leaves it out.
     """
-    rate, bad_zone = _signal_rate(_read_only(gas), spacing, active, eos, mass_numbers, charges)
+    rate, bad_zone = _signal_rate(
+        _constant(gas).reshape(gas.shape[0], -1),
+        _constant(spacing),
+        _constant(active),
+        _constant(eos),
+        _constant(mass_numbers),
+        _constant(charges),
+    )
     return rate, bad_zone

@@ -60,7 +60,7 @@ def _line_chunks(blocks: int, lines: int, columns: int) -> list[tuple[int, ...]]
 
 def _column_chunks(blocks: int, lines: int, columns: int) -> list[tuple[int, ...]]:
     """Chunks of some columns and some lines of one block, for blocks that do not fit into a row."""
-    width = min(columns, max(8, ROW // (lines + 2 * HALO) // 8 * 8))  # whole cache lines
+    width = min(columns, max(16, ROW // (lines + 2 * HALO) // 16 * 16))  # whole cache lines
     return [
         (
             width_here, many + 2 * HALO, width_here, many, width_here,
@@ -151,5 +151,5 @@ def first_bad(s: Array, chunk: Any) -> int:
         if count > 0:
             for i in range(chunk.store_length):
                 if sound[i] != 1.0:
-                    return chunk.result_start + piece * chunk.result_stride + i
+                    return int(chunk.result_start + piece * chunk.result_stride + i)
     return -1

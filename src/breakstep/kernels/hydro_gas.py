@@ -84,7 +84,8 @@ def signal_speeds(s: Array, count: int) -> None:
 
 
 @inlined
-def _differences(s: Array, row: int, out: int, step: int, count: int) -> None:
+def row_differences(s: Array, row: int, out: int, step: int, count: int) -> None:
+    """Limited differences of one row, at every position with both neighbours."""
     both = count - 2 * step
     below, here, above = part(s, row, 0, both), part(s, row, step, both), part(s, row, 2 * step, both)
     result = part(s, out, step, both)
@@ -95,9 +96,9 @@ def _differences(s: Array, row: int, out: int, step: int, count: int) -> None:
 @compiled
 def differences(s: Array, step: int, count: int) -> None:
     """Limited differences of density, velocity, pressure and internal energy."""
-    _differences(s, DENSITY, DIFFERENCE, step, count)
+    row_differences(s, DENSITY, DIFFERENCE, step, count)
     for k in range(5):  # VELOCITY (3), PRESSURE and INTERNAL are consecutive rows
-        _differences(s, VELOCITY + k, DIFFERENCE + 1 + k, step, count)
+        row_differences(s, VELOCITY + k, DIFFERENCE + 1 + k, step, count)
 
 
 @compiled
@@ -109,7 +110,11 @@ def weights(s: Array, count: int, half: float) -> None:
     """
     for i in range(count):
         rho, p, e = s[DENSITY * ROW + i], s[PRESSURE * ROW + i], s[INTERNAL * ROW + i]
-        d_rho, d_p, d_e = s[DIFFERENCE * ROW + i], s[(DIFFERENCE + 4) * ROW + i], s[(DIFFERENCE + 5) * ROW + i]
+        d_rho, d_p, d_e = (
+            s[DIFFERENCE * ROW + i],
+            s[(DIFFERENCE + 4) * ROW + i],
+            s[(DIFFERENCE + 5) * ROW + i],
+        )
         upper = 0.5 - half * s[VELOCITY * ROW + i]
         lower = -0.5 - half * s[VELOCITY * ROW + i]
         squeeze = half * s[(DIFFERENCE + 1) * ROW + i]
@@ -130,7 +135,12 @@ def face_states(s: Array, count: int, half: float) -> None:
     """States at both faces of each zone after half a time step, in primitive form (Hancock's predictor)."""
     for i in range(count):
         upper, lower, step = s[TO_UPPER * ROW + i], s[TO_LOWER * ROW + i], s[KEEP * ROW + i] * half
-        rho, u, p, e = s[DENSITY * ROW + i], s[VELOCITY * ROW + i], s[PRESSURE * ROW + i], s[INTERNAL * ROW + i]
+        rho, u, p, e = (
+            s[DENSITY * ROW + i],
+            s[VELOCITY * ROW + i],
+            s[PRESSURE * ROW + i],
+            s[INTERNAL * ROW + i],
+        )
         d_rho, d_u = s[DIFFERENCE * ROW + i], s[(DIFFERENCE + 1) * ROW + i]
         d_p, d_e = s[(DIFFERENCE + 4) * ROW + i], s[(DIFFERENCE + 5) * ROW + i]
         squeeze = step * d_u
@@ -146,16 +156,24 @@ def face_states(s: Array, count: int, half: float) -> None:
         s[(LOWER + 1) * ROW + i] = u_half + lower * d_u
         s[(LOWER + 4) * ROW + i] = p_half + lower * d_p
         s[(LOWER + 5) * ROW + i] = e_half + lower * d_e
-        for k in range(2):  # transverse velocities are only advected
-            here = s[(VELOCITY + 1 + k) * ROW + i]
-            difference = s[(DIFFERENCE + 2 + k) * ROW + i]
-            s[(UPPER + 2 + k) * ROW + i] = here + upper * difference
-            s[(LOWER + 2 + k) * ROW + i] = here + lower * difference
+
+
+@compiled
+def transverse_face_states(s: Array, count: int) -> None:
+    """The rest of the face states: transverse velocities are only advected."""
+    for i in range(count):
+        upper, lower = s[TO_UPPER * ROW + i], s[TO_LOWER * ROW + i]
+        v, d_v = s[(VELOCITY + 1) * ROW + i], s[(DIFFERENCE + 2) * ROW + i]
+        w, d_w = s[(VELOCITY + 2) * ROW + i], s[(DIFFERENCE + 3) * ROW + i]
+        s[(UPPER + 2) * ROW + i] = v + upper * d_v
+        s[(UPPER + 3) * ROW + i] = w + upper * d_w
+        s[(LOWER + 2) * ROW + i] = v + lower * d_v
+        s[(LOWER + 3) * ROW + i] = w + lower * d_w
 
 
 @compiled
 def fluxes(s: Array, step: int, count: int) -> None:
-    """HLLC fluxes through the face above each zone; what advects is taken from the side of the middle wave."""
+    """HLLC fluxes through the face above each zone, from the state on the upwind side of the middle wave."""
     r = s[LOWER * ROW + step :]
     g = s[GAMMA1 * ROW + step :]
     for i in range(count - step):
@@ -204,5 +222,7 @@ def judge(s: Array, count: int) -> None:
         m, m1, m2 = s[MOMENTUM * ROW + i], s[(MOMENTUM + 1) * ROW + i], s[(MOMENTUM + 2) * ROW + i]
         internal = s[ENERGY * ROW + i] - 0.5 * (m * m + m1 * m1 + m2 * m2) / rho
         everything = rho + internal + s[PRESSURE * ROW + i] + s[FRACTIONS * ROW + i]
-        positive = (s[INVERSE * ROW + i] > 0.0) & (s[PRESSURE * ROW + i] > 0.0) & (rho > 0.0) & (internal > 0.0)
+        positive = (
+            (s[INVERSE * ROW + i] > 0.0) & (s[PRESSURE * ROW + i] > 0.0) & (rho > 0.0) & (internal > 0.0)
+        )
         s[SOUND_STATE * ROW + i] = 1.0 if positive & (everything - everything == 0.0) else 0.0

@@ -31,7 +31,13 @@ def _states(
 
 
 def _pressures(
-    eos: Array, rho: Array, internal: Array, inverse: Array, partial: Array, mass_numbers: Array, charges: Array
+    eos: Array,
+    rho: Array,
+    internal: Array,
+    inverse: Array,
+    partial: Array,
+    mass_numbers: Array,
+    charges: Array,
 ) -> tuple[Array, Array]:
     if eos[0] == GAMMA_LAW:
         return (eos[1] - 1.0) * internal, np.full_like(rho, eos[1])
@@ -49,7 +55,9 @@ def limited_differences(q: Array) -> Array:
     return np.where(left > 0.0, size, -size)
 
 
-def _half_step(half: float, gamma1: Array, rho: Array, velocity: Array, p: Array, e: Array, d: Array, keep: Array) -> list[Array]:
+def _half_step(
+    half: float, gamma1: Array, rho: Array, velocity: Array, p: Array, e: Array, d: Array, keep: Array
+) -> list[Array]:
     """Primitive variables half a time step later, where ``keep`` is 1."""
     step = keep * half
     squeeze = step * d[1]
@@ -64,7 +72,9 @@ def _half_step(half: float, gamma1: Array, rho: Array, velocity: Array, p: Array
     ]
 
 
-def _face_states(half: float, gamma1: Array, primitive: list[Array]) -> tuple[list[Array], list[Array], Array, Array]:
+def _face_states(
+    half: float, gamma1: Array, primitive: list[Array]
+) -> tuple[list[Array], list[Array], Array, Array]:
     """States at the upper and lower faces, and the weights that made them, for all but the end zones."""
     d = np.array([limited_differences(q) for q in primitive])
     rho, u, v, w, p, e = (q[1:-1] for q in primitive)
@@ -87,10 +97,14 @@ def _wave_speeds(left: list[Array], c2_l: Array, right: list[Array], c2_r: Array
     spread = np.sqrt(
         (root_l * c2_l + root_r * c2_r) * weight + 0.5 * (root_l * root_r) * (weight * weight) * (jump * jump)
     )
-    return np.minimum(left[1] - np.sqrt(c2_l), mean - spread), np.maximum(right[1] + np.sqrt(c2_r), mean + spread)
+    return np.minimum(left[1] - np.sqrt(c2_l), mean - spread), np.maximum(
+        right[1] + np.sqrt(c2_r), mean + spread
+    )
 
 
-def hllc(left: list[Array], gamma1_l: Array, right: list[Array], gamma1_r: Array) -> tuple[list[Array], Array]:
+def hllc(
+    left: list[Array], gamma1_l: Array, right: list[Array], gamma1_r: Array
+) -> tuple[list[Array], Array]:
     """HLLC fluxes of mass, momentum (3) and energy, and the speed of the middle wave."""
     c2_l, c2_r = gamma1_l * left[4] / left[0], gamma1_r * right[4] / right[0]
     s_l, s_r = _wave_speeds(left, c2_l, right, c2_r)
@@ -117,7 +131,9 @@ def _upwind(q: Array, to_upper: Array, to_lower: Array, middle: Array) -> Array:
     return np.where(middle >= 0.0, at_upper[:-1], at_lower[1:])
 
 
-def _species_fluxes(x: Array, total: Array, mass_flux: Array, to_upper: Array, to_lower: Array, middle: Array) -> list[Array]:
+def _species_fluxes(
+    x: Array, total: Array, mass_flux: Array, to_upper: Array, to_lower: Array, middle: Array
+) -> list[Array]:
     faces = [_upwind(q, to_upper, to_lower, middle) for q in x]
     face_sum = np.zeros_like(middle)
     for face in faces:
@@ -152,9 +168,7 @@ def sweep(
     at_upper, at_lower, to_upper, to_lower = _face_states(
         0.5 * courant, gamma1[1:-1], [rho, *velocity, p, internal]
     )
-    fluxes, middle = hllc(
-        [q[:-1] for q in at_upper], gamma1[1:-2], [q[1:] for q in at_lower], gamma1[2:-1]
-    )
+    fluxes, middle = hllc([q[:-1] for q in at_upper], gamma1[1:-2], [q[1:] for q in at_lower], gamma1[2:-1])
     if len(partial):
         x = partial * inverse
         total = np.zeros_like(rho)

@@ -12,6 +12,7 @@ import numpy as np
 import numpy.typing as npt
 
 from breakstep.kernels.compiled import compiled
+from breakstep.kernels.hydro_gas import row_differences
 from breakstep.kernels.hydro_rows import (
     ABAR,
     DIFFERENCE,
@@ -26,16 +27,12 @@ from breakstep.kernels.hydro_rows import (
     SPECIES,
     TO_LOWER,
     TO_UPPER,
+    UPWIND,
     ZBAR,
     part,
 )
-from breakstep.kernels.riemann import limited_difference
 
 Array = npt.NDArray[np.float64]
-
-# The differences of the gas are no longer needed when species are advected.
-_AT_UPPER = DIFFERENCE
-_AT_LOWER = DIFFERENCE + 1
 
 
 @compiled
@@ -71,33 +68,40 @@ def fractions(s: Array, count: int, species: int) -> None:
 
 
 @compiled
-def _upwind(s: Array, row: int, out: int, step: int, count: int) -> None:
-    """Value of an advected row at the face above each zone."""
-    both = count - 2 * step
-    below, here, above = part(s, row, 0, both), part(s, row, step, both), part(s, row, 2 * step, both)
-    to_upper, to_lower = part(s, TO_UPPER, step, both), part(s, TO_LOWER, step, both)
-    at_upper, at_lower = part(s, _AT_UPPER, step, both), part(s, _AT_LOWER, step, both)
-    for i in range(both):
-        difference = limited_difference(below[i], here[i], above[i])
-        at_upper[i] = here[i] + to_upper[i] * difference
-        at_lower[i] = here[i] + to_lower[i] * difference
-    face, next_lower = part(s, out, 0, count - step), part(s, _AT_LOWER, step, count - step)
+def upwind_weights(s: Array, step: int, count: int) -> None:
+    """Weight that the upwind zone's difference has at the face above each zone."""
+    next_lower = part(s, TO_LOWER, step, count - step)
     for i in range(count - step):
-        face[i] = s[_AT_UPPER * ROW + i] if s[MIDDLE * ROW + i] >= 0.0 else next_lower[i]
+        from_below, from_above = s[TO_UPPER * ROW + i], next_lower[i]
+        s[UPWIND * ROW + i] = from_below if s[MIDDLE * ROW + i] >= 0.0 else from_above
+
+
+@compiled
+def _upwind(s: Array, row: int, out: int, step: int, count: int) -> None:
+    """Value of an advected row at the face above each zone, which is also added to ``FACE_SUM``."""
+    row_differences(s, row, DIFFERENCE, step, count)
+    faces = count - step
+    below, above = part(s, row, 0, faces), part(s, row, step, faces)
+    difference_above, face = part(s, DIFFERENCE, step, faces), part(s, out, 0, faces)
+    for i in range(faces):
+        # Both candidates are computed before one is chosen: a choice of loads does not vectorise.
+        weight = s[UPWIND * ROW + i]
+        from_below = below[i] + weight * s[DIFFERENCE * ROW + i]
+        from_above = above[i] + weight * difference_above[i]
+        value = from_below if s[MIDDLE * ROW + i] >= 0.0 else from_above
+        face[i] = value
+        s[FACE_SUM * ROW + i] += value
 
 
 @compiled
 def face_fractions(s: Array, step: int, count: int, species: int) -> None:
     """Fractions at the face above each zone, and the factor that turns them into species fluxes."""
     faces = count - step
-    total = part(s, FACE_SUM, 0, faces)
-    total[:] = 0.0
+    upwind_weights(s, step, count)
+    _upwind(s, FRACTIONS, FACE_TOTAL, step, count)
+    part(s, FACE_SUM, 0, faces)[:] = 0.0
     for k in range(species):
         _upwind(s, SPECIES + k, SPECIES + species + k, step, count)
-        fraction = part(s, SPECIES + species + k, 0, faces)
-        for i in range(faces):
-            total[i] += fraction[i]
-    _upwind(s, FRACTIONS, FACE_TOTAL, step, count)
     for i in range(faces):
         scale = s[FACE_TOTAL * ROW + i] / s[FACE_SUM * ROW + i]
         s[SHARE * ROW + i] = s[FLUX * ROW + i] * (scale if s[FACE_SUM * ROW + i] > 0.0 else 1.0)

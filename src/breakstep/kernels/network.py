@@ -80,12 +80,17 @@ class Reaction:
 
 @dataclass(frozen=True, eq=False)
 class Network:
-    """A reaction network, immutable. ``arrays`` is what compiled functions take."""
+    """A reaction network, immutable.
+
+    ``arrays`` is what compiled functions take. ``positions``, shape (n_species + 1, n_species + 1), tells
+    where in the packed Jacobian of abundances and temperature an entry lies, -1 where it is always zero.
+    """
 
     name: str
     species: tuple[Species, ...]
     reactions: tuple[Reaction, ...]
     arrays: NetworkArrays
+    positions: NDArray[np.int64]
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -200,7 +205,8 @@ def build_network(
     faults = _faults(species, reactions, conserving)
     if faults:
         raise DeclarationError(f"network {name!r} cannot be used: " + "; ".join(faults), faults=faults)
-    return Network(name, tuple(species), tuple(reactions), _arrays(species, reactions))
+    arrays, positions = _arrays(species, reactions)
+    return Network(name, tuple(species), tuple(reactions), arrays, positions)
 
 
 def _faults(species: Sequence[Species], reactions: Sequence[Reaction], conserving: bool) -> list[str]:
@@ -228,12 +234,13 @@ def _balances(reaction: Reaction, known: dict[str, Species]) -> bool:
     return mass == 0.0 and sum(number * known[name].charge for name, number in change.items()) == 0.0
 
 
-def _arrays(species: Sequence[Species], reactions: Sequence[Reaction]) -> NetworkArrays:
+def _arrays(
+    species: Sequence[Species], reactions: Sequence[Reaction]
+) -> tuple[NetworkArrays, NDArray[np.int64]]:
     binding = np.array([one.binding_energy * MEV * N_A for one in species])
     reactants, changes = _reactant_slots(species, reactions), _net_changes(species, reactions)
-    pattern = _pattern(reactants, changes)
-    positions, elimination = analyse(pattern)
-    return NetworkArrays(
+    positions, elimination = analyse(_pattern(reactants, changes))
+    arrays = NetworkArrays(
         np.array([one.mass_number for one in species], dtype=np.float64),
         np.array([one.charge for one in species], dtype=np.float64),
         binding,
@@ -241,6 +248,7 @@ def _arrays(species: Sequence[Species], reactions: Sequence[Reaction]) -> Networ
         _stoichiometry(reactants, changes, binding, positions),
         elimination,
     )
+    return arrays, positions
 
 
 def _rate_table(reactions: Sequence[Reaction]) -> RateTable:

@@ -17,7 +17,7 @@ from __future__ import annotations
 from typing import NamedTuple
 
 from breakstep.kernels.compiled import compiled  # isort: skip  (must precede numba)
-from breakstep.kernels.unmanaged import unmanaged  # isort: skip
+from breakstep.kernels.unmanaged import merged  # isort: skip
 
 import numpy as np
 from numpy.typing import NDArray
@@ -107,7 +107,7 @@ def kinetics_scratch(network: NetworkArrays) -> KineticsScratch:
     )
 
 
-@unmanaged
+@merged
 def weigh_by_density(table: RateTable, density: float, scratch: KineticsScratch) -> None:
     """Set each reaction's constant factor for a zone of this density [g/cm^3]."""
     for r in range(table.prefactor.size):
@@ -117,7 +117,7 @@ def weigh_by_density(table: RateTable, density: float, scratch: KineticsScratch)
         scratch.weight[r] = weight
 
 
-@unmanaged
+@merged
 def _exponents(table: RateTable, temperature: float, scratch: KineticsScratch) -> None:
     a = table.coefficients
     t9 = temperature * 1e-9
@@ -129,7 +129,7 @@ def _exponents(table: RateTable, temperature: float, scratch: KineticsScratch) -
         exponent[s] = falling + a[3, s] * root + a[4, s] * t9 + a[5, s] * five_thirds + a[6, s] * log
 
 
-@unmanaged
+@merged
 def _exponent_slopes(table: RateTable, temperature: float, scratch: KineticsScratch) -> None:
     """d(exponent)/dT [1/K]."""
     a = table.coefficients
@@ -146,7 +146,7 @@ def _exponent_slopes(table: RateTable, temperature: float, scratch: KineticsScra
         slope[s] = falling + a[3, s] * third + a[4, s] * 1e-9 + a[5, s] * five_thirds
 
 
-@unmanaged
+@merged
 def evaluate_rates(table: RateTable, temperature: float, scratch: KineticsScratch) -> None:
     """Fill ``scratch.rate`` with weight * rate(T)."""
     _exponents(table, temperature, scratch)
@@ -158,7 +158,7 @@ def evaluate_rates(table: RateTable, temperature: float, scratch: KineticsScratc
         scratch.rate[r] = total * scratch.weight[r]
 
 
-@unmanaged
+@merged
 def evaluate_rates_and_slopes(table: RateTable, temperature: float, scratch: KineticsScratch) -> None:
     """As `evaluate_rates`, the same bits, and fill ``scratch.rate_slope`` with the derivative by T [1/K]."""
     evaluate_rates(table, temperature, scratch)
@@ -170,7 +170,7 @@ def evaluate_rates_and_slopes(table: RateTable, temperature: float, scratch: Kin
         scratch.rate_slope[r] = total * scratch.weight[r]
 
 
-@unmanaged
+@merged
 def evaluate_fluxes(reactants: Indices, scratch: KineticsScratch) -> None:
     """Fill ``scratch.flux`` from the rates and ``scratch.molar``."""
     y = scratch.molar
@@ -178,7 +178,7 @@ def evaluate_fluxes(reactants: Indices, scratch: KineticsScratch) -> None:
         scratch.flux[r] = scratch.rate[r] * (y[reactants[0, r]] * y[reactants[1, r]] * y[reactants[2, r]])
 
 
-@unmanaged
+@merged
 def evaluate_slot_slopes(reactants: Indices, scratch: KineticsScratch) -> None:
     """Fill ``scratch.slot_slope``: d(flux)/d(abundance in this slot)."""
     y = scratch.molar
@@ -189,7 +189,7 @@ def evaluate_slot_slopes(reactants: Indices, scratch: KineticsScratch) -> None:
         scratch.slot_slope[3 * r + 2] = scratch.rate[r] * (a * b)
 
 
-@unmanaged
+@merged
 def abundance_change(stoichiometry: Stoichiometry, flux: Floats, change: Floats) -> None:
     """Add up dY/dt [mol/g/s] of all species from the fluxes, into the first entries of ``change``."""
     start = stoichiometry.change_start
@@ -200,7 +200,7 @@ def abundance_change(stoichiometry: Stoichiometry, flux: Floats, change: Floats)
         change[k] = total
 
 
-@unmanaged
+@merged
 def heat_release(stoichiometry: Stoichiometry, energy_per_nuclei: float, flux: Floats) -> float:
     """Sum over reactions of flux * (binding energy set free - energy_per_nuclei * nuclei made) [erg/g/s].
 
@@ -213,7 +213,7 @@ def heat_release(stoichiometry: Stoichiometry, energy_per_nuclei: float, flux: F
     return total
 
 
-@unmanaged
+@merged
 def abundance_jacobian(stoichiometry: Stoichiometry, slot_slope: Floats, jacobian: Floats) -> None:
     """Set the packed entries d(dY_i/dt)/dY_j; all others become zero."""
     jacobian[:] = 0.0
@@ -225,7 +225,7 @@ def abundance_jacobian(stoichiometry: Stoichiometry, slot_slope: Floats, jacobia
         jacobian[stoichiometry.entry[e]] = total
 
 
-@unmanaged
+@merged
 def heat_gradient(
     stoichiometry: Stoichiometry, energy_per_nuclei: float, slot_slope: Floats, species: int
 ) -> float:

@@ -59,7 +59,15 @@ def contact_speed(
 
 @inlined
 def side_flux(
-    rho: float, u: float, v: float, w: float, p: float, energy: float, bound: float, clipped: float, middle: float
+    rho: float,
+    u: float,
+    v: float,
+    w: float,
+    p: float,
+    energy: float,
+    bound: float,
+    clipped: float,
+    middle: float,
 ) -> tuple[float, float, float, float, float]:
     """HLLC flux from the state on the upwind side of the middle wave.
 

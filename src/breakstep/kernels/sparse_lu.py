@@ -16,7 +16,7 @@ from __future__ import annotations
 
 from typing import NamedTuple
 
-from breakstep.kernels.unmanaged import unmanaged  # isort: skip  (must precede numba)
+from breakstep.kernels.unmanaged import merged  # isort: skip  (must precede numba)
 
 import numpy as np
 from numpy.typing import NDArray
@@ -107,7 +107,7 @@ def analyse(pattern: NDArray[np.bool_]) -> tuple[NDArray[np.int64], Elimination]
     )
 
 
-@unmanaged
+@merged
 def factorise(elimination: Elimination, entries: Floats) -> None:
     """Overwrite the packed matrix by its factors: unit lower, upper, reciprocals on the diagonal."""
     for step in range(elimination.pivot.size):
@@ -123,7 +123,7 @@ def factorise(elimination: Elimination, entries: Floats) -> None:
                 entries[target] -= factor * entries[elimination.update_source[update]]
 
 
-@unmanaged
+@merged
 def solve(elimination: Elimination, factors: Floats, vector: Floats) -> None:
     """Overwrite ``vector``, shape (n,), by the solution, given the factors that `factorise` made."""
     n = elimination.pivot.size

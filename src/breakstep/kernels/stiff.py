@@ -20,7 +20,7 @@ from __future__ import annotations
 from typing import NamedTuple
 
 from breakstep.kernels.compiled import compiled  # isort: skip  (must precede numba)
-from breakstep.kernels.unmanaged import unmanaged  # isort: skip
+from breakstep.kernels.unmanaged import merged, unmanaged  # isort: skip
 
 import numpy as np
 from numpy.typing import NDArray
@@ -108,7 +108,7 @@ def stiff_scratch(network: NetworkArrays) -> StiffScratch:
     )
 
 
-@unmanaged
+@merged
 def _thermal(zone: Zone, temperature: float, nuclei: float) -> tuple[float, float]:
     """Specific energy and heat capacity for this many nuclei [mol/g]."""
     abar, zbar = 1.0 / nuclei, zone.electrons / nuclei
@@ -116,7 +116,7 @@ def _thermal(zone: Zone, temperature: float, nuclei: float) -> tuple[float, floa
     return energy, capacity
 
 
-@unmanaged
+@merged
 def _per_nuclei(zone: Zone, temperature: float, nuclei: float) -> tuple[float, float, float]:
     """Heat capacity c_v, and the derivatives of energy and of c_v by the number of nuclei."""
     step = _NUCLEI_STEP * nuclei
@@ -125,7 +125,7 @@ def _per_nuclei(zone: Zone, temperature: float, nuclei: float) -> tuple[float, f
     return capacity, (more_energy - energy) / step, (more_capacity - capacity) / step
 
 
-@unmanaged
+@merged
 def _nuclei(state: Floats, n: int) -> float:
     total = 0.0
     for k in range(n):
@@ -133,13 +133,13 @@ def _nuclei(state: Floats, n: int) -> float:
     return total
 
 
-@unmanaged
+@merged
 def _load(network: NetworkArrays, state: Floats, kinetics: KineticsScratch) -> None:
     for k in range(network.mass_numbers.size):
         kinetics.molar[k] = state[k]
 
 
-@unmanaged
+@merged
 def _finish_change(
     network: NetworkArrays, zone: Zone, state: Floats, kinetics: KineticsScratch, change: Floats
 ) -> None:
@@ -153,7 +153,7 @@ def _finish_change(
         change[n] = heat_release(network.stoichiometry, per_nuclei, kinetics.flux) / capacity
 
 
-@unmanaged
+@merged
 def right_hand_side(
     network: NetworkArrays, zone: Zone, state: Floats, kinetics: KineticsScratch, change: Floats
 ) -> None:
@@ -163,7 +163,7 @@ def right_hand_side(
     _finish_change(network, zone, state, kinetics, change)
 
 
-@unmanaged
+@merged
 def linearise(
     network: NetworkArrays, zone: Zone, state: Floats, kinetics: KineticsScratch, change: Floats, jacobian: Floats
 ) -> None:
@@ -179,7 +179,7 @@ def linearise(
         _temperature_entries(network, zone, state, kinetics, change, jacobian)
 
 
-@unmanaged
+@merged
 def _temperature_entries(
     network: NetworkArrays, zone: Zone, state: Floats, kinetics: KineticsScratch, change: Floats, jacobian: Floats
 ) -> None:
@@ -207,7 +207,7 @@ def _temperature_entries(
         jacobian[stoichiometry.temperature_column[i]] = kinetics.slot_slope[i]
 
 
-@unmanaged
+@merged
 def _slopes_of_fluxes(reactants: NDArray[np.uint32], kinetics: KineticsScratch) -> None:
     y = kinetics.molar
     for r in range(kinetics.flux.size):
@@ -215,7 +215,7 @@ def _slopes_of_fluxes(reactants: NDArray[np.uint32], kinetics: KineticsScratch) 
         kinetics.flux[r] = kinetics.rate_slope[r] * product
 
 
-@unmanaged
+@merged
 def tolerance_norm(
     vector: Floats, state: Floats, other: Floats, mass_numbers: Floats, rtol: float, atol: float
 ) -> float:
@@ -234,7 +234,7 @@ def tolerance_norm(
     return np.sqrt((total + ratio * ratio) / (n + 1))
 
 
-@unmanaged
+@merged
 def _prepare_matrix(network: NetworkArrays, h: float, scratch: StiffScratch) -> None:
     for e in range(scratch.matrix.size):
         scratch.matrix[e] = -scratch.jacobian[e]
@@ -243,7 +243,7 @@ def _prepare_matrix(network: NetworkArrays, h: float, scratch: StiffScratch) -> 
     factorise(network.elimination, scratch.matrix)
 
 
-@unmanaged
+@merged
 def _stage(network: NetworkArrays, zone: Zone, state: Floats, h: float, i: int, scratch: StiffScratch) -> None:
     """Compute U_i from the earlier ones."""
     u = scratch.stages[i]
@@ -266,7 +266,7 @@ def _stage(network: NetworkArrays, zone: Zone, state: Floats, h: float, i: int, 
     solve(network.elimination, scratch.matrix, u)
 
 
-@unmanaged
+@merged
 def _propose(network: NetworkArrays, zone: Zone, state: Floats, h: float, scratch: StiffScratch) -> None:
     """Leave the state after a sub-step h in ``scratch.trial``, its error estimate in the last stage."""
     _prepare_matrix(network, h, scratch)
@@ -276,7 +276,7 @@ def _propose(network: NetworkArrays, zone: Zone, state: Floats, h: float, scratc
         scratch.trial[k] += scratch.stages[STAGES - 1, k]
 
 
-@unmanaged
+@merged
 def _step_factor(error: float) -> float:
     """By what the elementary controller divides the sub-step; the largest shrinking for NaN."""
     factor = np.sqrt(np.sqrt(error)) / _SAFETY
@@ -285,13 +285,13 @@ def _step_factor(error: float) -> float:
     return max(factor, _GROW)
 
 
-@unmanaged
+@merged
 def _predictive_factor(error: float, h: float, last_error: float, last_h: float) -> float:
     """Gustafsson's predictive controller (Hairer & Wanner, section IV.8), clamped alike."""
     return _step_factor(error * error / last_error * (last_h / h) ** 4)
 
 
-@unmanaged
+@merged
 def first_sub_step(change_norm: float, duration: float) -> float:
     """A sub-step from the zone's own state alone: bits must not depend on neighbours or on the past."""
     if change_norm * duration > _FIRST_CHANGE:

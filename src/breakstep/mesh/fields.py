@@ -27,6 +27,10 @@ class Field:
         For each axis, the components that point along it and so change sign in a mirror.
     fixed : mapping of (int, int) to tuple of float
         For each (axis, side) with a fixed edge, the value of each component beyond it.
+    scratch : bool
+        Made and used within a cycle: not part of the final state, and without an initial state unless given.
+    per_tile : bool
+        One value a tile rather than a zone: arrays have shape (components, 1, 1, 1). Always scratch.
     """
 
     name: str
@@ -34,12 +38,16 @@ class Field:
     units: tuple[str, ...] = ("",)
     normal: Mapping[int, tuple[int, ...]] = field(default_factory=dict)
     fixed: Mapping[tuple[int, int], tuple[float, ...]] = field(default_factory=dict)
+    scratch: bool = False
+    per_tile: bool = False
 
     def __post_init__(self) -> None:
         if not self.name.isidentifier():
             raise DeclarationError(f"a field's name must be an identifier, not {self.name!r}")
         if not self.components:
             raise DeclarationError(f"field {self.name!r} needs at least one component")
+        if self.per_tile and not self.scratch:
+            raise DeclarationError(f"field {self.name!r} holds one value a tile, so it must be scratch")
         for (axis, side), values in self.fixed.items():
             if len(values) != len(self.components):
                 raise DeclarationError(
@@ -51,6 +59,10 @@ class Field:
     def size(self) -> int:
         """Numbers a zone holds."""
         return len(self.components)
+
+    def shape(self, zones: tuple[int, int, int]) -> tuple[int, int, int, int]:
+        """Shape of its array on a tile of so many zones."""
+        return (self.size, 1, 1, 1) if self.per_tile else (self.size, *zones)
 
     def unit(self, component: int) -> str:
         """Unit of one component."""

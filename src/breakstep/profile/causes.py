@@ -19,14 +19,12 @@ stamps that contradict the graph, as badly aligned clocks make them, move bookin
 
 from __future__ import annotations
 
-from typing import Final
+from typing import Final, NamedTuple
 
 import numpy as np
 
 from breakstep.profile.compiling import compiled_loop
 from breakstep.profile.frames import Integers
-from breakstep.profile.schema import TASK_KINDS
-from breakstep.profile.timeline import REDUCTION, Blocks, Timeline
 
 #: The accounts that a gap can be booked under, in the order of their codes.
 WAITS: Final = ("neighbour", "reduction", "barrier", "transfer", "engine")
@@ -35,11 +33,77 @@ NEIGHBOUR, REDUCED, HELD, MOVED, DISPATCH = range(5)
 REASONS: Final = ("ready", "queued", "under way", "running")
 READY, QUEUED, UNDER_WAY, RUNNING = range(4)
 
-_STEP, _PACK = TASK_KINDS.index("step"), TASK_KINDS.index("pack")
+#: Places in the schema's EDGE_KINDS and TASK_KINDS, written out for the reason given in ``compiling``.
+DATA, REDUCTION, BARRIER = 0, 1, 2
+STEP, COMBINE, COUNT, RELEASE, PACK = range(5)
+#: Earlier than every time stamp: the arrival of an input that does not exist.
+NEVER: Final = -(2**62)
 _UNDECIDED = -1
 #: Columns of a part: account, reason, task at fault, begin, end, and how much of that is meant [ns].
 PART_COLUMNS: Final = ("account", "reason", "task", "start_ns", "end_ns", "ns")
 _ACCOUNT, _REASON, _TASK, _BEGIN, _END, _AMOUNT = range(6)
+
+
+class Inputs(NamedTuple):
+    """For each task its input that arrived last, once among its data and reductions, once among its barriers.
+
+    Attributes
+    ----------
+    data_from, data_kind, barrier_from : ndarray of int64, shape (tasks,)
+        Position of the input's task (-1 for none), and DATA or REDUCTION.
+    data_at, barrier_at : ndarray of int64, shape (tasks,)
+        Moment of its arrival [ns], NEVER for none.
+    """
+
+    data_from: Integers
+    data_kind: Integers
+    data_at: Integers
+    barrier_from: Integers
+    barrier_at: Integers
+
+
+class Blocks(NamedTuple):
+    """Each thread's time in tasks, as blocks without idle time inside, in the order of threads, then time.
+
+    Attributes
+    ----------
+    begin, end : ndarray of int64, shape (blocks,)
+        [ns]
+    busy_before : ndarray of int64, shape (blocks,)
+        Time in earlier blocks of the same thread [ns].
+    opener : ndarray of int64, shape (blocks,)
+        Position of the task that opens the block: the one that the idle time before it ends with.
+    first : ndarray of int64, shape (threads + 1,)
+        Where each thread's blocks start.
+    """
+
+    begin: Integers
+    end: Integers
+    busy_before: Integers
+    opener: Integers
+    first: Integers
+
+
+class Timeline(NamedTuple):
+    """Everything that the walk along causes reads.
+
+    Attributes
+    ----------
+    start, end : ndarray of int64, shape (tasks,)
+        [ns]
+    worker, thread, kind, stage : ndarray of int64, shape (tasks,)
+        Worker number; row in the thread table sorted by worker and thread; place in TASK_KINDS; code of the
+        stage's name.
+    """
+
+    start: Integers
+    end: Integers
+    worker: Integers
+    thread: Integers
+    kind: Integers
+    stage: Integers
+    inputs: Inputs
+    blocks: Blocks
 
 
 @compiled_loop
@@ -100,9 +164,9 @@ def _through(
     begun, until = max(low, run.start[source]), min(high, run.end[source])
     if begun < until:
         account = DISPATCH
-        if run.kind[source] == _STEP:
+        if run.kind[source] == STEP:
             account = why
-        elif run.kind[source] == _PACK:
+        elif run.kind[source] == PACK:
             account = MOVED
         count = _put(parts, count, account, RUNNING, source, begun, until, until - begun)
     return count
@@ -120,7 +184,7 @@ def _with_room(stack: Integers, size: int) -> Integers:
 
 @compiled_loop
 def _walk(run: Timeline, task: int, low: int, high: int, parts: Integers) -> int:
-    """Explain the wait [low, high] of a task's thread; return the number of parts, whether they fitted or not."""
+    """Explain the wait [low, high] of a task's thread; return how many parts there are, fitting or not."""
     inputs = run.inputs
     stack = np.empty((16, 4), np.int64)
     stack[0, 0], stack[0, 1], stack[0, 2], stack[0, 3] = task, low, high, _UNDECIDED

@@ -63,7 +63,10 @@ def sound_frames(tables: Mapping[str, pa.Table], manifest: Manifest, where: Wher
         For the first disagreement found.
     """
     _raise_first(_gaps(tables), where)
-    frames = frames_of(tables)
+    try:
+        frames = frames_of(tables)
+    except (ValueError, pa.ArrowException) as fault:  # for instance a word that its dictionary lists twice
+        raise ProfileError(f"{where('tasks')} or a table beside it: {fault}; {_REMEDY}") from fault
     _raise_first(_faults(frames, manifest), where)
     return frames
 
@@ -76,11 +79,9 @@ def _raise_first(faults: Iterator[_Fault], where: Where) -> None:
 def _gaps(tables: Mapping[str, pa.Table]) -> Iterator[_Fault]:
     for name, table in tables.items():
         for column in table.column_names:
-            if table.column(column).null_count:
-                yield (
-                    name,
-                    f"column {column}: expected a value in every row, not {table.column(column).null_count} empty ones",
-                )
+            empty = table.column(column).null_count
+            if empty:
+                yield name, f"column {column}: expected a value in every row, not {empty} empty ones"
 
 
 def _faults(frames: Frames, manifest: Manifest) -> Iterator[_Fault]:

@@ -2,6 +2,10 @@
 
 Their arithmetic is on int64 alone, so no flag can change a result. Set ``NUMBA_DISABLE_JIT=1`` to run
 them as plain Python.
+
+What is compiled is kept on disk, and made anew only when the file that a function stands in has changed.
+So a compiled loop uses nothing from another file: codes and array layouts that it knows are written in its
+own, and a test compares the codes with the schema.
 """
 
 from __future__ import annotations

@@ -12,12 +12,13 @@ from __future__ import annotations
 
 import json
 import math
-from collections.abc import Iterator, Mapping
+from collections.abc import Hashable, Iterator
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import xarray as xr
+from zarr.codecs import ZstdCodec
 
 from breakstep.errors import ProfileError
 from breakstep.profile.digest import overall_digest, tile_digests
@@ -59,8 +60,8 @@ def _check_field(name: str, final: FinalField, record: RunRecord) -> None:
     expected = (len(final.components), *(len(record.coordinates.get(axis, ())) for axis in AXES))
     if final.values.shape != expected or final.values.dtype != np.float64:
         raise ProfileError(
-            f"record, field {name}: expected float64 values of shape {expected} (components, zone centres along"
-            f" x, y, z), not {final.values.dtype} of shape {final.values.shape}; record the whole mesh",
+            f"record, field {name}: expected float64 values of shape {expected} (components, zone centres"
+            f" along x, y, z), not {final.values.dtype} of shape {final.values.shape}; record the whole mesh",
             field=name,
         )
     if len(final.component_units) != len(final.components):
@@ -74,10 +75,11 @@ def _check_field(name: str, final: FinalField, record: RunRecord) -> None:
 def write_fields(dataset: xr.Dataset, path: Path) -> None:
     """Write the store; one chunk per component."""
     stored = dataset.drop_vars([n for n in dataset.coords if n not in AXES])
-    chunks = {
-        name: {"chunks": (1, *(max(n, 1) for n in v.shape[1:]))} for name, v in stored.data_vars.items()
-    }
-    stored.to_zarr(path, mode="w", zarr_format=3, consolidated=False, encoding=chunks)
+    squeezed = {"compressors": (ZstdCodec(checksum=True),), "_FillValue": None}
+    encoding: dict[Hashable, dict[str, Any]] = {name: dict(squeezed) for name in stored.variables}
+    for name, values in stored.data_vars.items():
+        encoding[name]["chunks"] = (1, *values.shape[1:])
+    stored.to_zarr(path, mode="w", zarr_format=3, consolidated=False, encoding=encoding)
 
 
 def read_fields(path: Path, manifest: Manifest, *, check_digests: bool = True) -> xr.Dataset:
@@ -143,7 +145,7 @@ def _metadata_faults(file: Path) -> Iterator[str]:
         yield f"cannot be read as the description of an array ({_brief(fault)})"
         return
     if data_type != "float64" or not codecs <= _CODECS or zones < 0:
-        yield f"expected an array of float64 with the codecs {', '.join(sorted(_CODECS))}, not {data_type}, {codecs}"
+        yield f"expected float64 with the codecs {', '.join(sorted(_CODECS))}, not {data_type} with {codecs}"
 
 
 def _check_contents(dataset: xr.Dataset, manifest: Manifest, path: Path) -> None:
@@ -158,9 +160,13 @@ def _check_contents(dataset: xr.Dataset, manifest: Manifest, path: Path) -> None
         if values.dims[1:] != AXES or list(values.shape[1:]) != manifest["mesh"]["shape"]:
             found = dict(zip(values.dims, values.shape, strict=True))
             raise ProfileError(
-                f"{path}, field {name}: expected {manifest['mesh']['shape']} zones along x, y, z, not {found};"
-                f" {_REMEDY}"
+                f"{path}, field {name}: expected {manifest['mesh']['shape']} zones along x, y, z,"
+                f" not {found}; {_REMEDY}"
             )
+    for axis in AXES:
+        centres = dataset.coords[axis].values if axis in dataset.coords else np.empty(0)
+        if dataset.data_vars and not (len(centres) and np.all(np.diff(centres) > 0)):
+            raise ProfileError(f"{path}/{axis}: expected ascending zone centres; {_REMEDY}")
 
 
 def _check_digests(dataset: xr.Dataset, manifest: Manifest, path: Path) -> None:
@@ -171,8 +177,8 @@ def _check_digests(dataset: xr.Dataset, manifest: Manifest, path: Path) -> None:
         wrong = [tile for tile, pair in enumerate(zip(found, expected, strict=True)) if pair[0] != pair[1]]
         if wrong:
             raise ProfileError(
-                f"{path}, field {name}: the values on tile {wrong[0]} ({len(wrong)} of {len(tiles)} tiles differ)"
-                f" do not have the digest that the manifest gives; {_REMEDY}",
+                f"{path}, field {name}: the values on tile {wrong[0]} ({len(wrong)} of {len(tiles)} tiles"
+                f" differ) do not have the digest that the manifest gives; {_REMEDY}",
                 field=name,
                 tiles=wrong,
             )
@@ -180,11 +186,3 @@ def _check_digests(dataset: xr.Dataset, manifest: Manifest, path: Path) -> None:
         raise ProfileError(
             f"{path.parent}/manifest.json: key digest does not belong to key digests; {_REMEDY}"
         )
-
-
-def component(dataset: xr.Dataset, field: str, name: str) -> Mapping[str, Any] | xr.DataArray:
-    """One component of a field, with its unit in the attribute ``units``."""
-    values = dataset[field]
-    place = list(values.attrs["components"]).index(name)
-    chosen = values.isel({_component_axis(field): place})
-    return chosen.assign_attrs(units=values.attrs["units"][place])

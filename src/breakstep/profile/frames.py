@@ -33,15 +33,15 @@ def integers(frame: pd.DataFrame, column: str) -> Integers:
 
 def codes_of(frame: pd.DataFrame, column: str, words: Sequence[str]) -> Integers:
     """For each row, the place of its word in ``words``; -1 for a word that is not among them."""
-    categories = list(frame[column].cat.categories)
+    codes, categories = words_of(frame, column)
     table = np.array([words.index(w) if w in words else -1 for w in categories], dtype=np.int64)
-    codes = frame[column].cat.codes.to_numpy(dtype=np.int64)
-    return table[codes] if len(table) else np.full(len(codes), -1, dtype=np.int64)
+    return table[codes] if len(table) else codes
 
 
 def words_of(frame: pd.DataFrame, column: str) -> tuple[Integers, list[str]]:
     """Codes of a column of words, and the words that the codes stand for."""
-    return frame[column].cat.codes.to_numpy(dtype=np.int64), list(frame[column].cat.categories)
+    codes: Integers = frame[column].cat.codes.to_numpy().astype(np.int64)
+    return codes, list(frame[column].cat.categories)
 
 
 def positions(numbers: Integers, wanted: Integers) -> Integers:
@@ -49,10 +49,9 @@ def positions(numbers: Integers, wanted: Integers) -> Integers:
     if len(numbers) == 0:
         return np.full(len(wanted), -1, dtype=np.int64)
     if numbers[-1] - numbers[0] == len(numbers) - 1:  # consecutive: no search needed
-        found = wanted - numbers[0]
-        found[(wanted < numbers[0]) | (wanted > numbers[-1])] = -1
-        return found
-    found = np.searchsorted(numbers, wanted).astype(np.int64)
+        outside = (wanted < numbers[0]) | (wanted > numbers[-1])
+        return np.where(outside, -1, wanted - numbers[0])
+    found: Integers = np.searchsorted(numbers, wanted).astype(np.int64)
     found[found == len(numbers)] = 0
     found[numbers[found] != wanted] = -1
     return found
@@ -60,7 +59,8 @@ def positions(numbers: Integers, wanted: Integers) -> Integers:
 
 def thread_keys(frame: pd.DataFrame) -> Integers:
     """One number per (worker, thread), in the order of workers, then threads."""
-    return integers(frame, "worker") * 2**32 + integers(frame, "thread")
+    keys: Integers = integers(frame, "worker") * 2**32 + integers(frame, "thread")
+    return keys
 
 
 def sums_by(groups: Integers, values: Integers, size: int) -> Integers:

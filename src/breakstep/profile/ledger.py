@@ -20,7 +20,15 @@ from typing import Final
 import numpy as np
 import pandas as pd
 
-from breakstep.profile.causes import PART_COLUMNS, REASONS, WAITS, explain_all, explain_one
+from breakstep.profile.causes import (
+    PART_COLUMNS,
+    REASONS,
+    WAITS,
+    Blocks,
+    Timeline,
+    explain_all,
+    explain_one,
+)
 from breakstep.profile.compiling import compiled_loop
 from breakstep.profile.frames import (
     Frames,
@@ -30,10 +38,9 @@ from breakstep.profile.frames import (
     positions,
     sums_by,
     thread_keys,
-    words_of,
 )
 from breakstep.profile.schema import INTERVAL_KINDS
-from breakstep.profile.timeline import Blocks, Timeline, timeline_of
+from breakstep.profile.timeline import timeline_of
 
 ACCOUNTS: Final = ("compute", "neighbour", "reduction", "barrier", "transfer", "engine", "unemployed")
 
@@ -103,8 +110,9 @@ class Ledger:
         Returns
         -------
         DataFrame
-            Columns ``account``, ``reason``, ``task`` (the number of the one at fault), ``start_ns``, ``end_ns``
-            and ``ns``, how much of that interval is meant; the latest first. Empty if there was no gap.
+            Columns ``account``, ``reason``, ``task`` (the number of the one at fault), ``start_ns``,
+            ``end_ns`` and ``ns``, how much of that interval is meant; the latest first. Empty if there was
+            no gap.
         """
         found = self.gaps[self.gaps["task"] == task]
         parts = np.empty((0, len(PART_COLUMNS)), dtype=np.int64)
@@ -178,7 +186,7 @@ def _book_gaps(
     low, high = _gap_bounds(blocks, first)
     real = low < high
     low, high, task = low[real], high[real], blocks.opener[real]
-    codes, stages = words_of(frames["tasks"], "stage")
+    stages = list(frames["tasks"]["stage"].cat.categories)
     by_gap, by_stage = explain_all(run, task, low, high, len(stages))
     for place, account in enumerate(WAITS):
         by_thread[account] += sums_by(run.thread[task], by_gap[:, place], len(by_thread))

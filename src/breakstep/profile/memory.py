@@ -14,9 +14,9 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from breakstep.profile.causes import BARRIER
 from breakstep.profile.frames import Frames, Integers, codes_of, integers, positions, words_of
 from breakstep.profile.schema import EDGE_KINDS
-from breakstep.profile.timeline import BARRIER
 
 
 @dataclass(frozen=True)
@@ -26,8 +26,8 @@ class LiveBytes:
     Attributes
     ----------
     total : Series of int64, index moment [ns]
-        Live bytes of all workers from that moment to the next: both what was there and what was added before
-        anything was freed are kept, as two entries of one moment, so the highest value is the high-water mark.
+        Live bytes of all workers from that moment to the next. A moment at which something is added and
+        something freed has two entries, before and after freeing; the highest of all is the high-water mark.
     by_worker : dict of int to Series
         The same for each worker that made something.
     by_kind : dict of str to Series

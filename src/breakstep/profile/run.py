@@ -5,7 +5,6 @@ Accounts are made when they are first asked for, and kept.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from functools import cached_property
 from pathlib import Path
 from typing import cast
@@ -131,9 +130,3 @@ class Profile:
     def live(self) -> LiveBytes:
         """Live bytes over the run."""
         return live_bytes(self.frames)
-
-
-def profile_status(manifest: Mapping[str, object]) -> str:
-    """How the run ended, for a heading: its status, with the message where it was cut short."""
-    message = manifest["message"]
-    return f"{manifest['status']}: {message}" if message else str(manifest["status"])

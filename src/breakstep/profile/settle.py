@@ -1,11 +1,14 @@
-"""From a record to what is kept of it: digests and row counts added, leftovers of a cut-short run left out."""
+"""From a record to what is kept: digests and row counts are added, leftovers of a cut-short run left out."""
 
 from __future__ import annotations
 
+import json
 from typing import Any
 
+import numpy as np
 import pyarrow as pa
 
+from breakstep.errors import ProfileError
 from breakstep.profile.checks import without_unrun
 from breakstep.profile.digest import overall_digest, tile_digests
 from breakstep.profile.record import RunRecord
@@ -27,9 +30,25 @@ def settled(record: RunRecord) -> tuple[dict[str, Any], dict[str, pa.Table]]:
         manifest["digests"] = _digests(record)
     if "digest" not in manifest:
         manifest["digest"] = overall_digest(manifest["digests"])
-    return manifest, tables
+    return _plain(manifest), tables
 
 
 def _digests(record: RunRecord) -> dict[str, list[str]]:
     tiles = record.manifest.get("mesh", {}).get("tiles", [])
     return {name: tile_digests(name, final.values, tiles) for name, final in record.fields.items()}
+
+
+def _plain(manifest: dict[str, Any]) -> dict[str, Any]:
+    """The manifest as it will be read back: lists for tuples and arrays, plain numbers for numpy's."""
+    try:
+        return json.loads(json.dumps(manifest, allow_nan=False, default=_plain_number))  # type: ignore[no-any-return]
+    except (TypeError, ValueError) as fault:
+        raise ProfileError(
+            f"record, manifest: expected what JSON can hold, but {fault}; record plain values"
+        ) from fault
+
+
+def _plain_number(value: Any) -> Any:
+    if isinstance(value, np.generic | np.ndarray):
+        return value.tolist()
+    raise TypeError(f"found {type(value).__name__} {value!r}")

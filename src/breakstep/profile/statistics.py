@@ -7,8 +7,8 @@ of tasked over lockstep is then the reciprocal of the interval of lockstep over 
 
 What few pairs can say
 ----------------------
-With three pairs the factor is t(0.975, 2) / sqrt(3) = 2.48 standard deviations of the logarithms: at a scatter
-of 2 % from pair to pair a gain below about 5 % stays undecided, at five pairs (1.24) below 2.5 %, at
+With three pairs the half width is t(0.975, 2) / sqrt(3) = 2.48 standard deviations of the logarithms: at a
+scatter of 2 % from pair to pair a gain below about 5 % stays undecided, at five pairs (1.24) below 2.5 %, at
 ten (0.72) below 1.5 %. Three numbers cannot show either whether their scatter is normal, which Student's
 interval assumes, and one disturbed pair widens it until nothing is significant. So a gain that is found with
 three pairs stands on that assumption, and a gain that is not found may still be there. One pair has no

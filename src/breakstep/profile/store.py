@@ -14,7 +14,6 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any, NoReturn, cast
 
-import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 import xarray as xr
@@ -92,21 +91,12 @@ def _write_tables(tables: Mapping[str, pa.Table], folder: Path) -> None:
     for name, table in tables.items():
         whole = [f.name for f in table.schema if pa.types.is_integer(f.type)]
         # Differences of neighbouring rows are small in every integer column; words are kept as a dictionary.
-        pq.write_table(
-            table,
-            _table_file(folder, name),
-            compression="zstd",
-            use_dictionary=[f.name for f in table.schema if pa.types.is_dictionary(f.type)],
-            column_encoding=dict.fromkeys(whole, "DELTA_BINARY_PACKED"),
-            write_page_checksum=True,
-        )
-
-
-def _plain(value: Any) -> Any:
-    """What JSON can hold, for numpy's numbers and arrays."""
-    if isinstance(value, np.generic | np.ndarray):
-        return value.tolist()
-    raise TypeError(f"{type(value).__name__} {value!r}")
+        encoding: dict[str, Any] = {
+            "use_dictionary": [f.name for f in table.schema if pa.types.is_dictionary(f.type)],
+            "column_encoding": dict.fromkeys(whole, "DELTA_BINARY_PACKED"),
+        }
+        file = _table_file(folder, name)
+        pq.write_table(table, file, compression="zstd", write_page_checksum=True, **encoding)
 
 
 def _checked_manifest(manifest: Any, place: Path) -> Manifest:
@@ -120,12 +110,8 @@ def _write_manifest(manifest: Mapping[str, Any], folder: Path) -> None:
     """Write under another name, then rename, so that no half-written manifest is ever seen."""
     unfinished = folder / f"{MANIFEST}.unfinished"
     try:
-        text = json.dumps(manifest, indent=1, allow_nan=False, default=_plain)
-    except (TypeError, ValueError) as fault:
-        raise ProfileError(f"record, manifest: cannot be written as JSON: {fault}") from fault
-    try:
         with unfinished.open("w", encoding="utf-8") as file:
-            file.write(text)
+            json.dump(manifest, file, indent=1, allow_nan=False)
             file.flush()
             os.fsync(file.fileno())
         unfinished.replace(folder / MANIFEST)
@@ -202,7 +188,7 @@ def _read_table(layout: TableLayout, folder: Path, manifest: Manifest) -> pa.Tab
             f"{file}: expected the table {layout.name}, the file is missing; {_REMEDY}", file=str(file)
         )
     try:
-        table = pq.ParquetFile(file, page_checksum_verification=True).read()
+        table = pq.ParquetFile(file, page_checksum_verification=True).read().unify_dictionaries()
         table.validate(full=True)
     except (pa.ArrowException, OSError, ValueError, TypeError, MemoryError) as fault:
         first = (str(fault).strip().splitlines() or [type(fault).__name__])[0]
@@ -218,9 +204,9 @@ def _read_table(layout: TableLayout, folder: Path, manifest: Manifest) -> pa.Tab
 
 def _table_fault(layout: TableLayout, table: pa.Table, rows: int) -> str | None:
     names = table.column_names
-    missing = [name for name in layout.names if name not in names]
-    if missing or len(set(names)) < len(names):
-        return f"column {', '.join(missing) or 'names'}: expected the columns {', '.join(layout.names)} once each, found {', '.join(names)}"
+    for name in layout.names:
+        if names.count(name) != 1:
+            return f"column {name}: expected it once, found the columns {', '.join(names) or 'of no name'}"
     for column in layout.columns:
         if table.schema.field(column.name).type != column.type:
             return (

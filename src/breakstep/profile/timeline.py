@@ -6,79 +6,13 @@ position in the task table, which ascends with their numbers.
 
 from __future__ import annotations
 
-from typing import NamedTuple
-
 import numpy as np
+from numpy.typing import NDArray
 
+from breakstep.profile.causes import BARRIER, NEVER, Blocks, Inputs, Timeline
 from breakstep.profile.compiling import compiled_loop
 from breakstep.profile.frames import Frames, Integers, codes_of, integers, positions, thread_keys, words_of
 from breakstep.profile.schema import EDGE_KINDS, TASK_KINDS
-
-#: Earlier than every time stamp: the arrival of an input that does not exist.
-NEVER = -(2**62)
-DATA, REDUCTION, BARRIER = (EDGE_KINDS.index(kind) for kind in ("data", "reduction", "barrier"))
-
-
-class Inputs(NamedTuple):
-    """For each task its input that arrived last, once among its data and reductions, once among its barriers.
-
-    Attributes
-    ----------
-    data_from, data_kind, barrier_from : ndarray of int64, shape (tasks,)
-        Position of the input's task (-1 for none), and DATA or REDUCTION.
-    data_at, barrier_at : ndarray of int64, shape (tasks,)
-        Moment of its arrival [ns], NEVER for none.
-    """
-
-    data_from: Integers
-    data_kind: Integers
-    data_at: Integers
-    barrier_from: Integers
-    barrier_at: Integers
-
-
-class Blocks(NamedTuple):
-    """Each thread's time in tasks, as blocks without idle time inside, in the order of threads, then time.
-
-    Attributes
-    ----------
-    begin, end : ndarray of int64, shape (blocks,)
-        [ns]
-    busy_before : ndarray of int64, shape (blocks,)
-        Time in earlier blocks of the same thread [ns].
-    opener : ndarray of int64, shape (blocks,)
-        Position of the task that opens the block: the one that the idle time before it ends with.
-    first : ndarray of int64, shape (threads + 1,)
-        Where each thread's blocks start.
-    """
-
-    begin: Integers
-    end: Integers
-    busy_before: Integers
-    opener: Integers
-    first: Integers
-
-
-class Timeline(NamedTuple):
-    """Everything that the walk along causes reads.
-
-    Attributes
-    ----------
-    start, end : ndarray of int64, shape (tasks,)
-        [ns]
-    worker, thread, kind, stage : ndarray of int64, shape (tasks,)
-        Worker number; row in the thread table sorted by worker and thread; place in TASK_KINDS; code of the
-        stage's name.
-    """
-
-    start: Integers
-    end: Integers
-    worker: Integers
-    thread: Integers
-    kind: Integers
-    stage: Integers
-    inputs: Inputs
-    blocks: Blocks
 
 
 def timeline_of(frames: Frames) -> Timeline:
@@ -106,7 +40,7 @@ def _latest_inputs(frames: Frames) -> Inputs:
     consumer = positions(numbers, integers(edges, "consumer"))
     kind = codes_of(edges, "kind", EDGE_KINDS)
     arrival = _arrivals(frames, producer, consumer)
-    return Inputs(*_pick_latest(len(tasks), producer, consumer, kind, arrival))
+    return Inputs(*_pick_latest(len(tasks), NEVER, producer, consumer, kind, kind == BARRIER, arrival))
 
 
 def _arrivals(frames: Frames, producer: Integers, consumer: Integers) -> Integers:
@@ -130,15 +64,21 @@ def _arrivals(frames: Frames, producer: Integers, consumer: Integers) -> Integer
 
 @compiled_loop
 def _pick_latest(
-    tasks: int, producer: Integers, consumer: Integers, kind: Integers, arrival: Integers
+    tasks: int,
+    never: int,
+    producer: Integers,
+    consumer: Integers,
+    kind: Integers,
+    is_barrier: NDArray[np.bool_],
+    arrival: Integers,
 ) -> tuple[Integers, Integers, Integers, Integers, Integers]:
     """The latest input of each task; of several at the same moment the lowest task, then the lowest kind."""
     data_from, data_kind = np.full(tasks, -1, np.int64), np.full(tasks, -1, np.int64)
-    data_at = np.full(tasks, NEVER, np.int64)
-    barrier_from, barrier_at = np.full(tasks, -1, np.int64), np.full(tasks, NEVER, np.int64)
+    data_at = np.full(tasks, never, np.int64)
+    barrier_from, barrier_at = np.full(tasks, -1, np.int64), np.full(tasks, never, np.int64)
     for edge in range(len(producer)):
         p, c, k, at = producer[edge], consumer[edge], kind[edge], arrival[edge]
-        if k == BARRIER:
+        if is_barrier[edge]:
             if at > barrier_at[c] or (at == barrier_at[c] and p < barrier_from[c]):
                 barrier_from[c], barrier_at[c] = p, at
         elif at > data_at[c] or (

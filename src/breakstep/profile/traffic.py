@@ -7,9 +7,9 @@ from dataclasses import dataclass
 import numpy as np
 import pandas as pd
 
+from breakstep.profile.causes import BARRIER
 from breakstep.profile.frames import Frames, codes_of, integers, positions, summed, words_of
 from breakstep.profile.schema import EDGE_KINDS
-from breakstep.profile.timeline import BARRIER
 
 
 @dataclass(frozen=True)
@@ -28,8 +28,9 @@ class Traffic:
     by_workers : dict of (int, int) to int
         By sender and receiver [bytes].
     by_tiles : dict of (int, int) to int
-        By the tile that made them and the tile that used them, hence by tile face [bytes]; -1 for what no tile's
-        task made or used. Bytes that serve several tiles of one worker move once and are shared out evenly.
+        By the tile that made them and the tile that used them, hence by tile face [bytes]; -1 for what no
+        tile's task made or used. Bytes that serve several tiles of one worker move once and are shared out
+        evenly.
     packed_ns, unpacked_ns : int
         Time spent on serialisation at the senders, and on its reverse at the receivers [ns].
     """

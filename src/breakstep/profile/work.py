@@ -82,8 +82,8 @@ def _kernels(frames: Frames) -> pd.DataFrame:
     columns = {column: integers(tasks, column)[at] for column in ("worker", "tile", "cycle", "iteration")}
     return pd.DataFrame(
         {
-            "step": pd.Categorical.from_codes(step.tolist(), steps),
-            "stage": pd.Categorical.from_codes(codes[at].tolist(), stages),
+            "step": pd.Categorical.from_codes(step, pd.Index(steps)),
+            "stage": pd.Categorical.from_codes(codes[at], pd.Index(stages)),
             **columns,
             "compute_ns": integers(chosen, "end_ns") - integers(chosen, "start_ns"),
             "cpu_ns": integers(chosen, "cpu_ns"),

@@ -122,7 +122,7 @@ class _NativeRun:
     def _begin(self, clocks: list[ClockReading], zero: int) -> None:
         """Tell the workers of the run, and have them make the initial state."""
         for number, (address, reading) in enumerate(zip(self.dispatch.addresses, clocks, strict=True)):
-            told = (self.name, self.program, number, zero + reading.offset, self.options.record)
+            told = (self.name, self.program, number, zero + reading.offset, self.options)
             self.client.run(remote.begin, *told, workers=[address])
         tiles = range(len(self.program.tiling))
         graph = {self.translate.key(-1 - t): self.translate.initial(t, max(self.owners[t], 0)) for t in tiles}
@@ -187,7 +187,7 @@ class _NativeRun:
         self._let_go()
 
     def _let_go(self) -> None:
-        live = self.unroller.live_phases(self.program.fields)
+        live = self.unroller.live_phases(self.program.state_fields)
         wanted = {number for phase in live if phase for number in self.graph.step_tasks(phase)}
         if INITIAL in live:
             wanted |= {-1 - tile for tile in range(len(self.program.tiling))}
@@ -220,7 +220,7 @@ class _NativeRun:
         while self.result.cycles in self.last_steps:
             self._complete_cycle()
         tiles = range(len(self.program.tiling))
-        for name in self.program.fields:
+        for name in self.program.state_fields:
             phase = self.unroller.latest(name)
             numbers = list(self.graph.step_tasks(phase)) if phase else [-1 - t for t in tiles]
             payloads = self._results([self.futures[n] for n in numbers])

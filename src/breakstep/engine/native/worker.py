@@ -15,6 +15,7 @@ from breakstep.engine.native import payload as wire
 from breakstep.engine.native.payload import Payload
 from breakstep.engine.program import Program
 from breakstep.engine.recording import Recorder, TaskRow
+from breakstep.engine.run import RunOptions
 from breakstep.errors import ClusterError
 from breakstep.mesh.halo import cut
 from breakstep.mesh.mesh import Triple
@@ -29,7 +30,7 @@ class _Run:
 
     program: Program
     recorder: Recorder
-    recording: bool
+    options: RunOptions
 
 
 _RUNS: dict[str, _Run] = {}
@@ -78,9 +79,9 @@ class CombineSpec:
     has_previous: bool
 
 
-def begin(run: str, program: Program, worker: int, zero: int, recording: bool) -> None:
+def begin(run: str, program: Program, worker: int, zero: int, options: RunOptions) -> None:
     """Tell this worker of a run and of its clock's reading at the run's origin."""
-    _RUNS[run] = _Run(program, Recorder(worker, zero), recording)
+    _RUNS[run] = _Run(program, Recorder(worker, zero), options)
 
 
 def collect(run: str, threads: int) -> dict[str, Any]:
@@ -118,10 +119,12 @@ def run_step(run: str, spec: StepSpec, *deps: Payload) -> Payload:
     program, recorder = state.program, state.recorder
     output = execute(program, spec.site, _inputs(program, spec, deps))
     made = Payload(run, spec.row.number, recorder.worker, dict(output.fields), output.partials)
-    if state.recording:
+    if state.options.record:
         recorder.intervals(spec.row.number, output.intervals)
         recorder.counters(spec.row.number, output.counters)
         recorder.task(spec.row, start, time.perf_counter_ns(), output.nbytes, output.skipped)
+        if state.options.trace:
+            recorder.checksums(spec.row.number, spec.row.stage, output.fields)
     return made
 
 
@@ -156,7 +159,7 @@ def run_pack(run: str, row: TaskRow, cuts: tuple[CutSpec, ...], source: Payload)
     for piece in cuts:
         rim = state.program.rim(piece.tile, piece.read, piece.offset)
         made.arrays[(piece.field, piece.tile, piece.offset)] = cut(rim, source.arrays[piece.field]).copy()
-    if state.recording:
+    if state.options.record:
         end = time.perf_counter_ns()
         packing = Interval("pack", row.stage, start, end, time.thread_time_ns() - cpu)
         state.recorder.intervals(row.number, [packing])
@@ -170,7 +173,7 @@ def run_pick(run: str, row: TaskRow, reduction: str, source: Payload) -> Payload
     state = _state(run)
     made = Payload(run, row.number, state.recorder.worker)
     made.partials[reduction] = source.partials[reduction]
-    if state.recording:
+    if state.options.record:
         state.recorder.task(row, start, time.perf_counter_ns())
     return made
 
@@ -189,7 +192,7 @@ def run_combine(run: str, spec: CombineSpec, *deps: Payload) -> Payload:
         made.arrays["value"] = finish_rows(reduction, combined, previous, spec.rows)
     elif combined is not None:
         made.arrays["value"] = combined
-    if state.recording:
+    if state.options.record:
         state.recorder.task(spec.row, start, time.perf_counter_ns(), made.nbytes)
     return made
 
@@ -199,6 +202,6 @@ def run_control(run: str, row: TaskRow, *deps: Payload) -> Payload:
     start = time.perf_counter_ns()
     state = _state(run)
     del deps
-    if state.recording:
+    if state.options.record:
         state.recorder.task(row, start, time.perf_counter_ns())
     return Payload(run, row.number, state.recorder.worker)

@@ -1,0 +1,82 @@
+"""``breakstep compare``: the same scenario both ways, in alternating order, and what the difference was."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import click
+
+from breakstep.commands.session import Session, Stopped
+from breakstep.commands.shared import check_json, open_dispatch, output_folder, run_options, write_json
+from breakstep.engine.recorded import check_folder
+from breakstep.engine.run import Dispatch
+from breakstep.profile.run import Profile
+from breakstep.report.comparison import Comparison, Difference, first_difference, first_traced_difference
+from breakstep.report.terminal import comparison_lines
+
+
+@click.command()
+@run_options
+@click.option("--pairs", type=click.IntRange(1), default=3, show_default=True, help="How often to run both modes.")
+@click.option(
+    "--barriers", default="lockstep", show_default=True,
+    help="What tasked is compared with: lockstep, tasked, or names joined by commas.",
+)  # fmt: skip
+def compare(
+    scenario: str,
+    overrides: tuple[str, ...],
+    workers: int | None,
+    threads: int | None,
+    placement: str | None,
+    address: str | None,
+    scheduler_file: Path | None,
+    out: Path | None,
+    json_file: Path | None,
+    pairs: int,
+    barriers: str,
+) -> int:
+    """Run SCENARIO with barriers and without, and say what leaving them out gives back."""
+    session = Session.load(scenario, overrides, placement)
+    session.barriers(barriers)
+    check_json(json_file)
+    folder = output_folder(out, session.scenario.name)
+    check_folder(folder)
+    settings = session.scenario.run
+    places = (workers or settings.workers, threads or settings.threads, address, scheduler_file)
+    try:
+        with open_dispatch("native", *places) as engine:
+            comparison = _compare(session, engine, barriers, folder, pairs)
+    except Stopped as stopped:
+        click.echo(f"stopped; the profile so far is in {stopped.folder}", err=True)
+        return 130
+    for line in comparison_lines(comparison):
+        click.echo(line)
+    click.echo(f"Profiles: {folder}")
+    write_json(json_file, comparison.as_json())
+    return 0 if comparison.identical else 1
+
+
+def _compare(session: Session, engine: Dispatch, barriers: str, folder: Path, pairs: int) -> Comparison:
+    """Pairs in alternating order, so that a machine that drifts favours neither side."""
+    left: list[Profile] = []
+    right: list[Profile] = []
+    for pair in range(1, pairs + 1):
+        order = [(barriers, left, "lockstep"), ("tasked", right, "tasked")]
+        for choice, profiles, label in order if pair % 2 else reversed(order):
+            title = f"pair {pair} of {pairs}, {choice}"
+            _, profile = session.execute(engine, choice, folder / f"{label}-{pair}", title=title)
+            profiles.append(profile)
+    return Comparison(left, right, _difference(session, engine, barriers, folder, left, right))
+
+
+def _difference(
+    session: Session, engine: Dispatch, barriers: str, folder: Path, left: list[Profile], right: list[Profile]
+) -> Difference | None:
+    """None when all runs agree; else the first differing task, from a traced run of each mode."""
+    found = [first_difference(left[0], other) for other in [*left[1:], *right]]
+    differing = [difference for difference in found if difference is not None]
+    if not differing:
+        return None
+    _, one = session.execute(engine, barriers, folder / "lockstep-traced", title="tracing the difference", trace=True)
+    _, two = session.execute(engine, "tasked", folder / "tasked-traced", title="tracing the difference", trace=True)
+    return first_traced_difference(one, two) or differing[0]

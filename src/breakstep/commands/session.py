@@ -1,0 +1,87 @@
+"""A scenario made ready to run: program, options and what the manifest says about it."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any
+
+from breakstep.commands.shared import progress_bar
+from breakstep.engine.program import Program
+from breakstep.engine.recorded import run_and_record
+from breakstep.engine.run import Dispatch, RunOptions, RunResult
+from breakstep.graph.stages import parse_barriers
+from breakstep.profile.run import Profile
+from breakstep.scenario.load import load_scenario
+from breakstep.scenario.model import Scenario
+
+
+class Stopped(Exception):
+    """The user stopped a run; its profile has been written."""
+
+    def __init__(self, folder: Path) -> None:
+        super().__init__(str(folder))
+        self.folder = folder
+
+
+@dataclass
+class Session:
+    """One scenario with everything resolved.
+
+    Attributes
+    ----------
+    scenario : Scenario
+    program : Program
+    options : RunOptions
+        Without barriers; :meth:`execute` adds them.
+    """
+
+    scenario: Scenario
+    program: Program
+    options: RunOptions
+
+    @classmethod
+    def load(cls, name: str, overrides: Sequence[str], placement: str | None = None) -> Session:
+        """Read and check a scenario.
+
+        Raises
+        ------
+        ScenarioError
+            All its faults together.
+        """
+        scenario = load_scenario(name, overrides)
+        program = Program(scenario.problem(), tuple(scenario.mesh.tile), scenario.run.fuse)
+        options = RunOptions(placement=placement or scenario.run.placement, window=scenario.run.window)
+        return cls(scenario, program, options)
+
+    def barriers(self, choice: str) -> tuple[str, ...]:
+        """Barrier names for ``lockstep``, ``tasked`` or a list."""
+        return parse_barriers(self.program.template, choice)
+
+    def facts(self) -> dict[str, Any]:
+        """What the manifest says was run."""
+        return {"name": self.scenario.name, "title": self.scenario.title, "resolved": self.scenario.resolved()}
+
+    def execute(
+        self, dispatch: Dispatch, choice: str, folder: Path, *, title: str = "", trace: bool = False
+    ) -> tuple[RunResult, Profile]:
+        """Run once under a choice of barriers and record the profile.
+
+        Raises
+        ------
+        Stopped
+            The user interrupted the run.
+        BreakstepError
+            Whatever ended the run early, after the profile so far has been written.
+        """
+        options = replace(self.options, barriers=self.barriers(choice), trace=trace)
+        with progress_bar(title or choice, self.program.problem.cycles) as progress:
+            result, profile = run_and_record(
+                dispatch, self.program, options, folder, mode=choice, scenario=self.facts(), progress=progress
+            )
+        if result.failure is not None:
+            raise result.failure
+        if result.interrupted:
+            raise Stopped(folder)
+        return result, profile

@@ -1,0 +1,96 @@
+"""Options and habits that commands share."""
+
+from __future__ import annotations
+
+import contextlib
+import json
+import time
+from collections.abc import Callable, Iterator, Mapping
+from pathlib import Path
+from typing import Any, TypeVar
+
+import click
+from rich.console import Console
+from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeElapsedColumn
+
+from breakstep.engine.cluster import existing_cluster, local_cluster
+from breakstep.engine.native import NativeDispatch
+from breakstep.engine.run import Dispatch
+from breakstep.engine.serial import SerialDispatch
+from breakstep.errors import OutputError
+
+_F = TypeVar("_F", bound=Callable[..., Any])
+
+
+def run_options(function: _F) -> _F:
+    """Options of every command that runs a scenario."""
+    options = [
+        click.argument("scenario"),
+        click.option("--set", "overrides", multiple=True, metavar="KEY.PATH=VALUE", help="Override a scenario value."),
+        click.option("--workers", type=click.IntRange(1), help="Worker processes (default: the scenario's)."),
+        click.option("--threads", type=click.IntRange(1), help="Threads a worker (default: the scenario's)."),
+        click.option("--placement", type=click.Choice(["blocks", "dask"]), help="Who owns which tile."),
+        click.option("--address", help="Use the Dask cluster whose scheduler listens there."),
+        click.option("--scheduler-file", type=click.Path(path_type=Path), help="Use the Dask cluster that wrote this file."),
+        click.option("--out", type=click.Path(path_type=Path), help="Folder for the profiles (default: runs/...)."),
+        click.option("--json", "json_file", type=click.Path(path_type=Path), help="Write the figures there as JSON."),
+    ]  # fmt: skip
+    for option in reversed(options):
+        function = option(function)
+    return function
+
+
+@contextlib.contextmanager
+def open_dispatch(
+    name: str, workers: int, threads: int, address: str | None, scheduler_file: Path | None
+) -> Iterator[Dispatch]:
+    """The dispatch to run with, and its cluster for as long as the context lasts."""
+    if name == "serial":
+        yield SerialDispatch()
+    elif address or scheduler_file:
+        with existing_cluster(address, scheduler_file) as client:
+            yield NativeDispatch(client, workers)
+    else:
+        with local_cluster(workers, threads) as client:
+            yield NativeDispatch(client, workers)
+
+
+@contextlib.contextmanager
+def progress_bar(title: str, cycles: int) -> Iterator[Callable[[int], None]]:
+    """A bar that counts cycles on standard error; nothing when that is not a terminal."""
+    console = Console(stderr=True)
+    if not console.is_terminal:
+        yield lambda cycle: None
+        return
+    columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TextColumn("cycles"), TimeElapsedColumn())
+    with Progress(*columns, console=console, transient=True) as progress:
+        task = progress.add_task(title, total=cycles)
+        yield lambda cycle: progress.update(task, completed=cycle)
+
+
+def output_folder(out: Path | None, name: str) -> Path:
+    """The folder asked for, or a new one under ``runs/``."""
+    return out if out is not None else Path("runs") / f"{name}-{time.strftime('%Y%m%d-%H%M%S')}"
+
+
+def check_json(path: Path | None) -> None:
+    """Refuse a JSON file that could not be written, before any work is done."""
+    if path is None:
+        return
+    if path.is_dir() or not path.resolve().parent.is_dir():
+        raise OutputError(f"--json {path}: there is no folder to write that file in; choose another path")
+    try:
+        with path.open("a", encoding="utf-8"):
+            pass
+    except OSError as error:
+        raise OutputError(f"--json {path} cannot be written ({error.strerror}); choose another path") from error
+
+
+def write_json(path: Path | None, figures: Mapping[str, Any]) -> None:
+    """Write figures as JSON, if a file was asked for."""
+    if path is None:
+        return
+    try:
+        path.write_text(json.dumps(figures, indent=2, allow_nan=False) + "\n", encoding="utf-8")
+    except OSError as error:
+        raise OutputError(f"--json {path} cannot be written ({error.strerror}); choose another path") from error

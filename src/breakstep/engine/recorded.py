@@ -1,0 +1,170 @@
+"""A run and the profile it leaves on disk: the manifest's facts are put together here."""
+
+from __future__ import annotations
+
+import os
+import platform
+from collections.abc import Mapping
+from datetime import UTC, datetime
+from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from breakstep.engine.placement import owners
+from breakstep.engine.program import Program
+from breakstep.engine.run import Dispatch, Progress, RunOptions, RunResult, whole_field
+from breakstep.errors import OutputError
+from breakstep.graph.tasks import ANYWHERE
+from breakstep.profile.record import FinalField, RunRecord
+from breakstep.profile.run import Profile
+from breakstep.profile.store import write_profile
+
+SOFTWARE = ("numpy", "numba", "dask", "distributed", "scipy", "pyarrow", "zarr", "xarray")
+
+
+def run_and_record(
+    dispatch: Dispatch,
+    program: Program,
+    options: RunOptions,
+    folder: Path,
+    *,
+    mode: str,
+    scenario: Mapping[str, Any],
+    progress: Progress | None = None,
+) -> tuple[RunResult, Profile]:
+    """Run, and write the profile whatever way the run ended.
+
+    Parameters
+    ----------
+    folder : Path
+        Must not exist yet, or be empty.
+    mode : str
+        ``lockstep``, ``tasked`` or a list of barriers.
+    scenario : mapping
+        What the manifest says was run: ``name``, ``title`` and the resolved scenario.
+
+    Returns
+    -------
+    RunResult, Profile
+        ``RunResult.failure`` holds the error that ended the run early, if any.
+
+    Raises
+    ------
+    OutputError, ProfileError
+        The folder cannot be written.
+    """
+    check_folder(folder)
+    started = datetime.now(UTC).isoformat(timespec="seconds")
+    result = dispatch.run(program, options, progress)
+    record = result.record
+    record.manifest.update(
+        _manifest(dispatch, program, options, result), mode=mode, scenario=dict(scenario), started=started
+    )
+    mesh = program.problem.mesh
+    if result.fields:
+        record.fields = {
+            name: FinalField(whole_field(program, tiles), program.fields[name].components, program.fields[name].units)
+            for name, tiles in result.fields.items()
+        }
+    origin = (*mesh.origin, 0.0, 0.0, 0.0)[:3]
+    record.coordinates = {
+        axis: origin[i] + (np.arange(mesh.zones[i]) + 0.5) * mesh.widths[i] for i, axis in enumerate("xyz")
+    }
+    return result, write_profile(record, folder)
+
+
+def check_folder(folder: Path) -> None:
+    """Refuse a folder that could not take a profile, before any work is done.
+
+    Raises
+    ------
+    OutputError
+    """
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+        probe = folder / ".writable"
+        probe.touch()
+        probe.unlink()
+    except OSError as error:
+        raise OutputError(
+            f"the folder {folder} cannot be written ({error.strerror}); choose another with --out"
+        ) from error
+    if any(folder.iterdir()):
+        raise OutputError(f"the folder {folder} is not empty; choose another with --out, or remove it")
+
+
+def _manifest(dispatch: Dispatch, program: Program, options: RunOptions, result: RunResult) -> dict[str, Any]:
+    tiling, splitting = program.tiling, program.problem.splitting
+    notes = dict(result.notes)
+    residual = notes.pop("clock_residual_ns", [0] * dispatch.workers)
+    status = "interrupted" if result.interrupted else "failed" if result.failure else "complete"
+    return {
+        "breakstep": version("breakstep"),
+        "software": _software(),
+        "machine": machine(),
+        "barriers": list(options.barriers),
+        "dispatch": dispatch.name,
+        "workers": dispatch.workers,
+        "threads": dispatch.workers * dispatch.threads,
+        "cycles": result.cycles,
+        "mesh": {
+            "shape": list(tiling.mesh.zones),
+            "tile_shape": [max(tile.shape[axis] for tile in tiling.tiles) for axis in range(3)],
+            "tiles": [{"origin": list(tile.origin), "shape": list(tile.shape)} for tile in tiling.tiles],
+        },
+        "placement": _placement(options, len(tiling), dispatch.workers, result.record),
+        "status": status,
+        "message": str(result.failure or ("stopped by the user" if result.interrupted else "")),
+        "clock": {"method": "shared clock or shortest of several round trips", "residual_ns": residual},
+        "wall_seconds": result.seconds,
+        "notes": {
+            **notes,
+            "placement": options.placement,
+            "window": options.window,
+            "fuse": program.fuse,
+            "lags": {reduction.name: reduction.lag for reduction in splitting.all_reductions()},
+            "stages": [stage.name for stage in program.template.stages],
+            "values": {name: value[-1].tolist() for name, value in result.values.items()},
+        },
+    }
+
+
+def _placement(options: RunOptions, tiles: int, workers: int, record: RunRecord) -> list[int]:
+    """Owner of each tile; where Dask placed tasks, the worker that ran the tile's last step."""
+    planned = owners(options.placement, tiles, workers)
+    if ANYWHERE not in planned:
+        return planned
+    frame = record.tasks.table().select(["kind", "tile", "worker", "start_ns"]).to_pandas()
+    steps = frame[frame["kind"] == "step"].sort_values("start_ns")
+    last = steps.groupby("tile")["worker"].last()
+    return [int(last.get(tile, 0)) for tile in range(tiles)]
+
+
+def _software() -> dict[str, str]:
+    found = {"python": platform.python_version()}
+    for name in SOFTWARE:
+        try:
+            found[name] = version(name)
+        except PackageNotFoundError:
+            continue
+    return found
+
+
+def machine() -> dict[str, Any]:
+    """What this process runs on."""
+    return {
+        "cpus": len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1,
+        "model": _processor(),
+        "system": f"{platform.system()} {platform.machine()}",
+    }
+
+
+def _processor() -> str:
+    try:
+        lines = Path("/proc/cpuinfo").read_text(encoding="utf-8").splitlines()
+    except OSError:
+        return platform.processor() or "unknown"
+    names = [line.split(":", 1)[1].strip() for line in lines if line.startswith("model name")]
+    return names[0] if names else platform.processor() or "unknown"

@@ -1,0 +1,143 @@
+"""What a comparison of lockstep and tasked says, worked out from the recorded profiles alone.
+
+The accounts shown are those of the pair with the median gain, so that they are the accounts of real runs;
+the gain and its interval come from all pairs.
+"""
+
+from __future__ import annotations
+
+import statistics
+from collections.abc import Sequence
+from dataclasses import dataclass
+from functools import cached_property
+from typing import Any
+
+from breakstep.profile.ledger import ACCOUNTS
+from breakstep.profile.run import Profile
+from breakstep.profile.statistics import Gain, gain_of_pairs
+
+
+@dataclass(frozen=True)
+class Difference:
+    """Where two runs that should agree do not.
+
+    ``step`` and ``cycle`` are empty and -2 when only the final fields are known to differ.
+    """
+
+    field: str
+    tile: int
+    step: str = ""
+    cycle: int = -2
+
+
+@dataclass(frozen=True)
+class Comparison:
+    """Pairs of runs of one scenario, the first of each pair with barriers.
+
+    Attributes
+    ----------
+    lockstep, tasked : sequence of Profile
+        Complete runs, pair by pair.
+    difference : Difference or None
+        Where the final fields differ first; None when all runs agree to the last bit.
+    """
+
+    lockstep: Sequence[Profile]
+    tasked: Sequence[Profile]
+    difference: Difference | None = None
+
+    @cached_property
+    def gain(self) -> Gain:
+        """Lockstep over tasked span."""
+        spans = [[p.ledger.span_ns / 1e9 for p in side] for side in (self.lockstep, self.tasked)]
+        return gain_of_pairs(*spans)
+
+    @property
+    def identical(self) -> bool:
+        """Whether all runs ended in the same bits."""
+        return self.difference is None
+
+    @cached_property
+    def shown(self) -> tuple[Profile, Profile]:
+        """The pair with the median gain (the lower of two middle ones)."""
+        ratios = list(self.gain.ratios)
+        middle = ratios.index(statistics.median_low(ratios))
+        return self.lockstep[middle], self.tasked[middle]
+
+    def as_json(self) -> dict[str, Any]:
+        """The figures under the documented keys."""
+        lockstep, tasked = self.shown
+        return {
+            "scenario": lockstep.manifest["scenario"]["name"],
+            "identical": self.identical,
+            "difference": None if self.difference is None else vars(self.difference),
+            "pairs": len(self.lockstep),
+            "workers": lockstep.manifest["workers"],
+            "threads": lockstep.manifest["threads"],
+            "dispatch": lockstep.manifest["dispatch"],
+            "gain": {
+                "median": self.gain.median,
+                "low": self.gain.low,
+                "high": self.gain.high,
+                "significant": self.gain.significant,
+                "ratios": list(self.gain.ratios),
+            },
+            "lockstep": run_figures(lockstep),
+            "tasked": run_figures(tasked),
+        }
+
+
+def run_figures(profile: Profile) -> dict[str, Any]:
+    """One run's figures under the documented keys."""
+    ledger, imbalance = profile.ledger, profile.imbalance
+    return {
+        "seconds": ledger.span_ns / 1e9,
+        "tasks": len(profile.tasks),
+        "cycles": profile.manifest["cycles"],
+        "core_seconds": {account: ledger.accounts_seconds[account] for account in ACCOUNTS},
+        "closure_error": ledger.closure_error,
+        "bytes_moved": profile.traffic.total_bytes,
+        "bytes_by_stage": profile.traffic.by_stage,
+        "bytes_by_workers": {f"{a}->{b}": n for (a, b), n in profile.traffic.by_workers.items()},
+        "peak_bytes": profile.live.peak_bytes,
+        "compute_by_step": profile.work["compute_seconds"].to_dict(),
+        "imbalance_by_step": imbalance.to_dict(orient="index"),
+        "counters": {f"{row.step}.{row.counter}": row.value for row in profile.counters_by_step.itertuples()},
+        "digest": profile.manifest["digest"],
+        "barriers": profile.manifest["barriers"],
+        "status": profile.manifest["status"],
+    }
+
+
+def first_difference(reference: Profile, other: Profile) -> Difference | None:
+    """The first field and tile whose final bits differ."""
+    ours, theirs = reference.manifest["digests"], other.manifest["digests"]
+    for field in ours:
+        for tile, (a, b) in enumerate(zip(ours[field], theirs.get(field, []), strict=False)):
+            if a != b:
+                return Difference(field, tile)
+    if ours != theirs:
+        return Difference(", ".join(sorted(set(ours) ^ set(theirs))) or "?", -1)
+    return None
+
+
+def first_traced_difference(reference: Profile, other: Profile) -> Difference | None:
+    """The first task in program order whose traced checksums differ; both runs must have been traced."""
+    ours, theirs = _trace(reference), _trace(other)
+    for key, (checksum, field, step) in ours.items():
+        if key not in theirs or theirs[key][0] != checksum:
+            cycle, _, _, tile, _ = key
+            return Difference(field, tile, step, cycle)
+    return None
+
+
+def _trace(profile: Profile) -> dict[tuple[int, str, int, int, str], tuple[int, str, str]]:
+    tasks = profile.tasks.set_index("task")[["cycle", "stage", "iteration", "tile"]]
+    marks = profile.counters[profile.counters["counter"].astype(str).str.startswith("checksum:")]
+    joined = marks.join(tasks, on="task").sort_values("task")
+    trace = {}
+    for row in joined.itertuples():
+        field = str(row.counter).removeprefix("checksum:")
+        key = (int(row.cycle), str(row.stage), int(row.iteration), int(row.tile), field)
+        trace[key] = (int(row.value), field, str(row.step))
+    return trace

@@ -1,0 +1,38 @@
+"""The whole of a scenario file, table by table."""
+
+from __future__ import annotations
+
+from typing import Annotated
+
+from pydantic import Field
+
+from breakstep.scenario.physics import (
+    BurningSection,
+    EosSection,
+    HydroSection,
+    SpeciesSection,
+    TransportSection,
+)
+from breakstep.scenario.sections import MeshSection, RunSection, Section, TimeStepSection, Word
+from breakstep.scenario.states import FixedSection, InitialSection
+
+SWITCHES = ("hydro", "transport", "burning")
+"""Tables whose presence makes a step take part; ``true`` stands for an empty table, ``false`` for none."""
+
+
+class ScenarioFile(Section):
+    """Everything a scenario file may say."""
+
+    name: Word = Field(description="the scenario's name")
+    title: str = Field("", description="one line for tables and reports")
+    description: str = Field("", description="what it shows and what to expect")
+    mesh: MeshSection = Field(description="the mesh and its tiles")
+    run: RunSection = Field(description="how long and on what")
+    time_step: TimeStepSection = Field(default_factory=TimeStepSection, description="how dt is found")
+    eos: Annotated[EosSection, Field(discriminator="kind")] = Field(description="the equation of state")
+    species: SpeciesSection | None = Field(None, description="nuclei carried along without burning")
+    hydro: HydroSection | None = Field(None, description="hydrodynamics sweeps")
+    transport: TransportSection | None = Field(None, description="implicit radiation transport")
+    burning: BurningSection | None = Field(None, description="nuclear burning")
+    initial: Annotated[InitialSection, Field(discriminator="kind")] = Field(description="the initial state")
+    fixed: FixedSection = Field(default_factory=FixedSection, description="states beyond fixed edges")

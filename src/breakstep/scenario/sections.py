@@ -1,0 +1,92 @@
+"""What the tables of a scenario may hold: the mesh, the run, the time step.
+
+Every key has its type, its bounds and one sentence on what it is. This module refuses to know what
+a run does with them; rules that tie keys together stand in ``rules``.
+"""
+
+from __future__ import annotations
+
+from typing import Annotated, Any, Literal, get_args
+
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field
+from pydantic_core import PydanticKnownError
+
+EdgeWord = Literal["periodic", "reflecting", "outflow", "fixed"]
+STRICT = ConfigDict(extra="forbid", strict=True, frozen=True, allow_inf_nan=False)
+
+
+class Section(BaseModel):
+    """Base of all tables: no unknown keys, no silent conversions, finite numbers, not changed once made."""
+
+    model_config = STRICT
+
+
+def lists(value: Any) -> Any:
+    """Let a TOML list stand where a tuple is kept."""
+    return tuple(value) if isinstance(value, list) else value
+
+
+def _pair(value: Any) -> Any:
+    """Let one word stand for both sides."""
+    if not isinstance(value, str):
+        return lists(value)
+    if value not in get_args(EdgeWord):
+        raise PydanticKnownError("literal_error", {"expected": ", ".join(get_args(EdgeWord))})
+    return (value, value)
+
+
+Positive = Annotated[float, Field(gt=0.0)]
+NotNegative = Annotated[float, Field(ge=0.0)]
+Count = Annotated[int, Field(ge=1, le=1_000_000)]
+Counts = Annotated[tuple[Count, ...], BeforeValidator(lists), Field(min_length=1, max_length=3)]
+Lengths = Annotated[tuple[Positive, ...], BeforeValidator(lists), Field(min_length=1, max_length=3)]
+Vector = Annotated[tuple[float, ...], BeforeValidator(lists), Field(min_length=1, max_length=3)]
+Word = Annotated[str, Field(pattern=r"^[A-Za-z][A-Za-z0-9_]*$", max_length=60)]
+EdgePair = Annotated[tuple[EdgeWord, ...], BeforeValidator(_pair), Field(min_length=2, max_length=2)]
+
+
+class EdgesSection(Section):
+    """``[mesh.edges]``: what lies beyond the two sides of each axis."""
+
+    x: EdgePair = Field(("periodic", "periodic"), description="one word for both sides, or [low, high]")
+    y: EdgePair = Field(("periodic", "periodic"), description="one word for both sides, or [low, high]")
+    z: EdgePair = Field(("periodic", "periodic"), description="one word for both sides, or [low, high]")
+
+
+class MeshSection(Section):
+    """``[mesh]``: a box of equal zones, and the tiles it is cut into."""
+
+    zones: Counts = Field(description="zones along each of one to three axes")
+    size: Lengths = Field(description="extent of the mesh along the same axes [cm]")
+    tile: Counts = Field(description="zones of a tile along the same axes")
+    edges: EdgesSection = Field(default_factory=EdgesSection, description="what lies beyond each edge")
+
+
+class RunSection(Section):
+    """``[run]``: how long, in which order of steps, and on what."""
+
+    cycles: Count = Field(description="most cycles to run")
+    end_time: Positive | None = Field(None, description="time at which the run ends, if earlier [s]")
+    splitting: Literal["lie", "strang", "alternating"] = Field(
+        "alternating", description="order of the steps: always forward, there and back, or forward and back in turn"
+    )
+    workers: Annotated[int, Field(ge=1, le=4096)] = Field(2, description="worker processes")
+    threads: Annotated[int, Field(ge=1, le=256)] = Field(1, description="threads of each worker")
+    placement: Literal["blocks", "dask"] = Field("blocks", description="who decides which worker owns a tile")
+    window: Annotated[int, Field(ge=1, le=1000)] = Field(4, description="cycles that may be in flight at once")
+    fuse: bool = Field(True, description="whether steps without a halo between them share a task")
+    dispatch: Literal["native", "serial"] = Field("native", description="what carries out the tasks")
+
+
+class TimeStepSection(Section):
+    """``[time_step]``: how dt follows from the state, and how late it may be used."""
+
+    cfl: Annotated[float, Field(gt=0.0, le=0.9)] = Field(
+        0.4, description="factor applied to the largest stable step"
+    )
+    lag: Annotated[int, Field(ge=0, le=10)] = Field(0, description="cycles by which dt is used late")
+    growth: Annotated[float, Field(ge=1.0, le=10.0)] = Field(
+        1.25, description="largest ratio of one step to the one before"
+    )
+    first: Positive | None = Field(None, description="bound on the first step [s]")
+    maximum: Positive | None = Field(None, description="bound on every step [s]")
