@@ -65,7 +65,7 @@ def march(
     mass_numbers: Array = NO_SPECIES,
     charges: Array = NO_SPECIES,
 ) -> Array:
-    """Advance to the time ``end`` by sweeps along every axis with more than one zone, their order alternating.
+    """Advance to the time ``end`` by sweeps along each axis of more than one zone, their order alternating.
 
     ``first`` bounds the first time step, each later one at most doubles: the usual start from a blast.
     """
@@ -77,9 +77,7 @@ def march(
         assert bad == -1
         dt = min(cfl / rate, end - time, 2.0 * previous)
         for axis in axes if step % 2 == 0 else axes[::-1]:
-            gas, courant, bad = hydro.sweep(
-                fill(gas, axis), axis, dt, spacing, eos, mass_numbers, charges
-            )
+            gas, courant, bad = hydro.sweep(fill(gas, axis), axis, dt, spacing, eos, mass_numbers, charges)
             assert bad == -1
             assert courant <= 1.0
         time, step, previous = time + dt, step + 1, dt

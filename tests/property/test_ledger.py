@@ -1,7 +1,7 @@
 """The ledger of random runs: it partitions exactly, and each nanosecond is booked as the rule says.
 
-The rule is stated here a second time, for one nanosecond at a time and in plain Python; the ledger must agree with
-it on every thread, and on every gap.
+The rule is stated here a second time, for one nanosecond at a time and in plain Python; the ledger must agree
+with it on every thread, and on every gap.
 """
 
 from __future__ import annotations
@@ -58,7 +58,9 @@ def arrival(source: DrawnTask, task: DrawnTask) -> int:
 @st.composite
 def runs(draw: st.DrawFn, skewed: bool = False) -> DrawnRun:
     """A valid schedule of a random graph; if skewed, as seen on clocks that disagree."""
-    threads = draw(st.lists(st.tuples(st.integers(0, 2), st.integers(0, 1)), min_size=1, max_size=5, unique=True))
+    threads = draw(
+        st.lists(st.tuples(st.integers(0, 2), st.integers(0, 1)), min_size=1, max_size=5, unique=True)
+    )
     count = draw(st.integers(0, 14))
     numbers = draw(st.permutations([3 * i + 1 for i in range(count)]))
     free = dict.fromkeys(threads, 0)
@@ -92,14 +94,29 @@ def record_of(run: DrawnRun) -> RunRecord:
     record = RunRecord()
     record.threads.extend(run.threads)
     for t in run.tasks:
-        head = (t.number, t.kind, f"stage of {t.kind}", -1, 0, -1, t.worker, t.thread, t.start, t.end, 0, False)
+        head = (
+            t.number,
+            t.kind,
+            f"stage of {t.kind}",
+            -1,
+            0,
+            -1,
+            t.worker,
+            t.thread,
+            t.start,
+            t.end,
+            0,
+            False,
+        )
         record.tasks.append(head)
         halo, kernel, _ = t.inside
         what = "pack" if t.kind == "pack" else "halo"
         record.intervals.append((t.number, what, "s", t.start, t.start + halo, halo))
         record.intervals.append((t.number, "kernel", "s", t.start + halo, t.start + halo + kernel, kernel))
         record.edges.extend((source.number, t.number, kind) for source, kind in t.inputs)
-        record.transfers.extend((t.number, "f", t.worker, w, 8, 0, 0, t.end, at) for w, at in t.arrivals.items())
+        record.transfers.extend(
+            (t.number, "f", t.worker, w, 8, 0, 0, t.end, at) for w, at in t.arrivals.items()
+        )
     workers = len({worker for worker, _ in run.threads})
     record.manifest = manifest(workers, len(run.threads), tiles=1)
     return record

@@ -17,7 +17,9 @@ from breakstep.report.terminal import comparison_lines
 
 @click.command()
 @run_options
-@click.option("--pairs", type=click.IntRange(1), default=3, show_default=True, help="How often to run both modes.")
+@click.option(
+    "--pairs", type=click.IntRange(1), default=3, show_default=True, help="How often to run both modes."
+)
 @click.option(
     "--barriers", default="lockstep", show_default=True,
     help="What tasked is compared with: lockstep, tasked, or names joined by commas.",
@@ -77,6 +79,10 @@ def _difference(
     differing = [difference for difference in found if difference is not None]
     if not differing:
         return None
-    _, one = session.execute(engine, barriers, folder / "lockstep-traced", title="tracing the difference", trace=True)
-    _, two = session.execute(engine, "tasked", folder / "tasked-traced", title="tracing the difference", trace=True)
+    _, one = session.execute(
+        engine, barriers, folder / "lockstep-traced", title="tracing the difference", trace=True
+    )
+    _, two = session.execute(
+        engine, "tasked", folder / "tasked-traced", title="tracing the difference", trace=True
+    )
     return first_traced_difference(one, two) or differing[0]

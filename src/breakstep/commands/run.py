@@ -14,7 +14,9 @@ from breakstep.report.terminal import ledger_lines
 
 @click.command()
 @run_options
-@click.option("--barriers", default="tasked", show_default=True, help="lockstep, tasked, or names joined by commas.")
+@click.option(
+    "--barriers", default="tasked", show_default=True, help="lockstep, tasked, or names joined by commas."
+)
 @click.option("--dispatch", type=click.Choice(["native", "serial"]), help="Who runs the tasks.")
 def run(
     scenario: str,
@@ -36,7 +38,9 @@ def run(
     settings = session.scenario.run
     folder = output_folder(out, session.scenario.name)
     name = dispatch or settings.dispatch
-    with open_dispatch(name, workers or settings.workers, threads or settings.threads, address, scheduler_file) as engine:
+    with open_dispatch(
+        name, workers or settings.workers, threads or settings.threads, address, scheduler_file
+    ) as engine:
         try:
             _, profile = session.execute(engine, barriers, folder)
         except Stopped as stopped:

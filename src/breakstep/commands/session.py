@@ -61,7 +61,11 @@ class Session:
 
     def facts(self) -> dict[str, Any]:
         """What the manifest says was run."""
-        return {"name": self.scenario.name, "title": self.scenario.title, "resolved": self.scenario.resolved()}
+        return {
+            "name": self.scenario.name,
+            "title": self.scenario.title,
+            "resolved": self.scenario.resolved(),
+        }
 
     def execute(
         self, dispatch: Dispatch, choice: str, folder: Path, *, title: str = "", trace: bool = False

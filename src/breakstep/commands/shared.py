@@ -62,7 +62,13 @@ def progress_bar(title: str, cycles: int) -> Iterator[Callable[[int], None]]:
     if not console.is_terminal:
         yield lambda cycle: None
         return
-    columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TextColumn("cycles"), TimeElapsedColumn())
+    columns = (
+        TextColumn("{task.description}"),
+        BarColumn(),
+        MofNCompleteColumn(),
+        TextColumn("cycles"),
+        TimeElapsedColumn(),
+    )
     with Progress(*columns, console=console, transient=True) as progress:
         task = progress.add_task(title, total=cycles)
         yield lambda cycle: progress.update(task, completed=cycle)
@@ -83,7 +89,9 @@ def check_json(path: Path | None) -> None:
         with path.open("a", encoding="utf-8"):
             pass
     except OSError as error:
-        raise OutputError(f"--json {path} cannot be written ({error.strerror}); choose another path") from error
+        raise OutputError(
+            f"--json {path} cannot be written ({error.strerror}); choose another path"
+        ) from error
 
 
 def write_json(path: Path | None, figures: Mapping[str, Any]) -> None:
@@ -93,4 +101,6 @@ def write_json(path: Path | None, figures: Mapping[str, Any]) -> None:
     try:
         path.write_text(json.dumps(figures, indent=2, allow_nan=False) + "\n", encoding="utf-8")
     except OSError as error:
-        raise OutputError(f"--json {path} cannot be written ({error.strerror}); choose another path") from error
+        raise OutputError(
+            f"--json {path} cannot be written ({error.strerror}); choose another path"
+        ) from error

@@ -13,7 +13,9 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-EXCHANGES = 12  # round trips a worker; the shortest of 12 came within 10 % of the shortest of 50 on one machine
+EXCHANGES = (
+    12  # round trips a worker; the shortest of 12 came within 10 % of the shortest of 50 on one machine
+)
 
 
 @dataclass(frozen=True)

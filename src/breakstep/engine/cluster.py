@@ -21,7 +21,10 @@ def local_cluster(workers: int, threads: int = 1) -> Iterator[Client]:
     Scheduler and workers listen on loopback alone. Each worker's BLAS runs one thread (Dask's own
     default for its worker processes), so that the tasks are the only parallelism.
     """
-    quiet = {"distributed.worker.memory.terminate": False, "distributed.admin.large-graph-warning-threshold": "100MB"}
+    quiet = {
+        "distributed.worker.memory.terminate": False,
+        "distributed.admin.large-graph-warning-threshold": "100MB",
+    }
     with (
         dask.config.set(quiet),
         LocalCluster(

@@ -9,6 +9,7 @@ from __future__ import annotations
 import time
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 
@@ -19,6 +20,7 @@ from breakstep.mesh.fields import Field
 from breakstep.mesh.halo import assemble
 from breakstep.mesh.mesh import Triple
 from breakstep.mesh.tiling import Tile
+from breakstep.steps.calling import call_user
 from breakstep.steps.step import Array, Call, Step
 
 
@@ -106,8 +108,17 @@ def execute(program: Program, site: Site, inputs: Inputs) -> Output:
     Raises
     ------
     KernelError
-        A kernel yielded a wrong shape or a number that is not finite, or says so itself.
+        A kernel yielded a wrong shape or a number that is not finite, raised, or says so itself.
     """
+    try:
+        return _execute(program, site, inputs)
+    except KernelError as error:
+        for key in ("tile", "cycle", "iteration"):
+            error.details.setdefault(key, getattr(site, key))
+        raise
+
+
+def _execute(program: Program, site: Site, inputs: Inputs) -> Output:
     stage = program.template.stages[site.stage]
     if inputs.passes:
         fields = {name: inputs.own[name] for name in stage.writes}
@@ -116,18 +127,21 @@ def execute(program: Program, site: Site, inputs: Inputs) -> Output:
     arrays = dict(inputs.own)
     output = Output({}, {}, intervals=watch.intervals)
     for step in stage.steps:
-        call = _call(program, site, step.name, inputs.values, step.fraction)
+        values = {name: inputs.values[name] for name in step.uses}  # not what its stage mates use
+        call = _call(program, site, step.name, values, step.fraction)
         given = _gather(program, site.tile, step, arrays, inputs, watch)
         began = watch.start()
-        made = dict(step.kernel(given, call))
+        made = call_user(step.kernel, given, call, where=call.where())
         watch.stop("kernel", step.name, began)
-        check_arrays(made, step.writes, program.fields, program.tiling.tiles[site.tile], call.where())
-        arrays.update(made)
+        arrays |= check_arrays(
+            made, step.writes, program.fields, program.tiling.tiles[site.tile], call.where()
+        )
         output.counters += [(step.name, name, amount) for name, amount in call.counters.items()]
     for reduction in stage.partials:
-        call = _call(program, site, reduction.name, inputs.values, 1.0)
+        call = _call(program, site, reduction.name, {}, 1.0)
+        given = {read.field: arrays[read.field] for read in reduction.reads}
         began = watch.start()
-        vector = reduction.kernel({read.field: arrays[read.field] for read in reduction.reads}, call)
+        vector = call_user(reduction.kernel, given, call, where=call.where())
         watch.stop("kernel", reduction.name, began)
         output.partials[reduction.name] = _check_vector(vector, call)
     output.fields = {name: arrays[name] for name in stage.writes}
@@ -168,30 +182,39 @@ def _gather(
 
 
 def check_arrays(
-    made: Mapping[str, Array], expected: Sequence[str], fields: Mapping[str, Field], tile: Tile, where: str
-) -> None:
-    """Refuse missing, extra, misshapen or not finite arrays; write-protect the good ones.
+    made: object, expected: Sequence[str], fields: Mapping[str, Field], tile: Tile, where: str
+) -> dict[str, Array]:
+    """Refuse missing, extra, misshapen or not finite arrays; give back the good ones, write-protected.
+
+    They come back C-contiguous, as they are after a journey between workers: NumPy's sums run in memory
+    order, so that the bits of a later kernel could otherwise depend on whether its input had travelled.
 
     Raises
     ------
     KernelError
     """
+    if not isinstance(made, Mapping):
+        raise KernelError(f"{where}: expected a mapping of field to array, got {type(made).__name__}")
     if set(made) != set(expected):
         raise KernelError(
             f"{where}: expected new arrays for {_listed(expected)}, got {_listed(made)};"
             " return one array for each declared write"
         )
+    checked = {}
     for name, array in made.items():
         shape = fields[name].shape(tile.shape)
         if not isinstance(array, np.ndarray) or array.dtype != np.float64 or array.shape != shape:
             came = f"{array.dtype} {array.shape}" if isinstance(array, np.ndarray) else type(array).__name__
             raise KernelError(f"{where}: field {name!r} must be float64 of shape {shape}, got {came}")
-        flat = np.ascontiguousarray(array).reshape(-1)
+        whole = np.ascontiguousarray(array)
+        flat = whole.reshape(-1)
         bad = first_not_finite(flat)
         if bad >= 0:
             component, *zone = (int(i) for i in np.unravel_index(bad, shape))
             raise not_finite(fields[name], component, _global(zone, tile), float(flat[bad]), where)
-        array.flags.writeable = False
+        whole.flags.writeable = False
+        checked[name] = whole
+    return checked
 
 
 def not_finite(field: Field, component: int, zone: Triple, value: float, where: str) -> KernelError:
@@ -207,10 +230,12 @@ def _global(zone: Sequence[int], tile: Tile) -> Triple:
     return tuple(z + o for z, o in zip(zone, tile.origin, strict=True))  # type: ignore[return-value]
 
 
-def _check_vector(vector: object, call: Call) -> Array:
-    array = np.asarray(vector, dtype=np.float64)
+def _check_vector(vector: Any, call: Call) -> Array:
+    array = call_user(np.asarray, vector, np.float64, where=call.where())
     if array.ndim != 1:
-        raise KernelError(f"{call.where()}: a reduction's kernel must return a vector, got shape {array.shape}")
+        raise KernelError(
+            f"{call.where()}: a reduction's kernel must return a vector, got shape {array.shape}"
+        )
     return array
 
 

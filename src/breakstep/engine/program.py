@@ -12,9 +12,10 @@ from breakstep.mesh.fields import Field
 from breakstep.mesh.halo import Rim
 from breakstep.mesh.mesh import Triple
 from breakstep.mesh.tiling import Tiling
+from breakstep.steps.calling import call_user
 from breakstep.steps.problem import Problem
 from breakstep.steps.splitting import Repeat
-from breakstep.steps.reduction import Reduction
+from breakstep.steps.reduction import Reduction, finish_rows
 from breakstep.steps.step import Array, Read
 
 
@@ -45,7 +46,9 @@ class Program:
         self.plans = HaloPlans(self.tiling)
         self.fields = self.problem.by_name()
         repeats = (item for item in self.problem.splitting.items() if isinstance(item, Repeat))
-        self._reductions = {reduction.name: reduction for reduction in self.problem.splitting.all_reductions()}
+        self._reductions = {
+            reduction.name: reduction for reduction in self.problem.splitting.all_reductions()
+        }
         self._rims: dict[tuple[int, Read, Triple], Rim] = {}
         self._stops = {repeat.name: repeat.stop for repeat in repeats}
 
@@ -68,16 +71,29 @@ class Program:
         from breakstep.engine.execute import check_arrays
 
         place = self.tiling.tiles[tile]
-        arrays = dict(self.problem.initial(place, self.problem.mesh))
+        where = f"the initial state of tile {tile}"
+        arrays = dict(call_user(self.problem.initial, place, self.problem.mesh, where=where))
         zeros = {n: np.zeros(f.shape(place.shape)) for n, f in self.fields.items() if f.per_tile}
         arrays = {**zeros, **arrays}
-        expected = {*self.state_fields, *zeros, *(arrays.keys() & self.fields.keys())}
-        check_arrays(arrays, sorted(expected), self.fields, place, f"the initial state of tile {tile}")
-        return arrays
+        expected = {*self.state_fields, *zeros, *self.template.needed, *(arrays.keys() & self.fields.keys())}
+        return check_arrays(arrays, sorted(expected), self.fields, place, where)
 
     def stop(self, stage: int, verdict: Array) -> bool:
         """Whether a verdict ends the repeat that a stage belongs to."""
-        return bool(self._stops[self.template.stages[stage].repeat](verdict))
+        repeat = self.template.stages[stage].repeat
+        return bool(call_user(self._stops[repeat], verdict, where=f"stop of repeat {repeat}"))
+
+    def finish(
+        self, stage: int, reduction: Reduction, combined: Array | None, previous: Array | None, rows: int
+    ) -> Array:
+        """The result of a reduction measured at the end of a stage, shape (rows, n).
+
+        A verdict that says stop stands: the iterations that a lag still lets run may measure a larger
+        residual again, and must not start the repeat anew.
+        """
+        if self.template.stages[stage].repeat and previous is not None and self.stop(stage, previous):
+            combined = None
+        return finish_rows(reduction, combined, previous, rows)
 
     def rim(self, tile: int, read: Read, offset: Triple) -> Rim:
         """The rim of one offset that a tile needs for a read."""

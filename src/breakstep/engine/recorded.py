@@ -65,7 +65,9 @@ def run_and_record(
     mesh = program.problem.mesh
     if result.fields:
         record.fields = {
-            name: FinalField(whole_field(program, tiles), program.fields[name].components, program.fields[name].units)
+            name: FinalField(
+                whole_field(program, tiles), program.fields[name].components, program.fields[name].units
+            )
             for name, tiles in result.fields.items()
         }
     origin = (*mesh.origin, 0.0, 0.0, 0.0)[:3]

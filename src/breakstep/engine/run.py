@@ -55,7 +55,7 @@ class RunResult:
     cycles : int
         Cycles that were completed.
     interrupted : bool
-        Whether the user stopped the run; the fields are then those of the last completed cycle, if any.
+        Whether the user stopped the run; there are no fields and values then, nor after a failure.
     failure : Exception or None
         The error that ended the run early.
     """

@@ -11,10 +11,10 @@ from breakstep.engine.recording import Recorder, record_edges, task_row
 from breakstep.engine.run import Progress, RunOptions, RunResult, unroller_for
 from breakstep.errors import BreakstepError
 from breakstep.graph.tasks import Kind, Task, TaskGraph
-from breakstep.graph.unroll import Need, Phase, Unroller
+from breakstep.graph.unroll import INITIAL, Need, Phase, Unroller
 from breakstep.mesh.halo import cut
 from breakstep.mesh.mesh import Triple
-from breakstep.steps.reduction import combine, finish_rows
+from breakstep.steps.reduction import combine
 from breakstep.steps.step import Array
 
 
@@ -40,6 +40,7 @@ class _SerialRun:
     outputs: dict[int, Output] = field(default_factory=dict)
     vectors: dict[int, Array | None] = field(default_factory=dict)
     cycles: int = 0
+    newest: int = -1  # cycle of the last phase that ran
 
     def run(self) -> RunResult:
         program = self.program
@@ -76,37 +77,52 @@ class _SerialRun:
                 answer = [self._vector(self.graph.root(i)) for i in event.instances]
             else:
                 self._phase(event)
+        if self.newest >= self.cycles:
+            self._completed(self.newest + 1)
 
     def _phase(self, phase: Phase) -> None:
         barrier = phase.stage.index in self.program.template.stages_with_barrier(self.options.barriers)
+        if phase.cycle > self.cycles:
+            self._completed(phase.cycle)
         tasks = self.graph.expand(phase, barrier_after=barrier)
-        for task in tasks:
-            self._task(task)
         if self.options.record:
             record_edges(self.recorder.record, tasks)
-        dead = self.graph.forget(self.unroller.live_phases(self.program.state_fields))
-        live = {n for p in self.unroller.live_phases(self.program.state_fields) if p for n in self.graph.step_tasks(p)}
-        if dead:
-            keep_initial = 0 in self.unroller.live_phases(self.program.state_fields)
-            self.outputs = {n: o for n, o in self.outputs.items() if n in live or (n < 0 and keep_initial)}
-        if phase.cycle + 1 > self.cycles and phase.cycle >= 0:
-            self.cycles = phase.cycle + 1
-            if self.progress is not None:
-                self.progress(self.cycles)
+        for task in tasks:
+            self._task(task)
+        self.newest = phase.cycle
+        self._let_go()
+
+    def _let_go(self) -> None:
+        """Drop the arrays that nothing will read again."""
+        live = self.unroller.live_phases(self.program.state_fields)
+        if not self.graph.forget(live):
+            return
+        wanted = {number for phase in live if phase != INITIAL for number in self.graph.step_tasks(phase)}
+        self.outputs = {n: o for n, o in self.outputs.items() if n in wanted or (n < 0 and INITIAL in live)}
+
+    def _completed(self, cycles: int) -> None:
+        self.cycles = cycles
+        if self.progress is not None:
+            self.progress(cycles)
 
     def _task(self, task: Task) -> None:
         start = time.perf_counter_ns()
-        nbytes, skipped = 0, False
+        output = Output({}, {})
         if task.kind is Kind.STEP:
             site = Site(task.phase.stage.index, task.tile, task.phase.cycle, task.phase.iteration)
-            output = execute(self.program, site, self._inputs(task))
-            self.outputs[task.number] = output
-            nbytes, skipped = output.nbytes, output.skipped
-            self.recorder.intervals(task.number, output.intervals)
-            self.recorder.counters(task.number, output.counters)
+            output = self.outputs[task.number] = execute(self.program, site, self._inputs(task))
         elif task.kind is Kind.COMBINE:
             self._combine(task)
-        self.recorder.task(task_row(task), start, time.perf_counter_ns(), nbytes, skipped)
+        if self.options.record:
+            self._note(task, start, output)
+
+    def _note(self, task: Task, start: int, output: Output) -> None:
+        recorder, number = self.recorder, task.number
+        recorder.task(task_row(task), start, time.perf_counter_ns(), output.nbytes, output.skipped)
+        recorder.intervals(number, output.intervals)
+        recorder.counters(number, output.counters)
+        if self.options.trace:
+            recorder.checksums(number, task.label, output.fields)
 
     def _inputs(self, task: Task) -> Inputs:
         rims: dict[str, dict[Triple, Array]] = {}
@@ -144,13 +160,18 @@ class _SerialRun:
             self.vectors[task.number] = combined
             return
         previous = self._vector(task.previous)[-1] if task.previous is not None else None
-        self.vectors[task.number] = finish_rows(making.reduction, combined, previous, making.rows)
+        stage = task.phase.stage.index
+        self.vectors[task.number] = self.program.finish(
+            stage, making.reduction, combined, previous, making.rows
+        )
 
     def _final(self, unroller: Unroller) -> dict[str, list[Array]]:
         final = {}
         for name in self.program.state_fields:
             phase = unroller.latest(name)
-            numbers = self.graph.step_tasks(phase) if phase else [-1 - t for t in range(len(self.program.tiling))]
+            numbers = (
+                self.graph.step_tasks(phase) if phase else [-1 - t for t in range(len(self.program.tiling))]
+            )
             final[name] = [self.outputs[number].fields[name] for number in numbers]
         return final
 

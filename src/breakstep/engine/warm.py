@@ -12,13 +12,14 @@ from breakstep.engine.program import Program
 from breakstep.engine.run import RunOptions
 from breakstep.engine.serial import SerialDispatch
 
-SMALL = 4  # zones along each axis of the copy; at least twice the widest built-in halo
+SMALL = 4  # zones along each axis of the copy, unless a halo is wider
 
 
 def small_copy(program: Program) -> Program:
     """The same physics on a mesh of a few zones, one tile, for as many cycles as there are orders."""
     problem = program.problem
-    mesh = replace(problem.mesh, shape=tuple(min(n, SMALL) for n in problem.mesh.shape))
+    widest = max((width for _, read in problem.splitting.halo_reads() for width in read.halo), default=0)
+    mesh = replace(problem.mesh, shape=tuple(min(n, max(SMALL, widest)) for n in problem.mesh.shape))
     small = replace(problem, mesh=mesh, cycles=len(problem.splitting.orders), ended=None)
     return Program(small, mesh.shape, program.fuse)
 

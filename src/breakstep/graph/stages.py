@@ -95,13 +95,15 @@ class Template:
     @cached_property
     def carried(self) -> frozenset[str]:
         """Fields whose version at the beginning of a cycle is read within it."""
-        found: set[str] = set()
+        return frozenset(name for order in self.orders for name in _read_first(order, set()))
+
+    @cached_property
+    def needed(self) -> frozenset[str]:
+        """Fields that a run reads before it has written them: they need an initial state."""
+        found = {read.field for read in self.start.reads} if self.start is not None else set()
+        made: set[str] = set()
         for order in self.orders:
-            made: set[str] = set()
-            for node in order:
-                for stage in node.stages if isinstance(node, RepeatStages) else (node,):
-                    found |= {read.field for read in stage.reads} - made
-                    made |= set(stage.writes)
+            found |= _read_first(order, made)
         return frozenset(found)
 
     def barrier_names(self) -> tuple[str, ...]:
@@ -124,6 +126,16 @@ class Template:
                 f" lockstep, tasked or a list of {', '.join(self.barrier_names())}"
             )
         return frozenset(s.index for s in self.stages if wanted & set(_boundary_names(s)))
+
+
+def _read_first(order: Sequence[Node], made: set[str]) -> set[str]:
+    """Fields that an order reads before it writes them; adds what it writes to ``made``."""
+    found: set[str] = set()
+    for node in order:
+        for stage in node.stages if isinstance(node, RepeatStages) else (node,):
+            found |= {read.field for read in stage.reads} - made
+            made |= set(stage.writes)
+    return found
 
 
 def _boundary_names(stage: Stage) -> tuple[str, ...]:
@@ -168,7 +180,9 @@ class _Numbering:
         self.stages.append(stage)
         return stage
 
-    def stage_groups(self, steps: Sequence[Step], tail: Sequence[Reduction], repeat: Repeat | None) -> list[_Group]:
+    def stage_groups(
+        self, steps: Sequence[Step], tail: Sequence[Reduction], repeat: Repeat | None
+    ) -> list[_Group]:
         groups: list[_Group] = []
         for step in steps:
             if groups and self.fuse and can_follow(groups[-1].steps, step):

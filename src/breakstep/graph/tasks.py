@@ -263,13 +263,20 @@ class TaskGraph:
         """One counter for each worker, and the release; without owners, one counter for each tile."""
         by_worker: dict[int, list[int]] = {}
         for task in steps:
-            by_worker.setdefault(task.worker if task.worker != ANYWHERE else -2 - task.tile, []).append(task.number)
+            by_worker.setdefault(task.worker if task.worker != ANYWHERE else -2 - task.tile, []).append(
+                task.number
+            )
         counts = [
             Task(self._next(), Kind.COUNT, phase, -1, max(worker, ANYWHERE), children=tuple(numbers))
             for worker, numbers in by_worker.items()
         ]
         release = Task(
-            self._next(), Kind.RELEASE, phase, -1, counts[0].worker, children=tuple(task.number for task in counts)
+            self._next(),
+            Kind.RELEASE,
+            phase,
+            -1,
+            counts[0].worker,
+            children=tuple(task.number for task in counts),
         )
         self._releases[phase.number] = release.number
         return [*counts, release]

@@ -20,6 +20,7 @@ from typing import TypeAlias
 
 from breakstep.errors import ConvergenceError
 from breakstep.graph.stages import RepeatStages, Stage, Template
+from breakstep.steps.calling import call_user
 from breakstep.steps.reduction import Reduction
 from breakstep.steps.step import Array
 
@@ -98,12 +99,17 @@ class Unroller:
     ended : callable, optional
         ``ended(value of the first reduction for a cycle) -> bool``: stop before that cycle.
         Costs a look at each cycle's value before the cycle is emitted.
+    start : int
+        First cycle to run; above 0 the run goes on from a state in which that cycle had not begun. Results of
+        cycle-level reductions for cycles ``start`` to ``start`` + lag must then be given to the engine as the
+        rows of instance 0, 1, ... in the order of the splitting's reductions.
     """
 
     template: Template
     cycles: int
     barriers: Sequence[str] = ()
     ended: Callable[[Array], bool] | None = None
+    start: int = 0
 
     def __post_init__(self) -> None:
         self._barrier_stages = self.template.stages_with_barrier(self.barriers)
@@ -139,16 +145,33 @@ class Unroller:
         """For each cycle-level reduction, the newest result's instance."""
         return {name: made[-1] for name, made in self._cycle_results.items() if made}
 
+    def next_values(self) -> dict[str, list[ValueRef]]:
+        """For each cycle-level reduction, the results for the next cycle and its lag.
+
+        Meaningful between two cycles only; in the middle of one, results still to be made are left out.
+        """
+        upcoming = self.start if self._last_phase is None else self._last_phase.cycle + 1
+        return {
+            reduction.name: [
+                self._cycle_value(reduction, upcoming + k)
+                for k in range(reduction.lag + 1)
+                if upcoming + k - self.start - reduction.lag < len(self._cycle_results[reduction.name])
+            ]
+            for reduction in self.template.splitting.reductions
+        }
+
     def run(self) -> Unrolling:
         """Yield phases in program order, and needs where a value decides."""
-        if self.template.start is not None:
+        if self.start > 0:
+            self._cycle_makings(first=True)  # their results come from the checkpoint
+        elif self.template.start is not None:
             yield self._phase(self.template.start, -1, makes=self._cycle_makings(first=True))
-        for cycle in range(self.cycles):
+        for cycle in range(self.start, self.cycles):
             if self.ended is not None:
                 ref = self._cycle_value(self.template.splitting.reductions[0], cycle)
                 answer = yield Need((ref.instance,))
                 assert answer is not None
-                if self.ended(answer[0][ref.row]):
+                if call_user(self.ended, answer[0][ref.row], where=f"ended before cycle {cycle}"):
                     return
             yield from self._cycle(cycle)
 
@@ -165,17 +188,20 @@ class Unroller:
         makings = []
         for reduction in self.template.splitting.reductions:
             made = self._cycle_results[reduction.name]
-            making = Making(reduction, self._next_instance(), made[-1] if made else None, 1 + reduction.lag if first else 1)
+            making = Making(
+                reduction,
+                self._next_instance(),
+                made[-1] if made else None,
+                1 + reduction.lag if first else 1,
+            )
             made.append(making.instance)
             makings.append(making)
         return tuple(makings)
 
     def _cycle_value(self, reduction: Reduction, cycle: int) -> ValueRef:
         """The first result has a row for each of the first ``lag`` + 1 cycles."""
-        made = self._cycle_results[reduction.name]
-        if cycle <= reduction.lag:
-            return ValueRef(made[0], cycle)
-        return ValueRef(made[cycle - reduction.lag])
+        made, since = self._cycle_results[reduction.name], cycle - self.start
+        return ValueRef(made[0], since) if since <= reduction.lag else ValueRef(made[since - reduction.lag])
 
     def _repeat(self, node: RepeatStages, cycle: int) -> Unrolling:
         repeat, lag = node.repeat, node.repeat.until.lag
@@ -195,7 +221,8 @@ class Unroller:
             answer = yield Need(tuple(verdicts[known:]))
             assert answer is not None
             for value in answer:
-                if stopped_at is None and repeat.stop(value[0]):
+                where = f"stop of repeat {repeat.name}, cycle {cycle}"
+                if stopped_at is None and call_user(repeat.stop, value[0], where=where):
                     stopped_at = known
                 known += 1
         self._iterations[repeat.name] = min(stopped_at + lag + 1, repeat.at_most)

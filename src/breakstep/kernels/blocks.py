@@ -32,13 +32,13 @@ LANES = 8
 """Zones a panel: two vectors of four doubles, or one of eight."""
 
 
-@inlined
+@compiled
 def load(a: Floats, row: int) -> Lanes:
     """Read the eight lanes of a row. All loads precede all stores, or nothing would vectorise."""
     return a[row, 0], a[row, 1], a[row, 2], a[row, 3], a[row, 4], a[row, 5], a[row, 6], a[row, 7]
 
 
-@inlined
+@compiled
 def store(a: Floats, row: int, v: Lanes) -> None:
     """Write the eight lanes of a row."""
     a[row, 0] = v[0]
@@ -51,7 +51,7 @@ def store(a: Floats, row: int, v: Lanes) -> None:
     a[row, 7] = v[7]
 
 
-@inlined
+@compiled
 def times(x: Lanes, y: Lanes) -> Lanes:
     """Lanewise product."""
     return (
@@ -66,7 +66,7 @@ def times(x: Lanes, y: Lanes) -> Lanes:
     )
 
 
-@inlined
+@compiled
 def minus(t: Lanes, x: Lanes, y: Lanes) -> Lanes:
     """Lanewise t - x * y."""
     return (
@@ -81,7 +81,7 @@ def minus(t: Lanes, x: Lanes, y: Lanes) -> Lanes:
     )
 
 
-@inlined
+@compiled
 def plus(t: Lanes, x: Lanes, y: Lanes) -> Lanes:
     """Lanewise t + x * y."""
     return (

@@ -17,13 +17,13 @@ the tiling. Refuses to know meshes, tiles, time-step control; screening and neut
 
 from __future__ import annotations
 
-from breakstep.kernels.compiled import compiled  # isort: skip  (must precede numba)
-from breakstep.kernels.unmanaged import merged, unmanaged  # isort: skip
+from breakstep.kernels.unmanaged import merged, unmanaged  # isort: skip  (must precede numba)
 
 import numpy as np
 from numpy.typing import NDArray
 
 from breakstep.kernels.eos import state_from_energy, state_from_temperature
+from breakstep.kernels.network_layout import read_only
 from breakstep.kernels.reactions import NetworkArrays, weigh_by_density
 from breakstep.kernels.stiff import (
     DONE,
@@ -31,11 +31,10 @@ from breakstep.kernels.stiff import (
     RIGHT_HAND_SIDES,
     SUBSTEP_LIMIT,
     StiffScratch,
-    Zone,
     integrate,
-    right_hand_side,
     stiff_scratch,
 )
+from breakstep.kernels.zone_equations import Zone, right_hand_side
 
 Floats = NDArray[np.float64]
 Counters = NDArray[np.int64]
@@ -61,7 +60,7 @@ BAD_INPUT = 4
 REASONS = {
     SUBSTEP_LIMIT: "the sub-step limit was reached",
     NOT_FINITE: "its rates of change are not finite",
-    NEGATIVE_ENERGY: "its internal energy is not positive",
+    NEGATIVE_ENERGY: "its internal energy is not positive and finite",
     BAD_INPUT: "its density or composition is not positive and finite",
 }
 """What an outcome other than DONE says about the zone."""
@@ -98,7 +97,6 @@ def failure(status: Status, gas: Floats, names: tuple[str, ...]) -> str | None:
     )
 
 
-@compiled
 def burn(
     gas: Floats,
     dt: float,
@@ -109,11 +107,11 @@ def burn(
     max_substeps: int,
     cutoff_temperature: float,
 ) -> tuple[Floats, Counters, Status]:
-    """Burn all zones of a tile for a time dt.
+    """Burn all zones of a tile for a time dt. Releases the interpreter lock.
 
     Parameters
     ----------
-    gas : ndarray, shape (5 + n_species, nx, ny, nz)
+    gas : ndarray, shape (5 + n_species, nx, ny, nz), C-contiguous
         Density [g/cm^3], momentum density (3), internal plus kinetic energy density [erg/cm^3], partial
         densities rho X_k in network order. Not changed.
     dt : float
@@ -123,7 +121,7 @@ def burn(
     network : NetworkArrays
         ``load_network(...).arrays``.
     rtol, atol : float
-        Error tolerances a sub-step: ``atol + rtol X`` in mass fractions, ``rtol T`` in temperature.
+        Error tolerances of a sub-step: ``atol + rtol X`` in mass fractions, ``rtol T`` in temperature.
     max_substeps : int
         Limit on sub-steps tried in one zone.
     cutoff_temperature : float
@@ -132,20 +130,20 @@ def burn(
     Returns
     -------
     new_gas : ndarray
-        As `gas`. After a failure the zones from the failed one on are unburned.
+        As `gas`; of use only if no zone failed.
     counters : ndarray of int64, shape (7,)
-        Work done, in the order of `COUNTERS`.
+        Work done, in the order of `COUNTERS`, up to a failure.
     status : ndarray of int64, shape (4,)
         DONE (0) or the outcome of the first zone that failed (a key of `REASONS`), then its three indices.
     """
     new_gas = gas.copy()
-    counters = np.zeros(7, dtype=np.int64)
+    counters = np.zeros(len(COUNTERS), dtype=np.int64)
     status = np.zeros(4, dtype=np.int64)
-    state = np.empty(network.mass_numbers.size + 1)
-    scratch = stiff_scratch(network)
-    _burn_zones(
-        gas, dt, eos, network, rtol, atol, max_substeps, cutoff_temperature, new_gas, counters, status, state, scratch
-    )
+    limits = (float(rtol), float(atol), int(max_substeps), float(cutoff_temperature))
+    # Read-only arrays are a type of their own to numba. Taking all inputs as such, whether they came from
+    # this process or out of a message, keeps it from compiling everything twice.
+    inputs = (read_only(gas), float(dt), read_only(eos), network)
+    _burn_zones(*inputs, *limits, new_gas, counters, status, stiff_scratch(network))
     return new_gas, counters, status
 
 
@@ -162,11 +160,11 @@ def _burn_zones(
     new_gas: Floats,
     counters: Counters,
     status: Status,
-    state: Floats,
     scratch: StiffScratch,
 ) -> None:
     """Fill `new_gas` zone by zone, until one fails."""
     n = network.mass_numbers.size
+    state = scratch.state
     for i in range(gas.shape[1]):
         for j in range(gas.shape[2]):
             for k in range(gas.shape[3]):
@@ -189,8 +187,10 @@ def _burn_zones(
 @merged
 def _specific_energy(gas: Floats, i: int, j: int, k: int) -> float:
     """Internal energy [erg/g]."""
+    density = gas[0, i, j, k]
     squared = gas[1, i, j, k] ** 2 + gas[2, i, j, k] ** 2 + gas[3, i, j, k] ** 2
-    return (gas[4, i, j, k] - 0.5 * squared / gas[0, i, j, k]) / gas[0, i, j, k]
+    specific: float = (gas[4, i, j, k] - 0.5 * squared / density) / density
+    return specific
 
 
 @merged
@@ -254,16 +254,18 @@ def _advance(
 def _largest_change(network: NetworkArrays, state: Floats, change: Floats, rtol: float, atol: float) -> float:
     """Largest rate of change in tolerances a second; not finite if any rate is not."""
     n = network.mass_numbers.size
-    largest = abs(change[n]) / (rtol * state[n])
+    largest: float = abs(change[n]) / (rtol * state[n])
     for k in range(n):
         ratio = abs(change[k]) / (atol / network.mass_numbers[k] + rtol * abs(state[k]))
-        if not ratio <= largest:
+        if ratio > largest or ratio != ratio:  # once NaN, it stays NaN
             largest = ratio
     return largest
 
 
 @merged
-def _store(network: NetworkArrays, state: Floats, gas: Floats, i: int, j: int, k: int, new_gas: Floats) -> int:
+def _store(
+    network: NetworkArrays, state: Floats, gas: Floats, i: int, j: int, k: int, new_gas: Floats
+) -> int:
     """Write partial densities and energy of one zone, keeping the books."""
     n = network.mass_numbers.size
     before, after = 0.0, 0.0

@@ -12,27 +12,21 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
+from typing import Literal
 
-from breakstep.kernels.compiled import compiled  # isort: skip  (must precede numba)
+from breakstep.kernels.unmanaged import unmanaged  # isort: skip  (must precede numba)
 
 import numpy as np
 from scipy.integrate import solve_ivp
 
 from breakstep.errors import ConvergenceError
 from breakstep.kernels.network import Network
+from breakstep.kernels.network_layout import read_only
 from breakstep.kernels.reactions import NetworkArrays, weigh_by_density
-from breakstep.kernels.stiff import (
-    DONE,
-    SUB_STEPS,
-    Floats,
-    StiffScratch,
-    Zone,
-    integrate,
-    linearise,
-    right_hand_side,
-    stiff_scratch,
-)
+from breakstep.kernels.stiff import DONE, SUB_STEPS, StiffScratch, integrate, stiff_scratch
+from breakstep.kernels.zone_equations import Floats, Zone, linearise, right_hand_side
 
+Method = Literal["BDF", "Radau", "LSODA"]
 RTOLS = (1e-3, 1e-4, 1e-5, 1e-6, 1e-7)
 # Mass fractions below this part of the relative tolerance count by their absolute error, in both solvers.
 ATOL_PER_RTOL = 1e-6
@@ -42,24 +36,19 @@ _MAX_SUBSTEPS = 1_000_000
 _REPEATS = 5
 
 
-@compiled
-def _change(network: NetworkArrays, zone: Zone, state: Floats, scratch: StiffScratch) -> Floats:
-    change = np.empty(state.size)
+@unmanaged
+def _change(network: NetworkArrays, zone: Zone, state: Floats, scratch: StiffScratch, change: Floats) -> None:
     right_hand_side(network, zone, state, scratch.kinetics, change)
-    return change
 
 
-@compiled
-def _packed_jacobian(network: NetworkArrays, zone: Zone, state: Floats, scratch: StiffScratch) -> Floats:
+@unmanaged
+def _packed_jacobian(network: NetworkArrays, zone: Zone, state: Floats, scratch: StiffScratch) -> None:
     linearise(network, zone, state, scratch.kinetics, scratch.change, scratch.jacobian)
-    return scratch.jacobian
 
 
-@compiled
-def _prepared_scratch(network: NetworkArrays, density: float) -> StiffScratch:
-    scratch = stiff_scratch(network)
+@unmanaged
+def _weigh(network: NetworkArrays, density: float, scratch: StiffScratch) -> None:
     weigh_by_density(network.table, density, scratch.kinetics)
-    return scratch
 
 
 @dataclass(frozen=True, eq=False)
@@ -93,9 +82,11 @@ class ZoneProblem:
 
     def __post_init__(self) -> None:
         electrons = float(self.fractions / self.network.mass_numbers @ self.network.charges)
-        zone = Zone(self.eos, float(self.density), electrons, self.self_heating)
+        zone = Zone(read_only(self.eos), float(self.density), electrons, self.self_heating)
         object.__setattr__(self, "zone", zone)
-        object.__setattr__(self, "scratch", _prepared_scratch(self.network.arrays, float(self.density)))
+        scratch = stiff_scratch(self.network.arrays)
+        _weigh(self.network.arrays, zone.density, scratch)
+        object.__setattr__(self, "scratch", scratch)
         object.__setattr__(self, "callback_seconds", np.zeros(1))
 
     @property
@@ -106,16 +97,17 @@ class ZoneProblem:
     def change(self, _time: float, state: Floats) -> Floats:
         """Right-hand side, as scipy calls it."""
         started = time.perf_counter()
-        change = _change(self.network.arrays, self.zone, state, self.scratch)
+        change = np.empty(state.size)
+        _change(self.network.arrays, self.zone, state, self.scratch, change)
         self.callback_seconds[0] += time.perf_counter() - started
         return change
 
     def jacobian(self, _time: float, state: Floats) -> Floats:
         """Dense Jacobian, as scipy calls it."""
         started = time.perf_counter()
-        packed = _packed_jacobian(self.network.arrays, self.zone, state, self.scratch)
+        _packed_jacobian(self.network.arrays, self.zone, state, self.scratch)
         positions = self.network.positions
-        dense = np.where(positions >= 0, packed[positions], 0.0)
+        dense = np.where(positions >= 0, self.scratch.jacobian[positions], 0.0)
         self.callback_seconds[0] += time.perf_counter() - started
         return dense
 
@@ -134,7 +126,7 @@ class ZoneProblem:
             raise ConvergenceError(f"the zone was not integrated: outcome {outcome}", outcome=outcome)
         return state, int(counters[SUB_STEPS])
 
-    def solve_with_scipy(self, method: str, rtol: float, atol: float) -> tuple[Floats, int]:
+    def solve_with_scipy(self, method: Method, rtol: float, atol: float) -> tuple[Floats, int]:
         """State at the end by ``scipy.integrate.solve_ivp``, and the steps it took.
 
         Raises
@@ -144,9 +136,15 @@ class ZoneProblem:
         """
         # the temperature's absolute tolerance is negligible at any temperature that burns
         tolerances = np.append(atol / self.network.mass_numbers, atol)
-        span = (0.0, self.duration)
-        options = {"method": method, "rtol": rtol, "atol": tolerances, "jac": self.jacobian}
-        result = solve_ivp(self.change, span, self.start, **options)
+        result = solve_ivp(
+            self.change,
+            (0.0, self.duration),
+            self.start,
+            method=method,
+            rtol=rtol,
+            atol=tolerances,
+            jac=self.jacobian,
+        )
         if not result.success:
             raise ConvergenceError(f"scipy's {method} failed: {result.message}")
         return result.y[:, -1], result.t.size - 1
@@ -215,7 +213,7 @@ class SpeedComparison:
     included; ``ratio_without_callbacks`` is what would remain of the ratio if they cost nothing at all.
     """
 
-    method: str
+    method: Method
     error: float
     kernel_seconds: float
     scipy_seconds: float
@@ -232,7 +230,7 @@ class SpeedComparison:
         return self.ratio * (1.0 - self.callback_share)
 
 
-def compare_with_scipy(problem: ZoneProblem, method: str = "BDF", error: float = 1e-6) -> SpeedComparison:
+def compare_with_scipy(problem: ZoneProblem, method: Method = "BDF", error: float = 1e-6) -> SpeedComparison:
     """Measure both on one zone and compare at equal achieved error.
 
     The kernel's time includes one call from Python, some ten microseconds, which a tile's zones share.

@@ -27,9 +27,21 @@ import numpy.typing as npt
 
 from breakstep.errors import KernelError
 from breakstep.kernels.compiled import compiled, inlined
-from breakstep.kernels.eos import STELLAR, mean_nuclear, state_from_energy
-from breakstep.kernels.hydro_chunks import Plan, add, chunk_plan, first_bad, largest_speed, load, store
+from breakstep.kernels.eos import STELLAR
+from breakstep.kernels.hydro_chunks import (
+    NONE,
+    Plan,
+    add,
+    chunk_plan,
+    first_bad,
+    first_unsound,
+    largest_of,
+    largest_speed,
+    load,
+    store,
+)
 from breakstep.kernels.hydro_gas import (
+    crossing_rates,
     differences,
     face_states,
     fluxes,
@@ -41,7 +53,19 @@ from breakstep.kernels.hydro_gas import (
     update,
     weights,
 )
-from breakstep.kernels.hydro_rows import DENSITY, ENERGY, HALO, MOMENTUM, SPECIES, scratch_for
+from breakstep.kernels.hydro_rows import (
+    DENSITY,
+    ENERGY,
+    HALO,
+    MOMENTUM,
+    ROW,
+    SOUND_AFTER,
+    SOUND_BEFORE,
+    SPECIES,
+    SPEED,
+    part,
+    scratch_for,
+)
 from breakstep.kernels.hydro_species import face_fractions, fractions, mean_nuclei, species_changes
 
 Array = npt.NDArray[np.float64]
@@ -110,17 +134,18 @@ def _sweep(
 ) -> tuple[float, int]:
     s = scratch_for(mass_numbers.size)
     speed = 0.0
-    bad_zone = -1
+    bad_before = bad_after = NONE
     for index in range(plan.size):
         chunk = plan[index]
         _prepare(source, axis, s, chunk, eos, mass_numbers, charges)
         _advance(s, chunk.step, chunk.load_pieces * chunk.load_length, courant, mass_numbers.size)
         _deliver(source, axis, s, chunk, mass_numbers.size, new)
         speed = max(speed, largest_speed(s, chunk))
-        bad = first_bad(s, chunk)
-        if bad >= 0 and (bad_zone < 0 or bad < bad_zone):
-            bad_zone = bad
-    return speed * courant, bad_zone
+        bad_before = min(bad_before, first_bad(s, SOUND_BEFORE, chunk))
+        bad_after = min(bad_after, first_bad(s, SOUND_AFTER, chunk))
+    # A bad zone spoils its neighbours in the same step; it, not they, is to be reported.
+    bad_zone = bad_before if bad_before < NONE else bad_after
+    return speed * courant, bad_zone if bad_zone < NONE else -1
 
 
 def _constant(values: npt.NDArray[Any]) -> npt.NDArray[Any]:
@@ -161,9 +186,9 @@ def sweep(
         Largest (|u| + c) dt / spacing of the interior before the step. Zones without a sound speed
         do not count; they are bad.
     bad_zone : int
-        -1, or the first flat index into one component of ``new_gas`` whose density, internal energy or
-        pressure was not positive or not finite before the step, or whose density or internal energy is
-        not so after it. The other numbers then mean nothing.
+        -1, or the flat index into one component of ``new_gas`` of the first zone whose density or
+        pressure was not positive or not finite before the step; if there is none, of the first whose
+        density or internal energy is not so after it. ``new_gas`` then means nothing.
 
     Raises
     ------
@@ -196,33 +221,33 @@ def sweep(
 
 
 @inlined
-def _sound_speed(gas: Array, zone: int, eos: Array, mass_numbers: Array, charges: Array) -> float:
-    """Sound speed [cm/s] of one zone; nan where its state is not sound."""
-    density = gas[0, zone]
-    squared = gas[1, zone] * gas[1, zone] + gas[2, zone] * gas[2, zone] + gas[3, zone] * gas[3, zone]
-    energy = (gas[4, zone] - 0.5 * squared / density) / density
-    abar, zbar = 1.0, 1.0
-    if eos[0] == STELLAR:
-        abar, zbar = mean_nuclear(gas[GAS_COMPONENTS:, zone], mass_numbers, charges)
-    state = state_from_energy(eos, density, energy, abar, zbar)
-    return np.sqrt(state[2] * state[1] / density) if density > 0.0 and state[0] > 0.0 else np.nan
+def _load_block(gas: Array, s: Array, start: int, count: int, species: int) -> None:
+    """Load consecutive zones without halo; momentum stays in the order x, y, z."""
+    for k in range(GAS_COMPONENTS):
+        part(s, DENSITY + k, 0, count)[:] = gas[k, start : start + count]
+    for k in range(species):
+        part(s, SPECIES + k, 0, count)[:] = gas[GAS_COMPONENTS + k, start : start + count]
 
 
 @compiled
 def _signal_rate(
-    gas: Array, spacing: Array, active: npt.NDArray[np.bool_], eos: Array, mass_numbers: Array, charges: Array
+    gas: Array, widths: Array, eos: Array, mass_numbers: Array, charges: Array
 ) -> tuple[float, int]:
+    s = scratch_for(mass_numbers.size)
     largest = 0.0
-    bad_zone = -1
-    for zone in range(gas.shape[1]):
-        sound = _sound_speed(gas, zone, eos, mass_numbers, charges)
-        if not sound < np.inf and bad_zone < 0:
-            bad_zone = zone
-        for axis in range(3):
-            if active[axis]:
-                rate = (abs(gas[1 + axis, zone] / gas[0, zone]) + sound) / spacing[axis]
-                largest = max(largest, rate)
-    return largest, bad_zone
+    bad_zone = NONE
+    for start in range(0, gas.shape[1], ROW):
+        count = min(ROW, gas.shape[1] - start)
+        stellar = eos[0] == STELLAR
+        _load_block(gas, s, start, count, mass_numbers.size if stellar else 0)
+        primitives(s, count)
+        if stellar:
+            mean_nuclei(s, count, mass_numbers, charges)
+        pressures(s, count, eos)
+        crossing_rates(s, count, widths)
+        largest = max(largest, largest_of(part(s, SPEED, 0, count)))
+        bad_zone = min(bad_zone, start + first_unsound(part(s, SOUND_BEFORE, 0, count)))
+    return largest, bad_zone if bad_zone < NONE else -1
 
 
 def signal_rate(
@@ -251,8 +276,7 @@ def signal_rate(
     """
     rate, bad_zone = _signal_rate(
         _constant(gas).reshape(gas.shape[0], -1),
-        _constant(spacing),
-        _constant(active),
+        _constant(np.where(active, spacing, np.inf)),
         _constant(eos),
         _constant(mass_numbers),
         _constant(charges),

@@ -14,10 +14,13 @@ import numpy as np
 import numpy.typing as npt
 
 from breakstep.kernels.compiled import inlined
-from breakstep.kernels.hydro_rows import HALO, ROW, SOUND_STATE, SPEED, part
+from breakstep.kernels.hydro_rows import HALO, ROW, SPEED, part
 
 Array = npt.NDArray[np.float64]
 Plan = npt.NDArray[Any]
+
+NONE = 2**62
+"""Stands for no zone where the first of several is looked for."""
 
 # A chunk is read and written in equal pieces of contiguous memory: ``pieces`` times ``load`` numbers with
 # their halo, or ``store`` numbers of interior. Places count from the start of one component.
@@ -124,32 +127,51 @@ def add(source: Array, s: Array, row: int, target: Array, chunk: Any) -> None:
 
 
 @inlined
-def largest_speed(s: Array, chunk: Any) -> float:
-    """Largest |u| + c of the interior. Four at a time: one chain of comparisons would cost 1 ns a zone."""
+def largest_of(values: Array) -> float:
+    """Largest of non-negative numbers. Four at a time: one chain of comparisons would cost 1 ns each."""
     a = b = c = d = 0.0
-    for piece in range(chunk.store_pieces):
-        speed = part(s, SPEED, chunk.row_start + piece * chunk.row_stride, chunk.store_length)
-        fours = chunk.store_length // 4 * 4
-        for i in range(0, fours, 4):
-            a = max(a, speed[i])
-            b = max(b, speed[i + 1])
-            c = max(c, speed[i + 2])
-            d = max(d, speed[i + 3])
-        for i in range(fours, chunk.store_length):
-            a = max(a, speed[i])
+    fours = values.size // 4 * 4
+    for i in range(0, fours, 4):
+        a = max(a, values[i])
+        b = max(b, values[i + 1])
+        c = max(c, values[i + 2])
+        d = max(d, values[i + 3])
+    for i in range(fours, values.size):
+        a = max(a, values[i])
     return max(max(a, b), max(c, d))
 
 
 @inlined
-def first_bad(s: Array, chunk: Any) -> int:
-    """Flat index in the new array of the chunk's first zone that is not sound, or -1."""
+def largest_speed(s: Array, chunk: Any) -> float:
+    """Largest |u| + c of the chunk's interior."""
+    largest = 0.0
     for piece in range(chunk.store_pieces):
-        sound = part(s, SOUND_STATE, chunk.row_start + piece * chunk.row_stride, chunk.store_length)
-        count = 0
-        for i in range(chunk.store_length):
-            count += 1 if sound[i] != 1.0 else 0
-        if count > 0:
-            for i in range(chunk.store_length):
-                if sound[i] != 1.0:
-                    return int(chunk.result_start + piece * chunk.result_stride + i)
-    return -1
+        speeds = part(s, SPEED, chunk.row_start + piece * chunk.row_stride, chunk.store_length)
+        largest = max(largest, largest_of(speeds))
+    return largest
+
+
+@inlined
+def first_unsound(sound: Array) -> int:
+    """Index of the first number that is not 1, or ``NONE``. Counting first is what vectorises."""
+    count = 0
+    for i in range(sound.size):
+        count += 1 if sound[i] != 1.0 else 0
+    first = NONE
+    if count > 0:
+        for i in range(sound.size):
+            if sound[i] != 1.0:
+                first = min(first, i)
+    return first
+
+
+@inlined
+def first_bad(s: Array, row: int, chunk: Any) -> int:
+    """Flat index in the new array of the chunk's first zone that ``row`` calls unsound, or ``NONE``."""
+    first = NONE
+    for piece in range(chunk.store_pieces):
+        sound = part(s, row, chunk.row_start + piece * chunk.row_stride, chunk.store_length)
+        bad = first_unsound(sound)
+        if bad < NONE:
+            first = min(first, chunk.result_start + piece * chunk.result_stride + bad)
+    return first

@@ -28,7 +28,8 @@ from breakstep.kernels.hydro_rows import (
     MOMENTUM,
     PRESSURE,
     ROW,
-    SOUND_STATE,
+    SOUND_AFTER,
+    SOUND_BEFORE,
     SPEED,
     TO_LOWER,
     TO_UPPER,
@@ -76,11 +77,27 @@ def pressures(s: Array, count: int, eos: Array) -> None:
 
 @compiled
 def signal_speeds(s: Array, count: int) -> None:
-    """|u| + c; 0 where the pressure has no sound speed, which ``judge`` reports."""
+    """|u| + c of each zone, and whether the zone has one; 0 where it has none."""
     for i in range(count):
         sound = np.sqrt(s[GAMMA1 * ROW + i] * s[PRESSURE * ROW + i] * s[INVERSE * ROW + i])
         speed = abs(s[VELOCITY * ROW + i]) + sound
-        s[SPEED * ROW + i] = speed if speed >= 0.0 else 0.0
+        good = (s[INVERSE * ROW + i] > 0.0) & (s[PRESSURE * ROW + i] > 0.0) & (speed < np.inf)
+        s[SPEED * ROW + i] = speed if good else 0.0
+        s[SOUND_BEFORE * ROW + i] = 1.0 if good else 0.0
+
+
+@compiled
+def crossing_rates(s: Array, count: int, widths: Array) -> None:
+    """Largest rate over the axes at which signals cross each zone, and whether the zone has a sound speed."""
+    for i in range(count):
+        sound = np.sqrt(s[GAMMA1 * ROW + i] * s[PRESSURE * ROW + i] * s[INVERSE * ROW + i])
+        x = (abs(s[VELOCITY * ROW + i]) + sound) / widths[0]
+        y = (abs(s[(VELOCITY + 1) * ROW + i]) + sound) / widths[1]
+        z = (abs(s[(VELOCITY + 2) * ROW + i]) + sound) / widths[2]
+        positive = (s[INVERSE * ROW + i] > 0.0) & (s[PRESSURE * ROW + i] > 0.0)
+        good = positive & (x + y + z < np.inf)
+        s[SPEED * ROW + i] = max(max(x, y), z) if good else 0.0
+        s[SOUND_BEFORE * ROW + i] = 1.0 if good else 0.0
 
 
 @inlined
@@ -216,13 +233,11 @@ def update(s: Array, step: int, count: int, courant: float) -> None:
 
 @compiled
 def judge(s: Array, count: int) -> None:
-    """Mark sound zones: before and after, density and internal energy positive, and everything finite."""
+    """Whether each zone after the step has positive density and internal energy, and everything is finite."""
     for i in range(count):
         rho = s[DENSITY * ROW + i]
         m, m1, m2 = s[MOMENTUM * ROW + i], s[(MOMENTUM + 1) * ROW + i], s[(MOMENTUM + 2) * ROW + i]
         internal = s[ENERGY * ROW + i] - 0.5 * (m * m + m1 * m1 + m2 * m2) / rho
-        everything = rho + internal + s[PRESSURE * ROW + i] + s[FRACTIONS * ROW + i]
-        positive = (
-            (s[INVERSE * ROW + i] > 0.0) & (s[PRESSURE * ROW + i] > 0.0) & (rho > 0.0) & (internal > 0.0)
-        )
-        s[SOUND_STATE * ROW + i] = 1.0 if positive & (everything - everything == 0.0) else 0.0
+        everything = rho + internal + s[FRACTIONS * ROW + i]
+        good = (rho > 0.0) & (internal > 0.0) & (everything - everything == 0.0)
+        s[SOUND_AFTER * ROW + i] = 1.0 if good else 0.0

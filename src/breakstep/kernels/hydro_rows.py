@@ -29,8 +29,9 @@ With 5 species the scratch takes 250 KB; half or twice as much costs the same wi
 # Of each zone. Momentum and velocity in the order normal, first transverse, second transverse.
 DENSITY, MOMENTUM, ENERGY = 0, 1, 4
 VELOCITY, PRESSURE, INTERNAL = 5, 8, 9  # internal energy density
-GAMMA1, INVERSE, SPEED, SOUND_STATE = 10, 11, 12, 13  # 1/density; |u| + c; 1.0 where the state is sound
-ABAR, ZBAR, FRACTIONS = 14, 15, 16  # FRACTIONS is their sum over the species
+GAMMA1, INVERSE, SPEED = 10, 11, 12  # INVERSE is 1 / density, SPEED is |u| + c
+ABAR, ZBAR, FRACTIONS = 13, 14, 15  # FRACTIONS is their sum over the species
+SOUND_BEFORE, SOUND_AFTER = 16, 48  # 1.0 where the state is one the scheme can use
 # Of each zone, six rows each: density, velocity (3), pressure, internal energy.
 DIFFERENCE, UPPER, LOWER = 17, 23, 29  # limited differences; states at the upper and the lower face
 # Weights that a difference has at the upper and the lower face; 0 where the zone keeps its mean, else 1.
@@ -38,7 +39,7 @@ TO_UPPER, TO_LOWER, KEEP = 35, 36, 37
 # Of the face above each zone: 5 fluxes, speed of the middle wave; for the species the sum of their fractions,
 # what it should be, the species' fluxes over their fractions, and the weight of the upwind difference.
 FLUX, MIDDLE, FACE_SUM, FACE_TOTAL, SHARE, UPWIND = 38, 43, 44, 45, 46, 47
-SPECIES = 48
+SPECIES = 49
 """First row of the species: one row each for the zones, then one each for the faces."""
 
 

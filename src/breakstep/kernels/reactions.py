@@ -16,8 +16,7 @@ from __future__ import annotations
 
 from typing import NamedTuple
 
-from breakstep.kernels.compiled import compiled  # isort: skip  (must precede numba)
-from breakstep.kernels.unmanaged import merged  # isort: skip
+from breakstep.kernels.unmanaged import merged  # isort: skip  (must precede numba)
 
 import numpy as np
 from numpy.typing import NDArray
@@ -87,23 +86,21 @@ class KineticsScratch(NamedTuple):
     power: Floats
 
 
-@compiled
 def kinetics_scratch(network: NetworkArrays) -> KineticsScratch:
     """Allocate work arrays for `network`."""
     n_reactions = network.table.prefactor.size
     n_sets = network.table.coefficients.shape[1]
-    molar = np.ones(network.mass_numbers.size + 1)
     return KineticsScratch(
-        np.empty(n_reactions),
-        np.empty(n_reactions),
-        np.empty(n_reactions),
-        np.empty(n_reactions),
-        np.empty(MAX_REACTANTS * n_reactions),
-        molar,
-        np.empty(n_sets),
-        np.empty(n_sets),
-        np.empty(n_sets),
-        np.empty(n_sets),
+        weight=np.zeros(n_reactions),
+        rate=np.zeros(n_reactions),
+        rate_slope=np.zeros(n_reactions),
+        flux=np.zeros(n_reactions),
+        slot_slope=np.zeros(MAX_REACTANTS * n_reactions),
+        molar=np.ones(network.mass_numbers.size + 1),
+        exponent=np.zeros(n_sets),
+        exponent_slope=np.zeros(n_sets),
+        value=np.zeros(n_sets),
+        power=np.zeros(n_sets),
     )
 
 

@@ -98,13 +98,9 @@ def analyse(pattern: NDArray[np.bool_]) -> tuple[NDArray[np.int64], Elimination]
         upper_column += columns
         upper_entry += [int(positions[pivot, j]) for j in columns]
         upper_start.append(len(upper_column))
-    return positions, Elimination(
-        *map(
-            _index_list,
-            (order, np.diag(positions).tolist(), lower_start, lower_row, lower_entry)
-            + (update_start, update_target, update_source, upper_start, upper_column, upper_entry),
-        )
-    )
+    lists = (order, np.diag(positions).tolist(), lower_start, lower_row, lower_entry, update_start)
+    more = (update_target, update_source, upper_start, upper_column, upper_entry)
+    return positions, Elimination(*map(_index_list, (*lists, *more)))
 
 
 @merged

@@ -20,7 +20,7 @@ K = sum_h k_h b_h and f = 1 / (1 + beta K),
     theta' = f (theta + beta sum_h k_h E_h'),
 
 hence a rank-one re-emission f beta (k_g b_g) k_h in each zone's dense block, and k_g b_g f theta on the
-right.
+right. As theta' is not negative, a solved step cools matter of constant c_v by a quarter of e at the most.
 
 **Faces.** a_f = L D / dx^2 with D = lambda / chi and the limiter of Levermore & Pomraning (1981, ApJ 248,
 321) in its rational form lambda = (2 + R) / (6 + 3 R + R^2), R = abs(dE/dx) / (chi E), evaluated from the old

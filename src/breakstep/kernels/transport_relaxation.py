@@ -10,7 +10,7 @@ from breakstep.kernels.compiled import compiled, inlined  # isort: skip  (must p
 
 import numpy as np
 
-from breakstep.kernels.blocks import LANES, load, plus, solve_panel, store
+from breakstep.kernels.blocks import LANES, Lanes, load, plus, solve_panel, store
 from breakstep.kernels.transport_layout import (
     Extent,
     Floats,
@@ -23,7 +23,6 @@ from breakstep.kernels.transport_layout import (
 )
 
 Places = tuple[int, int, int, int, int, int, int, int]
-Lanes = tuple[float, float, float, float, float, float, float, float]
 
 
 @inlined

@@ -48,6 +48,13 @@ class Field:
             raise DeclarationError(f"field {self.name!r} needs at least one component")
         if self.per_tile and not self.scratch:
             raise DeclarationError(f"field {self.name!r} holds one value a tile, so it must be scratch")
+        if len(self.units) not in (1, self.size):
+            raise DeclarationError(
+                f"field {self.name!r} gives {len(self.units)} units for {self.size} components; give one or one each"
+            )
+        for axis, component in ((axis, c) for axis, listed in self.normal.items() for c in listed):
+            if not 0 <= component < self.size:
+                raise DeclarationError(f"field {self.name!r} has no component {component} to point along axis {axis}")
         for (axis, side), values in self.fixed.items():
             if len(values) != len(self.components):
                 raise DeclarationError(

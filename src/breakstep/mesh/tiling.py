@@ -63,9 +63,7 @@ class Tiling:
         tiles = []
         for number, place in enumerate(itertools.product(*(range(g) for g in grid))):
             origin = tuple(p * e for p, e in zip(place, extents, strict=True))
-            shape = tuple(
-                min(e, n - o) for e, n, o in zip(extents, self.mesh.zones, origin, strict=True)
-            )
+            shape = tuple(min(e, n - o) for e, n, o in zip(extents, self.mesh.zones, origin, strict=True))
             tiles.append(Tile(number, place, origin, shape))  # type: ignore[arg-type]
         return tiles
 
@@ -93,7 +91,9 @@ class Tiling:
         for axis, width in enumerate(widths):
             narrowest = self.narrowest(axis)
             if width > 0 and not self.mesh.active[axis]:
-                raise TilingError(f"{what} reads a halo along {AXIS_NAMES[axis]}, which the mesh does not have")
+                raise TilingError(
+                    f"{what} reads a halo along {AXIS_NAMES[axis]}, which the mesh does not have"
+                )
             if width > narrowest:
                 raise TilingError(
                     f"{what} reads a halo of {width} zones along {AXIS_NAMES[axis]}, but the narrowest tile"

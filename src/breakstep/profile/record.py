@@ -1,8 +1,8 @@
 """The record of a run while it is being made: rows arrive one by one, and are kept compactly.
 
 The engine fills it. A row costs the recording thread one ``list.append``; every :data:`CHUNK_ROWS` rows
-the list is packed into Arrow columns, which take a tenth of its memory. Nothing here looks at what the
-rows say: that is for :mod:`breakstep.profile.checks`, once the run is over.
+the list is packed into Arrow columns, which take a quarter of its memory (60 bytes a task, not 260).
+Nothing here looks at what the rows say: that is for :mod:`breakstep.profile.checks`, once the run is over.
 """
 
 from __future__ import annotations
@@ -29,7 +29,8 @@ from breakstep.profile.schema import (
     TableLayout,
 )
 
-#: Rows packed at a time: packing 4096 task rows takes about 2 ms, 0.5 us a row (measured on a laptop core).
+#: Rows packed at a time. Packing that many task rows was measured to take 1.3 ms, 0.3 us a row; appending
+#: with all its packing 1.4 us a row, the making of the tuple included.
 CHUNK_ROWS = 4096
 
 

@@ -39,9 +39,13 @@ def _digests(record: RunRecord) -> dict[str, list[str]]:
 
 
 def _plain(manifest: dict[str, Any]) -> dict[str, Any]:
-    """The manifest as it will be read back: lists for tuples and arrays, plain numbers for numpy's."""
+    """The manifest as it will be read back: lists for tuples and arrays, plain numbers for numpy's.
+
+    Numbers that are not finite become the texts "NaN", "Infinity" and "-Infinity": a failed run may well have
+    some among its values, and must not lose its profile to them.
+    """
     try:
-        return json.loads(json.dumps(manifest, allow_nan=False, default=_plain_number))  # type: ignore[no-any-return]
+        return json.loads(json.dumps(manifest, default=_plain_number), parse_constant=str)  # type: ignore[no-any-return]
     except (TypeError, ValueError) as fault:
         raise ProfileError(
             f"record, manifest: expected what JSON can hold, but {fault}; record plain values"

@@ -63,7 +63,11 @@ def describe_difference(comparison: Comparison) -> str:
 def _subline(comparison: Comparison) -> str:
     lockstep, tasked = comparison.shown
     manifest, gain = lockstep.manifest, comparison.gain
-    interval = "no interval from one pair" if gain.low is None else f"95 % interval {gain.low:.2f} to {gain.high:.2f}"
+    interval = (
+        "no interval from one pair"
+        if gain.low is None
+        else f"95 % interval {gain.low:.2f} to {gain.high:.2f}"
+    )
     same = "Same bits in all runs." if comparison.identical else ""
     return (
         f"{manifest['workers']} workers, {manifest['dispatch']} dispatch, {len(comparison.lockstep)} pairs:"
@@ -218,11 +222,16 @@ def ledger_lines(profile: Profile) -> list[str]:
     lines += ["", f"{'account':<24}{'core-seconds':>14}{'share':>9}"]
     for account in ACCOUNTS:
         seconds = ledger.accounts_seconds[account]
-        lines.append(f"{WAITING.get(account, account):<24}{seconds:>14.3f}{100 * _share(profile, account):>7.1f} %")
+        lines.append(
+            f"{WAITING.get(account, account):<24}{seconds:>14.3f}{100 * _share(profile, account):>7.1f} %"
+        )
     lines.append(
         f"{'= threads x time':<24}{ledger.available_ns / 1e9:>14.3f}{100:>7.1f} %   off by {100 * ledger.closure_error:.4f} %"
     )
-    lines += ["", f"{'step':<16}{'compute s':>11}{'CPU s':>9}{'workers':>10}{'phases':>9}{'tiles':>8}   busiest/mean"]
+    lines += [
+        "",
+        f"{'step':<16}{'compute s':>11}{'CPU s':>9}{'workers':>10}{'phases':>9}{'tiles':>8}   busiest/mean",
+    ]
     for step, row in profile.work.sort_values("compute_ns", ascending=False).iterrows():
         uneven = profile.imbalance.loc[step]
         lines.append(

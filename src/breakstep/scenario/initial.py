@@ -16,7 +16,6 @@ import numpy as np
 from breakstep.kernels.constants import A_RAD
 from breakstep.kernels.eos import GAMMA_LAW, mean_nuclear, state_from_temperature
 from breakstep.kernels.opacity import PhotonGroups, planck_fractions
-from breakstep.mesh.fields import Field
 from breakstep.mesh.mesh import Mesh
 from breakstep.mesh.tiling import Tile
 from breakstep.scenario.layouts import Array, Layout, State, Zones, uniform
@@ -66,7 +65,7 @@ def temperature_at(
             low = middle
         else:
             high = middle
-    return np.sqrt(low * high)
+    return float(np.sqrt(low * high))
 
 
 def gas_array(gas: Gas, zones: Zones) -> Array:
@@ -78,7 +77,7 @@ def gas_array(gas: Gas, zones: Zones) -> Array:
         eos,
         zones.density.reshape(-1),
         zones.temperature.reshape(-1),
-        partials.reshape(len(gas.species), -1),
+        partials.reshape(len(gas.species), zones.density.size),
         mass_numbers,
         charges,
     ).reshape(shape)
@@ -100,7 +99,7 @@ def radiation_array(groups: PhotonGroups, temperature: Array) -> Array:
 
 @dataclass(frozen=True)
 class InitialState:
-    """The initial value of every field, tile by tile.
+    """The initial value of ``gas`` and, with transport, of ``radiation``, tile by tile.
 
     Parameters
     ----------
@@ -108,22 +107,17 @@ class InitialState:
     gas : Gas
     groups : PhotonGroups or None
         None without radiation transport.
-    scratch : tuple of Field
-        Fields that steps fill before they read them; they begin at zero.
     """
 
     layout: Layout
     gas: Gas
     groups: PhotonGroups | None = None
-    scratch: tuple[Field, ...] = ()
 
     def __call__(self, tile: Tile, mesh: Mesh) -> Mapping[str, Array]:
         zones = self.layout.zones(tile, mesh)
         arrays = {"gas": gas_array(self.gas, zones)}
         if self.groups is not None:
             arrays["radiation"] = radiation_array(self.groups, zones.radiation_temperature)
-        for field in self.scratch:
-            arrays[field.name] = np.zeros((field.size, *tile.shape))
         return arrays
 
 

@@ -79,7 +79,7 @@ def centres(tile: Tile, mesh: Mesh, axis: int) -> Array:
     """Positions of a tile's zone centres along one axis [cm], shaped to broadcast over the tile."""
     first, count = tile.origin[axis], tile.shape[axis]
     low = mesh.origin[axis] if axis < mesh.dimensions else 0.0
-    along = low + (np.arange(first, first + count) + 0.5) * mesh.widths[axis]
+    along: Array = low + (np.arange(first, first + count, dtype=np.float64) + 0.5) * mesh.widths[axis]
     shape = [1, 1, 1]
     shape[axis] = count
     return along.reshape(shape)
@@ -87,13 +87,13 @@ def centres(tile: Tile, mesh: Mesh, axis: int) -> Array:
 
 def distance(tile: Tile, mesh: Mesh, point: Point) -> Array:
     """Distance of zone centres from a point [cm], the shorter way round along periodic axes."""
-    squares = np.zeros(tile.shape)
+    squares: Array = np.zeros(tile.shape)
     for axis in range(mesh.dimensions):
         away = np.abs(centres(tile, mesh, axis) - point[axis])
         if mesh.is_periodic(axis):
             away = np.minimum(away, mesh.widths[axis] * mesh.zones[axis] - away)
         squares = squares + away * away
-    return np.sqrt(squares)
+    return np.asarray(np.sqrt(squares))
 
 
 def faded(away: Array, radius: float, fade: float) -> Array:
@@ -107,8 +107,8 @@ def faded(away: Array, radius: float, fade: float) -> Array:
 
 
 FADED_VOLUME = (1.0, 2.0 * np.pi / 7.0, 5.0 * np.pi / 21.0)
-"""Integral of the weight with radius 1 and fade 1 over a line, a disc and a ball: twice the integral of 1 - q
-from 0 to 1, 2 pi times that of t (1 - q), 4 pi times that of t^2 (1 - q), with q = 6 t^5 - 15 t^4 + 10 t^3."""
+"""Integral of the weight w with radius 1 and fade 1 over a line, a disc and a ball: 2 times the integral of w
+from 0 to 1, 2 pi times that of t w, 4 pi times that of t^2 w."""
 
 
 def uniform(state: State, tile: Tile) -> Zones:

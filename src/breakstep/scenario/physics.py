@@ -6,26 +6,27 @@ on what it is; rules that tie keys together stand in ``rules``.
 
 from __future__ import annotations
 
+from functools import partial
 from typing import Annotated, Literal
 
-from pydantic import BeforeValidator, Field
+from pydantic import AfterValidator, BeforeValidator, Field
 
 from breakstep.kernels.network import PACKAGED_NETWORKS
-from breakstep.scenario.sections import NotNegative, Positive, Section, Word, lists
+from breakstep.scenario.sections import NotNegative, Positive, Section, Word, known_word, lists
 
 Share = Annotated[float, Field(ge=0.0, le=1.0)]
 Exponent = Annotated[float, Field(ge=-10.0, le=10.0)]
-NetworkWord = Literal["alpha13"]
-
-assert NetworkWord.__args__ == PACKAGED_NETWORKS  # type: ignore[attr-defined]
+NetworkWord = Annotated[str, AfterValidator(partial(known_word, known=PACKAGED_NETWORKS))]
 
 
 class GammaLawSection(Section):
     """``[eos]`` of an ideal gas with a constant ratio of specific heats."""
 
     kind: Literal["gamma_law"] = Field(description="gamma_law or stellar")
-    gamma: Annotated[float, Field(gt=1.0, le=10.0)] = Field(5.0 / 3.0, description="ratio of specific heats")
-    mean_molecular_weight: Positive = Field(1.0, description="grams a mole of particles")
+    gamma: Annotated[float, Field(gt=1.0, le=10.0)] = Field(
+        default=5.0 / 3.0, description="ratio of specific heats"
+    )
+    mean_molecular_weight: Positive = Field(default=1.0, description="grams a mole of particles")
 
 
 class StellarSection(Section):
@@ -33,7 +34,7 @@ class StellarSection(Section):
 
     kind: Literal["stellar"] = Field(description="gamma_law or stellar")
     radiation: bool = Field(
-        True, description="whether pressure and energy include radiation at the matter's temperature"
+        default=True, description="whether pressure and energy include radiation at the matter's temperature"
     )
 
 
@@ -48,54 +49,67 @@ class OpacitySection(Section):
     """``[transport.opacity]``: the invented power-law opacity."""
 
     absorption: NotNegative = Field(
-        1.0, description="absorption at the reference temperature and photon energy [cm^2/g]"
+        default=1.0, description="absorption at the reference temperature and photon energy [cm^2/g]"
     )
-    reference_temperature: Positive = Field(1e8, description="reference temperature [K]")
-    reference_photon_energy: Positive = Field(25.0, description="reference photon energy [keV]")
-    temperature_exponent: Exponent = Field(1.0, description="absorption falls with this power of temperature")
-    photon_exponent: Exponent = Field(1.0, description="absorption falls with this power of photon energy")
-    scattering: NotNegative = Field(0.2, description="grey scattering [cm^2/g]")
+    reference_temperature: Positive = Field(default=1e8, description="reference temperature [K]")
+    reference_photon_energy: Positive = Field(default=25.0, description="reference photon energy [keV]")
+    temperature_exponent: Exponent = Field(
+        default=1.0, description="absorption falls with this power of temperature"
+    )
+    photon_exponent: Exponent = Field(
+        default=1.0, description="absorption falls with this power of photon energy"
+    )
+    scattering: NotNegative = Field(default=0.2, description="grey scattering [cm^2/g]")
     inelastic: Share = Field(
-        0.1, description="largest share of a group's scattering that moves photons to other groups"
+        default=0.1, description="largest share of a group's scattering that moves photons to other groups"
     )
     broadening: Annotated[float, Field(gt=0.0, le=10.0)] = Field(
-        0.7, description="width of that move, in the logarithm of the photon energy"
+        default=0.7, description="width of that move, in the logarithm of the photon energy"
     )
 
 
 class TransportSection(Section):
     """``[transport]``: implicit multi-group flux-limited diffusion, solved iteratively across tiles."""
 
-    groups: Annotated[int, Field(ge=1, le=256)] = Field(16, description="photon groups")
-    lowest_photon_energy: Positive = Field(1.0, description="low end of the nominal photon energies [keV]")
-    highest_photon_energy: Positive = Field(3000.0, description="high end of the nominal photon energies [keV]")
-    opacity: OpacitySection = Field(default_factory=OpacitySection, description="the invented opacity")
+    groups: Annotated[int, Field(ge=1, le=256)] = Field(default=16, description="photon groups")
+    lowest_photon_energy: Positive = Field(
+        default=1.0, description="low end of the nominal photon energies [keV]"
+    )
+    highest_photon_energy: Positive = Field(
+        default=3000.0, description="high end of the nominal photon energies [keV]"
+    )
+    opacity: OpacitySection = Field(default=OpacitySection(), description="the invented opacity")
     tolerance: Annotated[float, Field(gt=0.0, lt=1.0)] = Field(
-        1e-6, description="largest relative correction at which the solve stops"
+        default=1e-8,
+        description="largest correction at which the solve stops, relative to the largest energy density",
     )
-    at_most: Annotated[int, Field(ge=1, le=100_000)] = Field(500, description="iterations after which it gives up")
-    lag: Annotated[int, Field(ge=0, le=10)] = Field(0, description="iterations by which the residual is used late")
+    at_most: Annotated[int, Field(ge=1, le=100_000)] = Field(
+        default=200, description="iterations after which it gives up"
+    )
+    lag: Annotated[int, Field(ge=0, le=10)] = Field(
+        default=0, description="iterations by which the residual is used late"
+    )
     sweeps_per_exchange: Annotated[int, Field(ge=1, le=100)] = Field(
-        1, description="passes over a tile between two exchanges of halos"
+        default=4, description="colour passes over a tile between two exchanges of halos"
     )
-    omega: Annotated[float, Field(gt=0.0, lt=2.0)] = Field(1.0, description="over-relaxation factor")
-    block_solver: Literal["dense"] = Field("dense", description="how the block of a zone is solved")
+    omega: Annotated[float, Field(gt=0.0, lt=2.0)] = Field(default=1.2, description="over-relaxation factor")
+    block_solver: Literal["dense"] = Field(default="dense", description="how the block of a zone is solved")
 
 
 class BurningSection(Section):
     """``[burning]``: a reaction network integrated zone by zone."""
 
-    network: NetworkWord = Field("alpha13", description="which packaged reaction network")
+    network: NetworkWord = Field(default="alpha13", description="which packaged reaction network")
     relative_tolerance: Annotated[float, Field(ge=1e-12, le=0.1)] = Field(
-        1e-4, description="relative error allowed in a sub-step"
+        default=1e-4, description="relative error allowed in a sub-step"
     )
     absolute_tolerance: Annotated[float, Field(gt=0.0, le=0.1)] = Field(
-        1e-8, description="error in mass fraction allowed in a sub-step"
+        default=1e-8, description="error in mass fraction allowed in a sub-step"
     )
     sub_step_limit: Annotated[int, Field(ge=1, le=10_000_000)] = Field(
-        5000, description="sub-steps of one zone after which the run stops"
+        default=5000, description="sub-steps of one zone after which the run stops"
     )
-    cutoff_temperature: NotNegative = Field(1e8, description="zones colder than this do not burn [K]")
+    cutoff_temperature: NotNegative = Field(default=1e8, description="zones colder than this do not burn [K]")
 
 
 class SpeciesSection(Section):
@@ -104,9 +118,9 @@ class SpeciesSection(Section):
     names: Annotated[tuple[Word, ...], BeforeValidator(lists), Field(min_length=1, max_length=200)] = Field(
         description="names of the species"
     )
-    mass_numbers: Annotated[tuple[Positive, ...], BeforeValidator(lists), Field(min_length=1, max_length=200)] = (
-        Field(description="mass number of each species")
-    )
-    charges: Annotated[tuple[NotNegative, ...], BeforeValidator(lists), Field(min_length=1, max_length=200)] = (
-        Field(description="charge of each species")
-    )
+    mass_numbers: Annotated[
+        tuple[Positive, ...], BeforeValidator(lists), Field(min_length=1, max_length=200)
+    ] = Field(description="mass number of each species")
+    charges: Annotated[
+        tuple[NotNegative, ...], BeforeValidator(lists), Field(min_length=1, max_length=200)
+    ] = Field(description="charge of each species")

@@ -40,10 +40,6 @@ class Partial:
             raise NotSoundError(name)
         return self._values[name]
 
-    def has(self, name: str) -> bool:
-        """Whether tables of this kind have the key at all."""
-        return name in self._model.model_fields
-
     def is_a(self, model: Model) -> bool:
         """Whether this is the sound part of such a table."""
         return issubclass(self._model, model)
@@ -111,7 +107,9 @@ class Reader:
             return _adapter(model, name).validate_python(value)
         except ValidationError as error:
             for found in error.errors(include_url=False):
-                steps = [step for step in found["loc"] if step != "[key]"]  # pydantic's mark for a table's key
+                steps = [
+                    step for step in found["loc"] if step != "[key]"
+                ]  # pydantic's mark for a table's key
                 self._fault(reduce(join, steps, path), expected(found))
             raise NotSoundError(path) from None
 

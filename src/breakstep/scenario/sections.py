@@ -6,6 +6,7 @@ a run does with them; rules that tie keys together stand in ``rules``.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Annotated, Any, Literal, get_args
 
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field
@@ -26,13 +27,18 @@ def lists(value: Any) -> Any:
     return tuple(value) if isinstance(value, list) else value
 
 
+def known_word(value: str, known: Sequence[str]) -> str:
+    """Refuse a word that is not among those known, in pydantic's own way."""
+    if value not in known:
+        raise PydanticKnownError("literal_error", {"expected": ", ".join(known)})
+    return value
+
+
 def _pair(value: Any) -> Any:
     """Let one word stand for both sides."""
-    if not isinstance(value, str):
-        return lists(value)
-    if value not in get_args(EdgeWord):
-        raise PydanticKnownError("literal_error", {"expected": ", ".join(get_args(EdgeWord))})
-    return (value, value)
+    if isinstance(value, str):
+        return (known_word(value, get_args(EdgeWord)),) * 2
+    return lists(value)
 
 
 Positive = Annotated[float, Field(gt=0.0)]
@@ -48,9 +54,15 @@ EdgePair = Annotated[tuple[EdgeWord, ...], BeforeValidator(_pair), Field(min_len
 class EdgesSection(Section):
     """``[mesh.edges]``: what lies beyond the two sides of each axis."""
 
-    x: EdgePair = Field(("periodic", "periodic"), description="one word for both sides, or [low, high]")
-    y: EdgePair = Field(("periodic", "periodic"), description="one word for both sides, or [low, high]")
-    z: EdgePair = Field(("periodic", "periodic"), description="one word for both sides, or [low, high]")
+    x: EdgePair = Field(
+        default=("periodic", "periodic"), description="one word for both sides, or [low, high]"
+    )
+    y: EdgePair = Field(
+        default=("periodic", "periodic"), description="one word for both sides, or [low, high]"
+    )
+    z: EdgePair = Field(
+        default=("periodic", "periodic"), description="one word for both sides, or [low, high]"
+    )
 
 
 class MeshSection(Section):
@@ -59,34 +71,39 @@ class MeshSection(Section):
     zones: Counts = Field(description="zones along each of one to three axes")
     size: Lengths = Field(description="extent of the mesh along the same axes [cm]")
     tile: Counts = Field(description="zones of a tile along the same axes")
-    edges: EdgesSection = Field(default_factory=EdgesSection, description="what lies beyond each edge")
+    edges: EdgesSection = Field(default=EdgesSection(), description="what lies beyond each edge")
 
 
 class RunSection(Section):
     """``[run]``: how long, in which order of steps, and on what."""
 
     cycles: Count = Field(description="most cycles to run")
-    end_time: Positive | None = Field(None, description="time at which the run ends, if earlier [s]")
+    end_time: Positive | None = Field(default=None, description="time at which the run ends, if earlier [s]")
     splitting: Literal["lie", "strang", "alternating"] = Field(
-        "alternating", description="order of the steps: always forward, there and back, or forward and back in turn"
+        default="alternating",
+        description="order of the steps: always forward, there and back, or forward and back in turn",
     )
-    workers: Annotated[int, Field(ge=1, le=4096)] = Field(2, description="worker processes")
-    threads: Annotated[int, Field(ge=1, le=256)] = Field(1, description="threads of each worker")
-    placement: Literal["blocks", "dask"] = Field("blocks", description="who decides which worker owns a tile")
-    window: Annotated[int, Field(ge=1, le=1000)] = Field(4, description="cycles that may be in flight at once")
-    fuse: bool = Field(True, description="whether steps without a halo between them share a task")
-    dispatch: Literal["native", "serial"] = Field("native", description="what carries out the tasks")
+    workers: Annotated[int, Field(ge=1, le=4096)] = Field(default=2, description="worker processes")
+    threads: Annotated[int, Field(ge=1, le=256)] = Field(default=1, description="threads of each worker")
+    placement: Literal["blocks", "dask"] = Field(
+        default="blocks", description="who decides which worker owns a tile"
+    )
+    window: Annotated[int, Field(ge=1, le=1000)] = Field(
+        default=4, description="cycles that may be in flight at once"
+    )
+    fuse: bool = Field(default=True, description="whether steps without a halo between them share a task")
+    dispatch: Literal["native", "serial"] = Field(default="native", description="what carries out the tasks")
 
 
 class TimeStepSection(Section):
     """``[time_step]``: how dt follows from the state, and how late it may be used."""
 
     cfl: Annotated[float, Field(gt=0.0, le=0.9)] = Field(
-        0.4, description="factor applied to the largest stable step"
+        default=0.4, description="factor applied to the largest stable step"
     )
-    lag: Annotated[int, Field(ge=0, le=10)] = Field(0, description="cycles by which dt is used late")
+    lag: Annotated[int, Field(ge=0, le=10)] = Field(default=0, description="cycles by which dt is used late")
     growth: Annotated[float, Field(ge=1.0, le=10.0)] = Field(
-        1.25, description="largest ratio of one step to the one before"
+        default=1.25, description="largest ratio of one step to the one before"
     )
-    first: Positive | None = Field(None, description="bound on the first step [s]")
-    maximum: Positive | None = Field(None, description="bound on every step [s]")
+    first: Positive | None = Field(default=None, description="bound on the first step [s]")
+    maximum: Positive | None = Field(default=None, description="bound on every step [s]")

@@ -18,12 +18,14 @@ class StateSection(Section):
     """A state of the gas, and of the radiation in it."""
 
     density: Positive = Field(description="mass density [g/cm^3]")
-    temperature: Temperature | None = Field(None, description="temperature of the gas [K]")
-    pressure: Positive | None = Field(None, description="pressure, instead of the temperature [erg/cm^3]")
-    velocity: Vector = Field((0.0,), description="velocity along x, y, z [cm/s]")
+    temperature: Temperature | None = Field(default=None, description="temperature of the gas [K]")
+    pressure: Positive | None = Field(
+        default=None, description="pressure, instead of the temperature [erg/cm^3]"
+    )
+    velocity: Vector = Field(default=(0.0,), description="velocity along x, y, z [cm/s]")
     composition: Composition = Field(default_factory=dict, description="mass fraction of each species")
     radiation_temperature: Temperature | None = Field(
-        None, description="temperature of the radiation, that of the gas if left out [K]"
+        default=None, description="temperature of the radiation, that of the gas if left out [K]"
     )
 
 
@@ -39,27 +41,29 @@ class SpotSection(Section):
     centre: Vector = Field(description="centre of the spot [cm]")
     radius: Positive = Field(description="distance at which the spot has faded [cm]")
     fade: Annotated[float, Field(gt=0.0, le=1.0)] = Field(
-        1.0, description="share of the radius, from outside, over which it fades"
+        default=1.0, description="share of the radius, from outside, over which it fades"
     )
     temperature: Temperature = Field(description="temperature at the centre [K]")
-    density: Positive | None = Field(None, description="density at the centre, if different [g/cm^3]")
-    composition: Composition | None = Field(None, description="mass fractions at the centre, if different")
+    density: Positive | None = Field(default=None, description="density at the centre, if different [g/cm^3]")
+    composition: Composition | None = Field(
+        default=None, description="mass fractions at the centre, if different"
+    )
 
 
 class SpotsSection(StateSection):
     """A uniform state with round spots in it, each laid over those before."""
 
     kind: Literal["spots"] = Field(description="how the initial state is laid out")
-    spots: Annotated[tuple[SpotSection, ...], BeforeValidator(lists), Field(min_length=1, max_length=10_000)] = (
-        Field(description="the spots")
-    )
+    spots: Annotated[
+        tuple[SpotSection, ...], BeforeValidator(lists), Field(min_length=1, max_length=10_000)
+    ] = Field(description="the spots")
 
 
 class RiemannSection(Section):
     """Two uniform states that meet at a plane."""
 
     kind: Literal["riemann"] = Field(description="how the initial state is laid out")
-    axis: AxisWord = Field("x", description="axis across which the states differ")
+    axis: AxisWord = Field(default="x", description="axis across which the states differ")
     position: NotNegative = Field(description="where they meet along that axis [cm]")
     left: StateSection = Field(description="state below the position")
     right: StateSection = Field(description="state above the position")
@@ -73,15 +77,17 @@ class BlastSection(StateSection):
         description="energy let loose: erg in three dimensions, erg/cm in two, erg/cm^2 in one"
     )
     radius: Positive = Field(description="distance within which it is let loose [cm]")
-    centre: Vector | None = Field(None, description="the point, the middle of the mesh if left out [cm]")
+    centre: Vector | None = Field(
+        default=None, description="the point, the middle of the mesh if left out [cm]"
+    )
 
 
 class RadiationSlabSection(StateSection):
     """Uniform gas with a slab of hotter (or colder) radiation across the mesh."""
 
     kind: Literal["radiation_slab"] = Field(description="how the initial state is laid out")
-    axis: AxisWord = Field("x", description="axis along which the slab is bounded")
-    begins: NotNegative = Field(0.0, description="where the slab begins along that axis [cm]")
+    axis: AxisWord = Field(default="x", description="axis along which the slab is bounded")
+    begins: NotNegative = Field(default=0.0, description="where the slab begins along that axis [cm]")
     ends: Positive = Field(description="where the slab ends along that axis [cm]")
     slab_temperature: Temperature = Field(description="temperature of the radiation in the slab [K]")
 
@@ -92,12 +98,12 @@ InitialSection = UniformSection | SpotsSection | RiemannSection | BlastSection |
 class FixedSection(Section):
     """``[fixed]``: the state beyond each edge of kind fixed."""
 
-    x_low: StateSection | None = Field(None, description="state beyond the low x edge")
-    x_high: StateSection | None = Field(None, description="state beyond the high x edge")
-    y_low: StateSection | None = Field(None, description="state beyond the low y edge")
-    y_high: StateSection | None = Field(None, description="state beyond the high y edge")
-    z_low: StateSection | None = Field(None, description="state beyond the low z edge")
-    z_high: StateSection | None = Field(None, description="state beyond the high z edge")
+    x_low: StateSection | None = Field(default=None, description="state beyond the low x edge")
+    x_high: StateSection | None = Field(default=None, description="state beyond the high x edge")
+    y_low: StateSection | None = Field(default=None, description="state beyond the low y edge")
+    y_high: StateSection | None = Field(default=None, description="state beyond the high y edge")
+    z_low: StateSection | None = Field(default=None, description="state beyond the low z edge")
+    z_high: StateSection | None = Field(default=None, description="state beyond the high z edge")
 
 
 def edge_key(axis: int, side: int) -> str:

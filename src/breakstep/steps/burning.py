@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from functools import lru_cache
 
 from breakstep.errors import KernelError
 from breakstep.kernels import burning
@@ -19,8 +18,9 @@ class Burning:
 
     Parameters
     ----------
-    network : str
-        Name of a network that comes with the package.
+    network : str or Network
+        Name of a network that comes with the package, or one built by hand. A hand-built one travels whole
+        with every message, and equals itself only.
     relative_tolerance, absolute_tolerance : float
         Error a sub-step may make, in temperature (relative) and mass fractions (both).
     sub_step_limit : int
@@ -29,20 +29,15 @@ class Burning:
         Zones below are left alone [K].
     """
 
-    network: str = "alpha13"
+    network: str | Network = "alpha13"
     relative_tolerance: float = 1e-4
     absolute_tolerance: float = 1e-8
     sub_step_limit: int = 5000
     cutoff_temperature: float = 1e8
 
     def load(self) -> Network:
-        """The network, read once a process."""
-        return _network(self.network)
-
-
-@lru_cache
-def _network(name: str) -> Network:
-    return load_network(name)
+        """The network; a packaged one is read once a process."""
+        return load_network(self.network) if isinstance(self.network, str) else self.network
 
 
 @dataclass(frozen=True)

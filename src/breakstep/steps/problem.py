@@ -59,10 +59,19 @@ class Problem:
             raise DeclarationError("a run that ends by a value needs a reduction that yields it")
         self.splitting.check_fields(self.by_name())
         self._check_fixed_edges()
+        self._check_tile_values()
 
     def by_name(self) -> dict[str, Field]:
         """Fields by name."""
         return {field.name: field for field in self.fields}
+
+    def _check_tile_values(self) -> None:
+        fields = self.by_name()
+        for owner, read in self.splitting.halo_reads():
+            if fields[read.field].per_tile:
+                raise DeclarationError(
+                    f"step {owner!r} reads field {read.field!r} with a halo, but it holds one value a tile"
+                )
 
     def _check_fixed_edges(self) -> None:
         fields = self.by_name()

@@ -14,7 +14,8 @@ from typing import TypeAlias
 
 import numpy as np
 
-from breakstep.errors import DeclarationError
+from breakstep.errors import DeclarationError, KernelError
+from breakstep.steps.calling import call_user
 from breakstep.steps.step import Array, Call, Read, check_name, check_reads
 
 Partial: TypeAlias = Callable[[Mapping[str, Array], Call], Array]
@@ -58,9 +59,13 @@ class Reduction:
         check_name("reduction", self.name)
         check_reads(f"reduction {self.name!r}", self.reads)
         if not isinstance(self.lag, int) or self.lag < 0:
-            raise DeclarationError(f"reduction {self.name!r}: lag must be a whole number, 0 or more, not {self.lag!r}")
+            raise DeclarationError(
+                f"reduction {self.name!r}: lag must be a whole number, 0 or more, not {self.lag!r}"
+            )
         if not all(read.is_local for read in self.reads):
-            raise DeclarationError(f"reduction {self.name!r} reads ghost zones; it may read its own zones only")
+            raise DeclarationError(
+                f"reduction {self.name!r} reads ghost zones; it may read its own zones only"
+            )
 
 
 def combine(kind: Combine, vectors: list[Array | None]) -> Array | None:
@@ -68,6 +73,11 @@ def combine(kind: Combine, vectors: list[Array | None]) -> Array | None:
     present = [vector for vector in vectors if vector is not None]
     if not present:
         return None
+    if any(vector.shape != present[0].shape for vector in present):
+        sizes = ", ".join(sorted({str(vector.size) for vector in present}))
+        raise KernelError(
+            f"tiles contribute vectors of different lengths ({sizes}) to a reduction; return one length"
+        )
     total = present[0].copy()
     operation = {Combine.MIN: np.minimum, Combine.MAX: np.maximum, Combine.SUM: np.add}[kind]
     for vector in present[1:]:
@@ -81,10 +91,23 @@ def finish_rows(reduction: Reduction, combined: Array | None, previous: Array | 
     A reduction that every tile passed through repeats its previous result.
     """
     made = []
+    if combined is not None:
+        combined.flags.writeable = False
     for _ in range(rows):
         if combined is not None:
-            previous = np.asarray(reduction.finish(combined, previous), dtype=np.float64)
+            previous = _finished(reduction, combined, previous)
         if previous is None:
             raise DeclarationError(f"reduction {reduction.name!r} was passed through before it had a result")
         made.append(previous)
-    return np.stack(made)
+    result = np.stack(made)
+    result.flags.writeable = False
+    return result
+
+
+def _finished(reduction: Reduction, combined: Array, previous: Array | None) -> Array:
+    where = f"finish of reduction {reduction.name}"
+    result = call_user(np.array, call_user(reduction.finish, combined, previous, where=where), where=where)
+    if result.ndim != 1 or (previous is not None and result.shape != previous.shape):
+        expected = "a vector" if previous is None else f"a vector of {previous.size}, as before"
+        raise KernelError(f"{where}: expected {expected}, got shape {result.shape}")
+    return result.astype(np.float64)

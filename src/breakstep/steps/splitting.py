@@ -73,19 +73,33 @@ class Splitting:
         self._check_names()
 
     def _check_names(self) -> None:
-        known = [reduction.name for reduction in self.all_reductions()]
-        for name in sorted({name for name in known if known.count(name) > 1}):
-            raise DeclarationError(f"two reductions are named {name!r}")
+        named: dict[str, tuple[str, Step | Repeat | Reduction]] = {}
+        for kind, thing in self._named():
+            other, first = named.setdefault(thing.name, (kind, thing))
+            if other != kind:
+                raise DeclarationError(f"{thing.name!r} names both a {other} and a {kind}")
+            if not _same(first, thing):
+                raise DeclarationError(f"two different {kind}s are named {thing.name!r}")
+        measured = [reduction.name for reduction in self.reductions]
+        for name in sorted({name for name in measured if measured.count(name) > 1}):
+            raise DeclarationError(f"reduction {name!r} is listed twice")
         usable = sorted(reduction.name for reduction in self.reductions)
         for step in self.steps():
-            if step.name in known:
-                raise DeclarationError(f"{step.name!r} names both a step and a reduction")
             for used in step.uses:
                 if used not in usable:
                     raise DeclarationError(
                         f"step {step.name!r} uses reduction {used!r}, which the splitting does not declare"
                         f" (it declares: {', '.join(usable) or 'none'})"
                     )
+
+    def _named(self) -> Iterator[tuple[str, Step | Repeat | Reduction]]:
+        """Everything that has a name, each time it occurs; the share of dt does not make a step another."""
+        yield from (("reduction", reduction) for reduction in self.reductions)
+        for item in self.items():
+            if isinstance(item, Repeat):
+                yield "repeat", item
+                yield "reduction", item.until
+        yield from (("step", replace(step, fraction=1.0)) for step in self.steps())
 
     def items(self) -> Iterator[Item]:
         """Every step and repeat of every order."""
@@ -132,6 +146,14 @@ class Splitting:
                     yield step.name, read
 
 
+def _same(first: object, second: object) -> bool:
+    """Whether two declarations are one; kernels that hold arrays are one only when they are one object."""
+    try:
+        return first is second or bool(first == second)
+    except ValueError:
+        return False
+
+
 def lie(steps: Sequence[Item], reductions: Sequence[Reduction] = ()) -> Splitting:
     """First-order splitting: each step once a cycle, in the order given."""
     return Splitting((tuple(steps),), tuple(reductions))
@@ -152,7 +174,10 @@ def strang(steps: Sequence[Item], reductions: Sequence[Reduction] = ()) -> Split
 
 
 def alternating(
-    steps: Sequence[Item], reductions: Sequence[Reduction] = (), *, swap: Callable[[Sequence[Item]], Sequence[Item]] | None = None
+    steps: Sequence[Item],
+    reductions: Sequence[Reduction] = (),
+    *,
+    swap: Callable[[Sequence[Item]], Sequence[Item]] | None = None,
 ) -> Splitting:
     """Forward and backward orders in turn: second order over a pair of cycles with equal time steps.
 

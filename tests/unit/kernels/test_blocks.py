@@ -36,8 +36,8 @@ def test_equals_numpy(order: int, zones: int) -> None:
     assert np.all(np.abs(solution - expected).sum(axis=0) <= bound)
 
 
-def test_columns_sums_bound_the_solution() -> None:
-    """The inverse of an M-matrix is not negative, so positive sources give positive energies."""
+def test_positive_sources_give_positive_solutions() -> None:
+    """The inverse of an M-matrix is not negative."""
     solution, _ = factor_and_solve(dominant_blocks(16, 64, seed=3), np.full((16, 64), 1e-8))
     assert solution.min() > 0.0
 

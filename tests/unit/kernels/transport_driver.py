@@ -48,16 +48,14 @@ class Mesh:
 
     def with_halo(self, padded: Floats, box: Box) -> Floats:
         """Cut a tile with its halo out of a padded field."""
-        wide = tuple(
-            slice(s.start, s.stop + 2) if a in self.axes else s for a, s in enumerate(box)
-        )
+        wide = tuple(slice(s.start, s.stop + 2) if a in self.axes else s for a, s in enumerate(box))
         tile = padded[(slice(None), *wide)].copy()
-        rims = sum(
+        outside = sum(
             np.isin(index, (0, tile.shape[1 + a] - 1)).astype(int)
             for a, index in enumerate(np.indices(tile.shape[1:]))
             if a in self.axes
         )
-        tile[:, np.asarray(rims) > 1] = np.nan
+        tile[:, np.asarray(outside) > 1] = np.nan
         return protected(tile)
 
     def halos(self, field: Floats) -> list[Floats]:
@@ -134,7 +132,9 @@ def solve(
     return Solution(radiation, len(history), history)
 
 
-def gain(mesh: Mesh, new: Floats, old: Floats, assemblies: list[transport.Assembly], deposit: Floats) -> Floats:
+def gain(
+    mesh: Mesh, new: Floats, old: Floats, assemblies: list[transport.Assembly], deposit: Floats
+) -> Floats:
     """The matter's gain over the whole mesh."""
     pieces = zip(mesh.halos(new), mesh.cut(old), assemblies, mesh.cut(deposit), strict=True)
     return mesh.join(

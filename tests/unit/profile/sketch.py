@@ -78,8 +78,7 @@ def draw(
     halo : dict of letter to int
         How much of a task's first upper-case time is halo assembly [ns].
     """
-    kinds, halo, stages, output = kinds or {}, halo or {}, stages or {}, output or {}
-    lines = [(int(w), int(t), text) for w, t, text in _LINE.findall(drawing or "")]
+    lines = [(int(worker), int(thread), text) for worker, thread, text in _LINE.findall(drawing or "")]
     record = RunRecord()
     threads = sorted({(worker, thread) for worker, thread, _ in lines})
     record.threads.extend(threads)
@@ -87,29 +86,25 @@ def draw(
     for worker, thread, text in lines:
         for letter in sorted(set(text.upper()) - {"."}):
             owner[letter] = worker
-            start = min(text.upper().index(letter), len(text))
-            end = text.upper().rindex(letter) + 1
-            kind = kinds.get(letter, "step")
-            task = number(letter)
-            record.tasks.append(
-                (task, kind, stages.get(letter, "work"), task, 0, -1, worker, thread, start, end)
-                + (output.get(letter, 0), False)
-            )
-            _inside(record, task, kind, stages.get(letter, "work"), text, letter, halo.get(letter, 0))
+            kind, stage = (kinds or {}).get(letter, "step"), (stages or {}).get(letter, "work")
+            start, end = text.upper().index(letter), text.upper().rindex(letter) + 1
+            head = (number(letter), kind, stage, number(letter), 0, -1, worker, thread)
+            record.tasks.append((*head, start, end, (output or {}).get(letter, 0), False))
+            _draw_inside(record, letter, text, kind, stage, (halo or {}).get(letter, 0))
     for edge in filter(None, (part.strip() for part in edges.split(","))):
-        ends, _, kind = edge.partition(" ")
-        record.edges.append((number(ends[0]), number(ends[2]), kind or "data"))
+        ends, _, edge_kind = edge.partition(" ")
+        record.edges.append((number(ends[0]), number(ends[2]), edge_kind or "data"))
     for (letter, to_worker), arrived in (arrivals or {}).items():
         record.transfers.append((number(letter), "rho", owner[letter], to_worker, 80, 1, 1, 0, arrived))
-    record.manifest = manifest(len({w for w, _ in threads}), len(threads), tiles=26)
+    record.manifest = manifest(len({worker for worker, _ in threads}), len(threads), tiles=26)
     return record
 
 
-def _inside(record: RunRecord, task: int, kind: str, step: str, text: str, letter: str, halo: int) -> None:
+def _draw_inside(record: RunRecord, letter: str, text: str, kind: str, step: str, halo: int) -> None:
     what = {"step": "kernel", "pack": "pack"}.get(kind)
     if what is None or letter not in text:
         return
-    start, end = text.index(letter), text.rindex(letter) + 1
+    task, start, end = number(letter), text.index(letter), text.rindex(letter) + 1
     if halo:
         record.intervals.append((task, "halo", step, start, start + halo, halo))
     record.intervals.append((task, what, step, start + halo, end, end - start - halo))

@@ -365,3 +365,35 @@ def test_long_chain_of_causes_is_walked_without_recursion() -> None:
     wait = ledger.gaps.set_index("task").loc[count]
     assert (wait["neighbour"], wait["engine"]) == (count, count)
     assert len(ledger.explain(count)) == 2 * count
+
+
+def test_long_chain_with_a_barrier_at_each_link() -> None:
+    """Each of 40 tasks D waits for the D before, then for a barrier Z behind a step B; X waits for the last.
+
+    One link, from 10 i:
+
+    0.0 |........D.|
+    1.0 |BBBBB.Z...|
+    2.0 |..........|
+    """
+    record = draw("0.0 ||\n1.0 ||\n2.0 ||")
+    links = 40
+    for i in range(links):
+        for task, kind, worker, start, end in (
+            (3 * i, "step", 1, 10 * i, 10 * i + 5),
+            (3 * i + 1, "release", 1, 10 * i + 6, 10 * i + 7),
+            (3 * i + 2, "step", 0, 10 * i + 8, 10 * i + 9),
+        ):
+            record.tasks.append((task, kind, kind, -1, 0, -1, worker, 0, start, end, 0, False))
+        record.edges.extend([(3 * i, 3 * i + 1, "barrier"), (3 * i + 1, 3 * i + 2, "barrier")])
+        if i:
+            record.edges.append((3 * i - 1, 3 * i + 2, "data"))
+    end = 10 * links
+    record.tasks.append((3 * links, "step", "step", -1, 0, -1, 2, 0, end, end + 1, 0, False))
+    record.edges.append((3 * links - 1, 3 * links, "data"))
+    ledger = Profile.from_record(record).ledger
+    assert ledger.closure_error == 0.0
+    wait = ledger.gaps.set_index("task").loc[3 * links]
+    assert (wait["start_ns"], wait["end_ns"]) == (0, end)
+    # in each link B runs for 5, D for 1; the rest is Z, and the dispatch of Z, of D, and of what follows
+    assert (wait["barrier"], wait["neighbour"], wait["engine"]) == (5 * links, links, 4 * links)

@@ -110,6 +110,14 @@ def test_numpy_numbers_and_tuples_in_a_manifest_are_stored_as_plain_ones(tmp_pat
     assert read_manifest(tmp_path / "run")["barriers"] == ["sweep", "burn"]
 
 
+def test_failed_run_keeps_its_profile_whatever_its_values(tmp_path: Path) -> None:
+    record = draw("0.0 |AA|")
+    record.manifest |= {"status": "failed", "message": "dt is not finite"}
+    record.manifest["notes"] = {"values": {"dt": [np.nan, -np.inf, 1.5]}}
+    write_profile(record, tmp_path / "run")
+    assert read_manifest(tmp_path / "run")["notes"] == {"values": {"dt": ["NaN", "-Infinity", 1.5]}}
+
+
 def test_an_existing_profile_is_not_replaced_unasked(tmp_path: Path) -> None:
     write_profile(small_record(), tmp_path)
     (tmp_path / "notes.txt").write_text("mine")
@@ -129,7 +137,9 @@ def test_folder_that_cannot_be_made_is_an_output_error(tmp_path: Path) -> None:
 
 def test_contradictory_record_leaves_no_manifest(tmp_path: Path) -> None:
     record = draw("0.0 |AABB|", "A>B, B>C")
-    with pytest.raises(ProfileError, match=r"edges\.parquet: column consumer, row 1: expected a number of the"):
+    with pytest.raises(
+        ProfileError, match=r"edges\.parquet: column consumer, row 1: expected a number of the"
+    ):
         write_profile(record, tmp_path / "run")
     assert not (tmp_path / "run" / "manifest.json").exists()
     with pytest.raises(ProfileError, match=r"not a complete profile, manifest\.json is missing"):
@@ -208,7 +218,7 @@ DAMAGES: dict[str, tuple[Callable[[Path], object], str]] = {
     ),
     "other schema version": (
         lambda f: change_manifest(f, schema_version=SCHEMA_VERSION + 1),
-        rf"manifest\.json: schema_version is {SCHEMA_VERSION + 1}, this program reads version {SCHEMA_VERSION}",
+        rf"manifest\.json: schema_version is {SCHEMA_VERSION + 1}, this program reads version",
     ),
     "table is missing": (
         lambda f: (f / "edges.parquet").unlink(),
@@ -252,7 +262,9 @@ DAMAGES: dict[str, tuple[Callable[[Path], object], str]] = {
     ),
     "edges in a ring": (
         lambda f: change_table(
-            f, "edges", lambda t: set_column(set_column(t, "producer", [0, 1, 2, 2]), "consumer", [1, 2, 1, 15])
+            f,
+            "edges",
+            lambda t: set_column(set_column(t, "producer", [0, 1, 2, 2]), "consumer", [1, 2, 1, 15]),
         ),
         r"edges\.parquet: task \d+ waits for itself through a ring of edges",
     ),
@@ -298,7 +310,7 @@ DAMAGES: dict[str, tuple[Callable[[Path], object], str]] = {
     ),
     "foreign codec": (
         lambda f: change_array(f, codecs=[{"name": "numcodecs.pickle", "configuration": {}}]),
-        r"gas/zarr\.json: expected float64 with the codecs bytes, zstd, not float64 with \{'numcodecs\.pickle'\}",
+        r"gas/zarr\.json: expected float64 with the codecs bytes, zstd, not float64 with .*pickle",
     ),
 }
 
@@ -314,7 +326,9 @@ def test_damage_is_named(copied: Path, damage: str) -> None:
 
 
 def test_missing_and_foreign_folders(tmp_path: Path) -> None:
-    with pytest.raises(ProfileError, match="nowhere: expected a profile folder, there is none; check the path"):
+    with pytest.raises(
+        ProfileError, match="nowhere: expected a profile folder, there is none; check the path"
+    ):
         read_profile(tmp_path / "nowhere")
     (tmp_path / "data.csv").write_text("1,2\n")
     with pytest.raises(ProfileError, match=r"not a complete profile, manifest\.json is missing"):
@@ -330,7 +344,9 @@ def test_one_wrong_bit_in_one_tile_is_found(copied: Path) -> None:
     manifest = json.loads((copied / "manifest.json").read_text())
     manifest["digests"]["radiation"][5] = "f" * 64
     (copied / "manifest.json").write_text(json.dumps(manifest))
-    with pytest.raises(ProfileError, match=r"field radiation: the values on tile 5 \(1 of 26 tiles differ\)") as caught:
+    with pytest.raises(
+        ProfileError, match=r"field radiation: the values on tile 5 \(1 of 26 tiles differ\)"
+    ) as caught:
         read_profile(copied)
     assert caught.value.details["tiles"] == [5]
 

@@ -51,7 +51,9 @@ class NativeDispatch:
 
     def __init__(self, client: Client, workers: int | None = None) -> None:
         self.client = client
-        known = sorted(client.scheduler_info(n_workers=-1)["workers"].items(), key=lambda item: str(item[1]["name"]))
+        known = sorted(
+            client.scheduler_info(n_workers=-1)["workers"].items(), key=lambda item: str(item[1]["name"])
+        )
         if not known:
             raise ClusterError("the Dask cluster has no workers; start some and try again")
         if workers is not None and workers > len(known):
@@ -97,6 +99,7 @@ class _NativeRun:
         self.futures: dict[int, Future] = {}
         self.keepers: dict[int, int] = {}  # root or release -> its cycle
         self.last_steps: dict[int, range] = {}  # cycle -> step tasks of its last phase so far
+        self.unread: set[int] = set()  # step tasks that no task sent so far depends on
         self.batch: list[Task] = []
 
     def run(self) -> RunResult:
@@ -111,9 +114,11 @@ class _NativeRun:
         except KeyboardInterrupt:
             result.interrupted = True
         except BreakstepError as error:
-            result.failure = error
+            result.failure = _without_frames(error)
         except (CancelledError, KilledWorker, OSError) as error:
-            result.failure = ClusterError(f"the Dask cluster lost part of the run ({error}); start the run again")
+            result.failure = ClusterError(
+                f"the Dask cluster lost part of the run ({error}); start the run again"
+            )
         result.seconds = (time.perf_counter_ns() - zero) / 1e9
         self.futures.clear()
         self._collect(clocks)
@@ -149,13 +154,13 @@ class _NativeRun:
         self._flush()
 
     def _emit(self, phase: Phase) -> None:
-        while phase.cycle - self.result.cycles >= self.options.window:
-            self._complete_cycle()
         tasks = self.graph.expand(phase, barrier_after=phase.stage.index in self.barriers)
         self.batch += tasks
         self.last_steps[phase.cycle] = self.graph.step_tasks(phase.number)
         self.keepers.update({t.number: phase.cycle for t in tasks if t.kind is Kind.RELEASE})
         self.keepers.update({self.graph.root(making.instance): phase.cycle for making in phase.makes})
+        while phase.cycle - self.result.cycles >= self.options.window:
+            self._complete_cycle()  # only now, since the phase's sources may be live for its sake alone
         if len(self.batch) >= BATCH_TASKS:
             self._flush()
 
@@ -175,6 +180,8 @@ class _NativeRun:
             return
         if self.options.record:
             record_edges(self.result.record, tasks)
+        self.unread |= {task.number for task in tasks if task.kind is Kind.STEP}
+        self.unread -= {producer for task in tasks for producer, _ in task.edges()}
         named = {self.translate.name(task): task for task in tasks}
         kept = [key for key, task in named.items() if task.kind is Kind.STEP or task.number in self.keepers]
         futures = self._submit(
@@ -198,7 +205,18 @@ class _NativeRun:
         wanted |= self.keepers.keys()
         self.graph.forget(live)
         self.translate.forget(wanted)
+        wanted |= self._unfinished(wanted)
         self.futures = {number: future for number, future in self.futures.items() if number in wanted}
+
+    def _unfinished(self, wanted: set[int]) -> set[int]:
+        """Unwanted step tasks that nothing depends on: Dask would leave them out unless we hold them."""
+        self.unread &= self.futures.keys()
+        done = {n for n in self.unread - wanted if self.futures[n].done()}
+        for number in done:
+            if self.futures[number].status != "finished":
+                self.futures[number].result()
+        self.unread -= done
+        return self.unread
 
     def _priority(self, task: Task) -> int:
         """Program order; control, reductions and rims before the steps of their phase."""
@@ -219,6 +237,9 @@ class _NativeRun:
     def _finish(self) -> None:
         while self.result.cycles in self.last_steps:
             self._complete_cycle()
+        self._wait(
+            list(self.futures.values())
+        )  # the last barrier and what nobody reads belong to the run too
         tiles = range(len(self.program.tiling))
         for name in self.program.state_fields:
             phase = self.unroller.latest(name)
@@ -255,7 +276,9 @@ class _NativeRun:
         """Bring in the workers' records; a cluster that is gone leaves what the client has."""
         wire.ARRIVALS.clear()  # results gathered here are not transfers between workers
         record = self.result.record
-        present = self.client.scheduler_info(n_workers=-1)["workers"] if self.client.status == "running" else {}
+        present = (
+            self.client.scheduler_info(n_workers=-1)["workers"] if self.client.status == "running" else {}
+        )
         addresses = [address for address in self.dispatch.addresses if address in present]
         after = read_clocks(self.client, addresses)
         cpu = {a: r.cpu for a, r in zip(addresses, after, strict=True)}
@@ -272,8 +295,14 @@ class _NativeRun:
         for part in parts:
             record.add_tables(part["tables"])
             for arrival in part["arrivals"]:
-                if arrival.producer >= 0 and arrival.sender in zeros:
+                if arrival.producer >= 0 and arrival.sender in zeros and arrival.sender != part["worker"]:
                     record.transfers.extend(_transfer_rows(arrival, part["worker"], zeros))
+
+
+def _without_frames(error: BreakstepError) -> BreakstepError:
+    """The error alone: the frames it came through hold futures, which would keep arrays on the workers."""
+    error.__context__ = error.__cause__ = None
+    return error.with_traceback(None)
 
 
 def _transfer_rows(arrival: Arrival, receiver: int, zeros: dict[int, int]) -> list[tuple[Any, ...]]:

@@ -80,7 +80,9 @@ class Translation:
         (source,) = self._refs(list(task.children))
         row = task_row(task)
         if task.making is not None:
-            return DaskTask(self.name(task), remote.run_pick, self.run, row, task.making.reduction.name, source)
+            return DaskTask(
+                self.name(task), remote.run_pick, self.run, row, task.making.reduction.name, source
+            )
         reads = {read.field: read for read in task.phase.stage.reads}
         cuts = tuple(CutSpec(name, reads[name], tile, rim.offset) for name, rim, tile in task.cuts)
         return DaskTask(self.name(task), remote.run_pack, self.run, row, cuts, source)
@@ -90,6 +92,7 @@ class Translation:
         assert making is not None
         spec = CombineSpec(
             row=task_row(task),
+            stage=task.phase.stage.index,
             reduction=making.reduction.name,
             rows=making.rows,
             is_root=self.graph.root(making.instance) == task.number,

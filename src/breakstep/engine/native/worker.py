@@ -20,7 +20,7 @@ from breakstep.errors import ClusterError
 from breakstep.mesh.halo import cut
 from breakstep.mesh.mesh import Triple
 from breakstep.profile.record import RunRecord
-from breakstep.steps.reduction import combine, finish_rows
+from breakstep.steps.reduction import combine
 from breakstep.steps.step import Array, Read
 
 
@@ -73,6 +73,7 @@ class CombineSpec:
     """A node of a reduction tree; the root makes ``rows`` rows, from the previous result where there is one."""
 
     row: TaskRow
+    stage: int
     reduction: str
     rows: int
     is_root: bool
@@ -189,7 +190,7 @@ def run_combine(run: str, spec: CombineSpec, *deps: Payload) -> Payload:
     made = Payload(run, spec.row.number, state.recorder.worker)
     if spec.is_root:
         previous = deps[-1].arrays["value"][-1] if spec.has_previous else None
-        made.arrays["value"] = finish_rows(reduction, combined, previous, spec.rows)
+        made.arrays["value"] = state.program.finish(spec.stage, reduction, combined, previous, spec.rows)
     elif combined is not None:
         made.arrays["value"] = combined
     if state.options.record:
