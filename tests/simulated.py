@@ -93,7 +93,7 @@ class SimulatedCluster:
         for order in instructions:
             if isinstance(order, SendRims):
                 key = ("rims", order.phase, order.tile, order.source)
-                self.moving.append((order.worker, key, cut_rims(order)))
+                self.moving.append((order.worker, key, cut_rims(order, order.arrays)))
             elif isinstance(order, SendItem):
                 self.moving.append((order.worker, order.key, order.vector))
             else:
@@ -102,4 +102,3 @@ class SimulatedCluster:
 
     def _checked(self, core: Core) -> None:
         self.after_each(core)
-

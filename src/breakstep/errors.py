@@ -58,6 +58,10 @@ class OutputError(BreakstepError):
     """An output folder or file cannot be written."""
 
 
+class CheckpointError(BreakstepError):
+    """A checkpoint cannot be read, or does not hold what was written."""
+
+
 class ProfileError(BreakstepError):
     """A profile folder cannot be read as what it claims to be."""
 

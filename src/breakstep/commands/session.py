@@ -14,7 +14,7 @@ from breakstep.engine.run import Dispatch, RunOptions, RunResult
 from breakstep.graph.stages import parse_barriers
 from breakstep.profile.run import Profile
 from breakstep.scenario.load import load_scenario
-from breakstep.scenario.model import Scenario
+from breakstep.scenario.load import Scenario
 
 
 class Stopped(Exception):
@@ -51,7 +51,7 @@ class Session:
             All its faults together.
         """
         scenario = load_scenario(name, overrides)
-        program = Program(scenario.problem(), tuple(scenario.mesh.tile), scenario.run.fuse)
+        program = Program(scenario.problem(), tuple(scenario.tile), scenario.run.fuse)
         options = RunOptions(placement=placement or scenario.run.placement, window=scenario.run.window)
         return cls(scenario, program, options)
 

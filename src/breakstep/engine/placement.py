@@ -2,27 +2,89 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
+from breakstep.engine.program import Program
 from breakstep.errors import DeclarationError
 from breakstep.graph.tasks import ANYWHERE
+from breakstep.mesh.mesh import Triple
 
-PLACEMENTS = ("blocks", "dask")
+PLACEMENTS = ("blocks", "curve", "dask")
 
 
-def owners(placement: str, tiles: int, workers: int) -> list[int]:
+def owners(placement: str, program: Program, workers: int) -> list[int]:
     """Owner of each tile.
 
     Parameters
     ----------
     placement : str
-        ``"blocks"``: contiguous runs of tiles, equal to within one; ``"dask"``: anywhere.
+        ``"blocks"``: contiguous runs of tiles by number; ``"curve"``: contiguous runs along a space-filling
+        curve, so that each worker's tiles form a compact patch; ``"dask"``: anywhere.
 
     Raises
     ------
     DeclarationError
         An unknown placement.
     """
+    tiles = len(program.tiling)
     if placement == "blocks":
-        return [tile * workers // tiles for tile in range(tiles)] if tiles >= workers else list(range(tiles))
+        return runs(range(tiles), [1.0] * tiles, workers)
+    if placement == "curve":
+        return runs(curve_order([tile.place for tile in program.tiling.tiles]), [1.0] * tiles, workers)
     if placement == "dask":
         return [ANYWHERE] * tiles
     raise DeclarationError(f"placement must be one of {', '.join(PLACEMENTS)}, not {placement!r}")
+
+
+def runs(order: Sequence[int], costs: Sequence[float], workers: int) -> list[int]:
+    """Cut an order of tiles into one contiguous run a worker, of equal cost as nearly as tiles allow.
+
+    A tile goes to the worker in whose share of the total cost its middle lies.
+    """
+    total = sum(costs[tile] for tile in order)
+    owned = [0] * len(costs)
+    before = 0.0
+    for tile in order:
+        middle = before + 0.5 * costs[tile]
+        owned[tile] = min(int(middle * workers / total), workers - 1) if total > 0 else 0
+        before += costs[tile]
+    return owned
+
+
+def curve_order(places: Sequence[Triple]) -> list[int]:
+    """Tiles in the order of a Hilbert curve through their places in the grid.
+
+    Source: J. Skilling, Programming the Hilbert curve, AIP Conf. Proc. 707 (2004) 381: transposed index from
+    coordinates by undoing excess work bit by bit.
+    """
+    axes = [axis for axis in range(3) if any(place[axis] for place in places)] or [0]
+    bits = max(1, max(max(place) for place in places).bit_length())
+    return sorted(range(len(places)), key=lambda t: hilbert_index([places[t][axis] for axis in axes], bits))
+
+
+def hilbert_index(coordinates: Sequence[int], bits: int) -> int:
+    """Position along the Hilbert curve that fills a cube of 2**bits places along each axis."""
+    x, n = list(coordinates), len(coordinates)
+    q = 1 << (bits - 1)
+    while q > 1:
+        for i in range(n):
+            if x[i] & q:
+                x[0] ^= q - 1
+            else:
+                swapped = (x[0] ^ x[i]) & (q - 1)
+                x[0] ^= swapped
+                x[i] ^= swapped
+        q >>= 1
+    for i in range(1, n):
+        x[i] ^= x[i - 1]
+    flip, q = 0, 1 << (bits - 1)
+    while q > 1:
+        if x[n - 1] & q:
+            flip ^= q - 1
+        q >>= 1
+    x = [value ^ flip for value in x]
+    index = 0
+    for bit in range(bits - 1, -1, -1):
+        for value in x:
+            index = (index << 1) | ((value >> bit) & 1)
+    return index

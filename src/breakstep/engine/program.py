@@ -14,8 +14,8 @@ from breakstep.mesh.mesh import Triple
 from breakstep.mesh.tiling import Tiling
 from breakstep.steps.calling import call_user
 from breakstep.steps.problem import Problem
-from breakstep.steps.splitting import Repeat
 from breakstep.steps.reduction import Reduction, finish_rows
+from breakstep.steps.splitting import Repeat
 from breakstep.steps.step import Array, Read
 
 

@@ -116,7 +116,7 @@ def _manifest(dispatch: Dispatch, program: Program, options: RunOptions, result:
             "tile_shape": [max(tile.shape[axis] for tile in tiling.tiles) for axis in range(3)],
             "tiles": [{"origin": list(tile.origin), "shape": list(tile.shape)} for tile in tiling.tiles],
         },
-        "placement": _placement(options, len(tiling), dispatch.workers, result.record),
+        "placement": _placement(options, program, dispatch.workers, result.record),
         "status": status,
         "message": str(result.failure or ("stopped by the user" if result.interrupted else "")),
         "clock": {"method": "shared clock or shortest of several round trips", "residual_ns": residual},
@@ -133,15 +133,15 @@ def _manifest(dispatch: Dispatch, program: Program, options: RunOptions, result:
     }
 
 
-def _placement(options: RunOptions, tiles: int, workers: int, record: RunRecord) -> list[int]:
+def _placement(options: RunOptions, program: Program, workers: int, record: RunRecord) -> list[int]:
     """Owner of each tile; where Dask placed tasks, the worker that ran the tile's last step."""
-    planned = owners(options.placement, tiles, workers)
+    planned = owners(options.placement, program, workers)
     if ANYWHERE not in planned:
         return planned
     frame = record.tasks.table().select(["kind", "tile", "worker", "start_ns"]).to_pandas()
     steps = frame[frame["kind"] == "step"].sort_values("start_ns")
     last = steps.groupby("tile")["worker"].last()
-    return [int(last.get(tile, 0)) for tile in range(tiles)]
+    return [int(last.get(tile, 0)) for tile in range(len(program.tiling))]
 
 
 def _software() -> dict[str, str]:

@@ -6,6 +6,7 @@ import threading
 import zlib
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
+from typing import Any
 
 from breakstep.engine.execute import Interval
 from breakstep.graph.tasks import Task
@@ -28,15 +29,25 @@ class Recorder:
     worker: int
     zero: int
     record: RunRecord = field(default_factory=RunRecord)
+    arrived: list[tuple[Any, ...]] = field(default_factory=list)
     _threads: dict[int, int] = field(default_factory=dict)
     _lock: threading.Lock = field(default_factory=threading.Lock)
 
-    def task(self, row: TaskRow, start: int, end: int, output_bytes: int = 0, skipped: bool = False) -> None:
-        """One task, with start and end in this process's own clock."""
+    def task(
+        self,
+        row: TaskRow,
+        start: int,
+        end: int,
+        output_bytes: int = 0,
+        skipped: bool = False,
+        thread: int | None = None,
+    ) -> None:
+        """One task, with start and end in this process's own clock; the calling thread's unless one is named."""
+        number = self.thread() if thread is None else thread
         self.record.tasks.append(
             (
                 *(row.number, row.kind, row.stage, row.tile, row.cycle, row.iteration),
-                *(self.worker, self.thread(), start - self.zero, end - self.zero, output_bytes, skipped),
+                *(self.worker, number, start - self.zero, end - self.zero, output_bytes, skipped),
             )
         )
 
@@ -64,6 +75,21 @@ class Recorder:
                 self._threads[ident] = len(self._threads)
                 self.record.threads.append((self.worker, self._threads[ident]))
             return self._threads[ident]
+
+    def name_thread(self, number: int) -> None:
+        """Give the calling thread a number of the caller's choice."""
+        with self._lock:
+            self._threads[threading.get_ident()] = number
+            self.record.threads.append((self.worker, number))
+
+    def arrival(
+        self, key: Any, name: str, sender: int, size: int, spent: tuple[int, int], sent: int, arrived: int
+    ) -> None:
+        """An item from another worker: what it is, how large, time for packing and unpacking, and when.
+
+        ``sent`` stays in the sender's clock; ``arrived`` is put on the run's.
+        """
+        self.arrived.append((key, name, sender, size, *spent, sent, arrived - self.zero))
 
     def complete_threads(self, threads: int) -> None:
         """Add rows for threads that ran nothing."""

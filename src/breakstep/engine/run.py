@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Protocol
 
 import numpy as np
@@ -28,15 +28,28 @@ class RunOptions:
         Cycles that may be in flight at once.
     record : bool
         Whether to keep a record of tasks (results are the same without).
+    memory_limit : int
+        Live bytes a worker above which run-ahead is held back; 0 for no limit. Resident dispatch only.
+    checkpoint_every : int
+        Cycles between checkpoints; 0 for none. Resident dispatch only.
     trace : bool
         Whether to record a checksum of every array that a task makes; slow, for finding differences.
+    start : int
+        First cycle; above 0 when a run goes on from a checkpoint.
     """
 
     barriers: tuple[str, ...] = ()
     placement: str = "blocks"
     window: int = 4
     record: bool = True
+    memory_limit: int = 0
+    checkpoint_every: int = 0
     trace: bool = False
+    start: int = 0
+
+    def starting_at(self, cycle: int) -> RunOptions:
+        """The same, for a run that goes on with this cycle."""
+        return replace(self, start=cycle)
 
 
 @dataclass
@@ -88,7 +101,7 @@ class Dispatch(Protocol):
 def unroller_for(program: Program, options: RunOptions) -> Unroller:
     """The unrolling of a program under the options' barriers."""
     problem = program.problem
-    return Unroller(program.template, problem.cycles, options.barriers, problem.ended)
+    return Unroller(program.template, problem.cycles, options.barriers, problem.ended, options.start)
 
 
 def whole_field(program: Program, tiles: list[Array]) -> Array:

@@ -218,7 +218,10 @@ class Unroller:
                 break
             if known == len(verdicts):
                 raise _not_converged(node, cycle, answer[-1])
-            answer = yield Need(tuple(verdicts[known:]))
+            wanted = (
+                iteration - lag if iteration < repeat.at_most else iteration
+            )  # no later verdict than needed
+            answer = yield Need(tuple(verdicts[known:wanted]))
             assert answer is not None
             for value in answer:
                 where = f"stop of repeat {repeat.name}, cycle {cycle}"

@@ -81,7 +81,9 @@ def _face_states(
     upper, lower = 0.5 - half * u, -0.5 - half * u
     bare = _half_step(half, gamma1, rho, np.array([u, v, w]), p, e, d, np.ones_like(rho))
     least = [np.minimum(bare[k] + upper * d[k], bare[k] + lower * d[k]) for k in (0, 4, 5)]
-    keep = np.where(np.minimum(np.minimum(least[0], least[1]), least[2]) > 0.0, 1.0, 0.0)
+    spare = e - 0.25 * rho * (d[1] * d[1] + d[2] * d[2] + d[3] * d[3])
+    least_of_all = np.minimum(np.minimum(least[0], least[1]), np.minimum(least[2], spare))
+    keep = np.where(least_of_all > 0.0, 1.0, 0.0)
     upper, lower = upper * keep, lower * keep
     half_state = _half_step(half, gamma1, rho, np.array([u, v, w]), p, e, d, keep)
     at_upper = [q + upper * d[k] for k, q in enumerate(half_state)]

@@ -13,7 +13,7 @@ ORDERS = (8, 16, 32)
 BLOCKS = 1024  # a tile of 32 x 32 zones
 NEEDED = {16: 4.0}  # what elimination of eight zones at once must gain over one at a time
 # Columns sum to 1 and the inverse is not negative, so its 1-norm is 1 and the condition number at most 2 N.
-# Both solvers are backward stable: ten times N, the condition number and the unit roundoff is 2e-12 at N = 32.
+# Both solvers are backward stable: 10 N times condition number and unit roundoff is 2e-12 at N = 32.
 _AGREEMENT = 1e-11
 
 

@@ -52,7 +52,10 @@ def _row(name: str, axis: int, effort: Effort) -> Row:
     ours, theirs = (1e9 * min(samples[who]) / SIDE**2 for who in works)
     # the stellar mixture's numpy form borrows the compiled equation of state, so nothing is asked of it
     needed = NEEDED if name == "gamma law" else None
-    return Row(f"{name}, {'xyz'[axis]}", ours, theirs, ratio(samples, "numpy", "ours"), needed)
+    details = {"bytes_per_zone": 16 * arguments[0].shape[0]}  # every component read and written once
+    return Row(
+        f"{name}, {'xyz'[axis]}", ours, theirs, ratio(samples, "numpy", "ours"), needed, details=details
+    )
 
 
 def _check(arguments: Arguments) -> None:

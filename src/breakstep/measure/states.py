@@ -21,7 +21,7 @@ Array = NDArray[np.float64]
 DENSITY = 1e7  # [g/cm^3]
 SPECIFIC_ENERGY = 1e18  # [erg/g], of the stellar mixture at this density and about 2e9 K
 VELOCITY = 2e8  # [cm/s], about a quarter of the speed of sound
-FUEL = {"He4": 0.5, "C12": 0.5}  # mass fractions
+FUEL = {"C12": 0.5, "O16": 0.5}  # mass fractions
 
 
 @compiled
@@ -49,7 +49,9 @@ class Waves:
         energy = SPECIFIC_ENERGY * (1.0 + self._wave(4.0)) + 0.5 * (velocity**2).sum(axis=0)
         weights = np.stack([1.0 + self._wave(float(k)) for k in range(self.species)])
         fractions = weights / weights.sum(axis=0)
-        return np.concatenate([density[None], density * velocity, (density * energy)[None], density * fractions])
+        return np.concatenate(
+            [density[None], density * velocity, (density * energy)[None], density * fractions]
+        )
 
 
 def fuel_fractions(network: Network) -> Array:

@@ -1,9 +1,9 @@
 """Timing on a machine that is not quiet: contenders take turns, and ratios are taken turn by turn.
 
-A noisy neighbour slows whoever runs at that moment. Two contenders measured one after the other would differ by
-what happened in between; measured in turns, both meet the same minutes, and each turn gives a ratio of its own.
-The median of those ratios is the figure, the middle half of them tells how far to trust it. Times by
-themselves are the fastest of all turns, because noise only ever adds.
+A noisy neighbour slows whoever runs at that moment. Two contenders measured one after the other would differ
+by what happened in between; measured in turns, both meet the same minutes, and each round gives a ratio of
+its own. The median of those ratios is the figure, the middle half of them tells how far to trust it. Times
+by themselves are the fastest of all rounds, because noise only ever adds.
 
 Knows callables and clocks. Refuses to know what is measured.
 """
@@ -11,7 +11,7 @@ Knows callables and clocks. Refuses to know what is measured.
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -65,7 +65,7 @@ class Row:
     ratio: Spread
     needed: float | None = None
     judged: bool = True
-    details: Mapping[str, float] | None = None
+    details: Mapping[str, Any] | None = None
 
     @property
     def met(self) -> bool | None:
@@ -94,6 +94,11 @@ def _seconds(work: Work, calls: int, clock: Clock) -> float:
     return clock() - started
 
 
+def in_turn(names: Iterable[str], number: int) -> list[str]:
+    """The order of a round: as given, and backwards in every second round."""
+    return list(names)[:: 1 if number % 2 == 0 else -1]
+
+
 def take_turns(
     contenders: Mapping[str, Work], effort: Effort, clock: Clock = time.thread_time
 ) -> dict[str, list[float]]:
@@ -112,8 +117,7 @@ def take_turns(
     calls = {name: enough_calls(work, effort.shortest, clock) for name, work in contenders.items()}
     samples: dict[str, list[float]] = {name: [] for name in contenders}
     for number in range(effort.rounds):
-        order = list(contenders) if number % 2 == 0 else list(reversed(contenders))
-        for name in order:
+        for name in in_turn(contenders, number):
             samples[name].append(_seconds(contenders[name], calls[name], clock) / calls[name])
     return samples
 

@@ -14,7 +14,7 @@ from breakstep.kernels.network import load_network
 from breakstep.kernels.opacity import PhotonGroups, PowerLawOpacity
 from breakstep.kernels.transport_layout import panel_rows
 from breakstep.kernels.transport_matter import describe_matter
-from breakstep.measure.states import Waves
+from breakstep.measure.states import Array, Waves
 from breakstep.measure.timing import Effort, Work, take_turns
 
 SIDE = 32
@@ -24,10 +24,8 @@ _AXES = (0, 1)
 _DT, _SPACING = 1e-6, 1e4  # [s], [cm]
 _RADIATION = A_RAD * 1e9**4 / GROUPS  # [erg/cm^3] a group, as much as black-body radiation at 1e9 K
 
-Radiation = transport.Floats
 
-
-def assemble_work() -> tuple[Work, transport.Assembly, Radiation]:
+def assemble_work() -> tuple[Work, transport.Assembly, Array]:
     """Assembling a tile from its gas; the result; the radiation it was assembled for."""
     network, wide = load_network("alpha13"), (SIDE + 2, SIDE + 2, 1)
     gas = Waves(wide, len(network.names)).gas()
@@ -40,7 +38,9 @@ def assemble_work() -> tuple[Work, transport.Assembly, Radiation]:
     )
     assembly = work()
     if assembly.bad_zone >= 0 or not np.isfinite(assembly.bands).all():
-        raise KernelError("transport did not assemble on a state that is sound; run the tests of the transport")
+        raise KernelError(
+            "transport did not assemble on a state that is sound; run the tests of the transport"
+        )
     return work, assembly, radiation
 
 

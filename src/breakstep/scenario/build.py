@@ -83,10 +83,11 @@ def build_eos(table: Any) -> GammaLaw | Stellar:
 
 def species_of(file: Any) -> tuple[tuple[str, ...], tuple[float, ...], tuple[float, ...]]:
     """Names, mass numbers and charges of the species that the gas carries."""
-    if file.burning is not None:
-        network = load_network(file.burning.network)
+    table = file.burning if file.burning is not None else file.species
+    if table is not None and table.network is not None:
+        network = load_network(table.network)
         return network.names, tuple(network.mass_numbers.tolist()), tuple(network.charges.tolist())
-    if file.species is not None:
+    if table is not None:
         return file.species.names, file.species.mass_numbers, file.species.charges
     return (), (), ()
 
@@ -207,11 +208,11 @@ def build_layout(file: ScenarioFile, gas: Gas) -> Layout:
     return _LAYOUTS[table.kind](table, gas, build_mesh(file.mesh))
 
 
-def _uniform(table: Any, gas: Gas, mesh: Mesh) -> Layout:  # noqa: ARG001
+def _uniform(table: Any, gas: Gas, mesh: Mesh) -> Layout:
     return Uniform(build_state(table, gas))
 
 
-def _spots(table: Any, gas: Gas, mesh: Mesh) -> Layout:  # noqa: ARG001
+def _spots(table: Any, gas: Gas, mesh: Mesh) -> Layout:
     return Spots(build_state(table, gas), tuple(_spot(spot, gas) for spot in table.spots))
 
 
@@ -227,7 +228,7 @@ def _spot(table: Any, gas: Gas) -> Spot:
     )
 
 
-def _riemann(table: Any, gas: Gas, mesh: Mesh) -> Layout:  # noqa: ARG001
+def _riemann(table: Any, gas: Gas, mesh: Mesh) -> Layout:
     axis = AXIS_NAMES.index(table.axis)
     return Riemann(axis, table.position, build_state(table.left, gas), build_state(table.right, gas))
 
@@ -238,7 +239,7 @@ def _blast(table: Any, gas: Gas, mesh: Mesh) -> Layout:
     return Blast(build_state(table, gas), centre, table.radius, table.energy)
 
 
-def _radiation_slab(table: Any, gas: Gas, mesh: Mesh) -> Layout:  # noqa: ARG001
+def _radiation_slab(table: Any, gas: Gas, mesh: Mesh) -> Layout:
     axis = AXIS_NAMES.index(table.axis)
     return RadiationSlab(build_state(table, gas), axis, table.begins, table.ends, table.slab_temperature)
 

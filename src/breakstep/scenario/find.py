@@ -44,7 +44,8 @@ def find(name_or_path: str) -> Path:
     if name_or_path.endswith(SUFFIX) or "/" in name_or_path or "\\" in name_or_path:
         if path.is_file():
             return path
-        raise refusal(f"{name_or_path}: expected a scenario file, came {_what(path)}")
+        is_what = "is a folder; expected a scenario file" if path.is_dir() else "there is no such file"
+        raise refusal(f"{name_or_path}: {is_what}")
     known = shipped()
     if name_or_path in known:
         return known[name_or_path]
@@ -52,10 +53,6 @@ def find(name_or_path: str) -> Path:
     raise refusal(
         f"no scenario is named {name_or_path!r}{hint} (a file is given by a path that ends in {SUFFIX})"
     )
-
-
-def _what(path: Path) -> str:
-    return "a folder" if path.is_dir() else "the path of no file"
 
 
 def refusal(*faults: str) -> ScenarioError:

@@ -136,7 +136,7 @@ class Uniform:
 
     state: State
 
-    def zones(self, tile: Tile, mesh: Mesh) -> Zones:  # noqa: ARG002  (where it lies does not matter)
+    def zones(self, tile: Tile, mesh: Mesh) -> Zones:
         """The state, in every zone."""
         return uniform(self.state, tile)
 

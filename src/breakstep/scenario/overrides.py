@@ -133,10 +133,8 @@ def _entry(items: Any, step: str, path: str) -> tuple[Any, str]:
     """One entry of a list by its number, from 0."""
     count = len(items) if isinstance(items, list) else 0
     if not step.isdecimal() or int(step) >= count:
-        have = f"one of {count}" if count else "none, for there are no entries"
-        raise _OverrideError(
-            join(path, step), f"expected the number of an entry, from 0, {have}; came {step}"
-        )
+        have = f"from 0 to {count - 1}" if count else "but there are none"
+        raise _OverrideError(join(path, step), f"expected the number of an entry, {have}, came {step}")
     return items[int(step)], join(path, step)
 
 
@@ -150,7 +148,7 @@ def _put(tables: dict[str, Any], path: str, value: Any) -> None:
         done = join(done, step)
         here = _entry(here, step, done)[0] if isinstance(here, list) else _inside(here, step, done)
     if isinstance(here, list):
-        _entry(here, last, path)
+        _entry(here, last, done)
         here[int(last)] = value
     elif isinstance(here, dict):
         here[last] = value
@@ -162,4 +160,6 @@ def _put(tables: dict[str, Any], path: str, value: Any) -> None:
 def _inside(table: Any, step: str, path: str) -> Any:
     if not isinstance(table, dict):
         raise _OverrideError(path, f"there is {in_words(table)} above it, which has no keys")
-    return table.setdefault(step, {})
+    if table.get(step) is None:  # a resolved scenario says None where nothing was said
+        table[step] = {}
+    return table[step]

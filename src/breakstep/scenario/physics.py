@@ -113,14 +113,15 @@ class BurningSection(Section):
 
 
 class SpeciesSection(Section):
-    """``[species]``: nuclei that are carried along in a run without burning."""
+    """``[species]``: nuclei that are carried along in a run without burning; listed, or a network's."""
 
-    names: Annotated[tuple[Word, ...], BeforeValidator(lists), Field(min_length=1, max_length=200)] = Field(
-        description="names of the species"
+    network: NetworkWord | None = Field(default=None, description="the network whose species they are")
+    names: Annotated[tuple[Word, ...], BeforeValidator(lists), Field(max_length=200)] = Field(
+        default=(), description="names of the species"
     )
-    mass_numbers: Annotated[
-        tuple[Positive, ...], BeforeValidator(lists), Field(min_length=1, max_length=200)
-    ] = Field(description="mass number of each species")
-    charges: Annotated[
-        tuple[NotNegative, ...], BeforeValidator(lists), Field(min_length=1, max_length=200)
-    ] = Field(description="charge of each species")
+    mass_numbers: Annotated[tuple[Positive, ...], BeforeValidator(lists), Field(max_length=200)] = Field(
+        default=(), description="mass number of each species"
+    )
+    charges: Annotated[tuple[NotNegative, ...], BeforeValidator(lists), Field(max_length=200)] = Field(
+        default=(), description="charge of each species"
+    )

@@ -1,8 +1,8 @@
 """Reading a table against its model, key by key, so that one fault hides no other.
 
 A plain validation would stop at the first faulty table and skip every rule that looks at two tables. So
-each key is checked by itself; what is sound goes into a :class:`Partial`, and a rule that asks a
-partial for something that is not sound is skipped, never the rules beside it.
+each key is checked by itself; what is sound goes into a :class:`SoundPart`, and a rule that asks such a
+part for something that is not there is skipped, never the rules beside it.
 """
 
 from __future__ import annotations
@@ -26,7 +26,7 @@ class NotSoundError(Exception):
     """Something a rule asked for was faulty or missing, so the rule says nothing. Never seen outside."""
 
 
-class Partial:
+class SoundPart:
     """The sound part of a table; asking for anything else raises NotSoundError."""
 
     def __init__(self, model: Model, values: Mapping[str, Any]) -> None:
@@ -65,7 +65,7 @@ class Reader:
     def __init__(self) -> None:
         self.faults: list[Fault] = []
 
-    def table(self, model: Model, table: Any, path: str = "") -> Partial:
+    def table(self, model: Model, table: Any, path: str = "") -> SoundPart:
         """Check one table and everything below it.
 
         Raises
@@ -83,7 +83,7 @@ class Reader:
         for name in model.model_fields:
             with suppress(NotSoundError):
                 values[name] = self._key(model, name, table, path)
-        return Partial(model, values)
+        return SoundPart(model, values)
 
     def _fault(self, path: str, text: str) -> NotSoundError:
         self.faults.append(Fault(path, text))
@@ -96,6 +96,10 @@ class Reader:
                 raise self._fault(place, f"is missing; expected {info.description}")
             return _default(info)
         models, is_list = tables_of(info)
+        if (
+            table[name] is None and not info.is_required()
+        ):  # a resolved scenario says so where nothing was said
+            return _default(info)
         if not models:
             return self._value(model, name, table[name], place)
         if is_list:
@@ -113,13 +117,15 @@ class Reader:
                 self._fault(reduce(join, steps, path), expected(found))
             raise NotSoundError(path) from None
 
-    def _list(self, model: Model, items: Any, path: str) -> list[Partial]:
+    def _list(self, model: Model, items: Any, path: str) -> list[SoundPart]:
         if not isinstance(items, list) or not items:
             raise self._fault(path, f"expected a list of one or more tables, came {in_words(items)}")
         tables = []
         for number, item in enumerate(items):
-            with suppress(NotSoundError):
+            try:
                 tables.append(self.table(model, item, join(path, number)))
+            except NotSoundError:  # keep the numbers of those that follow
+                tables.append(SoundPart(model, {}))
         return tables
 
     def _by_kind(self, models: list[Model], table: Any, path: str) -> Model:
@@ -139,7 +145,7 @@ class Reader:
 
 def _default(info: FieldInfo) -> Any:
     value = info.get_default(call_default_factory=True, validated_data={})
-    return Partial(type(value), dict(value)) if isinstance(value, Section) else value
+    return SoundPart(type(value), dict(value)) if isinstance(value, Section) else value
 
 
 @cache

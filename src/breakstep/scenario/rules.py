@@ -161,6 +161,8 @@ def _species_lists(file: Any) -> Iterator[Fault]:
     if file.species is None:
         return
     names = file.species.names
+    if bool(names) == (file.species.network is not None):
+        yield Fault("species.names", "expected names of species or a network's name, one of the two")
     for name in sorted({name for name in names if names.count(name) > 1}):
         yield Fault("species.names", f"{name} is listed twice")
     for key, values in (("mass_numbers", file.species.mass_numbers), ("charges", file.species.charges)):
@@ -195,6 +197,6 @@ def find_faults(file: Any) -> list[Fault]:
 
     Parameters
     ----------
-    file : Partial of ScenarioFile
+    file : SoundPart of ScenarioFile
     """
     return apply_rules(RULES, file)

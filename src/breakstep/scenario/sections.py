@@ -43,10 +43,14 @@ def _pair(value: Any) -> Any:
 
 Positive = Annotated[float, Field(gt=0.0)]
 NotNegative = Annotated[float, Field(ge=0.0)]
+LARGEST = 1e30
+"""Bound on lengths [cm]; keeps products of a few of them finite."""
+Length = Annotated[float, Field(ge=-LARGEST, le=LARGEST)]
+PositiveLength = Annotated[float, Field(gt=0.0, le=LARGEST)]
 Count = Annotated[int, Field(ge=1, le=1_000_000)]
 Counts = Annotated[tuple[Count, ...], BeforeValidator(lists), Field(min_length=1, max_length=3)]
-Lengths = Annotated[tuple[Positive, ...], BeforeValidator(lists), Field(min_length=1, max_length=3)]
-Vector = Annotated[tuple[float, ...], BeforeValidator(lists), Field(min_length=1, max_length=3)]
+Lengths = Annotated[tuple[PositiveLength, ...], BeforeValidator(lists), Field(min_length=1, max_length=3)]
+Vector = Annotated[tuple[Length, ...], BeforeValidator(lists), Field(min_length=1, max_length=3)]
 Word = Annotated[str, Field(pattern=r"^[A-Za-z][A-Za-z0-9_]*$", max_length=60)]
 EdgePair = Annotated[tuple[EdgeWord, ...], BeforeValidator(_pair), Field(min_length=2, max_length=2)]
 

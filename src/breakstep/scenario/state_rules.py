@@ -70,7 +70,7 @@ def _state_faults(path: str, table: Any, file: Any) -> list[Fault]:
     return apply_rules([partial(rule, path, table) for rule in _ONE_STATE], file)
 
 
-def _one_of_two(path: str, table: Any, file: Any) -> Iterator[Fault]:  # noqa: ARG001
+def _one_of_two(path: str, table: Any, file: Any) -> Iterator[Fault]:
     if table.temperature is None and table.pressure is None:
         yield Fault(
             join(path, "temperature"), "is missing; expected a temperature [K] or a pressure [erg/cm^3]"
@@ -140,11 +140,11 @@ def _spot_composition(path: str, spot: Any, file: Any) -> Iterator[Fault]:
 
 def _inside(key: str, point: tuple[float, ...], file: Any) -> Iterator[Fault]:
     """Faults of a point that does not lie in the mesh."""
-    size = file.mesh.size
-    if len(point) != len(size):
-        yield Fault(key, f"expected one entry for each of {len(size)} axes, came {len(point)}")
+    axes = len(file.mesh.zones)
+    if len(point) != axes:
+        yield Fault(key, f"expected one entry for each of {axes} axes, came {len(point)}")
         return
-    for name, at, length in zip(AXIS_NAMES, point, size, strict=False):
+    for name, at, length in zip(AXIS_NAMES, point, file.mesh.size, strict=False):
         if not 0.0 <= at <= length:
             yield Fault(key, f"expected {name} between 0 and {length:g} cm, came {at:g}")
 

@@ -7,8 +7,13 @@ from typing import Annotated, Literal
 
 from pydantic import BeforeValidator, Field
 
-from breakstep.scenario.sections import NotNegative, Positive, Section, Vector, lists
+from breakstep.kernels.constants import C_LIGHT
+from breakstep.scenario.sections import NotNegative, PositiveLength, Section, Vector, lists
 
+Density = Annotated[float, Field(gt=0.0, le=1e16)]
+Pressure = Annotated[float, Field(gt=0.0, le=1e40)]
+Speed = Annotated[float, Field(ge=-C_LIGHT, le=C_LIGHT)]
+Velocity = Annotated[tuple[Speed, ...], BeforeValidator(lists), Field(min_length=1, max_length=3)]
 Temperature = Annotated[float, Field(gt=0.0, le=1e12)]
 Composition = dict[str, Annotated[float, Field(ge=0.0, le=1.0)]]
 AxisWord = Literal["x", "y", "z"]
@@ -17,12 +22,12 @@ AxisWord = Literal["x", "y", "z"]
 class StateSection(Section):
     """A state of the gas, and of the radiation in it."""
 
-    density: Positive = Field(description="mass density [g/cm^3]")
+    density: Density = Field(description="mass density [g/cm^3]")
     temperature: Temperature | None = Field(default=None, description="temperature of the gas [K]")
-    pressure: Positive | None = Field(
+    pressure: Pressure | None = Field(
         default=None, description="pressure, instead of the temperature [erg/cm^3]"
     )
-    velocity: Vector = Field(default=(0.0,), description="velocity along x, y, z [cm/s]")
+    velocity: Velocity = Field(default=(0.0,), description="velocity along x, y, z [cm/s]")
     composition: Composition = Field(default_factory=dict, description="mass fraction of each species")
     radiation_temperature: Temperature | None = Field(
         default=None, description="temperature of the radiation, that of the gas if left out [K]"
@@ -39,12 +44,12 @@ class SpotSection(Section):
     """A round region that fades into what surrounds it."""
 
     centre: Vector = Field(description="centre of the spot [cm]")
-    radius: Positive = Field(description="distance at which the spot has faded [cm]")
+    radius: PositiveLength = Field(description="distance at which the spot has faded [cm]")
     fade: Annotated[float, Field(gt=0.0, le=1.0)] = Field(
         default=1.0, description="share of the radius, from outside, over which it fades"
     )
     temperature: Temperature = Field(description="temperature at the centre [K]")
-    density: Positive | None = Field(default=None, description="density at the centre, if different [g/cm^3]")
+    density: Density | None = Field(default=None, description="density at the centre, if different [g/cm^3]")
     composition: Composition | None = Field(
         default=None, description="mass fractions at the centre, if different"
     )
@@ -73,10 +78,10 @@ class BlastSection(StateSection):
     """A uniform state with energy let loose around a point."""
 
     kind: Literal["blast"] = Field(description="how the initial state is laid out")
-    energy: Positive = Field(
+    energy: Annotated[float, Field(gt=0.0, le=1e60)] = Field(
         description="energy let loose: erg in three dimensions, erg/cm in two, erg/cm^2 in one"
     )
-    radius: Positive = Field(description="distance within which it is let loose [cm]")
+    radius: PositiveLength = Field(description="distance within which it is let loose [cm]")
     centre: Vector | None = Field(
         default=None, description="the point, the middle of the mesh if left out [cm]"
     )
@@ -88,7 +93,7 @@ class RadiationSlabSection(StateSection):
     kind: Literal["radiation_slab"] = Field(description="how the initial state is laid out")
     axis: AxisWord = Field(default="x", description="axis along which the slab is bounded")
     begins: NotNegative = Field(default=0.0, description="where the slab begins along that axis [cm]")
-    ends: Positive = Field(description="where the slab ends along that axis [cm]")
+    ends: PositiveLength = Field(description="where the slab ends along that axis [cm]")
     slab_temperature: Temperature = Field(description="temperature of the radiation in the slab [K]")
 
 

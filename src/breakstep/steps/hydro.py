@@ -86,6 +86,14 @@ class SweepKernel:
     def __call__(self, arrays: Mapping[str, Array], call: Call) -> dict[str, Array]:
         width = call.widths[self.axis]
         new, courant, bad = hydro.sweep(arrays["gas"], self.axis, call.dt, width, *self.gas.arrays)
+        # A step that is too large may well spoil a zone too: then the cause is named, not the effect.
+        if not courant <= COURANT_LIMIT:
+            raise CourantError(
+                f"{call.where()}: the time step {call.dt:.4g} s has a CFL number of {courant:.3g} in the state it is"
+                f" applied to, above the limit of {COURANT_LIMIT:g}; lower the CFL factor, the growth of the"
+                " time step or the lag of dt",
+                courant=courant,
+            )
         if bad >= 0:
             zone, before = describe_zone(interior(arrays["gas"], call.shape), bad, call)
             _, after = describe_zone(new, bad, call)
@@ -93,13 +101,6 @@ class SweepKernel:
                 f"{call.where()}: zone {zone} has or gets a density, energy or pressure that is not positive;"
                 f" before: {before}; after: {after}; dt {call.dt:.4g} s; lower the CFL factor or look at the state",
                 zone=zone,
-            )
-        if not courant <= COURANT_LIMIT:
-            raise CourantError(
-                f"{call.where()}: the time step {call.dt:.4g} s has a CFL number of {courant:.3g} in the state it is"
-                f" applied to, above the limit of {COURANT_LIMIT:g}; lower the CFL factor, the growth of the"
-                " time step or the lag of dt",
-                courant=courant,
             )
         call.count("zones", int(np.prod(call.shape)))
         return {"gas": new}

@@ -41,6 +41,8 @@ class Repeat:
 
     def __post_init__(self) -> None:
         check_name("repeat", self.name)
+        if not self.body:
+            raise DeclarationError(f"repeat {self.name!r} has no steps")
         if self.at_most < 1 + self.until.lag:
             raise DeclarationError(
                 f"repeat {self.name!r}: at most {self.at_most} iterations with a lag of {self.until.lag}"

@@ -97,7 +97,15 @@ def test_all_faults_are_reported_together() -> None:
     with pytest.raises(DeclarationError) as caught:
         build_network("faulty", species, reactions, conserving=True)
     faults = caught.value.details["faults"]
-    for part in ("twice", "positive", "balance", "unknown species Fe52", "more than 3", "7 coeff", "negative"):
+    for part in (
+        "twice",
+        "positive",
+        "balance",
+        "unknown species Fe52",
+        "more than 3",
+        "7 coeff",
+        "negative",
+    ):
         assert sum(part in fault for fault in faults) == 1, part
     assert all(fault in str(caught.value) for fault in faults)
 

@@ -27,6 +27,7 @@ from breakstep.engine.program import Program
 from breakstep.engine.recording import record_edges
 from breakstep.engine.run import Progress, RunOptions, RunResult, unroller_for
 from breakstep.engine.warm import warm_up
+from breakstep.engine.workers import known_workers
 from breakstep.errors import BreakstepError, ClusterError
 from breakstep.graph.tasks import ANYWHERE, Kind, Task, TaskGraph
 from breakstep.graph.unroll import INITIAL, Need, Phase
@@ -51,15 +52,7 @@ class NativeDispatch:
 
     def __init__(self, client: Client, workers: int | None = None) -> None:
         self.client = client
-        known = sorted(
-            client.scheduler_info(n_workers=-1)["workers"].items(), key=lambda item: str(item[1]["name"])
-        )
-        if not known:
-            raise ClusterError("the Dask cluster has no workers; start some and try again")
-        if workers is not None and workers > len(known):
-            raise ClusterError(f"{workers} workers were asked for, but the Dask cluster has {len(known)}")
-        self.addresses = [address for address, _ in known[:workers]]
-        self.threads = max(int(info["nthreads"]) for _, info in known[:workers])
+        self.addresses, self.threads = known_workers(client, workers)
         self.workers = len(self.addresses)
         self._warm: set[int] = set()
 
@@ -89,7 +82,7 @@ class _NativeRun:
         self.dispatch, self.program, self.options, self.progress = dispatch, program, options, progress
         self.client = dispatch.client
         self.name = uuid.uuid4().hex[:8]
-        self.owners = owners(options.placement, len(program.tiling), dispatch.workers)
+        self.owners = owners(options.placement, program, dispatch.workers)
         self.graph = TaskGraph(program.tiling, self.owners)
         self.unroller = unroller_for(program, options)
         self.barriers = program.template.stages_with_barrier(options.barriers)

@@ -239,6 +239,7 @@ class Core:
         self.cycles_done = unroller.start
         self.live_bytes = self.peak_bytes = 0
         self.finished = False
+        self.on_phase: Callable[[Phase], None] = lambda _: None
         self._control = control
         self._own_nodes = sum(1 for node in self.tree.nodes.values() if node.home == self.me)
         self._longest_lag = max((r.lag for r in self.program.problem.splitting.all_reductions()), default=0)
@@ -364,6 +365,23 @@ class Core:
         """The rims that came from one tile of another worker."""
         return self._bundles[task.phase.number, tile, task.phase.sources[name]].arrays
 
+    def owed(self, task: TaskState) -> list[SendRims]:
+        """Rims of a task that other workers are known to need, before it is finished; more may be asked later."""
+        where, tile = task.where, task.tile
+        return [
+            SendRims(worker, reader, tile, where.number, cuts, {})
+            for worker, reader, cuts in where.owed.get(tile, ())
+        ]
+
+    @property
+    def ready_count(self) -> int:
+        """Tasks that wait for nothing but a thread."""
+        return len(self._ready)
+
+    def in_flight(self, nbytes: int) -> None:
+        """Bytes that the host has queued for other workers (negative: has got rid of)."""
+        self._grow(nbytes)
+
     def measured(self, task: TaskState, nanoseconds: int) -> None:
         """Note what a task cost, for the ranks of those to come."""
         self.ranks.note(task.phase, task.tile, nanoseconds)
@@ -408,7 +426,10 @@ class Core:
     def _step(self, answer: list[Array] | None) -> None:
         if self.options.checkpoint_every:  # what the state is made of before the next phase changes it
             names = self.program.state_fields
-            self._boundary = ({name: self.unroller.latest(name) for name in names}, self.unroller.next_values())
+            self._boundary = (
+                {name: self.unroller.latest(name) for name in names},
+                self.unroller.next_values(),
+            )
         try:
             self._pending = self._generator.send(answer)
         except StopIteration:
@@ -419,6 +440,7 @@ class Core:
     def _emit(self, phase: Phase) -> None:
         where = PhaseState(phase.number, phase)
         where.remaining = len(self.plan.tiles)
+        self.on_phase(phase)
         self._phases[phase.number] = where
         self._emitted_to = max(self._emitted_to, phase.cycle)
         self._unfinished[phase.cycle] = self._unfinished.get(phase.cycle, 0) + where.remaining
