@@ -119,11 +119,13 @@ class Profile:
 
     @cached_property
     def pressure(self) -> Array:
-        return (self.gamma - 1.0) * (self.gas[4] - 0.5 * self.gas[1] ** 2 / self.gas[0])
+        pressure: Array = (self.gamma - 1.0) * (self.gas[4] - 0.5 * self.gas[1] ** 2 / self.gas[0])
+        return pressure
 
     @cached_property
     def burned(self) -> Array:
-        return self.gas[6] / self.gas[0]
+        burned: Array = self.gas[6] / self.gas[0]
+        return burned
 
     def rightmost(self, values: Array, level: float) -> float:
         """Zone coordinate at which values fall through a level for the last time, by linear interpolation."""
@@ -171,8 +173,8 @@ def test_the_closed_form_gives_the_published_states(
 
 
 # Kinetics of the first wave: K = 3.640687622484299 makes the half-reaction length 1 for E = 10 (computed; the same
-# integration gives the published 35.9556 for E = 25, from memory). The low activation energy keeps the wave stable. The second
-# wave's kinetics are invented; its half-reaction length is about 1.2.
+# integration gives the published 35.9556 for E = 25, from memory). The low activation energy keeps the wave stable.
+# The second wave's kinetics are invented; its half-reaction length is about 1.2.
 WAVES = {
     "gamma 1.2, q 50": (Wave(1.2, 50.0), Kinetics(3.640687622484299, 10.0)),
     "gamma 1.4, q 10": (Wave(1.4, 10.0), Kinetics(1.8, 4.0)),

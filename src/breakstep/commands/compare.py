@@ -7,9 +7,10 @@ from pathlib import Path
 import click
 
 from breakstep.commands.session import Session, Stopped
-from breakstep.commands.shared import check_json, open_dispatch, output_folder, run_options, write_json
+from breakstep.commands.shared import Place, check_json, open_dispatch, output_folder, run_options, write_json
 from breakstep.engine.recorded import check_folder
 from breakstep.engine.run import Dispatch
+from breakstep.errors import ScenarioError
 from breakstep.profile.run import Profile
 from breakstep.report.comparison import Comparison, Difference, first_difference, first_traced_difference
 from breakstep.report.terminal import comparison_lines
@@ -25,11 +26,13 @@ from breakstep.report.terminal import comparison_lines
     help="What tasked is compared with: lockstep, tasked, or names joined by commas.",
 )  # fmt: skip
 def compare(
-    scenario: str,
+    scenario: str | None,
     overrides: tuple[str, ...],
     workers: int | None,
     threads: int | None,
     placement: str | None,
+    dispatch: str | None,
+    memory_limit: int | None,
     address: str | None,
     scheduler_file: Path | None,
     out: Path | None,
@@ -38,15 +41,23 @@ def compare(
     barriers: str,
 ) -> int:
     """Run SCENARIO with barriers and without, and say what leaving them out gives back."""
-    session = Session.load(scenario, overrides, placement)
+    if scenario is None:
+        raise ScenarioError("name a scenario to compare")
+    session = Session.load(scenario, overrides, placement, memory_limit or 0)
     session.barriers(barriers)
     check_json(json_file)
     folder = output_folder(out, session.scenario.name)
     check_folder(folder)
     settings = session.scenario.run
-    places = (workers or settings.workers, threads or settings.threads, address, scheduler_file)
+    place = Place(
+        dispatch or settings.dispatch,
+        workers or settings.workers,
+        threads or settings.threads,
+        address,
+        scheduler_file,
+    )
     try:
-        with open_dispatch("native", *places) as engine:
+        with open_dispatch(place) as engine:
             comparison = _compare(session, engine, barriers, folder, pairs)
     except Stopped as stopped:
         click.echo(f"stopped; the profile so far is in {stopped.folder}", err=True)

@@ -1,4 +1,4 @@
-"""``breakstep run``: one run of a scenario, recorded."""
+"""``breakstep run``: one run of a scenario, recorded, with checkpoints if asked for."""
 
 from __future__ import annotations
 
@@ -7,42 +7,63 @@ from pathlib import Path
 import click
 
 from breakstep.commands.session import Session, Stopped
-from breakstep.commands.shared import check_json, open_dispatch, output_folder, run_options, write_json
+from breakstep.commands.shared import Place, check_json, open_dispatch, output_folder, run_options, write_json
+from breakstep.engine.checkpoint import last_checkpoint, read_manifest
+from breakstep.errors import CheckpointError, ScenarioError
 from breakstep.report.comparison import run_figures
 from breakstep.report.terminal import ledger_lines
+
+CHECKPOINTS = "checkpoints"  # folder below a run's output folder
 
 
 @click.command()
 @run_options
+@click.option("--barriers", help="lockstep, tasked (the default), or names joined by commas.")
+@click.option("--checkpoint-every", type=click.IntRange(1), metavar="N", help="Save the state every N cycles.")
 @click.option(
-    "--barriers", default="tasked", show_default=True, help="lockstep, tasked, or names joined by commas."
+    "--resume",
+    type=click.Path(path_type=Path),
+    metavar="DIR",
+    help="Go on from the last checkpoint in DIR, the output folder of an earlier run; leave SCENARIO out.",
 )
-@click.option("--dispatch", type=click.Choice(["native", "serial"]), help="Who runs the tasks.")
 def run(
-    scenario: str,
+    scenario: str | None,
     overrides: tuple[str, ...],
     workers: int | None,
     threads: int | None,
     placement: str | None,
+    dispatch: str | None,
+    memory_limit: int | None,
     address: str | None,
     scheduler_file: Path | None,
     out: Path | None,
     json_file: Path | None,
-    barriers: str,
-    dispatch: str | None,
+    barriers: str | None,
+    checkpoint_every: int | None,
+    resume: Path | None,
 ) -> int:
     """Run SCENARIO once and print where its core-seconds went."""
-    session = Session.load(scenario, overrides, placement)
-    session.barriers(barriers)
+    checkpoint, session, choice = _begin(scenario, overrides, resume, barriers, placement, memory_limit)
+    session.options = session.saving_every(checkpoint_every)
     check_json(json_file)
     settings = session.scenario.run
     folder = output_folder(out, session.scenario.name)
     name = dispatch or settings.dispatch
-    with open_dispatch(
-        name, workers or settings.workers, threads or settings.threads, address, scheduler_file
-    ) as engine:
+    if (checkpoint_every or resume) and name != "resident":
+        raise ScenarioError("checkpoints need the resident dispatch; leave --dispatch out")
+    place = Place(
+        name,
+        workers or settings.workers,
+        threads or settings.threads,
+        address,
+        scheduler_file,
+        checkpoints=(folder / CHECKPOINTS).absolute() if checkpoint_every else None,
+        resume=checkpoint,
+        facts={"scenario": session.facts(), "barriers": choice, "checkpoint_every": checkpoint_every or 0},
+    )
+    with open_dispatch(place) as engine:
         try:
-            _, profile = session.execute(engine, barriers, folder)
+            _, profile = session.execute(engine, choice, folder)
         except Stopped as stopped:
             click.echo(f"stopped; the profile so far is in {stopped.folder}", err=True)
             return 130
@@ -51,3 +72,31 @@ def run(
     click.echo(f"profile: {folder}")
     write_json(json_file, {"scenario": session.scenario.name, **run_figures(profile)})
     return 0
+
+
+def _begin(
+    scenario: str | None,
+    overrides: tuple[str, ...],
+    resume: Path | None,
+    barriers: str | None,
+    placement: str | None,
+    memory_limit: int | None,
+) -> tuple[Path | None, Session, str]:
+    """The checkpoint to go on from, if any, the session, and the choice of barriers."""
+    if resume is None:
+        if scenario is None:
+            raise ScenarioError("name a scenario to run, or --resume the folder of an earlier run")
+        session = Session.load(scenario, overrides, placement, memory_limit or 0)
+        choice = barriers or "tasked"
+        session.barriers(choice)
+        return None, session, choice
+    if scenario is not None:
+        raise ScenarioError("--resume takes its scenario from the checkpoint; leave SCENARIO out")
+    folder = last_checkpoint(resume / CHECKPOINTS if (resume / CHECKPOINTS).is_dir() else resume)
+    manifest = read_manifest(folder)
+    session = Session.from_tables(manifest["scenario"], folder, overrides, placement, memory_limit or 0)
+    if list(session.program.tile_shape) != manifest["tile"]:
+        raise CheckpointError(f"{folder}: tiles of {manifest['tile']} zones cannot be resumed with others; leave mesh.tile")
+    choice = barriers or str(manifest.get("barriers", "tasked"))
+    session.barriers(choice)
+    return folder, session, choice

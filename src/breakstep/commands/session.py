@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -13,8 +13,7 @@ from breakstep.engine.recorded import run_and_record
 from breakstep.engine.run import Dispatch, RunOptions, RunResult
 from breakstep.graph.stages import parse_barriers
 from breakstep.profile.run import Profile
-from breakstep.scenario.load import load_scenario
-from breakstep.scenario.load import Scenario
+from breakstep.scenario.load import Scenario, load_scenario, scenario_from
 
 
 class Stopped(Exception):
@@ -42,7 +41,7 @@ class Session:
     options: RunOptions
 
     @classmethod
-    def load(cls, name: str, overrides: Sequence[str], placement: str | None = None) -> Session:
+    def load(cls, name: str, overrides: Sequence[str], placement: str | None = None, memory_limit: int = 0) -> Session:
         """Read and check a scenario.
 
         Raises
@@ -50,10 +49,37 @@ class Session:
         ScenarioError
             All its faults together.
         """
-        scenario = load_scenario(name, overrides)
+        return cls._of(load_scenario(name, overrides), placement, memory_limit)
+
+    @classmethod
+    def _of(cls, scenario: Scenario, placement: str | None, memory_limit: int) -> Session:
         program = Program(scenario.problem(), tuple(scenario.tile), scenario.run.fuse)
-        options = RunOptions(placement=placement or scenario.run.placement, window=scenario.run.window)
+        options = RunOptions(placement=placement or scenario.run.placement, window=scenario.run.window, memory_limit=memory_limit)
         return cls(scenario, program, options)
+
+    @classmethod
+    def from_tables(
+        cls,
+        facts: Mapping[str, Any],
+        source: Path,
+        overrides: Sequence[str],
+        placement: str | None,
+        memory_limit: int,
+    ) -> Session:
+        """The scenario that a checkpoint's manifest holds.
+
+        Raises
+        ------
+        ScenarioError
+            All its faults together, overrides included.
+        """
+        tables = facts.get("resolved", {}) if isinstance(facts, Mapping) else {}
+        scenario = scenario_from(tables, source=str(source), overrides=overrides)
+        return cls._of(scenario, placement, memory_limit)
+
+    def saving_every(self, cycles: int | None) -> RunOptions:
+        """The options with a checkpoint every so many cycles."""
+        return replace(self.options, checkpoint_every=cycles or 0)
 
     def barriers(self, choice: str) -> tuple[str, ...]:
         """Barrier names for ``lockstep``, ``tasked`` or a list."""

@@ -6,6 +6,7 @@ import contextlib
 import json
 import time
 from collections.abc import Callable, Iterator, Mapping
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -15,6 +16,7 @@ from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, T
 
 from breakstep.engine.cluster import existing_cluster, local_cluster
 from breakstep.engine.native import NativeDispatch
+from breakstep.engine.resident import ResidentDispatch
 from breakstep.engine.run import Dispatch
 from breakstep.engine.serial import SerialDispatch
 from breakstep.errors import OutputError
@@ -25,11 +27,13 @@ _F = TypeVar("_F", bound=Callable[..., Any])
 def run_options(function: _F) -> _F:
     """Options of every command that runs a scenario."""
     options = [
-        click.argument("scenario"),
+        click.argument("scenario", required=False),
         click.option("--set", "overrides", multiple=True, metavar="KEY.PATH=VALUE", help="Override a scenario value."),
         click.option("--workers", type=click.IntRange(1), help="Worker processes (default: the scenario's)."),
         click.option("--threads", type=click.IntRange(1), help="Threads a worker (default: the scenario's)."),
-        click.option("--placement", type=click.Choice(["blocks", "dask"]), help="Who owns which tile."),
+        click.option("--placement", type=click.Choice(["blocks", "curve", "dask"]), help="Who owns which tile."),
+        click.option("--dispatch", type=click.Choice(["resident", "native", "serial"]), help="Who runs the tasks."),
+        click.option("--memory-limit", type=click.IntRange(0), help="Live bytes a worker above which run-ahead waits."),
         click.option("--address", help="Use the Dask cluster whose scheduler listens there."),
         click.option("--scheduler-file", type=click.Path(path_type=Path), help="Use the Dask cluster that wrote this file."),
         click.option("--out", type=click.Path(path_type=Path), help="Folder for the profiles (default: runs/...)."),
@@ -40,19 +44,37 @@ def run_options(function: _F) -> _F:
     return function
 
 
+@dataclass(frozen=True)
+class Place:
+    """Where to run, and with which dispatch."""
+
+    dispatch: str
+    workers: int
+    threads: int
+    address: str | None = None
+    scheduler_file: Path | None = None
+    checkpoints: Path | None = None
+    resume: Path | None = None
+    facts: Mapping[str, Any] = field(default_factory=dict)
+
+
 @contextlib.contextmanager
-def open_dispatch(
-    name: str, workers: int, threads: int, address: str | None, scheduler_file: Path | None
-) -> Iterator[Dispatch]:
+def open_dispatch(place: Place) -> Iterator[Dispatch]:
     """The dispatch to run with, and its cluster for as long as the context lasts."""
-    if name == "serial":
+    if place.dispatch == "serial":
         yield SerialDispatch()
-    elif address or scheduler_file:
-        with existing_cluster(address, scheduler_file) as client:
-            yield NativeDispatch(client, workers)
+        return
+    if place.address or place.scheduler_file:
+        cluster = existing_cluster(place.address, place.scheduler_file)
     else:
-        with local_cluster(workers, threads) as client:
-            yield NativeDispatch(client, workers)
+        cluster = local_cluster(place.workers, place.threads)
+    with cluster as client:
+        if place.dispatch == "native":
+            yield NativeDispatch(client, place.workers)
+        else:
+            yield ResidentDispatch(
+                client, place.workers, checkpoints=place.checkpoints, resume=place.resume, facts=place.facts
+            )
 
 
 @contextlib.contextmanager

@@ -10,7 +10,6 @@ checked against its digest.
 from __future__ import annotations
 
 import json
-import os
 import shutil
 from collections.abc import Mapping, Sequence
 from pathlib import Path
@@ -113,7 +112,7 @@ def complete(
         (partial / MANIFEST).write_text(json.dumps(manifest, indent=1), encoding="utf-8")
         if final.exists():
             shutil.rmtree(final)
-        os.replace(partial, final)
+        partial.replace(final)
         for old in checkpoints(root)[:-2]:
             shutil.rmtree(old)
     except OSError as error:
@@ -127,6 +126,22 @@ def checkpoints(root: Path) -> list[Path]:
     """Complete checkpoints, oldest first."""
     found = root.glob("cycle-*") if root.is_dir() else iter(())
     return sorted(p for p in found if not p.name.endswith(".partial") and (p / MANIFEST).is_file())
+
+
+def last_checkpoint(root: Path) -> Path:
+    """The newest complete checkpoint in a folder, or the folder itself if it is one.
+
+    Raises
+    ------
+    CheckpointError
+        There is none.
+    """
+    if (root / MANIFEST).is_file():
+        return root
+    found = checkpoints(root)
+    if not found:
+        raise CheckpointError(f"{root} holds no complete checkpoint; run with --checkpoint-every to make some")
+    return found[-1]
 
 
 def discard_partial(root: Path) -> None:

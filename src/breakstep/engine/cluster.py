@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import contextlib
+import warnings
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -25,19 +26,22 @@ def local_cluster(workers: int, threads: int = 1) -> Iterator[Client]:
         "distributed.worker.memory.terminate": False,
         "distributed.admin.large-graph-warning-threshold": "100MB",
     }
-    with (
-        dask.config.set(quiet),
-        LocalCluster(
+    with dask.config.set(quiet), _start(workers, threads) as cluster, Client(cluster) as client:
+        yield client
+
+
+def _start(workers: int, threads: int) -> LocalCluster:
+    """Start one; that its status page moves to another port when one is taken is nobody's concern."""
+    with warnings.catch_warnings():
+        warnings.filterwarnings("ignore", "Port .* is already in use", UserWarning)
+        return LocalCluster(
             n_workers=workers,
             threads_per_worker=threads,
             processes=True,
             host="127.0.0.1",
             dashboard_address=None,
             silence_logs=50,
-        ) as cluster,
-        Client(cluster) as client,
-    ):
-        yield client
+        )
 
 
 @contextlib.contextmanager

@@ -208,7 +208,8 @@ def check_arrays(
             raise KernelError(f"{where}: field {name!r} must be float64 of shape {shape}, got {came}")
         whole = np.ascontiguousarray(array)
         flat = whole.reshape(-1)
-        bad = first_not_finite(flat)
+        # Scratch is large, and what is wrong in it reaches the state within the cycle.
+        bad = -1 if fields[name].scratch else first_not_finite(flat)
         if bad >= 0:
             component, *zone = (int(i) for i in np.unravel_index(bad, shape))
             raise not_finite(fields[name], component, _global(zone, tile), float(flat[bad]), where)

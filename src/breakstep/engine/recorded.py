@@ -72,7 +72,8 @@ def run_and_record(
         }
     origin = (*mesh.origin, 0.0, 0.0, 0.0)[:3]
     record.coordinates = {
-        axis: origin[i] + (np.arange(mesh.zones[i]) + 0.5) * mesh.widths[i] for i, axis in enumerate("xyz")
+        axis: np.asarray(origin[i] + (np.arange(mesh.zones[i]) + 0.5) * mesh.widths[i], dtype=np.float64)
+        for i, axis in enumerate("xyz")
     }
     return result, write_profile(record, folder)
 

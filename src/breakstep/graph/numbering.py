@@ -23,7 +23,7 @@ Edges = tuple[Integers, Integers, EdgeKind]  # producers, consumers, what they c
 
 def level_sizes(leaves: int) -> list[int]:
     """Nodes on each level of the reduction tree over so many tiles, the root's level last."""
-    sizes = []
+    sizes: list[int] = []
     while not sizes or sizes[-1] > 1:
         leaves = -(-leaves // TREE_ARITY)
         sizes.append(leaves)

@@ -49,7 +49,8 @@ class Stage:
         """Reads that no earlier step of the same stage satisfies."""
         made: set[str] = set()
         reads: dict[str, Read] = {}
-        for part in (*self.steps, *self.partials):
+        parts: tuple[Step | Reduction, ...] = (*self.steps, *self.partials)
+        for part in parts:
             for read in part.reads:
                 if read.field not in made:
                     reads.setdefault(read.field, read)

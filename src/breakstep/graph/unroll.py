@@ -207,7 +207,9 @@ class Unroller:
         repeat, lag = node.repeat, node.repeat.until.lag
         foreseen = min(repeat.at_most, self._iterations.get(repeat.name, 1 + lag))
         verdicts: list[int] = []  # instance of each emitted iteration's verdict
-        known, stopped_at = 0, None
+        known: int = 0
+        stopped_at: int | None = None
+        last: Array | None = None
         while stopped_at is None or len(verdicts) <= stopped_at + lag:
             iteration = len(verdicts)
             if iteration < repeat.at_most and (iteration < foreseen or iteration - 1 - lag < known):
@@ -217,13 +219,15 @@ class Unroller:
             if stopped_at is not None:
                 break
             if known == len(verdicts):
-                raise _not_converged(node, cycle, answer[-1])
+                assert last is not None
+                raise _not_converged(node, cycle, last)
             wanted = (
                 iteration - lag if iteration < repeat.at_most else iteration
             )  # no later verdict than needed
             answer = yield Need(tuple(verdicts[known:wanted]))
             assert answer is not None
             for value in answer:
+                last = value
                 where = f"stop of repeat {repeat.name}, cycle {cycle}"
                 if stopped_at is None and call_user(repeat.stop, value[0], where=where):
                     stopped_at = known

@@ -53,9 +53,7 @@ def _row(name: str, axis: int, effort: Effort) -> Row:
     # the stellar mixture's numpy form borrows the compiled equation of state, so nothing is asked of it
     needed = NEEDED if name == "gamma law" else None
     details = {"bytes_per_zone": 16 * arguments[0].shape[0]}  # every component read and written once
-    return Row(
-        f"{name}, {'xyz'[axis]}", ours, theirs, ratio(samples, "numpy", "ours"), needed, details=details
-    )
+    return Row(f"{name}, {'xyz'[axis]}", ours, theirs, ratio(samples, "numpy", "ours"), needed, details=details)
 
 
 def _check(arguments: Arguments) -> None:

@@ -95,9 +95,7 @@ def warnings(available: int, threads: Sequence[Row], quick: bool) -> list[str]:
     """What makes the figures say less than they seem to."""
     found = []
     if available < MEMBERS:
-        found.append(
-            f"{available} core: two threads and two processes share it, so their ratio says nothing."
-        )
+        found.append(f"{available} core: two threads and two processes share it, so their ratio says nothing.")
     elif not all(row.judged for row in threads):
         found.append("two cores were not free, so threads and processes cannot be told apart everywhere.")
     if quick:

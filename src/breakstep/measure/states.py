@@ -49,9 +49,7 @@ class Waves:
         energy = SPECIFIC_ENERGY * (1.0 + self._wave(4.0)) + 0.5 * (velocity**2).sum(axis=0)
         weights = np.stack([1.0 + self._wave(float(k)) for k in range(self.species)])
         fractions = weights / weights.sum(axis=0)
-        return np.concatenate(
-            [density[None], density * velocity, (density * energy)[None], density * fractions]
-        )
+        return np.concatenate([density[None], density * velocity, (density * energy)[None], density * fractions])
 
 
 def fuel_fractions(network: Network) -> Array:

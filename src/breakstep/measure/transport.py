@@ -33,14 +33,10 @@ def assemble_work() -> tuple[Work, transport.Assembly, Array]:
     eos = Stellar(radiation=False).vector
     matter = describe_matter(eos, network.mass_numbers, network.charges, groups, PowerLawOpacity())
     radiation = _RADIATION * Waves(wide, GROUPS).gas()[5:] * GROUPS / gas[0]
-    work = partial(
-        transport.assemble_gas, radiation, gas, matter, dt=_DT, spacing=(_SPACING,) * 3, axes=_AXES
-    )
+    work = partial(transport.assemble_gas, radiation, gas, matter, dt=_DT, spacing=(_SPACING,) * 3, axes=_AXES)
     assembly = work()
     if assembly.bad_zone >= 0 or not np.isfinite(assembly.bands).all():
-        raise KernelError(
-            "transport did not assemble on a state that is sound; run the tests of the transport"
-        )
+        raise KernelError("transport did not assemble on a state that is sound; run the tests of the transport")
     return work, assembly, radiation
 
 

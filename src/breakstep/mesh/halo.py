@@ -22,6 +22,8 @@ from breakstep.mesh.tiling import Tiling
 Array: TypeAlias = NDArray[np.float64]
 Box: TypeAlias = tuple[slice, slice, slice]
 
+OFFSETS: tuple[Triple, ...] = tuple(itertools.product((-1, 0, 1), (-1, 0, 1), (-1, 0, 1)))
+
 
 @dataclass(frozen=True)
 class Rim:
@@ -87,7 +89,7 @@ def plan_halo(tiling: Tiling, tile: int, widths: Triple, corners: bool = False) 
 def _rims(tiling: Tiling, tile: int, widths: Triple, corners: bool) -> list[Rim]:
     shape = tiling.tiles[tile].shape
     rims = []
-    for offset in itertools.product((-1, 0, 1), repeat=3):
+    for offset in OFFSETS:
         along = [axis for axis in range(3) if offset[axis]]
         if not along or any(widths[axis] == 0 for axis in along) or (len(along) > 1 and not corners):
             continue

@@ -102,7 +102,11 @@ def run_figures(profile: Profile) -> dict[str, Any]:
         "peak_bytes": profile.live.peak_bytes,
         "compute_by_step": profile.work["compute_seconds"].to_dict(),
         "imbalance_by_step": imbalance.to_dict(orient="index"),
-        "counters": {f"{row.step}.{row.counter}": row.value for row in profile.counters_by_step.itertuples()},
+        "counters": {
+            f"{row.step}.{row.counter}": row.value
+            for row in profile.counters_by_step.itertuples()
+            if not str(row.counter).startswith("checksum:")
+        },
         "digest": profile.manifest["digest"],
         "barriers": profile.manifest["barriers"],
         "status": profile.manifest["status"],
@@ -135,9 +139,9 @@ def _trace(profile: Profile) -> dict[tuple[int, str, int, int, str], tuple[int, 
     tasks = profile.tasks.set_index("task")[["cycle", "stage", "iteration", "tile"]]
     marks = profile.counters[profile.counters["counter"].astype(str).str.startswith("checksum:")]
     joined = marks.join(tasks, on="task").sort_values("task")
+    columns = ("cycle", "stage", "iteration", "tile", "counter", "value", "step")
     trace = {}
-    for row in joined.itertuples():
-        field = str(row.counter).removeprefix("checksum:")
-        key = (int(row.cycle), str(row.stage), int(row.iteration), int(row.tile), field)
-        trace[key] = (int(row.value), field, str(row.step))
+    for cycle, stage, iteration, tile, counter, value, step in zip(*(joined[c].tolist() for c in columns), strict=True):
+        name = str(counter).removeprefix("checksum:")
+        trace[cycle, str(stage), iteration, tile, name] = (int(value), name, str(step))
     return trace

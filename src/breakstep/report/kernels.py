@@ -48,9 +48,7 @@ def _head(comparison: Figures) -> str:
 def _row(name: str, row: Figures) -> str:
     ratio, label = row["ratio"], f"  {row['what']}"
     if name == "blocks":
-        label += (
-            f": {row['ns_over_order_squared']:.2f} ns, {row['operations_over_order_squared']:.0f} flop / N^2"
-        )
+        label += f": {row['ns_over_order_squared']:.2f} ns, {row['operations_over_order_squared']:.0f} flop / N^2"
     spread = f"({_short(ratio['low'])}-{_short(ratio['high'])})"
     needed = "" if row["needed"] is None else f"{row['needed']:g} {_VERDICTS[row['met']]}"
     values = f"{_short(row['ours']):>8}{_short(row['other']):>10}{_short(ratio['median']):>6}"

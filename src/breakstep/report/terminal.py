@@ -135,7 +135,7 @@ def _barrier_reason(lockstep: Profile) -> Iterator[str]:
         return
     stage = _most_at_fault(lockstep, "barrier")
     costs = lockstep.work["compute_ns"]
-    step = max(stage.split("+"), key=lambda name: float(costs.get(name, 0.0)))
+    step = max(stage.split("+"), key=lambda name: int(costs[name]) if name in costs.index else 0)
     uneven = lockstep.imbalance.loc[step] if step in lockstep.imbalance.index else None
     words = (
         f", whose busiest worker has {uneven['phases_weighted']:.2f} times the mean work of a phase"
@@ -172,7 +172,7 @@ def _placement_reason(tasked: Profile) -> Iterator[str]:
     if not len(costs):
         return
     step = str(costs.idxmax())
-    lasting = float(tasked.imbalance.loc[step, "workers"])
+    lasting = float(tasked.imbalance["workers"][step])
     if lasting >= UNEVEN:
         yield (
             f"Over the whole run the busiest worker has {lasting:.2f} times the mean work of {step}: an unevenness"
@@ -233,7 +233,7 @@ def ledger_lines(profile: Profile) -> list[str]:
         f"{'step':<16}{'compute s':>11}{'CPU s':>9}{'workers':>10}{'phases':>9}{'tiles':>8}   busiest/mean",
     ]
     for step, row in profile.work.sort_values("compute_ns", ascending=False).iterrows():
-        uneven = profile.imbalance.loc[step]
+        uneven = profile.imbalance.loc[str(step)]
         lines.append(
             f"{step!s:<16}{row['compute_seconds']:>11.3f}{row['cpu_seconds']:>9.3f}{uneven['workers']:>10.2f}"
             f"{uneven['phases_weighted']:>9.2f}{uneven['tiles']:>8.2f}"
@@ -246,5 +246,6 @@ def ledger_lines(profile: Profile) -> list[str]:
         lines.append(f"  made by {stage}: {size(count)}")
     lines.append(f"most alive at once: {size(profile.live.peak_bytes)}")
     counted = profile.counters_by_step
+    counted = counted[~counted["counter"].astype(str).str.startswith("checksum:")]
     lines += [f"counted in {row.step}: {row.counter} {row.value}" for row in counted.itertuples()]
     return lines

@@ -63,6 +63,8 @@ def in_words(value: object) -> str:
         return str(value).lower()
     if isinstance(value, Mapping):
         return "a table"
+    if isinstance(value, int) and value.bit_length() > LONGEST_QUOTE * 4:
+        return "a number of many digits"
     if isinstance(value, str):
         text = f'"{value}"'
     elif isinstance(value, list | tuple):
@@ -81,6 +83,8 @@ def expected(error: Mapping[str, Any]) -> str:
         return one_of([word.strip("' ") for word in words.split(",")], came)
     if kind in _LENGTHS:
         return f"expected {_LENGTHS[kind](facts)}, came {facts.get('actual_length', 'more')}"
+    if kind == "greater_than_equal" and came is not None and came <= 0.0 < facts["ge"] < 1.0:
+        kind, facts = "greater_than", {"gt": 0.0}  # the tiny bound is there for floating point's sake
     return f"expected {_wanted(kind, facts, str(error['msg']))}, came {in_words(came)}"
 
 

@@ -50,9 +50,7 @@ def find(name_or_path: str) -> Path:
     if name_or_path in known:
         return known[name_or_path]
     hint = did_you_mean(name_or_path, known)
-    raise refusal(
-        f"no scenario is named {name_or_path!r}{hint} (a file is given by a path that ends in {SUFFIX})"
-    )
+    raise refusal(f"no scenario is named {name_or_path!r}{hint} (a file is given by a path that ends in {SUFFIX})")
 
 
 def refusal(*faults: str) -> ScenarioError:
@@ -74,11 +72,11 @@ def parse(path: Path) -> dict[str, Any]:
     except OSError as error:
         _refuse(path, f"cannot be read: {error.strerror or error}", error)
     except UnicodeDecodeError as error:
-        _refuse(
-            path, f"expected UTF-8 text, came byte {error.object[error.start]:#04x} at {error.start}", error
-        )
+        _refuse(path, f"expected UTF-8 text, came byte {error.object[error.start]:#04x} at {error.start}", error)
     except tomllib.TOMLDecodeError as error:
         _refuse(path, _where_not_toml(str(error)), error)
+    except ValueError as error:  # an integer of thousands of digits
+        _refuse(path, f"expected TOML, but: {error}", error)
     except RecursionError as error:  # thousands of nested brackets
         _refuse(path, "expected TOML, came brackets nested too deep", error)
 

@@ -76,7 +76,7 @@ def _value(text: str, path: str) -> Any:
     """What the text says as a TOML value; a bare word is text."""
     try:
         parsed = tomllib.loads(f"value = {text}")
-    except tomllib.TOMLDecodeError:
+    except (ValueError, RecursionError):  # no TOML, or a monster that Python gives up on
         parsed = {"value": text} if BARE_WORD.fullmatch(text) else {}
     if set(parsed) != {"value"}:
         what = f"expected a TOML value or a bare word, came {in_words(text)}"

@@ -12,9 +12,13 @@ from typing import Annotated, Literal
 from pydantic import AfterValidator, BeforeValidator, Field
 
 from breakstep.kernels.network import PACKAGED_NETWORKS
-from breakstep.scenario.sections import NotNegative, Positive, Section, Word, known_word, lists
+from breakstep.scenario.sections import NotNegative, Section, Temperature, Word, known_word, lists
 
 Share = Annotated[float, Field(ge=0.0, le=1.0)]
+Weight = Annotated[float, Field(ge=1e-6, le=1e6)]
+Charge = Annotated[float, Field(ge=0.0, le=1e6)]
+PhotonEnergy = Annotated[float, Field(ge=1e-9, le=1e9)]
+OpacityValue = Annotated[float, Field(ge=0.0, le=1e30)]
 Exponent = Annotated[float, Field(ge=-10.0, le=10.0)]
 NetworkWord = Annotated[str, AfterValidator(partial(known_word, known=PACKAGED_NETWORKS))]
 
@@ -23,10 +27,8 @@ class GammaLawSection(Section):
     """``[eos]`` of an ideal gas with a constant ratio of specific heats."""
 
     kind: Literal["gamma_law"] = Field(description="gamma_law or stellar")
-    gamma: Annotated[float, Field(gt=1.0, le=10.0)] = Field(
-        default=5.0 / 3.0, description="ratio of specific heats"
-    )
-    mean_molecular_weight: Positive = Field(default=1.0, description="grams a mole of particles")
+    gamma: Annotated[float, Field(ge=1.001, le=10.0)] = Field(default=5.0 / 3.0, description="ratio of specific heats")
+    mean_molecular_weight: Weight = Field(default=1.0, description="grams a mole of particles")
 
 
 class StellarSection(Section):
@@ -48,22 +50,18 @@ class HydroSection(Section):
 class OpacitySection(Section):
     """``[transport.opacity]``: the invented power-law opacity."""
 
-    absorption: NotNegative = Field(
+    absorption: OpacityValue = Field(
         default=1.0, description="absorption at the reference temperature and photon energy [cm^2/g]"
     )
-    reference_temperature: Positive = Field(default=1e8, description="reference temperature [K]")
-    reference_photon_energy: Positive = Field(default=25.0, description="reference photon energy [keV]")
-    temperature_exponent: Exponent = Field(
-        default=1.0, description="absorption falls with this power of temperature"
-    )
-    photon_exponent: Exponent = Field(
-        default=1.0, description="absorption falls with this power of photon energy"
-    )
-    scattering: NotNegative = Field(default=0.2, description="grey scattering [cm^2/g]")
+    reference_temperature: Temperature = Field(default=1e8, description="reference temperature [K]")
+    reference_photon_energy: PhotonEnergy = Field(default=25.0, description="reference photon energy [keV]")
+    temperature_exponent: Exponent = Field(default=1.0, description="absorption falls with this power of temperature")
+    photon_exponent: Exponent = Field(default=1.0, description="absorption falls with this power of photon energy")
+    scattering: OpacityValue = Field(default=0.2, description="grey scattering [cm^2/g]")
     inelastic: Share = Field(
         default=0.1, description="largest share of a group's scattering that moves photons to other groups"
     )
-    broadening: Annotated[float, Field(gt=0.0, le=10.0)] = Field(
+    broadening: Annotated[float, Field(ge=0.001, le=10.0)] = Field(
         default=0.7, description="width of that move, in the logarithm of the photon energy"
     )
 
@@ -72,10 +70,8 @@ class TransportSection(Section):
     """``[transport]``: implicit multi-group flux-limited diffusion, solved iteratively across tiles."""
 
     groups: Annotated[int, Field(ge=1, le=256)] = Field(default=16, description="photon groups")
-    lowest_photon_energy: Positive = Field(
-        default=1.0, description="low end of the nominal photon energies [keV]"
-    )
-    highest_photon_energy: Positive = Field(
+    lowest_photon_energy: PhotonEnergy = Field(default=1.0, description="low end of the nominal photon energies [keV]")
+    highest_photon_energy: PhotonEnergy = Field(
         default=3000.0, description="high end of the nominal photon energies [keV]"
     )
     opacity: OpacitySection = Field(default=OpacitySection(), description="the invented opacity")
@@ -119,9 +115,9 @@ class SpeciesSection(Section):
     names: Annotated[tuple[Word, ...], BeforeValidator(lists), Field(max_length=200)] = Field(
         default=(), description="names of the species"
     )
-    mass_numbers: Annotated[tuple[Positive, ...], BeforeValidator(lists), Field(max_length=200)] = Field(
+    mass_numbers: Annotated[tuple[Weight, ...], BeforeValidator(lists), Field(max_length=200)] = Field(
         default=(), description="mass number of each species"
     )
-    charges: Annotated[tuple[NotNegative, ...], BeforeValidator(lists), Field(max_length=200)] = Field(
+    charges: Annotated[tuple[Charge, ...], BeforeValidator(lists), Field(max_length=200)] = Field(
         default=(), description="charge of each species"
     )

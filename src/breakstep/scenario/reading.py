@@ -96,9 +96,7 @@ class Reader:
                 raise self._fault(place, f"is missing; expected {info.description}")
             return _default(info)
         models, is_list = tables_of(info)
-        if (
-            table[name] is None and not info.is_required()
-        ):  # a resolved scenario says so where nothing was said
+        if table[name] is None and not info.is_required():  # a resolved scenario says so where nothing was said
             return _default(info)
         if not models:
             return self._value(model, name, table[name], place)
@@ -111,9 +109,7 @@ class Reader:
             return _adapter(model, name).validate_python(value)
         except ValidationError as error:
             for found in error.errors(include_url=False):
-                steps = [
-                    step for step in found["loc"] if step != "[key]"
-                ]  # pydantic's mark for a table's key
+                steps = [step for step in found["loc"] if step != "[key]"]  # pydantic's mark for a table's key
                 self._fault(reduce(join, steps, path), expected(found))
             raise NotSoundError(path) from None
 

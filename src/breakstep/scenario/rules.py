@@ -48,9 +48,7 @@ def _not_too_many(file: Any) -> Iterator[Fault]:
         yield Fault("mesh.zones", f"expected at most {MOST_ZONES:.0e} zones in all, came {zones:.1e}")
     tiles = int(np.prod([-(-n // t) for n, t in _zones_and_tile(file)], dtype=object))
     if tiles > MOST_TILES:
-        yield Fault(
-            "mesh.tile", f"expected at most {MOST_TILES:.0e} tiles, came {tiles:.1e}; make tiles larger"
-        )
+        yield Fault("mesh.tile", f"expected at most {MOST_TILES:.0e} tiles, came {tiles:.1e}; make tiles larger")
 
 
 def _zones_and_tile(file: Any) -> Iterator[tuple[int, int]]:
@@ -69,12 +67,7 @@ def _edges_of_axes(file: Any) -> Iterator[Fault]:
 def _halos_fit(file: Any) -> Iterator[Fault]:
     widths = {"hydro": HALO, "transport": 1}
     needed = [(step, width) for step, width in widths.items() if getattr(file, step) is not None]
-    if (
-        any(_axes_agree(file))
-        or any(_tile_fits(file))
-        or any(_edges_of_axes(file))
-        or any(_not_too_many(file))
-    ):
+    if any(_axes_agree(file)) or any(_tile_fits(file)) or any(_edges_of_axes(file)) or any(_not_too_many(file)):
         return  # said already, and no tiling can be made
     tiling = Tiling(build_mesh(file.mesh), file.mesh.tile)
     for step, width in needed:
@@ -135,13 +128,8 @@ def _transport_iterations(file: Any) -> Iterator[Fault]:
 
 
 def _transport_opacity(file: Any) -> Iterator[Fault]:
-    if (
-        file.transport is not None
-        and not file.transport.opacity.absorption + file.transport.opacity.scattering > 0
-    ):
-        yield Fault(
-            "transport.opacity", "absorption and scattering cannot both be 0; diffusion would be unbounded"
-        )
+    if file.transport is not None and not file.transport.opacity.absorption + file.transport.opacity.scattering > 0:
+        yield Fault("transport.opacity", "absorption and scattering cannot both be 0; diffusion would be unbounded")
 
 
 def _radiation_counted_once(file: Any) -> Iterator[Fault]:
@@ -167,9 +155,7 @@ def _species_lists(file: Any) -> Iterator[Fault]:
         yield Fault("species.names", f"{name} is listed twice")
     for key, values in (("mass_numbers", file.species.mass_numbers), ("charges", file.species.charges)):
         if len(values) != len(names):
-            yield Fault(
-                f"species.{key}", f"expected one entry for each of {len(names)} names, came {len(values)}"
-            )
+            yield Fault(f"species.{key}", f"expected one entry for each of {len(names)} names, came {len(values)}")
 
 
 RULES: tuple[Rule, ...] = (

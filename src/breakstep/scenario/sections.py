@@ -44,9 +44,10 @@ def _pair(value: Any) -> Any:
 Positive = Annotated[float, Field(gt=0.0)]
 NotNegative = Annotated[float, Field(ge=0.0)]
 LARGEST = 1e30
-"""Bound on lengths [cm]; keeps products of a few of them finite."""
+"""Bound on lengths [cm] and their inverses; keeps products of a few of them within floating point."""
 Length = Annotated[float, Field(ge=-LARGEST, le=LARGEST)]
-PositiveLength = Annotated[float, Field(gt=0.0, le=LARGEST)]
+PositiveLength = Annotated[float, Field(ge=1.0 / LARGEST, le=LARGEST)]
+Temperature = Annotated[float, Field(ge=1e-30, le=1e12)]
 Count = Annotated[int, Field(ge=1, le=1_000_000)]
 Counts = Annotated[tuple[Count, ...], BeforeValidator(lists), Field(min_length=1, max_length=3)]
 Lengths = Annotated[tuple[PositiveLength, ...], BeforeValidator(lists), Field(min_length=1, max_length=3)]
@@ -58,15 +59,9 @@ EdgePair = Annotated[tuple[EdgeWord, ...], BeforeValidator(_pair), Field(min_len
 class EdgesSection(Section):
     """``[mesh.edges]``: what lies beyond the two sides of each axis."""
 
-    x: EdgePair = Field(
-        default=("periodic", "periodic"), description="one word for both sides, or [low, high]"
-    )
-    y: EdgePair = Field(
-        default=("periodic", "periodic"), description="one word for both sides, or [low, high]"
-    )
-    z: EdgePair = Field(
-        default=("periodic", "periodic"), description="one word for both sides, or [low, high]"
-    )
+    x: EdgePair = Field(default=("periodic", "periodic"), description="one word for both sides, or [low, high]")
+    y: EdgePair = Field(default=("periodic", "periodic"), description="one word for both sides, or [low, high]")
+    z: EdgePair = Field(default=("periodic", "periodic"), description="one word for both sides, or [low, high]")
 
 
 class MeshSection(Section):
@@ -89,14 +84,14 @@ class RunSection(Section):
     )
     workers: Annotated[int, Field(ge=1, le=4096)] = Field(default=2, description="worker processes")
     threads: Annotated[int, Field(ge=1, le=256)] = Field(default=1, description="threads of each worker")
-    placement: Literal["blocks", "dask"] = Field(
+    placement: Literal["blocks", "curve", "dask"] = Field(
         default="blocks", description="who decides which worker owns a tile"
     )
-    window: Annotated[int, Field(ge=1, le=1000)] = Field(
-        default=4, description="cycles that may be in flight at once"
-    )
+    window: Annotated[int, Field(ge=1, le=1000)] = Field(default=4, description="cycles that may be in flight at once")
     fuse: bool = Field(default=True, description="whether steps without a halo between them share a task")
-    dispatch: Literal["native", "serial"] = Field(default="native", description="what carries out the tasks")
+    dispatch: Literal["resident", "native", "serial"] = Field(
+        default="resident", description="what carries out the tasks"
+    )
 
 
 class TimeStepSection(Section):

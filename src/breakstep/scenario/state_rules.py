@@ -51,9 +51,7 @@ def _fixed_edge(axis: int, side: int, file: Any) -> Iterator[Fault]:
     if is_fixed and not is_given:
         yield Fault(f"fixed.{key}", "is missing; expected the state beyond this fixed edge")
     if is_given and not is_fixed:
-        yield Fault(
-            f"fixed.{key}", f'this edge is not fixed; set mesh.edges.{name} to "fixed" or leave this out'
-        )
+        yield Fault(f"fixed.{key}", f'this edge is not fixed; set mesh.edges.{name} to "fixed" or leave this out')
 
 
 def _fixed_state(axis: int, side: int, file: Any) -> Iterator[Fault]:
@@ -72,9 +70,7 @@ def _state_faults(path: str, table: Any, file: Any) -> list[Fault]:
 
 def _one_of_two(path: str, table: Any, file: Any) -> Iterator[Fault]:
     if table.temperature is None and table.pressure is None:
-        yield Fault(
-            join(path, "temperature"), "is missing; expected a temperature [K] or a pressure [erg/cm^3]"
-        )
+        yield Fault(join(path, "temperature"), "is missing; expected a temperature [K] or a pressure [erg/cm^3]")
     if table.temperature is not None and table.pressure is not None:
         yield Fault(join(path, "pressure"), "expected a temperature or a pressure, came both")
 
@@ -112,9 +108,7 @@ def _composition_faults(key: str, composition: dict[str, float], species: tuple[
 
 def _radiation_is_there(path: str, table: Any, file: Any) -> Iterator[Fault]:
     if table.radiation_temperature is not None and file.transport is None:
-        yield Fault(
-            join(path, "radiation_temperature"), "there is no radiation without [transport]; leave this out"
-        )
+        yield Fault(join(path, "radiation_temperature"), "there is no radiation without [transport]; leave this out")
 
 
 _ONE_STATE: tuple[StateRule, ...] = (_one_of_two, _pressure_can_be, _composition, _radiation_is_there)
@@ -124,9 +118,7 @@ def _spots_fit(file: Any) -> Iterator[Fault]:
     if file.initial.is_a(SpotsSection):
         for number, spot in enumerate(file.initial.spots):
             path = f"initial.spots.{number}"
-            yield from apply_rules(
-                [partial(rule, path, spot) for rule in (_spot_place, _spot_composition)], file
-            )
+            yield from apply_rules([partial(rule, path, spot) for rule in (_spot_place, _spot_composition)], file)
 
 
 def _spot_place(path: str, spot: Any, file: Any) -> Iterator[Fault]:

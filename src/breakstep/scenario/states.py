@@ -8,13 +8,12 @@ from typing import Annotated, Literal
 from pydantic import BeforeValidator, Field
 
 from breakstep.kernels.constants import C_LIGHT
-from breakstep.scenario.sections import NotNegative, PositiveLength, Section, Vector, lists
+from breakstep.scenario.sections import NotNegative, PositiveLength, Section, Temperature, Vector, lists
 
-Density = Annotated[float, Field(gt=0.0, le=1e16)]
-Pressure = Annotated[float, Field(gt=0.0, le=1e40)]
+Density = Annotated[float, Field(ge=1e-30, le=1e16)]
+Pressure = Annotated[float, Field(ge=1e-30, le=1e40)]
 Speed = Annotated[float, Field(ge=-C_LIGHT, le=C_LIGHT)]
 Velocity = Annotated[tuple[Speed, ...], BeforeValidator(lists), Field(min_length=1, max_length=3)]
-Temperature = Annotated[float, Field(gt=0.0, le=1e12)]
 Composition = dict[str, Annotated[float, Field(ge=0.0, le=1.0)]]
 AxisWord = Literal["x", "y", "z"]
 
@@ -24,9 +23,7 @@ class StateSection(Section):
 
     density: Density = Field(description="mass density [g/cm^3]")
     temperature: Temperature | None = Field(default=None, description="temperature of the gas [K]")
-    pressure: Pressure | None = Field(
-        default=None, description="pressure, instead of the temperature [erg/cm^3]"
-    )
+    pressure: Pressure | None = Field(default=None, description="pressure, instead of the temperature [erg/cm^3]")
     velocity: Velocity = Field(default=(0.0,), description="velocity along x, y, z [cm/s]")
     composition: Composition = Field(default_factory=dict, description="mass fraction of each species")
     radiation_temperature: Temperature | None = Field(
@@ -45,23 +42,21 @@ class SpotSection(Section):
 
     centre: Vector = Field(description="centre of the spot [cm]")
     radius: PositiveLength = Field(description="distance at which the spot has faded [cm]")
-    fade: Annotated[float, Field(gt=0.0, le=1.0)] = Field(
+    fade: Annotated[float, Field(ge=1e-6, le=1.0)] = Field(
         default=1.0, description="share of the radius, from outside, over which it fades"
     )
     temperature: Temperature = Field(description="temperature at the centre [K]")
     density: Density | None = Field(default=None, description="density at the centre, if different [g/cm^3]")
-    composition: Composition | None = Field(
-        default=None, description="mass fractions at the centre, if different"
-    )
+    composition: Composition | None = Field(default=None, description="mass fractions at the centre, if different")
 
 
 class SpotsSection(StateSection):
     """A uniform state with round spots in it, each laid over those before."""
 
     kind: Literal["spots"] = Field(description="how the initial state is laid out")
-    spots: Annotated[
-        tuple[SpotSection, ...], BeforeValidator(lists), Field(min_length=1, max_length=10_000)
-    ] = Field(description="the spots")
+    spots: Annotated[tuple[SpotSection, ...], BeforeValidator(lists), Field(min_length=1, max_length=10_000)] = Field(
+        description="the spots"
+    )
 
 
 class RiemannSection(Section):
@@ -82,9 +77,7 @@ class BlastSection(StateSection):
         description="energy let loose: erg in three dimensions, erg/cm in two, erg/cm^2 in one"
     )
     radius: PositiveLength = Field(description="distance within which it is let loose [cm]")
-    centre: Vector | None = Field(
-        default=None, description="the point, the middle of the mesh if left out [cm]"
-    )
+    centre: Vector | None = Field(default=None, description="the point, the middle of the mesh if left out [cm]")
 
 
 class RadiationSlabSection(StateSection):

@@ -11,6 +11,7 @@ import numpy as np
 from breakstep.errors import CourantError, KernelError
 from breakstep.kernels import hydro
 from breakstep.kernels.eos import GammaLaw, Stellar
+from breakstep.kernels.hydro_rows import HALO
 from breakstep.mesh.fields import Field
 from breakstep.mesh.mesh import AXIS_NAMES, Triple
 from breakstep.steps.step import Array, Call, Read, Step
@@ -57,7 +58,7 @@ def describe_zone(gas: Array, flat: int, call: Call) -> tuple[Triple, str]:
     """Where a zone lies in the mesh, and its state in words."""
     place = np.unravel_index(flat, gas.shape[1:])
     zone = tuple(int(p) + o for p, o in zip(place, call.origin, strict=True))
-    state = gas[(slice(None), *place)]
+    state = gas.reshape(gas.shape[0], -1)[:, flat]
     words = ", ".join(f"{name} {value:.6g}" for name, value in zip(ADVECTED, state, strict=False))
     return zone, words  # type: ignore[return-value]
 
@@ -95,21 +96,32 @@ class SweepKernel:
                 courant=courant,
             )
         if bad >= 0:
-            zone, before = describe_zone(interior(arrays["gas"], call.shape), bad, call)
-            _, after = describe_zone(new, bad, call)
-            raise KernelError(
-                f"{call.where()}: zone {zone} has or gets a density, energy or pressure that is not positive;"
-                f" before: {before}; after: {after}; dt {call.dt:.4g} s; lower the CFL factor or look at the state",
-                zone=zone,
-            )
+            raise self._unsound(interior(arrays["gas"], call.shape), new, bad, call)
         call.count("zones", int(np.prod(call.shape)))
         return {"gas": new}
+
+    def _unsound(self, old: Array, new: Array, bad: int, call: Call) -> KernelError:
+        """The error for a zone that was unsound before the sweep if there is one, else one that gets so.
+
+        A zone that was unsound spoils its neighbours, and the kernel names the first of them all.
+        """
+        widths, active = np.array(call.widths), np.array(call.active)
+        _, was_bad = hydro.signal_rate(old, widths, active, *self.gas.arrays)
+        flat = was_bad if was_bad >= 0 else bad
+        zone, before = describe_zone(old, flat, call)
+        _, after = describe_zone(new, flat, call)
+        return KernelError(
+            f"{call.where()}: zone {zone} {'has' if was_bad >= 0 else 'gets'} a density, energy or pressure that is"
+            f" not positive; before: {before}; after: {after}; dt {call.dt:.4g} s; lower the CFL factor or look at"
+            " the state",
+            zone=zone,
+        )
 
 
 def sweep(gas: Gas, axis: int) -> Step:
     """The step ``sweep_x``, ``sweep_y`` or ``sweep_z``: halo 2 along its own axis only."""
     halo = [0, 0, 0]
-    halo[axis] = hydro.HALO
+    halo[axis] = HALO
     return Step(
         name=f"sweep_{AXIS_NAMES[axis]}",
         kernel=SweepKernel(gas, axis),

@@ -30,6 +30,9 @@ class Combine(StrEnum):
     SUM = "sum"
 
 
+_OPERATIONS = {Combine.MIN: np.minimum, Combine.MAX: np.maximum, Combine.SUM: np.add}
+
+
 @dataclass(frozen=True)
 class Reduction:
     """A value made from all tiles.
@@ -78,11 +81,11 @@ def combine(kind: Combine, vectors: list[Array | None]) -> Array | None:
         raise KernelError(
             f"tiles contribute vectors of different lengths ({sizes}) to a reduction; return one length"
         )
-    total = present[0].copy()
-    operation = {Combine.MIN: np.minimum, Combine.MAX: np.maximum, Combine.SUM: np.add}[kind]
+    total: Array = present[0].copy()
+    operation: Callable[[Array, Array], Array] = _OPERATIONS[kind]
     for vector in present[1:]:
-        total = operation(total, vector)
-    return total
+        total = np.asarray(operation(total, vector))
+    return np.asarray(total, dtype=np.float64)
 
 
 def finish_rows(reduction: Reduction, combined: Array | None, previous: Array | None, rows: int) -> Array:

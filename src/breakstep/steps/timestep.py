@@ -36,9 +36,7 @@ class SignalRate:
         rate, bad = hydro.signal_rate(arrays["gas"], widths, active, *self.gas.arrays)
         if bad >= 0:
             zone, state = describe_zone(arrays["gas"], bad, call)
-            raise KernelError(
-                f"{call.where()}: zone {zone} has no sound speed; its state: {state}", zone=zone
-            )
+            raise KernelError(f"{call.where()}: zone {zone} has no sound speed; its state: {state}", zone=zone)
         return np.array([rate])
 
 

@@ -71,9 +71,7 @@ def test_spread_is_the_middle_half() -> None:
     ("needed", "judged", "met"),
     [(3.0, True, True), (3.1, True, False), (None, True, None), (3.0, False, None)],
 )
-def test_a_row_says_whether_its_median_is_enough(
-    needed: float | None, judged: bool, met: bool | None
-) -> None:
+def test_a_row_says_whether_its_median_is_enough(needed: float | None, judged: bool, met: bool | None) -> None:
     row = Row("x", 1.0, 3.0, Spread(3.0, 2.0, 4.0), needed, judged)
     assert row.met is met
 

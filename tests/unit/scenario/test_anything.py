@@ -6,11 +6,12 @@ from collections.abc import Iterator
 from contextlib import suppress
 from typing import Any
 
+import numpy as np
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from breakstep.errors import ScenarioError
-from breakstep.scenario.load import scenario_from
+from breakstep.scenario.load import Scenario, scenario_from
 from tests.unit.scenario.example import changed, tables
 
 
@@ -31,17 +32,28 @@ VALUES = st.recursive(
     lambda inner: st.lists(inner, max_size=4) | st.dictionaries(st.text(max_size=5), inner, max_size=3),
     max_leaves=6,
 )
-PATHS = st.sampled_from(
-    [*paths(tables()), "fixed", "fixed.x_low", "species", "mesh.edges.x", "new", "run.new"]
-)
+PATHS = st.sampled_from([*paths(tables()), "fixed", "fixed.x_low", "species", "mesh.edges.x", "new", "run.new"])
 
 
 def load_or_refuse(spoilt: dict[str, Any], *overrides: str) -> None:
+    faults: list[str] = []
+    scenario: Scenario | None = None
     try:
-        scenario_from(spoilt, source="example.toml", overrides=overrides)
+        scenario = scenario_from(spoilt, source="example.toml", overrides=overrides)
     except ScenarioError as refusal:
-        assert refusal.details["faults"]
-        assert all(len(fault) < 400 for fault in refusal.details["faults"])
+        faults = refusal.details["faults"]
+    assert (scenario is None) == bool(faults)
+    assert all(len(fault) < 400 for fault in faults)
+    if scenario is not None:
+        first_tile_is_sound(scenario)
+
+
+def first_tile_is_sound(scenario: Scenario) -> None:
+    """What is let through must have an initial state."""
+    problem = scenario.problem()
+    tile = problem.cut(scenario.tile).tiles[0]
+    if tile.zones < 10_000:
+        assert all(np.isfinite(array).all() for array in problem.initial(tile, problem.mesh).values())
 
 
 @settings(max_examples=300, deadline=None)  # compiling the first time takes longer than any deadline

@@ -89,6 +89,12 @@ def test_brackets_without_end(tmp_path: Path) -> None:
     assert "expected TOML" in refused(parse, file)
 
 
+def test_an_integer_of_thousands_of_digits(tmp_path: Path) -> None:
+    file = tmp_path / "a.toml"
+    file.write_text("x = " + "1" * 5000)
+    assert "expected TOML, but: Exceeds the limit" in refused(parse, file)
+
+
 def test_a_byte_order_mark_is_no_fault(tmp_path: Path) -> None:
     file = tmp_path / "a.toml"
     file.write_bytes(b"\xef\xbb\xbfname = 'a'")
@@ -101,9 +107,7 @@ def test_faults_name_the_file(tmp_path: Path) -> None:
     assert refused(load_scenario, file).startswith("mine.toml: mesh: is missing")
 
 
-def test_a_wheel_holds_its_scenarios_beside_the_module(
-    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_a_wheel_holds_its_scenarios_beside_the_module(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     (tmp_path / "library").mkdir()
     (tmp_path / "library" / "packed.toml").write_text("")
     monkeypatch.setattr(finding, "__file__", str(tmp_path / "find.py"))

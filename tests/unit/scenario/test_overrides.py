@@ -75,7 +75,7 @@ def test_another_kind_of_initial_state() -> None:
         ("mesh.zone=[1]", "--set: mesh.zone: unknown key; did you mean mesh.zones?"),
         ("mseh.zones=[1]", "--set: mseh.zones: unknown key; did you mean mesh?"),
         ("run.xyzzy=1", "--set: run.xyzzy: unknown key; known here: cycles, end_time, splitting"),
-        ("initial.spots.0.radus=1", "--set: initial.spots.0.radus: unknown key; did you mean initial.spots.0."),
+        ("initial.spots.0.radus=1", "--set: initial.spots.0.radus: unknown key; did you mean initial.spots"),
         ("initial.spots.3.radius=1", "--set: initial.spots.3: expected the number of an entry, from 0 to 0,"),
         ("initial.spots.x.radius=1", "--set: initial.spots.x: expected the number of an entry, from 0 to 0,"),
         ("initial.left.density=1", "--set: initial.left.density: unknown key"),

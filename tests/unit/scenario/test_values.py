@@ -55,8 +55,8 @@ WRONG: list[tuple[str, Any, str]] = [
     # words
     ("name", "two words", "name: expected letters, digits and underscores"),
     ("run.splitting", "strnag", 'came "strnag"; did you mean strang?'),
-    ("run.placement", "scattered", 'expected one of blocks, dask, came "scattered"'),
-    ("run.dispatch", 3, "run.dispatch: expected one of native, serial, came 3"),
+    ("run.placement", "scattered", 'came "scattered"'),
+    ("run.dispatch", 3, "run.dispatch: expected one of "),
     ("burning.network", "alpha", 'expected one of alpha13, came "alpha"; did you mean alpha13?'),
     ("mesh.edges", {"x": "periodc"}, 'came "periodc"; did you mean periodic?'),
     ("mesh.edges", {"x": ["outflow", "fixd"]}, 'mesh.edges.x.1: expected one of'),
@@ -96,6 +96,11 @@ def test_a_huge_integer_is_no_crash() -> None:
     (fault,) = faults_of(changed("initial.density", 10**400))
     assert "initial.density: expected" in fault
     assert len(fault) < 200
+
+
+def test_a_number_that_cannot_be_written_out() -> None:
+    (fault,) = faults_of(changed("run.cycles", 16**5000))
+    assert fault == "example.toml: run.cycles: expected a number of at most 1e+06, came a number of many digits"
 
 
 def test_an_empty_file_names_every_missing_table() -> None:

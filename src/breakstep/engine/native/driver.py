@@ -27,7 +27,7 @@ from breakstep.engine.program import Program
 from breakstep.engine.recording import record_edges
 from breakstep.engine.run import Progress, RunOptions, RunResult, unroller_for
 from breakstep.engine.warm import warm_up
-from breakstep.engine.workers import known_workers
+from breakstep.engine.workers import known_workers, present_workers, require_present
 from breakstep.errors import BreakstepError, ClusterError
 from breakstep.graph.tasks import ANYWHERE, Kind, Task, TaskGraph
 from breakstep.graph.unroll import INITIAL, Need, Phase
@@ -57,15 +57,34 @@ class NativeDispatch:
         self._warm: set[int] = set()
 
     def prepare(self, program: Program) -> None:
-        """Compile kernels once here, then load them on every worker."""
+        """Compile kernels once here, then load them on every worker.
+
+        Raises
+        ------
+        ClusterError
+            A worker has gone, or cannot load the program.
+        """
+        require_present(self.client, self.addresses)
         if id(program) not in self._warm:
             warm_up(program)
-            self.client.run(warm_up, program, workers=self.addresses)
+            self._load(program)
             self._warm.add(id(program))
+
+    def _load(self, program: Program) -> None:
+        try:
+            self.client.run(warm_up, program, workers=self.addresses)
+        except Exception as error:  # pickling and importing raise anything
+            raise ClusterError(
+                f"the workers cannot load the problem ({type(error).__name__}: {error}); what it holds must be"
+                " picklable, and the modules of its functions importable on every worker"
+            ) from error
 
     def run(self, program: Program, options: RunOptions, progress: Progress | None = None) -> RunResult:
         """Run a program; errors and interrupts end up in the result."""
-        self.prepare(program)
+        try:
+            self.prepare(program)
+        except ClusterError as error:
+            return RunResult({}, {}, RunRecord(), 0.0, 0, failure=_without_frames(error))
         return _NativeRun(self, program, options, progress).run()
 
 
@@ -250,17 +269,8 @@ class _NativeRun:
 
     def _wait(self, futures: list[Future]) -> None:
         """Wait for all; raise the first error among them, or ClusterError when a worker has gone."""
-        while True:
-            try:
-                wait(futures, timeout=POLL_SECONDS)
-                break
-            except TimeoutError:
-                present = self.client.scheduler_info(n_workers=-1)["workers"]
-                gone = [address for address in self.dispatch.addresses if address not in present]
-                if gone:
-                    raise ClusterError(
-                        f"worker {', '.join(gone)} has gone and took its tiles with it; start the run again"
-                    ) from None
+        while not self.client.sync(_done_within, futures, POLL_SECONDS):
+            require_present(self.client, self.dispatch.addresses)
         for future in futures:
             if future.status != "finished":
                 future.result()
@@ -270,7 +280,7 @@ class _NativeRun:
         wire.ARRIVALS.clear()  # results gathered here are not transfers between workers
         record = self.result.record
         present = (
-            self.client.scheduler_info(n_workers=-1)["workers"] if self.client.status == "running" else {}
+            present_workers(self.client) if self.client.status == "running" else {}
         )
         addresses = [address for address in self.dispatch.addresses if address in present]
         after = read_clocks(self.client, addresses)
@@ -290,6 +300,19 @@ class _NativeRun:
             for arrival in part["arrivals"]:
                 if arrival.producer >= 0 and arrival.sender in zeros and arrival.sender != part["worker"]:
                     record.transfers.extend(_transfer_rows(arrival, part["worker"], zeros))
+
+
+async def _done_within(futures: list[Future], seconds: float) -> bool:
+    """Whether all futures are done in time; runs on the client's loop.
+
+    A timeout that ``wait`` raises into the caller's thread stands in a ring of frames there, which would hold
+    the futures, and so arrays on the workers, until the garbage collector comes by.
+    """
+    try:
+        await wait(futures, timeout=seconds)
+    except TimeoutError:
+        return False
+    return True
 
 
 def _without_frames(error: BreakstepError) -> BreakstepError:

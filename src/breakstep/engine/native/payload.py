@@ -80,7 +80,7 @@ def _pack(payload: Payload) -> tuple[dict[str, Any], list[Any]]:
         "sent": began,
         "packed": time.perf_counter_ns() - began,
     }
-    return header, [memoryview(array.reshape(-1).view(np.uint8)) for array in arrays.values()]
+    return header, [array.reshape(-1).view(np.uint8).data for array in arrays.values()]
 
 
 @dask_deserialize.register(Payload)

@@ -26,7 +26,7 @@ from breakstep.engine.resident.gather import gather_record
 from breakstep.engine.resident.host import Assignment
 from breakstep.engine.run import Progress, RunOptions, RunResult
 from breakstep.engine.warm import warm_up
-from breakstep.engine.workers import known_workers
+from breakstep.engine.workers import known_workers, present_workers
 from breakstep.errors import BreakstepError, ClusterError
 from breakstep.profile.record import RunRecord
 
@@ -227,7 +227,7 @@ class _Attempt:
             if failed:
                 self._raise(failed)
             if pending:
-                present = self.client.scheduler_info(n_workers=-1)["workers"]
+                present = present_workers(self.client)
                 gone = [address for address in self.addresses if address not in present]
                 if gone:
                     raise ClusterError(f"worker {', '.join(gone)} has gone and took its tiles with it")
@@ -262,12 +262,12 @@ class _Attempt:
             del self.reports[cycle]
             root = self.dispatch.checkpoints
             assert root is not None
-            checkpoint.complete(root, cycle, self.program, report.digests, values, self.dispatch.facts)
+            checkpoint.complete(root, cycle, self.program, report.digests, values, {"scenario": {}, **self.dispatch.facts})
 
     def _collect(self, clocks: list[ClockReading]) -> None:
         """Stop what still runs and bring in the workers' records; from a lost worker there is none."""
         try:
-            present = self.client.scheduler_info(n_workers=-1)["workers"]
+            present = present_workers(self.client)
             alive = [address for address in self.addresses if address in present]
             self.client.run(remote.stop, self.name, workers=alive, on_error="ignore")
             after = dict(zip(alive, read_clocks(self.client, alive), strict=True))

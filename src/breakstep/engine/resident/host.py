@@ -103,6 +103,7 @@ class Host:
         self.heard = time.monotonic()
         self.saved: list[tuple[int, dict[str, dict[int, str]], dict[str, list[list[float]]]]] = []
         self._early: list[tuple[int, Parcel, int]] = []
+        self._senders: set[asyncio.Task[None]] = set()
         self._seen: dict[int, int] = {}  # sender -> number of its last message
 
     # ---- a run's life ----------------------------------------------------------------------------
@@ -264,7 +265,6 @@ class Host:
                 kicked.add(worker)
 
     def _start_sender(self, worker: int) -> None:
-        self._senders = getattr(self, "_senders", set())
         task = self.loop.create_task(self._send(worker))
         self._senders.add(task)
         task.add_done_callback(self._senders.discard)
