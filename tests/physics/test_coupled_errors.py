@@ -79,7 +79,7 @@ def test_gas_without_pressure_is_found_by_the_sweep_that_meets_it() -> None:
     error = failure(Embers(first=jolt(2, -1.0, ZONE)).problem())
     assert type(error) is KernelError
     assert (error.details["zone"], error.details["tile"], error.details["cycle"]) == (ZONE, 1, 2)
-    assert error.message.startswith(f"step sweep_x, tile 1, cycle 2: zone {ZONE} has a density, energy or pressure")
+    assert error.message.startswith(f"step sweep_x, tile 1, cycle 2: zone {ZONE} has or gets a density")
     assert "total_energy -" in error.message  # the state itself
 
 

@@ -8,6 +8,7 @@ from pathlib import Path
 from typing import Any
 
 from breakstep.commands.shared import progress_bar
+from breakstep.engine.pilot import measure_costs
 from breakstep.engine.program import Program
 from breakstep.engine.recorded import run_and_record
 from breakstep.engine.run import Dispatch, RunOptions, RunResult
@@ -105,6 +106,8 @@ class Session:
         BreakstepError
             Whatever ended the run early, after the profile so far has been written.
         """
+        if self.options.placement == "balanced" and self.options.costs is None:
+            self.options = replace(self.options, costs=measure_costs(dispatch, self.program, self.options))
         options = replace(self.options, barriers=self.barriers(choice), trace=trace)
         with progress_bar(title or choice, self.program.problem.cycles) as progress:
             result, profile = run_and_record(

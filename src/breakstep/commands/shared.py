@@ -16,6 +16,7 @@ from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, T
 
 from breakstep.engine.cluster import existing_cluster, local_cluster
 from breakstep.engine.native import NativeDispatch
+from breakstep.engine.placement import PLACEMENTS
 from breakstep.engine.resident import ResidentDispatch
 from breakstep.engine.run import Dispatch
 from breakstep.engine.serial import SerialDispatch
@@ -31,7 +32,7 @@ def run_options(function: _F) -> _F:
         click.option("--set", "overrides", multiple=True, metavar="KEY.PATH=VALUE", help="Override a scenario value."),
         click.option("--workers", type=click.IntRange(1), help="Worker processes (default: the scenario's)."),
         click.option("--threads", type=click.IntRange(1), help="Threads a worker (default: the scenario's)."),
-        click.option("--placement", type=click.Choice(["blocks", "curve", "dask"]), help="Who owns which tile."),
+        click.option("--placement", type=click.Choice(PLACEMENTS), help="Who owns which tile."),
         click.option("--dispatch", type=click.Choice(["resident", "native", "serial"]), help="Who runs the tasks."),
         click.option("--memory-limit", type=click.IntRange(0), help="Live bytes a worker above which run-ahead waits."),
         click.option("--address", help="Use the Dask cluster whose scheduler listens there."),

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import contextlib
-import warnings
+import logging
 from collections.abc import Iterator
 from pathlib import Path
 
 import dask
 from distributed import Client, LocalCluster
 
+from breakstep.engine.interrupts import children_deaf, interrupts_held
 from breakstep.errors import ClusterError
 
 CONNECT_SECONDS = 10
@@ -20,28 +21,29 @@ def local_cluster(workers: int, threads: int = 1) -> Iterator[Client]:
     """A cluster of worker processes on this machine, gone when the context ends.
 
     Scheduler and workers listen on loopback alone. Each worker's BLAS runs one thread (Dask's own
-    default for its worker processes), so that the tasks are the only parallelism.
+    default for its worker processes), so that the tasks are the only parallelism. Ctrl-C does not reach the
+    workers, which live on to hand over their records; while they start, it waits.
     """
     quiet = {
         "distributed.worker.memory.terminate": False,
         "distributed.admin.large-graph-warning-threshold": "100MB",
     }
-    with dask.config.set(quiet), _start(workers, threads) as cluster, Client(cluster) as client:
+    with dask.config.set(quiet), contextlib.ExitStack() as stack:
+        with interrupts_held(), children_deaf():
+            client = stack.enter_context(Client(stack.enter_context(_start(workers, threads))))
         yield client
 
 
 def _start(workers: int, threads: int) -> LocalCluster:
-    """Start one; that its status page moves to another port when one is taken is nobody's concern."""
-    with warnings.catch_warnings():
-        warnings.filterwarnings("ignore", "Port .* is already in use", UserWarning)
-        return LocalCluster(
-            n_workers=workers,
-            threads_per_worker=threads,
-            processes=True,
-            host="127.0.0.1",
-            dashboard_address=None,
-            silence_logs=50,
-        )
+    """Start one, its status page on whichever port is free, and without Dask's own log lines."""
+    return LocalCluster(
+        n_workers=workers,
+        threads_per_worker=threads,
+        processes=True,
+        host="127.0.0.1",
+        scheduler_kwargs={"dashboard": False, "dashboard_address": "127.0.0.1:0"},
+        silence_logs=logging.CRITICAL,
+    )
 
 
 @contextlib.contextmanager

@@ -9,17 +9,21 @@ from breakstep.errors import DeclarationError
 from breakstep.graph.tasks import ANYWHERE
 from breakstep.mesh.mesh import Triple
 
-PLACEMENTS = ("blocks", "curve", "dask")
+PLACEMENTS = ("blocks", "curve", "cyclic", "balanced", "dask")
 
 
-def owners(placement: str, program: Program, workers: int) -> list[int]:
+def owners(placement: str, program: Program, workers: int, costs: Sequence[float] | None = None) -> list[int]:
     """Owner of each tile.
 
     Parameters
     ----------
     placement : str
         ``"blocks"``: contiguous runs of tiles by number; ``"curve"``: contiguous runs along a space-filling
-        curve, so that each worker's tiles form a compact patch; ``"dask"``: anywhere.
+        curve, so that each worker's tiles form a compact patch; ``"balanced"``: the same, cut where measured
+        costs are equal rather than numbers of tiles; ``"cyclic"``: dealt out one by one, so that neighbours are
+        on different workers (the worst case for bytes); ``"dask"``: anywhere.
+    costs : sequence of float, optional
+        Measured cost of each tile, for ``"balanced"``; equal if not given.
 
     Raises
     ------
@@ -27,10 +31,14 @@ def owners(placement: str, program: Program, workers: int) -> list[int]:
         An unknown placement.
     """
     tiles = len(program.tiling)
+    equal = [1.0] * tiles
     if placement == "blocks":
-        return runs(range(tiles), [1.0] * tiles, workers)
-    if placement == "curve":
-        return runs(curve_order([tile.place for tile in program.tiling.tiles]), [1.0] * tiles, workers)
+        return runs(range(tiles), equal, workers)
+    if placement == "cyclic":
+        return [tile % workers for tile in range(tiles)]
+    if placement in ("curve", "balanced"):
+        order = curve_order([tile.place for tile in program.tiling.tiles])
+        return runs(order, equal if costs is None or placement == "curve" else costs, workers)
     if placement == "dask":
         return [ANYWHERE] * tiles
     raise DeclarationError(f"placement must be one of {', '.join(PLACEMENTS)}, not {placement!r}")

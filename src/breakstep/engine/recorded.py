@@ -136,7 +136,7 @@ def _manifest(dispatch: Dispatch, program: Program, options: RunOptions, result:
 
 def _placement(options: RunOptions, program: Program, workers: int, record: RunRecord) -> list[int]:
     """Owner of each tile; where Dask placed tasks, the worker that ran the tile's last step."""
-    planned = owners(options.placement, program, workers)
+    planned = owners(options.placement, program, workers, options.costs)
     if ANYWHERE not in planned:
         return planned
     frame = record.tasks.table().select(["kind", "tile", "worker", "start_ns"]).to_pandas()

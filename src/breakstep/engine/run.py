@@ -23,7 +23,9 @@ class RunOptions:
     barriers : tuple of str
         Names of the barriers that are on.
     placement : str
-        ``"blocks"``: tiles go to workers in contiguous runs of equal length; ``"dask"``: Dask places tasks.
+        Who owns which tile; see :func:`breakstep.engine.placement.owners`.
+    costs : tuple of float or None
+        Measured cost of each tile, for the placement ``"balanced"``.
     window : int
         Cycles that may be in flight at once.
     record : bool
@@ -40,6 +42,7 @@ class RunOptions:
 
     barriers: tuple[str, ...] = ()
     placement: str = "blocks"
+    costs: tuple[float, ...] | None = None
     window: int = 4
     record: bool = True
     memory_limit: int = 0

@@ -155,7 +155,7 @@ class Unroller:
             reduction.name: [
                 self._cycle_value(reduction, upcoming + k)
                 for k in range(reduction.lag + 1)
-                if upcoming + k - self.start - reduction.lag < len(self._cycle_results[reduction.name])
+                if max(upcoming + k - self.start - reduction.lag, 0) < len(self._cycle_results[reduction.name])
             ]
             for reduction in self.template.splitting.reductions
         }

@@ -96,26 +96,15 @@ class SweepKernel:
                 courant=courant,
             )
         if bad >= 0:
-            raise self._unsound(interior(arrays["gas"], call.shape), new, bad, call)
+            zone, before = describe_zone(interior(arrays["gas"], call.shape), bad, call)
+            _, after = describe_zone(new, bad, call)
+            raise KernelError(
+                f"{call.where()}: zone {zone} has or gets a density, energy or pressure that is not positive;"
+                f" before: {before}; after: {after}; dt {call.dt:.4g} s; lower the CFL factor or look at the state",
+                zone=zone,
+            )
         call.count("zones", int(np.prod(call.shape)))
         return {"gas": new}
-
-    def _unsound(self, old: Array, new: Array, bad: int, call: Call) -> KernelError:
-        """The error for a zone that was unsound before the sweep if there is one, else one that gets so.
-
-        A zone that was unsound spoils its neighbours, and the kernel names the first of them all.
-        """
-        widths, active = np.array(call.widths), np.array(call.active)
-        _, was_bad = hydro.signal_rate(old, widths, active, *self.gas.arrays)
-        flat = was_bad if was_bad >= 0 else bad
-        zone, before = describe_zone(old, flat, call)
-        _, after = describe_zone(new, flat, call)
-        return KernelError(
-            f"{call.where()}: zone {zone} {'has' if was_bad >= 0 else 'gets'} a density, energy or pressure that is"
-            f" not positive; before: {before}; after: {after}; dt {call.dt:.4g} s; lower the CFL factor or look at"
-            " the state",
-            zone=zone,
-        )
 
 
 def sweep(gas: Gas, axis: int) -> Step:

@@ -113,4 +113,5 @@ def _finished(reduction: Reduction, combined: Array, previous: Array | None) -> 
     if result.ndim != 1 or (previous is not None and result.shape != previous.shape):
         expected = "a vector" if previous is None else f"a vector of {previous.size}, as before"
         raise KernelError(f"{where}: expected {expected}, got shape {result.shape}")
-    return result.astype(np.float64)
+    vector: Array = result.astype(np.float64)
+    return vector

@@ -83,9 +83,11 @@ class NativeDispatch:
         """Run a program; errors and interrupts end up in the result."""
         try:
             self.prepare(program)
-        except ClusterError as error:
-            return RunResult({}, {}, RunRecord(), 0.0, 0, failure=_without_frames(error))
-        return _NativeRun(self, program, options, progress).run()
+            clocks = read_clocks(self.client, self.addresses)
+        except (ClusterError, OSError) as error:
+            failure = error if isinstance(error, ClusterError) else _lost(error)
+            return RunResult({}, {}, RunRecord(), 0.0, 0, failure=_without_frames(failure))
+        return _NativeRun(self, program, options, progress).run(clocks)
 
 
 class _NativeRun:
@@ -101,7 +103,7 @@ class _NativeRun:
         self.dispatch, self.program, self.options, self.progress = dispatch, program, options, progress
         self.client = dispatch.client
         self.name = uuid.uuid4().hex[:8]
-        self.owners = owners(options.placement, program, dispatch.workers)
+        self.owners = owners(options.placement, program, dispatch.workers, options.costs)
         self.graph = TaskGraph(program.tiling, self.owners)
         self.unroller = unroller_for(program, options)
         self.barriers = program.template.stages_with_barrier(options.barriers)
@@ -114,10 +116,9 @@ class _NativeRun:
         self.unread: set[int] = set()  # step tasks that no task sent so far depends on
         self.batch: list[Task] = []
 
-    def run(self) -> RunResult:
+    def run(self, clocks: list[ClockReading]) -> RunResult:
         """The whole run; what ends it early is noted in the result."""
         result = self.result
-        clocks = read_clocks(self.client, self.dispatch.addresses)
         zero = time.perf_counter_ns()
         try:
             self._begin(clocks, zero)
@@ -128,12 +129,13 @@ class _NativeRun:
         except BreakstepError as error:
             result.failure = _without_frames(error)
         except (CancelledError, KilledWorker, OSError) as error:
-            result.failure = ClusterError(
-                f"the Dask cluster lost part of the run ({error}); start the run again"
-            )
+            result.failure = _lost(error)
         result.seconds = (time.perf_counter_ns() - zero) / 1e9
         self.futures.clear()
-        self._collect(clocks)
+        try:
+            self._collect(clocks)
+        except OSError as error:  # the record stays as it is
+            result.failure = result.failure or _lost(error)
         return result
 
     def _begin(self, clocks: list[ClockReading], zero: int) -> None:
@@ -300,6 +302,10 @@ class _NativeRun:
             for arrival in part["arrivals"]:
                 if arrival.producer >= 0 and arrival.sender in zeros and arrival.sender != part["worker"]:
                     record.transfers.extend(_transfer_rows(arrival, part["worker"], zeros))
+
+
+def _lost(error: Exception) -> ClusterError:
+    return ClusterError(f"the Dask cluster lost part of the run ({error}); start the run again")
 
 
 async def _done_within(futures: list[Future], seconds: float) -> bool:

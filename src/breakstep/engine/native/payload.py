@@ -90,6 +90,8 @@ def _unpack(header: dict[str, Any], frames: list[Any]) -> Payload:
     sizes: dict[str, int] = {}
     for flat, shape, frame in zip(header["keys"], header["shapes"], frames, strict=True):
         array = np.frombuffer(frame, dtype=np.float64).reshape(shape)
+        if not array.flags.aligned:  # frames share a buffer, at any offset (seen on distributed 2026.8)
+            array = array.copy()
         array.flags.writeable = False
         arrays[_unflatten(flat)] = array
         name = str(flat[0])

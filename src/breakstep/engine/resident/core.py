@@ -57,7 +57,7 @@ from breakstep.engine.resident.plan import Cut, ReductionTree, WorkerPlan
 from breakstep.engine.resident.ranks import Ranks
 from breakstep.graph.tasks import TREE_ARITY
 from breakstep.graph.unroll import INITIAL, Making, Need, Phase, Unroller, ValueRef
-from breakstep.steps.reduction import combine, finish_rows
+from breakstep.steps.reduction import combine
 from breakstep.steps.step import Array
 
 WORKER_ARITY = 8  # children of a worker in the barrier tree
@@ -279,7 +279,7 @@ class Core:
 
     def start(self) -> list[Instruction]:
         """Emit the first phases."""
-        self._pending = next(self._generator, None)
+        self._step(None)
         self._advance()
         return self._flush()
 
@@ -650,7 +650,8 @@ class Core:
             self._part(instance, level + 1, index, combined)
             return
         previous = self.values[making.previous][-1] if making.previous is not None else None
-        vector = finish_rows(making.reduction, combined, previous, making.rows)
+        stage = phase.stage.index
+        vector = self.program.finish(stage, making.reduction, combined, previous, making.rows)
         self._out.extend(
             SendItem(w, ("value", instance), vector) for w in range(self.workers) if w != self.me
         )

@@ -150,7 +150,7 @@ class _Attempt:
         self.client, self.addresses = dispatch.client, dispatch.addresses
         self.resume = resume
         self.name = uuid.uuid4().hex[:8]
-        self.owners = owners(options.placement, program, len(self.addresses))
+        self.owners = owners(options.placement, program, len(self.addresses), options.costs)
         self.result = RunResult({}, {}, RunRecord(), 0.0, 0)
         self.reports: dict[int, _Reports] = {}
 
