@@ -57,9 +57,7 @@ def _pad_side(
 
 def beyond(own: tuple[int, ...], widths: Triple) -> Array:
     """Along how many axes each zone of a padded array is a ghost zone."""
-    ghost = [
-        np.pad(np.zeros(n, dtype=int), w, constant_values=1) for n, w in zip(own, widths, strict=True)
-    ]
+    ghost = [np.pad(np.zeros(n, dtype=int), w, constant_values=1) for n, w in zip(own, widths, strict=True)]
     return ghost[0][:, None, None] + ghost[1][None, :, None] + ghost[2][None, None, :]
 
 
@@ -134,9 +132,7 @@ class March:
         used = {name: values[name] for name in step.uses}
         self.fields.update(step.kernel(given, self._call(step.name, cycle, iteration, used, step.fraction)))
 
-    def _call(
-        self, name: str, cycle: int, iteration: int, values: Mapping[str, Array], fraction: float = 1.0
-    ) -> Call:
+    def _call(self, name: str, cycle: int, iteration: int, values: Mapping[str, Array], fraction: float = 1.0) -> Call:
         mesh = self.problem.mesh
         place = (0, (0, 0, 0), mesh.zones, mesh.widths, mesh.active)
         return Call(name, cycle, iteration, *place, values, fraction)

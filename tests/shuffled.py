@@ -127,9 +127,7 @@ class Shuffled:
         (source,) = given.values()
         if task.making is not None:
             return {"partial": source.partials[task.making.reduction.name]}
-        return {
-            (name, tile, rim.offset): cut(rim, source.fields[name]).copy() for name, rim, tile in task.cuts
-        }
+        return {(name, tile, rim.offset): cut(rim, source.fields[name]).copy() for name, rim, tile in task.cuts}
 
     def _combine(self, task: Task, given: dict[int, Any]) -> Array | None:
         making = task.making

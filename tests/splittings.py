@@ -66,7 +66,10 @@ def scripts(draw: st.DrawFn, splitting: Splitting, cycles: int) -> Script:
     for cycle in range(cycles):
         order = splitting.orders[cycle % len(splitting.orders)]
         for place in range(sum(isinstance(item, Repeat) for item in order)):
-            script[cycle, place] = [*draw(st.lists(st.booleans(), max_size=5)), draw(st.sampled_from([True, True, False]))]
+            script[cycle, place] = [
+                *draw(st.lists(st.booleans(), max_size=5)),
+                draw(st.sampled_from([True, True, False])),
+            ]
     return script
 
 
@@ -92,11 +95,13 @@ def classical(splitting: Splitting, cycles: int, script: Script) -> Log:
     log, versions = Log(), dict.fromkeys(NAMES, -1)
 
     def measure(reduction: Reduction, cycle: int, iteration: int) -> None:
-        log.entries.append((reduction.name, cycle, iteration, {r.field: versions[r.field] for r in reduction.reads}, {}))
+        log.entries.append(
+            (reduction.name, cycle, iteration, {r.field: versions[r.field] for r in reduction.reads}, {})
+        )
 
     def advance(step: Step, cycle: int, iteration: int) -> None:
         read = {r.field: versions[r.field] for r in step.reads}
-        log.entries.append((step.name, cycle, iteration, read, {name: cycle for name in step.uses}))
+        log.entries.append((step.name, cycle, iteration, read, dict.fromkeys(step.uses, cycle)))
         versions.update(dict.fromkeys(step.writes, len(log.entries) - 1))
 
     def repeat_until_stop(repeat: Repeat, cycle: int, place: int) -> bool:

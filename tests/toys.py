@@ -33,15 +33,13 @@ def halo(dimensions: int, width: int = 1) -> Triple:
 
 def moved(padded: Array, widths: Triple, offset: Triple) -> Array:
     """The zones of a padded array that lie ``offset`` away from its own zones."""
-    cuts = [
-        slice(w + o, n - w + o) for n, w, o in zip(padded.shape[1:], widths, offset, strict=True)
-    ]
+    cuts = [slice(w + o, n - w + o) for n, w, o in zip(padded.shape[1:], widths, offset, strict=True)]
     return padded[(slice(None), *cuts)]
 
 
 def axis_offset(axis: int, distance: int) -> Triple:
     """An offset along one axis."""
-    return tuple(distance if a == axis else 0 for a in range(3))  # type: ignore[return-value]
+    return (distance * (axis == 0), distance * (axis == 1), distance * (axis == 2))
 
 
 def widths_of(call: Call, width: int = 1) -> Triple:
@@ -297,7 +295,7 @@ def faulty_problem(fault: str, tile: int = 1, cycle: int = 1, cycles: int = 3) -
     """A problem whose second step misbehaves once."""
     steps = (
         Step("smooth", smooth, (Read("u", (1, 0, 0)),), ("u",)),
-        Step("broken", Faulty(fault, tile, cycle), (Read("u"),), ("u",), uses=("dt",)),
+        Step("broken", Faulty(fault, tile, cycle), (Read("u"),), ("u",), uses=("dt",)),  # type: ignore[arg-type]
     )
     mesh = Mesh((12,), (1.0,), ((Edge.PERIODIC, Edge.PERIODIC),))
     return Problem("faulty", "an invented problem", mesh, FIELDS, Splitting((steps,), (dt_reduction(),)), waves, cycles)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import sys
 from dataclasses import replace
 
 from breakstep.engine.cluster import local_cluster
@@ -18,7 +17,7 @@ from tests.toys import Delayed, Toy, dt_reduction, smooth
 
 def slow_problem(cycles: int, seconds: float = 0.005) -> Problem:
     """Four tiles whose tasks sleep."""
-    step = Step("slow", Delayed(smooth, seconds), (Read("u", (1, 0, 0)),), ("u",))  # type: ignore[arg-type]
+    step = Step("slow", Delayed(smooth, seconds), (Read("u", (1, 0, 0)),), ("u",))
     steps = [step, *Toy((12,), repeats=False).steps()]
     return replace(Toy((12,), cycles=cycles).problem(), splitting=lie(steps, [dt_reduction()]))
 
@@ -28,10 +27,10 @@ def main() -> None:
     with local_cluster(2) as client:
         program = Program(slow_problem(100_000), (3,))
         result = NativeDispatch(client).run(program, RunOptions(), lambda cycle: print(cycle, flush=True))
-        workers = {int(w) for w in result.record.tasks.table().column("worker").to_pylist()}
+        workers = set(result.record.tasks.table().to_pandas()["worker"].tolist())
     facts = {"interrupted": result.interrupted, "failure": str(result.failure), "workers": sorted(workers)}
     print(json.dumps({**facts, "cycles": result.cycles, "tasks": len(result.record.tasks)}), flush=True)
 
 
 if __name__ == "__main__":
-    sys.exit(main())
+    main()

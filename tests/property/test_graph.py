@@ -21,11 +21,13 @@ from breakstep.graph.tasks import ANYWHERE, EdgeKind, Kind, Task, TaskGraph, con
 from breakstep.graph.unroll import INITIAL, Phase
 from breakstep.mesh.mesh import Edge, Mesh
 from breakstep.mesh.tiling import Tiling
-from breakstep.steps.splitting import Splitting
+from breakstep.steps.reduction import Combine, Reduction
+from breakstep.steps.splitting import Repeat, Splitting
+from breakstep.steps.step import Read, Step
 from tests.reference import March
 from tests.shuffled import Shuffled
-from tests.splittings import NAMES, Follower, classical, follow, scripts, splittings
-from tests.toys import Toy
+from tests.splittings import NAMES, Follower, classical, follow, says_stop, scripts, splittings
+from tests.toys import Toy, as_it_is, rate, smooth
 
 CYCLES = 3
 SLOW_DRAWS = settings(
@@ -74,9 +76,7 @@ def test_emission_depends_on_the_verdicts_alone(data: st.DataObject, splitting: 
 
 @SLOW_DRAWS
 @given(st.data(), splittings(), st.sets(st.sampled_from(NAMES)))
-def test_live_phases_are_all_that_later_phases_read(
-    data: st.DataObject, splitting: Splitting, state: set[str]
-) -> None:
+def test_live_phases_are_all_that_later_phases_read(data: st.DataObject, splitting: Splitting, state: set[str]) -> None:
     follower = follow(build_template(splitting), CYCLES, data.draw(scripts(splitting, CYCLES)))
     held: set[int] = {INITIAL}
     try:
@@ -242,7 +242,9 @@ def test_packs_hold_exactly_the_rims_that_cross(pair: tuple[Spelled, Spelled]) -
                 assert pack.cuts.count((rim.field, rim.rim, task.tile)) == 1
                 assert pack.tile == rim.rim.neighbour
         if task.kind is Kind.PACK and task.making is None:
-            wanted = [(r.field, r.rim, t.tile) for t in spelled.tasks.values() for r in t.rims if r.producer == task.number]
+            wanted = [
+                (r.field, r.rim, t.tile) for t in spelled.tasks.values() for r in t.rims if r.producer == task.number
+            ]
             assert sorted(map(repr, task.cuts)) == sorted(map(repr, wanted))
 
 
@@ -290,7 +292,9 @@ def _leaves(spelled: Spelled, number: int, phase: Phase) -> list[int]:
 @st.composite
 def toys_and_cuts(draw: st.DrawFn) -> tuple[Toy, tuple[int, ...]]:
     """A toy in one, two or three dimensions, and tiles for it."""
-    shape, cut = draw(st.sampled_from([((12,), (3,)), ((13,), (5,)), ((9, 4), (3, 2)), ((7, 5), (4, 5)), ((6, 3, 4), (3, 3, 2))]))
+    shape, cut = draw(
+        st.sampled_from([((12,), (3,)), ((13,), (5,)), ((9, 4), (3, 2)), ((7, 5), (4, 5)), ((6, 3, 4), (3, 3, 2))])
+    )
     edges = tuple(draw(st.sampled_from(list(Edge))) for _ in shape)
     flags = {name: draw(st.booleans()) for name in ("repeats", "two_orders", "two_passes")}
     lags = {name: draw(st.integers(0, 2)) for name in ("dt_lag", "residual_lag")}
@@ -342,9 +346,6 @@ def test_a_reduced_time_step_waits_and_a_lagged_one_does_not() -> None:
 @pytest.mark.parametrize("lag", [0, 1, 2])
 def test_a_verdict_taken_back_does_not_start_the_repeat_again(lag: int) -> None:
     """With a lag, iterations behind the stop still run and may measure a larger residual."""
-    from tests.splittings import Repeat, says_stop  # the strategies' own repeat, with a fixed script
-    from tests.toys import Combine, Read, Reduction, Step, as_it_is, rate, smooth
-
     until = Reduction("v", rate, (Read("a"),), Combine.MAX, as_it_is, lag)
     repeat = Repeat("p", (Step("q", smooth, (Read("a"),), ("a",)),), until, says_stop, 9)
     splitting = Splitting(((repeat,),))

@@ -7,8 +7,7 @@ from pathlib import Path
 import click
 
 from breakstep.commands.session import Session, Stopped
-from breakstep.commands.shared import Place, check_json, open_dispatch, output_folder, run_options, write_json
-from breakstep.engine.recorded import check_folder
+from breakstep.commands.shared import check_json, choose_place, open_dispatch, output_folder, run_options, write_json
 from breakstep.engine.run import Dispatch
 from breakstep.errors import ScenarioError
 from breakstep.profile.run import Profile
@@ -18,9 +17,7 @@ from breakstep.report.terminal import comparison_lines
 
 @click.command()
 @run_options
-@click.option(
-    "--pairs", type=click.IntRange(1), default=3, show_default=True, help="How often to run both modes."
-)
+@click.option("--pairs", type=click.IntRange(1), default=3, show_default=True, help="How often to run both modes.")
 @click.option(
     "--barriers", default="lockstep", show_default=True,
     help="What tasked is compared with: lockstep, tasked, or names joined by commas.",
@@ -46,21 +43,13 @@ def compare(
     session = Session.load(scenario, overrides, placement, memory_limit or 0)
     session.barriers(barriers)
     check_json(json_file)
+    place = choose_place(session.scenario.run, dispatch, workers, threads, address, scheduler_file)
     folder = output_folder(out, session.scenario.name)
-    check_folder(folder)
-    settings = session.scenario.run
-    place = Place(
-        dispatch or settings.dispatch,
-        workers or settings.workers,
-        threads or settings.threads,
-        address,
-        scheduler_file,
-    )
     try:
         with open_dispatch(place) as engine:
             comparison = _compare(session, engine, barriers, folder, pairs)
     except Stopped as stopped:
-        click.echo(f"stopped; the profile so far is in {stopped.folder}", err=True)
+        click.echo(f"breakstep: stopped; the profile so far is in {stopped.folder}", err=True)
         return 130
     for line in comparison_lines(comparison):
         click.echo(line)
@@ -90,10 +79,6 @@ def _difference(
     differing = [difference for difference in found if difference is not None]
     if not differing:
         return None
-    _, one = session.execute(
-        engine, barriers, folder / "lockstep-traced", title="tracing the difference", trace=True
-    )
-    _, two = session.execute(
-        engine, "tasked", folder / "tasked-traced", title="tracing the difference", trace=True
-    )
+    _, one = session.execute(engine, barriers, folder / "lockstep-traced", title="tracing the difference", trace=True)
+    _, two = session.execute(engine, "tasked", folder / "tasked-traced", title="tracing the difference", trace=True)
     return first_traced_difference(one, two) or differing[0]

@@ -21,6 +21,4 @@ def ledger(profile: Path, json_file: Path | None) -> None:
     recorded = read_profile(profile)
     for line in ledger_lines(recorded):
         click.echo(line)
-    write_json(
-        json_file, {"scenario": recorded.manifest["scenario"].get("name", ""), **run_figures(recorded)}
-    )
+    write_json(json_file, {"scenario": recorded.manifest["scenario"].get("name", ""), **run_figures(recorded)})

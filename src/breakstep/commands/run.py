@@ -2,14 +2,15 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import click
 
 from breakstep.commands.session import Session, Stopped
-from breakstep.commands.shared import Place, check_json, open_dispatch, output_folder, run_options, write_json
-from breakstep.engine.checkpoint import last_checkpoint, read_manifest
-from breakstep.errors import CheckpointError, ScenarioError
+from breakstep.commands.shared import check_json, choose_place, open_dispatch, output_folder, run_options, write_json
+from breakstep.engine.checkpoint import checkpoints, last_checkpoint, read_manifest
+from breakstep.errors import BreakstepError, CheckpointError, ScenarioError
 from breakstep.report.comparison import run_figures
 from breakstep.report.terminal import ledger_lines
 
@@ -43,35 +44,41 @@ def run(
     resume: Path | None,
 ) -> int:
     """Run SCENARIO once and print where its core-seconds went."""
-    checkpoint, session, choice = _begin(scenario, overrides, resume, barriers, placement, memory_limit)
+    resumed, session, choice = _begin(scenario, overrides, resume, barriers, placement, memory_limit)
     session.options = session.saving_every(checkpoint_every)
     check_json(json_file)
-    settings = session.scenario.run
-    folder = output_folder(out, session.scenario.name)
-    name = dispatch or settings.dispatch
-    if (checkpoint_every or resume) and name != "resident":
+    place = choose_place(session.scenario.run, dispatch, workers, threads, address, scheduler_file)
+    if (checkpoint_every or resume) and place.dispatch != "resident":
         raise ScenarioError("checkpoints need the resident dispatch; leave --dispatch out")
-    place = Place(
-        name,
-        workers or settings.workers,
-        threads or settings.threads,
-        address,
-        scheduler_file,
+    folder = output_folder(out, session.scenario.name)
+    place = replace(
+        place,
         checkpoints=(folder / CHECKPOINTS).absolute() if checkpoint_every else None,
-        resume=checkpoint,
+        resume=resumed,
         facts={"scenario": session.facts(), "barriers": choice, "checkpoint_every": checkpoint_every or 0},
     )
     with open_dispatch(place) as engine:
         try:
             _, profile = session.execute(engine, choice, folder)
         except Stopped as stopped:
-            click.echo(f"stopped; the profile so far is in {stopped.folder}", err=True)
+            click.echo(f"breakstep: stopped; the profile so far is in {stopped.folder}", err=True)
+            if checkpoints(folder / CHECKPOINTS):
+                click.echo(f"breakstep: {go_on(folder)}", err=True)
             return 130
+        except BreakstepError as error:
+            if checkpoints(folder / CHECKPOINTS):
+                error.details["remedy"] = go_on(folder)
+            raise
     for line in ledger_lines(profile):
         click.echo(line)
-    click.echo(f"profile: {folder}")
+    click.echo(f"Profile: {folder}")
     write_json(json_file, {"scenario": session.scenario.name, **run_figures(profile)})
     return 0
+
+
+def go_on(folder: Path) -> str:
+    """How to go on with a run that left a checkpoint."""
+    return f"to go on from its last checkpoint: breakstep run --resume {folder}"
 
 
 def _begin(
@@ -96,7 +103,9 @@ def _begin(
     manifest = read_manifest(folder)
     session = Session.from_tables(manifest["scenario"], folder, overrides, placement, memory_limit or 0)
     if list(session.program.tile_shape) != manifest["tile"]:
-        raise CheckpointError(f"{folder}: tiles of {manifest['tile']} zones cannot be resumed with others; leave mesh.tile")
+        raise CheckpointError(
+            f"{folder}: tiles of {manifest['tile']} zones cannot be resumed with others; leave mesh.tile"
+        )
     choice = barriers or str(manifest.get("barriers", "tasked"))
     session.barriers(choice)
     return folder, session, choice

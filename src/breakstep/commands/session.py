@@ -12,12 +12,15 @@ from breakstep.engine.pilot import measure_costs
 from breakstep.engine.program import Program
 from breakstep.engine.recorded import run_and_record
 from breakstep.engine.run import Dispatch, RunOptions, RunResult
+from breakstep.engine.serial import SerialDispatch
+from breakstep.engine.warm import warm_up
+from breakstep.errors import BreakstepError
 from breakstep.graph.stages import parse_barriers
 from breakstep.profile.run import Profile
 from breakstep.scenario.load import Scenario, load_scenario, scenario_from
 
 
-class Stopped(Exception):
+class Stopped(Exception):  # noqa: N818  (nothing went wrong)
     """The user stopped a run; its profile has been written."""
 
     def __init__(self, folder: Path) -> None:
@@ -35,11 +38,14 @@ class Session:
     program : Program
     options : RunOptions
         Without barriers; :meth:`execute` adds them.
+    is_warm : bool
+        Whether this process has its kernels.
     """
 
     scenario: Scenario
     program: Program
     options: RunOptions
+    is_warm: bool = False
 
     @classmethod
     def load(cls, name: str, overrides: Sequence[str], placement: str | None = None, memory_limit: int = 0) -> Session:
@@ -55,7 +61,9 @@ class Session:
     @classmethod
     def _of(cls, scenario: Scenario, placement: str | None, memory_limit: int) -> Session:
         program = Program(scenario.problem(), tuple(scenario.tile), scenario.run.fuse)
-        options = RunOptions(placement=placement or scenario.run.placement, window=scenario.run.window, memory_limit=memory_limit)
+        options = RunOptions(
+            placement=placement or scenario.run.placement, window=scenario.run.window, memory_limit=memory_limit
+        )
         return cls(scenario, program, options)
 
     @classmethod
@@ -104,8 +112,10 @@ class Session:
         Stopped
             The user interrupted the run.
         BreakstepError
-            Whatever ended the run early, after the profile so far has been written.
+            Whatever ended the run early, after the profile so far has been written; ``details["profile"]``
+            says where.
         """
+        self._warm_up(dispatch)
         if self.options.placement == "balanced" and self.options.costs is None:
             self.options = replace(self.options, costs=measure_costs(dispatch, self.program, self.options))
         options = replace(self.options, barriers=self.barriers(choice), trace=trace)
@@ -113,8 +123,16 @@ class Session:
             result, profile = run_and_record(
                 dispatch, self.program, options, folder, mode=choice, scenario=self.facts(), progress=progress
             )
+        if isinstance(result.failure, BreakstepError):
+            result.failure.details.setdefault("profile", str(folder))
         if result.failure is not None:
             raise result.failure
         if result.interrupted:
             raise Stopped(folder)
         return result, profile
+
+    def _warm_up(self, dispatch: Dispatch) -> None:
+        """Load or compile the kernels before the clock starts; on a cluster the dispatch does so itself."""
+        if isinstance(dispatch, SerialDispatch) and not self.is_warm:
+            warm_up(self.program)
+            self.is_warm = True

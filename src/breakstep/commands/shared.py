@@ -17,10 +17,12 @@ from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, T
 from breakstep.engine.cluster import existing_cluster, local_cluster
 from breakstep.engine.native import NativeDispatch
 from breakstep.engine.placement import PLACEMENTS
+from breakstep.engine.recorded import check_folder
 from breakstep.engine.resident import ResidentDispatch
 from breakstep.engine.run import Dispatch
 from breakstep.engine.serial import SerialDispatch
 from breakstep.errors import OutputError
+from breakstep.scenario.sections import RunSection
 
 _F = TypeVar("_F", bound=Callable[..., Any])
 
@@ -30,13 +32,13 @@ def run_options(function: _F) -> _F:
     options = [
         click.argument("scenario", required=False),
         click.option("--set", "overrides", multiple=True, metavar="KEY.PATH=VALUE", help="Override a scenario value."),
-        click.option("--workers", type=click.IntRange(1), help="Worker processes (default: the scenario's)."),
+        click.option("--workers", type=click.IntRange(1), help="Workers (default: the scenario's, or all of your cluster)."),
         click.option("--threads", type=click.IntRange(1), help="Threads a worker (default: the scenario's)."),
         click.option("--placement", type=click.Choice(PLACEMENTS), help="Who owns which tile."),
         click.option("--dispatch", type=click.Choice(["resident", "native", "serial"]), help="Who runs the tasks."),
         click.option("--memory-limit", type=click.IntRange(0), help="Live bytes a worker above which run-ahead waits."),
         click.option("--address", help="Use the Dask cluster whose scheduler listens there."),
-        click.option("--scheduler-file", type=click.Path(path_type=Path), help="Use the Dask cluster that wrote this file."),
+        click.option("--scheduler-file", type=click.Path(path_type=Path), help="Use the Dask cluster of this file."),
         click.option("--out", type=click.Path(path_type=Path), help="Folder for the profiles (default: runs/...)."),
         click.option("--json", "json_file", type=click.Path(path_type=Path), help="Write the figures there as JSON."),
     ]  # fmt: skip
@@ -47,10 +49,16 @@ def run_options(function: _F) -> _F:
 
 @dataclass(frozen=True)
 class Place:
-    """Where to run, and with which dispatch."""
+    """Where to run, and with which dispatch.
+
+    Attributes
+    ----------
+    workers : int or None
+        None for all workers of the user's own cluster.
+    """
 
     dispatch: str
-    workers: int
+    workers: int | None
     threads: int
     address: str | None = None
     scheduler_file: Path | None = None
@@ -59,15 +67,51 @@ class Place:
     facts: Mapping[str, Any] = field(default_factory=dict)
 
 
+def choose_place(
+    settings: RunSection,
+    dispatch: str | None,
+    workers: int | None,
+    threads: int | None,
+    address: str | None,
+    scheduler_file: Path | None,
+) -> Place:
+    """The place that options and scenario name together.
+
+    Raises
+    ------
+    click.UsageError
+        Options that contradict each other.
+    """
+    name = dispatch or settings.dispatch
+    if name == "serial":
+        more_than_one = {"--workers": (workers or 1) > 1, "--threads": (threads or 1) > 1}
+        elsewhere = {"--address": address is not None, "--scheduler-file": scheduler_file is not None}
+        for option in (option for option, is_used in {**more_than_one, **elsewhere}.items() if is_used):
+            raise click.UsageError(f"the serial dispatch runs in one thread of this process; leave {option} out")
+    if address is not None and scheduler_file is not None:
+        raise click.UsageError("--address and --scheduler-file name a cluster each; give one of them")
+    own = address is None and scheduler_file is None
+    if threads is not None and not own:
+        raise click.UsageError("the workers of a running cluster have their threads already; leave --threads out")
+    return Place(
+        name,
+        workers or (settings.workers if own else None),
+        threads or settings.threads,
+        address,
+        scheduler_file,
+    )
+
+
 @contextlib.contextmanager
 def open_dispatch(place: Place) -> Iterator[Dispatch]:
     """The dispatch to run with, and its cluster for as long as the context lasts."""
     if place.dispatch == "serial":
         yield SerialDispatch()
         return
-    if place.address or place.scheduler_file:
+    if place.address is not None or place.scheduler_file is not None:
         cluster = existing_cluster(place.address, place.scheduler_file)
     else:
+        assert place.workers is not None
         cluster = local_cluster(place.workers, place.threads)
     with cluster as client:
         if place.dispatch == "native":
@@ -98,23 +142,43 @@ def progress_bar(title: str, cycles: int) -> Iterator[Callable[[int], None]]:
 
 
 def output_folder(out: Path | None, name: str) -> Path:
-    """The folder asked for, or a new one under ``runs/``."""
-    return out if out is not None else Path("runs") / f"{name}-{time.strftime('%Y%m%d-%H%M%S')}"
+    """The folder asked for, or a new one under ``runs/``; refused if it could not take what the run leaves.
+
+    Raises
+    ------
+    OutputError
+    """
+    folder = out if out is not None else _new_folder(Path("runs") / f"{name}-{time.strftime('%Y%m%d-%H%M%S')}")
+    check_folder(folder)
+    return folder
+
+
+def _new_folder(wanted: Path) -> Path:
+    """The folder itself, or one with a number behind its name where runs began in the same second."""
+    folder, number = wanted, 1
+    while folder.exists():
+        number += 1
+        folder = wanted.with_name(f"{wanted.name}-{number}")
+    return folder
 
 
 def check_json(path: Path | None) -> None:
-    """Refuse a JSON file that could not be written, before any work is done."""
+    """Refuse a JSON file that could not be written, before any work is done; leaves no file behind.
+
+    Raises
+    ------
+    OutputError
+    """
     if path is None:
         return
-    if path.is_dir() or not path.resolve().parent.is_dir():
-        raise OutputError(f"--json {path}: there is no folder to write that file in; choose another path")
     try:
+        is_new = not path.exists()
         with path.open("a", encoding="utf-8"):
             pass
+        if is_new:
+            path.unlink()
     except OSError as error:
-        raise OutputError(
-            f"--json {path} cannot be written ({error.strerror}); choose another path"
-        ) from error
+        raise OutputError(f"--json {path} cannot be written ({error.strerror}); choose another path") from error
 
 
 def write_json(path: Path | None, figures: Mapping[str, Any]) -> None:
@@ -124,6 +188,4 @@ def write_json(path: Path | None, figures: Mapping[str, Any]) -> None:
     try:
         path.write_text(json.dumps(figures, indent=2, allow_nan=False) + "\n", encoding="utf-8")
     except OSError as error:
-        raise OutputError(
-            f"--json {path} cannot be written ({error.strerror}); choose another path"
-        ) from error
+        raise OutputError(f"--json {path} cannot be written ({error.strerror}); choose another path") from error

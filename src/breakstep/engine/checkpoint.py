@@ -11,6 +11,7 @@ from __future__ import annotations
 
 import json
 import shutil
+import uuid
 from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
@@ -25,15 +26,21 @@ from breakstep.steps.step import Array
 
 MANIFEST = "checkpoint.json"
 VERSION = 1
+KEPT = 2  # the newest, and one more should it turn out to be damaged
 
 
-def folder_of(root: Path, cycle: int, *, partial: bool = False) -> Path:
+def folder_of(root: Path, cycle: int) -> Path:
     """Folder of the checkpoint at the end of a cycle."""
-    return root / f"cycle-{cycle:08d}{'.partial' if partial else ''}"
+    return root / f"cycle-{cycle:08d}"
+
+
+def partial_folder(root: Path, cycle: int, run: str) -> Path:
+    """Where one run puts a checkpoint together: what a run that was given up still writes is in nobody's way."""
+    return root / f"cycle-{cycle:08d}.{run}.partial"
 
 
 def save_tiles(
-    root: Path, cycle: int, program: Program, tiles: Mapping[int, Mapping[str, Array]]
+    root: Path, cycle: int, program: Program, tiles: Mapping[int, Mapping[str, Array]], run: str
 ) -> dict[str, dict[int, str]]:
     """Write some tiles' chunks; returns their digests by field and tile.
 
@@ -45,7 +52,7 @@ def save_tiles(
     digests: dict[str, dict[int, str]] = {}
     try:
         for name in program.state_fields:
-            target = _array(folder_of(root, cycle, partial=True), name, program)
+            target = _array(partial_folder(root, cycle, run) / name, program)
             digests[name] = {}
             for tile, arrays in tiles.items():
                 place = program.tiling.tiles[tile]
@@ -59,27 +66,32 @@ def save_tiles(
     return digests
 
 
-def _array(folder: Path, name: str, program: Program) -> Any:
+def _array(path: Path, program: Program) -> Any:
     """The Zarr array of one field, made by whichever worker comes first."""
-    mesh = program.problem.mesh
-    size = program.fields[name].size
+    if not path.is_dir():
+        _create(path, program)
+    return zarr.open_array(path, mode="r+", zarr_format=3)
+
+
+def _create(path: Path, program: Program) -> None:
+    """Make an empty array aside and move it into place, so that whoever comes second finds it whole."""
+    size = program.fields[path.name].size
     chunk = tuple(max(tile.shape[axis] for tile in program.tiling.tiles) for axis in range(3))
-    path = folder / name
+    aside = path.with_name(f".{path.name}-{uuid.uuid4().hex}")
+    zarr.create_array(
+        store=str(aside),
+        shape=(size, *program.problem.mesh.zones),
+        chunks=(size, *chunk),
+        dtype="float64",
+        fill_value=float("nan"),
+        compressors=None,
+    )
     try:
-        return zarr.open_array(path, mode="r+", zarr_format=3)
-    except FileNotFoundError:
-        pass
-    try:
-        return zarr.create_array(
-            store=str(path),
-            shape=(size, *mesh.zones),
-            chunks=(size, *chunk),
-            dtype="float64",
-            fill_value=float("nan"),
-            compressors=None,
-        )
-    except (FileExistsError, ValueError):  # another worker made it meanwhile
-        return zarr.open_array(path, mode="r+", zarr_format=3)
+        aside.rename(path)
+    except OSError:
+        shutil.rmtree(aside, ignore_errors=True)
+        if not path.is_dir():
+            raise
 
 
 def complete(
@@ -89,6 +101,7 @@ def complete(
     digests: Mapping[str, Mapping[int, str]],
     values: Mapping[str, Any],
     facts: Mapping[str, Any],
+    run: str,
 ) -> Path:
     """Write the manifest and give the folder its final name; older checkpoints are removed, the newest two stay.
 
@@ -97,7 +110,7 @@ def complete(
     OutputError
         The disk does not take it.
     """
-    partial, final = folder_of(root, cycle, partial=True), folder_of(root, cycle)
+    partial, final = partial_folder(root, cycle, run), folder_of(root, cycle)
     tiles = range(len(program.tiling))
     manifest = {
         "version": VERSION,
@@ -111,15 +124,22 @@ def complete(
     try:
         (partial / MANIFEST).write_text(json.dumps(manifest, indent=1), encoding="utf-8")
         if final.exists():
-            shutil.rmtree(final)
+            _remove(final)
         partial.replace(final)
-        for old in checkpoints(root)[:-2]:
-            shutil.rmtree(old)
+        for old in checkpoints(root)[:-KEPT]:
+            _remove(old)
     except OSError as error:
         raise OutputError(
             f"the checkpoint of cycle {cycle} cannot be completed in {root} ({error.strerror or error})"
         ) from error
     return final
+
+
+def _remove(folder: Path) -> None:
+    """Half a checkpoint must not look like a whole one, should this be interrupted."""
+    doomed = folder.with_name(f"{folder.name}.old.partial")
+    folder.replace(doomed)
+    shutil.rmtree(doomed)
 
 
 def checkpoints(root: Path) -> list[Path]:
@@ -177,33 +197,55 @@ def load_tiles(folder: Path, program: Program, tiles: Sequence[int]) -> dict[int
     Raises
     ------
     CheckpointError
-        An array is missing, misshapen or not what was written.
+        The checkpoint is of another mesh, or an array is missing, misshapen or not what was written.
     """
     manifest = read_manifest(folder)
+    _check_shape(folder, manifest, program)
     state: dict[int, dict[str, Array]] = {tile: {} for tile in tiles}
     for name in program.state_fields:
-        try:
-            source = zarr.open_array(folder / name, mode="r", zarr_format=3)
-            for tile in tiles:
-                array = np.ascontiguousarray(source[(slice(None), *program.tiling.tiles[tile].slices())])
-                if array_digest(name, array) != manifest["fields"][name][tile]:
-                    raise CheckpointError(
-                        f"{folder}: field {name!r} of tile {tile} is not what was written; resume from another"
-                    )
-                array.flags.writeable = False
-                state[tile][name] = array
-        except (OSError, ValueError, KeyError, IndexError, TypeError) as error:
+        for tile in tiles:
+            state[tile][name] = _load(folder, name, tile, program, manifest)
+    return {tile: {**program.scratch_values(tile), **state[tile]} for tile in tiles}
+
+
+def _check_shape(folder: Path, manifest: Mapping[str, Any], program: Program) -> None:
+    for what, ours in (("mesh", program.problem.mesh.zones), ("tile", program.tile_shape)):
+        if list(ours) != manifest[what]:
             raise CheckpointError(
-                f"{folder}: field {name!r} cannot be read ({error}); resume from another"
-            ) from error
-    for tile in tiles:
-        place = program.tiling.tiles[tile]
-        scratch = {n: np.zeros(f.shape(place.shape)) for n, f in program.fields.items() if f.per_tile}
-        state[tile] = {**scratch, **state[tile]}
-    return state
+                f"{folder}: its {what} has {manifest[what]} zones, the problem's {list(ours)};"
+                " resume without changing it"
+            )
+
+
+def _load(folder: Path, name: str, tile: int, program: Program, manifest: Mapping[str, Any]) -> Array:
+    """One field of one tile, checked and write-protected."""
+    where = f"{folder}: field {name!r} of tile {tile}"
+    try:
+        source = zarr.open_array(folder / name, mode="r", zarr_format=3)
+        array = np.ascontiguousarray(source[(slice(None), *program.tiling.tiles[tile].slices())])
+        same = array_digest(name, array) == manifest["fields"][name][tile]
+    except Exception as error:  # what a damaged file makes a reader raise is anybody's guess
+        raise CheckpointError(f"{where} cannot be read ({error!r}); resume from another checkpoint") from error
+    if not same:
+        raise CheckpointError(f"{where} is not what was written; resume from another checkpoint")
+    array.flags.writeable = False
+    return array
 
 
 def load_values(folder: Path, program: Program) -> list[Array]:
-    """Results of cycle-level reductions to go on from, in the order of the splitting."""
+    """Results of cycle-level reductions to go on from, in the order of the splitting.
+
+    Raises
+    ------
+    CheckpointError
+        They are of other reductions, or of other lags.
+    """
     values = read_manifest(folder)["values"]
-    return [np.array(values[reduction.name]) for reduction in program.problem.splitting.reductions]
+    reductions = program.problem.splitting.reductions
+    found = {name: len(rows) - 1 for name, rows in values.items()}
+    expected = {reduction.name: reduction.lag for reduction in reductions}
+    if found != expected:
+        raise CheckpointError(
+            f"{folder}: it holds reductions with lags {found}, the problem has {expected}; resume without changing them"
+        )
+    return [np.array(values[reduction.name], dtype=np.float64) for reduction in reductions]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import contextlib
+import json
 import logging
 from collections.abc import Iterator
 from pathlib import Path
@@ -13,7 +14,7 @@ from distributed import Client, LocalCluster
 from breakstep.engine.interrupts import children_deaf, interrupts_held
 from breakstep.errors import ClusterError
 
-CONNECT_SECONDS = 10
+CONNECT_SECONDS = 5  # Dask tries again and again until then, in case the scheduler is just being started
 
 
 @contextlib.contextmanager
@@ -55,18 +56,48 @@ def existing_cluster(address: str | None = None, scheduler_file: Path | None = N
     ClusterError
         Nobody answers there.
     """
-    where = f"at {address}" if address else f"of scheduler file {scheduler_file}"
+    with _quiet(), _connect(address, scheduler_file) as client:
+        yield client
+
+
+def _connect(address: str | None, scheduler_file: Path | None) -> Client:
+    if scheduler_file is not None:
+        address, where = _address_in(scheduler_file), f"at {address}, which scheduler file {scheduler_file} names"
+    else:
+        where = f"at {address}"
     try:
-        if scheduler_file is not None:
-            if not scheduler_file.is_file():
-                raise ClusterError(f"there is no scheduler file {scheduler_file}; is the scheduler running?")
-            client = Client(scheduler_file=str(scheduler_file), timeout=CONNECT_SECONDS)
-        else:
-            client = Client(address, timeout=CONNECT_SECONDS)
-    except (OSError, ValueError, TimeoutError) as error:
+        return Client(address, timeout=CONNECT_SECONDS)
+    except ValueError as error:
+        raise ClusterError(
+            f"{address} is no address of a Dask scheduler ({error}); expected one such as tcp://10.0.0.1:8786"
+        ) from error
+    except (OSError, TimeoutError) as error:
         raise ClusterError(
             f"no Dask scheduler answers {where} within {CONNECT_SECONDS} s ({type(error).__name__});"
             " check the address and that the scheduler runs"
         ) from error
-    with client:
-        yield client
+
+
+def _address_in(scheduler_file: Path) -> str:
+    """The address that a scheduler wrote into its file."""
+    if not scheduler_file.is_file():
+        raise ClusterError(f"there is no scheduler file {scheduler_file}; is the scheduler running?")
+    try:
+        return str(json.loads(scheduler_file.read_text(encoding="utf-8"))["address"])
+    except (OSError, ValueError, LookupError, TypeError) as error:
+        raise ClusterError(
+            f"{scheduler_file} is no scheduler file: expected JSON with the key address"
+            f" ({type(error).__name__}: {error}); give the file that dask scheduler --scheduler-file wrote"
+        ) from error
+
+
+@contextlib.contextmanager
+def _quiet() -> Iterator[None]:
+    """Keep Dask's log lines from the terminal: what matters of them comes out as our own errors."""
+    logger = logging.getLogger("distributed")
+    before = logger.level
+    logger.setLevel(logging.CRITICAL)
+    try:
+        yield
+    finally:
+        logger.setLevel(before)

@@ -133,9 +133,7 @@ def _execute(program: Program, site: Site, inputs: Inputs) -> Output:
         began = watch.start()
         made = call_user(step.kernel, given, call, where=call.where())
         watch.stop("kernel", step.name, began)
-        arrays |= check_arrays(
-            made, step.writes, program.fields, program.tiling.tiles[site.tile], call.where()
-        )
+        arrays |= check_arrays(made, step.writes, program.fields, program.tiling.tiles[site.tile], call.where())
         output.counters += [(step.name, name, amount) for name, amount in call.counters.items()]
     for reduction in stage.partials:
         call = _call(program, site, reduction.name, {}, 1.0)
@@ -234,9 +232,7 @@ def _global(zone: Sequence[int], tile: Tile) -> Triple:
 def _check_vector(vector: Any, call: Call) -> Array:
     array = call_user(np.asarray, vector, np.float64, where=call.where())
     if array.ndim != 1:
-        raise KernelError(
-            f"{call.where()}: a reduction's kernel must return a vector, got shape {array.shape}"
-        )
+        raise KernelError(f"{call.where()}: a reduction's kernel must return a vector, got shape {array.shape}")
     return array
 
 

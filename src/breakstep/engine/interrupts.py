@@ -10,6 +10,7 @@ import contextlib
 import signal
 import threading
 from collections.abc import Iterator
+from multiprocessing import resource_tracker
 
 
 @contextlib.contextmanager
@@ -37,7 +38,10 @@ def children_deaf() -> Iterator[None]:
     """Threads and processes that are started in the block never see Ctrl-C, nor do those that they start.
 
     The mask of blocked signals is inherited, also by a new program in a new process; a handler is not.
+    Python's resource tracker, which is started with the first process, ends by unblocking SIGINT in the
+    thread that started it: so it goes first.
     """
+    resource_tracker.ensure_running()
     before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
     try:
         yield

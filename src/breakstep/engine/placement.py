@@ -9,7 +9,7 @@ from breakstep.errors import DeclarationError
 from breakstep.graph.tasks import ANYWHERE
 from breakstep.mesh.mesh import Triple
 
-PLACEMENTS = ("blocks", "curve", "cyclic", "balanced", "dask")
+PLACEMENTS = ("blocks", "curve", "cyclic", "balanced", "shared", "dask")
 
 
 def owners(placement: str, program: Program, workers: int, costs: Sequence[float] | None = None) -> list[int]:
@@ -20,7 +20,8 @@ def owners(placement: str, program: Program, workers: int, costs: Sequence[float
     placement : str
         ``"blocks"``: contiguous runs of tiles by number; ``"curve"``: contiguous runs along a space-filling
         curve, so that each worker's tiles form a compact patch; ``"balanced"``: the same, cut where measured
-        costs are equal rather than numbers of tiles; ``"cyclic"``: dealt out one by one, so that neighbours are
+        costs are equal rather than numbers of tiles; ``"shared"``: begins like ``"curve"``, and tiles
+        change owner between windows of cycles (resident dispatch); ``"cyclic"``: dealt out one by one, so that neighbours are
         on different workers (the worst case for bytes); ``"dask"``: anywhere.
     costs : sequence of float, optional
         Measured cost of each tile, for ``"balanced"``; equal if not given.
@@ -36,9 +37,9 @@ def owners(placement: str, program: Program, workers: int, costs: Sequence[float
         return runs(range(tiles), equal, workers)
     if placement == "cyclic":
         return [tile % workers for tile in range(tiles)]
-    if placement in ("curve", "balanced"):
+    if placement in ("curve", "balanced", "shared"):
         order = curve_order([tile.place for tile in program.tiling.tiles])
-        return runs(order, equal if costs is None or placement == "curve" else costs, workers)
+        return runs(order, costs if costs is not None and placement == "balanced" else equal, workers)
     if placement == "dask":
         return [ANYWHERE] * tiles
     raise DeclarationError(f"placement must be one of {', '.join(PLACEMENTS)}, not {placement!r}")

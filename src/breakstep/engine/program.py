@@ -46,9 +46,7 @@ class Program:
         self.plans = HaloPlans(self.tiling)
         self.fields = self.problem.by_name()
         repeats = (item for item in self.problem.splitting.items() if isinstance(item, Repeat))
-        self._reductions = {
-            reduction.name: reduction for reduction in self.problem.splitting.all_reductions()
-        }
+        self._reductions = {reduction.name: reduction for reduction in self.problem.splitting.all_reductions()}
         self._rims: dict[tuple[int, Read, Triple], Rim] = {}
         self._stops = {repeat.name: repeat.stop for repeat in repeats}
 
@@ -57,8 +55,14 @@ class Program:
 
     @property
     def state_fields(self) -> tuple[str, ...]:
-        """Fields that make up the state, scratch left out."""
-        return tuple(name for name, field in self.fields.items() if not field.scratch)
+        """Fields that make up the state: all but scratch that no cycle reads before it is made anew."""
+        carried = self.template.carried
+        return tuple(n for n, f in self.fields.items() if not f.scratch or (n in carried and not f.per_tile))
+
+    def scratch_values(self, tile: int) -> dict[str, Array]:
+        """What scratch fields with one value a tile begin with."""
+        shape = self.tiling.tiles[tile].shape
+        return {n: np.zeros(f.shape(shape)) for n, f in self.fields.items() if f.per_tile}
 
     def initial(self, tile: int) -> dict[str, Array]:
         """The initial state of one tile, checked; scratch values of a whole tile begin at 0.
@@ -73,7 +77,7 @@ class Program:
         place = self.tiling.tiles[tile]
         where = f"the initial state of tile {tile}"
         arrays = dict(call_user(self.problem.initial, place, self.problem.mesh, where=where))
-        zeros = {n: np.zeros(f.shape(place.shape)) for n, f in self.fields.items() if f.per_tile}
+        zeros = self.scratch_values(tile)
         arrays = {**zeros, **arrays}
         expected = {*self.state_fields, *zeros, *self.template.needed, *(arrays.keys() & self.fields.keys())}
         return check_arrays(arrays, sorted(expected), self.fields, place, where)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 import platform
 from collections.abc import Mapping
@@ -12,10 +13,11 @@ from typing import Any
 
 import numpy as np
 
+from breakstep.engine.interrupts import interrupts_held
 from breakstep.engine.placement import owners
 from breakstep.engine.program import Program
 from breakstep.engine.run import Dispatch, Progress, RunOptions, RunResult, whole_field
-from breakstep.errors import OutputError
+from breakstep.errors import OutputError, ProfileError
 from breakstep.graph.tasks import ANYWHERE
 from breakstep.profile.record import FinalField, RunRecord
 from breakstep.profile.run import Profile
@@ -53,21 +55,31 @@ def run_and_record(
     Raises
     ------
     OutputError, ProfileError
-        The folder cannot be written.
+        The folder cannot be written. After a failed run the failure is raised instead.
     """
     check_folder(folder)
     started = datetime.now(UTC).isoformat(timespec="seconds")
     result = dispatch.run(program, options, progress)
+    try:
+        with interrupts_held():
+            _complete(result, dispatch, program, options, mode=mode, scenario=dict(scenario), started=started)
+            return result, write_profile(result.record, folder)
+    except (OutputError, ProfileError) as error:
+        if result.failure is not None:
+            raise result.failure from error
+        raise
+
+
+def _complete(result: RunResult, dispatch: Dispatch, program: Program, options: RunOptions, **facts: Any) -> None:
+    """Add to the record what the dispatch left out: manifest, final fields, coordinates."""
     record = result.record
-    record.manifest.update(
-        _manifest(dispatch, program, options, result), mode=mode, scenario=dict(scenario), started=started
-    )
+    if result.failure is not None or result.interrupted:
+        _name_all_threads(record, dispatch)
+    record.manifest.update(_manifest(dispatch, program, options, result), **facts)
     mesh = program.problem.mesh
     if result.fields:
         record.fields = {
-            name: FinalField(
-                whole_field(program, tiles), program.fields[name].components, program.fields[name].units
-            )
+            name: FinalField(whole_field(program, tiles), program.fields[name].components, program.fields[name].units)
             for name, tiles in result.fields.items()
         }
     origin = (*mesh.origin, 0.0, 0.0, 0.0)[:3]
@@ -75,26 +87,40 @@ def run_and_record(
         axis: np.asarray(origin[i] + (np.arange(mesh.zones[i]) + 0.5) * mesh.widths[i], dtype=np.float64)
         for i, axis in enumerate("xyz")
     }
-    return result, write_profile(record, folder)
+
+
+def _name_all_threads(record: RunRecord, dispatch: Dispatch) -> None:
+    """List the threads of workers whose records are lost, so that what there is can be accounted for."""
+    table = record.threads.table().to_pydict()
+    known = set(zip(table["worker"], table["thread"], strict=True))
+    every = {(worker, thread) for worker in range(dispatch.workers) for thread in range(dispatch.threads)}
+    record.threads.extend(sorted(every - known))
 
 
 def check_folder(folder: Path) -> None:
-    """Refuse a folder that could not take a profile, before any work is done.
+    """Refuse a folder that could not take a profile, before any work is done; leaves no folder behind.
 
     Raises
     ------
     OutputError
     """
+    absent: list[Path] = []
     try:
+        absent += [path for path in (folder, *folder.parents) if not path.exists()]
         folder.mkdir(parents=True, exist_ok=True)
         probe = folder / ".writable"
         probe.touch()
         probe.unlink()
+        used = any(folder.iterdir())
     except OSError as error:
         raise OutputError(
             f"the folder {folder} cannot be written ({error.strerror}); choose another with --out"
         ) from error
-    if any(folder.iterdir()):
+    finally:
+        for path in absent:
+            with contextlib.suppress(OSError):
+                path.rmdir()
+    if used:
         raise OutputError(f"the folder {folder} is not empty; choose another with --out, or remove it")
 
 
@@ -117,7 +143,7 @@ def _manifest(dispatch: Dispatch, program: Program, options: RunOptions, result:
             "tile_shape": [max(tile.shape[axis] for tile in tiling.tiles) for axis in range(3)],
             "tiles": [{"origin": list(tile.origin), "shape": list(tile.shape)} for tile in tiling.tiles],
         },
-        "placement": _placement(options, program, dispatch.workers, result.record),
+        "placement": _placement(options, program, dispatch.workers, result.record, notes),
         "status": status,
         "message": str(result.failure or ("stopped by the user" if result.interrupted else "")),
         "clock": {"method": "shared clock or shortest of several round trips", "residual_ns": residual},
@@ -134,8 +160,12 @@ def _manifest(dispatch: Dispatch, program: Program, options: RunOptions, result:
     }
 
 
-def _placement(options: RunOptions, program: Program, workers: int, record: RunRecord) -> list[int]:
+def _placement(
+    options: RunOptions, program: Program, workers: int, record: RunRecord, notes: Mapping[str, Any]
+) -> list[int]:
     """Owner of each tile; where Dask placed tasks, the worker that ran the tile's last step."""
+    if "owners" in notes:
+        return list(notes["owners"])
     planned = owners(options.placement, program, workers, options.costs)
     if ANYWHERE not in planned:
         return planned

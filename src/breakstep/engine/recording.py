@@ -118,6 +118,4 @@ def task_row(task: Task) -> TaskRow:
 def record_edges(record: RunRecord, tasks: Sequence[Task]) -> None:
     """Every edge of these tasks; the initial state (numbers below 0) is not a task."""
     for task in tasks:
-        record.edges.extend(
-            (producer, task.number, str(kind)) for producer, kind in task.edges() if producer >= 0
-        )
+        record.edges.extend((producer, task.number, str(kind)) for producer, kind in task.edges() if producer >= 0)

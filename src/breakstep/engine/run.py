@@ -38,6 +38,8 @@ class RunOptions:
         Whether to record a checksum of every array that a task makes; slow, for finding differences.
     start : int
         First cycle; above 0 when a run goes on from a checkpoint.
+    stop : int or None
+        Cycle before which to stop; None for the problem's own end.
     """
 
     barriers: tuple[str, ...] = ()
@@ -49,6 +51,7 @@ class RunOptions:
     checkpoint_every: int = 0
     trace: bool = False
     start: int = 0
+    stop: int | None = None
 
     def starting_at(self, cycle: int) -> RunOptions:
         """The same, for a run that goes on with this cycle."""
@@ -102,9 +105,10 @@ class Dispatch(Protocol):
 
 
 def unroller_for(program: Program, options: RunOptions) -> Unroller:
-    """The unrolling of a program under the options' barriers."""
+    """The unrolling of a program under the options' barriers, from ``start`` to ``stop``."""
     problem = program.problem
-    return Unroller(program.template, problem.cycles, options.barriers, problem.ended, options.start)
+    cycles = problem.cycles if options.stop is None else min(options.stop, problem.cycles)
+    return Unroller(program.template, cycles, options.barriers, problem.ended, options.start)
 
 
 def whole_field(program: Program, tiles: list[Array]) -> Array:

@@ -152,26 +152,20 @@ class _SerialRun:
         making = task.making
         assert making is not None
         name = making.reduction.name
-        parts = [
-            self.outputs[n].partials[name] if n in self.outputs else self.vectors[n] for n in task.children
-        ]
+        parts = [self.outputs[n].partials[name] if n in self.outputs else self.vectors[n] for n in task.children]
         combined = combine(making.reduction.combine, parts)
         if self.graph.root(making.instance) != task.number:
             self.vectors[task.number] = combined
             return
         previous = self._vector(task.previous)[-1] if task.previous is not None else None
         stage = task.phase.stage.index
-        self.vectors[task.number] = self.program.finish(
-            stage, making.reduction, combined, previous, making.rows
-        )
+        self.vectors[task.number] = self.program.finish(stage, making.reduction, combined, previous, making.rows)
 
     def _final(self, unroller: Unroller) -> dict[str, list[Array]]:
         final = {}
         for name in self.program.state_fields:
             phase = unroller.latest(name)
-            numbers = (
-                self.graph.step_tasks(phase) if phase else [-1 - t for t in range(len(self.program.tiling))]
-            )
+            numbers = self.graph.step_tasks(phase) if phase else [-1 - t for t in range(len(self.program.tiling))]
             final[name] = [self.outputs[number].fields[name] for number in numbers]
         return final
 

@@ -1,7 +1,8 @@
 """The workers of a Dask cluster, asked of the scheduler itself.
 
 ``Client.scheduler_info`` will not do: a periodic refresh without workers can slip in between its own request
-and its answer (seen on distributed 2026.8), and then all workers seem to be gone.
+and its answer (seen on distributed 2026.8), and then all workers seem to be gone. Of the scheduler's state only
+``Scheduler.workers`` and ``Scheduler.clients`` are used.
 """
 
 from __future__ import annotations
@@ -13,13 +14,23 @@ from distributed import Client, Scheduler
 from breakstep.errors import ClusterError
 
 
-def _ask(dask_scheduler: Scheduler) -> dict[str, tuple[str, int]]:
+def _ask_workers(dask_scheduler: Scheduler) -> dict[str, tuple[str, int]]:
     return {address: (str(state.name), int(state.nthreads)) for address, state in dask_scheduler.workers.items()}
+
+
+def _ask_clients(dask_scheduler: Scheduler) -> set[str]:
+    return set(dask_scheduler.clients)
 
 
 def present_workers(client: Client) -> dict[str, tuple[str, int]]:
     """Name and number of threads of every worker, by address."""
-    found: dict[str, tuple[str, int]] = client.run_on_scheduler(_ask)
+    found: dict[str, tuple[str, int]] = client.run_on_scheduler(_ask_workers)
+    return found
+
+
+def present_clients(client: Client) -> set[str]:
+    """Names of the clients that are connected to the scheduler, this one among them."""
+    found: set[str] = client.run_on_scheduler(_ask_clients)
     return found
 
 

@@ -55,6 +55,7 @@ class Numbering:
         self._before_level = [sum(self.levels[:level]) for level in range(len(self.levels))]
         self._barrier_stages = barrier_stages
         self._next = 0
+        self.before = -1  # first step task of the phase that the initial state stands for; -1 for none
         self.phases: dict[int, PhaseNumbers] = {}
         self.instances: dict[int, tuple[int, int]] = {}  # instance -> (phase, first node)
 
@@ -67,8 +68,16 @@ class Numbering:
         self.instances.update({instance: (phase.number, first) for instance, first in trees.items()})
         return numbers
 
+    def go_on(self, last_phase: int) -> None:
+        """The unrolling starts afresh from the state that a phase left; numbers go on."""
+        self.before = self.phases[last_phase].steps if last_phase in self.phases else -1
+        self.phases.clear()
+        self.instances.clear()
+
     def step(self, phase: int, tile: int) -> int:
-        """Number of a step task."""
+        """Number of a step task; of the initial state, -1 or the task that it stands for."""
+        if phase == INITIAL:
+            return -1 if self.before < 0 else self.before + tile
         return self.phases[phase].steps + tile
 
     def node(self, instance: int, level: int, index: int) -> int:
@@ -134,11 +143,11 @@ class PhaseEdges:
     def _data(self, phase: Phase, first: int) -> Iterator[Edges]:
         by_source: dict[int, list[str]] = {}
         for name, source in phase.sources.items():
-            if source != INITIAL:
+            if source != INITIAL or self.numbering.before >= 0:
                 by_source.setdefault(source, []).append(name)
         for source, names in by_source.items():
             theirs, ours = self._pairs(phase.stage, tuple(names))
-            yield self.numbering.phases[source].steps + theirs, first + ours, EdgeKind.DATA
+            yield self.numbering.step(source, 0) + theirs, first + ours, EdgeKind.DATA
 
     def _pairs(self, stage: Stage, names: tuple[str, ...]) -> tuple[Integers, Integers]:
         """Producer and consumer tiles of a stage's reads of some fields, each pair once."""
@@ -159,9 +168,7 @@ class PhaseEdges:
         if phase.gate is not None:
             instances.add(phase.gate.instance)
         for instance in sorted(instances & self.numbering.instances.keys()):
-            yield self._all(
-                self.numbering.root(instance), first + np.arange(self.numbering.tiles), EdgeKind.REDUCTION
-            )
+            yield self._all(self.numbering.root(instance), first + np.arange(self.numbering.tiles), EdgeKind.REDUCTION)
 
     def _trees(self, phase: Phase) -> Iterator[Edges]:
         numbers = self.numbering.phases[phase.number]

@@ -181,9 +181,7 @@ class _Numbering:
         self.stages.append(stage)
         return stage
 
-    def stage_groups(
-        self, steps: Sequence[Step], tail: Sequence[Reduction], repeat: Repeat | None
-    ) -> list[_Group]:
+    def stage_groups(self, steps: Sequence[Step], tail: Sequence[Reduction], repeat: Repeat | None) -> list[_Group]:
         groups: list[_Group] = []
         for step in steps:
             if groups and self.fuse and can_follow(groups[-1].steps, step):

@@ -242,15 +242,11 @@ class TaskGraph:
                 for number, worker in group:
                     if is_leaf_level and (worker != home or worker == ANYWHERE):
                         tile = number - steps[0].number
-                        pick = Task(
-                            self._next(), Kind.PACK, phase, tile, worker, children=(number,), making=making
-                        )
+                        pick = Task(self._next(), Kind.PACK, phase, tile, worker, children=(number,), making=making)
                         nodes.append(pick)
                         number = pick.number
                     children.append(number)
-                node = Task(
-                    self._next(), Kind.COMBINE, phase, -1, home, children=tuple(children), making=making
-                )
+                node = Task(self._next(), Kind.COMBINE, phase, -1, home, children=tuple(children), making=making)
                 nodes.append(node)
                 above.append((node.number, home))
             level, is_leaf_level = above, False
@@ -263,9 +259,7 @@ class TaskGraph:
         """One counter for each worker, and the release; without owners, one counter for each tile."""
         by_worker: dict[int, list[int]] = {}
         for task in steps:
-            by_worker.setdefault(task.worker if task.worker != ANYWHERE else -2 - task.tile, []).append(
-                task.number
-            )
+            by_worker.setdefault(task.worker if task.worker != ANYWHERE else -2 - task.tile, []).append(task.number)
         counts = [
             Task(self._next(), Kind.COUNT, phase, -1, max(worker, ANYWHERE), children=tuple(numbers))
             for worker, numbers in by_worker.items()

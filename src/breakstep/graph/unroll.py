@@ -210,20 +210,17 @@ class Unroller:
         known: int = 0
         stopped_at: int | None = None
         last: Array | None = None
-        while stopped_at is None or len(verdicts) <= stopped_at + lag:
+        while stopped_at is None:
             iteration = len(verdicts)
             if iteration < repeat.at_most and (iteration < foreseen or iteration - 1 - lag < known):
                 gate = ValueRef(verdicts[iteration - 1 - lag]) if iteration > lag else None
                 yield from self._iteration(node, cycle, iteration, verdicts, gate)
                 continue
-            if stopped_at is not None:
-                break
             if known == len(verdicts):
                 assert last is not None
                 raise _not_converged(node, cycle, last)
-            wanted = (
-                iteration - lag if iteration < repeat.at_most else iteration
-            )  # no later verdict than needed
+            # No later verdict than gates the next iteration: those that the lag allows are out already.
+            wanted = iteration - lag if iteration < repeat.at_most else iteration
             answer = yield Need(tuple(verdicts[known:wanted]))
             assert answer is not None
             for value in answer:

@@ -197,9 +197,7 @@ def _specific_energy(gas: Floats, i: int, j: int, k: int) -> float:
 
 
 @merged
-def _unpack(
-    gas: Floats, i: int, j: int, k: int, network: NetworkArrays, state: Floats
-) -> tuple[float, float]:
+def _unpack(gas: Floats, i: int, j: int, k: int, network: NetworkArrays, state: Floats) -> tuple[float, float]:
     """Molar abundances into `state`; moles of nuclei and of electrons a gram."""
     nuclei, electrons = 0.0, 0.0
     for s in range(network.mass_numbers.size):
@@ -266,9 +264,7 @@ def _largest_change(network: NetworkArrays, state: Floats, change: Floats, rtol:
 
 
 @merged
-def _store(
-    network: NetworkArrays, state: Floats, gas: Floats, i: int, j: int, k: int, new_gas: Floats
-) -> int:
+def _store(network: NetworkArrays, state: Floats, gas: Floats, i: int, j: int, k: int, new_gas: Floats) -> int:
     """Write partial densities and energy of one zone, keeping the books."""
     n = network.mass_numbers.size
     before, after = 0.0, 0.0

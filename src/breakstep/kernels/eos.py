@@ -190,9 +190,7 @@ def gas_temperature(thermal: float, ions: float, electrons: float, p_ed: float) 
 
 
 @inlined
-def _newton_step(
-    a_rad: float, ions: float, electrons: float, p_ed: float, thermal: float, temperature: float
-) -> float:
+def _newton_step(a_rad: float, ions: float, electrons: float, p_ed: float, thermal: float, temperature: float) -> float:
     """One Newton step on the thermal energy density, multiplied out so as to need a single division."""
     p_end = electrons * temperature
     p_e: float = np.sqrt(p_end * p_end + p_ed * p_ed)
@@ -205,9 +203,7 @@ def _newton_step(
 
 
 @inlined
-def stellar_temperature(
-    a_rad: float, density: float, specific_energy: float, abar: float, zbar: float
-) -> float:
+def stellar_temperature(a_rad: float, density: float, specific_energy: float, abar: float, zbar: float) -> float:
     """Temperature [K] of the stellar mixture; nan where the energy does not exceed that at T = 0."""
     ions = GAS_CONSTANT * density / abar
     electrons = ions * zbar

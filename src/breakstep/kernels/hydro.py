@@ -75,9 +75,7 @@ GAS_COMPONENTS = 5
 
 
 @compiled
-def _prepare(
-    source: Array, axis: int, s: Array, chunk: Any, eos: Array, mass_numbers: Array, charges: Array
-) -> None:
+def _prepare(source: Array, axis: int, s: Array, chunk: Any, eos: Array, mass_numbers: Array, charges: Array) -> None:
     """Load a chunk; primitive variables, equation of state, fractions."""
     count = chunk.load_pieces * chunk.load_length
     species = mass_numbers.size
@@ -230,9 +228,7 @@ def _load_block(gas: Array, s: Array, start: int, count: int, species: int) -> N
 
 
 @compiled
-def _signal_rate(
-    gas: Array, widths: Array, eos: Array, mass_numbers: Array, charges: Array
-) -> tuple[float, int]:
+def _signal_rate(gas: Array, widths: Array, eos: Array, mass_numbers: Array, charges: Array) -> tuple[float, int]:
     s = scratch_for(mass_numbers.size)
     largest = 0.0
     bad_zone = NONE

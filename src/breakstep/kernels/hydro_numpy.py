@@ -72,9 +72,7 @@ def _half_step(
     ]
 
 
-def _face_states(
-    half: float, gamma1: Array, primitive: list[Array]
-) -> tuple[list[Array], list[Array], Array, Array]:
+def _face_states(half: float, gamma1: Array, primitive: list[Array]) -> tuple[list[Array], list[Array], Array, Array]:
     """States at the upper and lower faces, and the weights that made them, for all but the end zones."""
     d = np.array([limited_differences(q) for q in primitive])
     rho, u, v, w, p, e = (q[1:-1] for q in primitive)
@@ -99,14 +97,10 @@ def _wave_speeds(left: list[Array], c2_l: Array, right: list[Array], c2_r: Array
     spread = np.sqrt(
         (root_l * c2_l + root_r * c2_r) * weight + 0.5 * (root_l * root_r) * (weight * weight) * (jump * jump)
     )
-    return np.minimum(left[1] - np.sqrt(c2_l), mean - spread), np.maximum(
-        right[1] + np.sqrt(c2_r), mean + spread
-    )
+    return np.minimum(left[1] - np.sqrt(c2_l), mean - spread), np.maximum(right[1] + np.sqrt(c2_r), mean + spread)
 
 
-def hllc(
-    left: list[Array], gamma1_l: Array, right: list[Array], gamma1_r: Array
-) -> tuple[list[Array], Array]:
+def hllc(left: list[Array], gamma1_l: Array, right: list[Array], gamma1_r: Array) -> tuple[list[Array], Array]:
     """HLLC fluxes of mass, momentum (3) and energy, and the speed of the middle wave."""
     c2_l, c2_r = gamma1_l * left[4] / left[0], gamma1_r * right[4] / right[0]
     s_l, s_r = _wave_speeds(left, c2_l, right, c2_r)
@@ -167,9 +161,7 @@ def sweep(
     internal = energy - kinetic
     p, gamma1 = _pressures(eos, rho, internal, inverse, partial, mass_numbers, charges)
     speed = np.abs(velocity[0]) + np.sqrt(gamma1 * p * inverse)
-    at_upper, at_lower, to_upper, to_lower = _face_states(
-        0.5 * courant, gamma1[1:-1], [rho, *velocity, p, internal]
-    )
+    at_upper, at_lower, to_upper, to_lower = _face_states(0.5 * courant, gamma1[1:-1], [rho, *velocity, p, internal])
     fluxes, middle = hllc([q[:-1] for q in at_upper], gamma1[1:-2], [q[1:] for q in at_lower], gamma1[2:-1])
     if len(partial):
         x = partial * inverse

@@ -74,9 +74,7 @@ def _freeze(group: Any) -> Any:
     return type(group)(*members)
 
 
-def lay_out(
-    species: Sequence[Species], reactions: Sequence[Reaction]
-) -> tuple[NetworkArrays, NDArray[np.int64]]:
+def lay_out(species: Sequence[Species], reactions: Sequence[Reaction]) -> tuple[NetworkArrays, NDArray[np.int64]]:
     """The arrays of a network, and the packed positions of its Jacobian (`analyse`)."""
     binding = np.array([one.binding_energy * MEV * N_A for one in species])
     reactants, changes = _reactant_slots(species, reactions), _net_changes(species, reactions)
@@ -136,17 +134,13 @@ def _compressed(rows: Sequence[Sequence[int]]) -> tuple[Indices, Indices]:
     return start, np.array([item for row in rows for item in row], dtype=np.uint32)
 
 
-def _stoichiometry(
-    reactants: Indices, changes: Floats, binding: Floats, positions: NDArray[np.int64]
-) -> Stoichiometry:
+def _stoichiometry(reactants: Indices, changes: Floats, binding: Floats, positions: NDArray[np.int64]) -> Stoichiometry:
     n = changes.shape[0]
     per_species = [np.flatnonzero(changes[k]).tolist() for k in range(n)]
     change_start, change_reaction = _compressed(per_species)
     slots = [np.flatnonzero(reactants.T.ravel() == j).tolist() for j in range(n)]
     slot_start, slot = _compressed(slots)
-    terms = {
-        (i, j): [s for s in slots[j] if changes[i, s // MAX_REACTANTS]] for i in range(n) for j in range(n)
-    }
+    terms = {(i, j): [s for s in slots[j] if changes[i, s // MAX_REACTANTS]] for i in range(n) for j in range(n)}
     terms = {pair: found for pair, found in terms.items() if found}
     entry_start, entry_slot = _compressed(list(terms.values()))
     coefficients = [changes[i, s // MAX_REACTANTS] for (i, _), found in terms.items() for s in found]

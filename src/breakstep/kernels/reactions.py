@@ -223,9 +223,7 @@ def abundance_jacobian(stoichiometry: Stoichiometry, slot_slope: Floats, jacobia
 
 
 @merged
-def heat_gradient(
-    stoichiometry: Stoichiometry, energy_per_nuclei: float, slot_slope: Floats, species: int
-) -> float:
+def heat_gradient(stoichiometry: Stoichiometry, energy_per_nuclei: float, slot_slope: Floats, species: int) -> float:
     """Derivative of `heat_release` by one species' molar abundance."""
     total = 0.0
     for term in range(stoichiometry.slot_start[species], stoichiometry.slot_start[species + 1]):

@@ -28,9 +28,7 @@ def limited_difference(below: float, here: float, above: float) -> float:
 
 
 @inlined
-def wave_speeds(
-    rho_l: float, u_l: float, c2_l: float, rho_r: float, u_r: float, c2_r: float
-) -> tuple[float, float]:
+def wave_speeds(rho_l: float, u_l: float, c2_l: float, rho_r: float, u_r: float, c2_r: float) -> tuple[float, float]:
     """Bounds on the signal speeds of a face: Einfeldt's (1988, SIAM J. Numer. Anal. 25, 294).
 
     With them HLLC keeps density and internal energy positive (Batten, Clarke, Lambert, Causon 1997,

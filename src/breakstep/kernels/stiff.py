@@ -104,9 +104,7 @@ def _prepare_matrix(network: NetworkArrays, h: float, scratch: StiffScratch) -> 
 
 
 @merged
-def _stage(
-    network: NetworkArrays, zone: Zone, state: Floats, h: float, i: int, scratch: StiffScratch
-) -> None:
+def _stage(network: NetworkArrays, zone: Zone, state: Floats, h: float, i: int, scratch: StiffScratch) -> None:
     """Compute U_i from the earlier ones."""
     u = scratch.stages[i]
     n = state.size
@@ -152,9 +150,7 @@ def _propose(
 
 
 @merged
-def _linearise(
-    network: NetworkArrays, zone: Zone, state: Floats, scratch: StiffScratch, counters: Counters
-) -> None:
+def _linearise(network: NetworkArrays, zone: Zone, state: Floats, scratch: StiffScratch, counters: Counters) -> None:
     linearise(network, zone, state, scratch.kinetics, scratch.start_change, scratch.jacobian)
     counters[JACOBIANS] += 1
     counters[RIGHT_HAND_SIDES] += 1

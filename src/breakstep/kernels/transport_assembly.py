@@ -114,9 +114,7 @@ def face_couplings(
         for g in range(n):
             low = bands[2 * (axis - 3 + n_axes) * n + g]
             high = bands[(2 * (axis - 3 + n_axes) + 1) * n + g]
-            _axis_couplings(
-                radiation[g], total[g], axis, strides, path, spacing[axis], limited, extent, low, high
-            )
+            _axis_couplings(radiation[g], total[g], axis, strides, path, spacing[axis], limited, extent, low, high)
     return bands
 
 
@@ -161,9 +159,7 @@ def _gathered(target: Floats, source: Floats, zones: Integers, factor: float) ->
 
 
 @inlined
-def _matter(
-    k: Floats, b: Floats, theta: Floats, beta: Floats, zones: Integers, emitted: Floats, back: Floats
-) -> None:
+def _matter(k: Floats, b: Floats, theta: Floats, beta: Floats, zones: Integers, emitted: Floats, back: Floats) -> None:
     """f theta and f beta of eight zones: emission at fixed E, and what absorption adds to it."""
     for z in range(LANES):
         emitted[z] = 0.0

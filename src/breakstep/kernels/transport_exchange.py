@@ -14,9 +14,7 @@ from breakstep.kernels.transport_matter import internal_energy
 
 
 @compiled
-def gain_flat(
-    radiation: Floats, old: Floats, bands: Floats, deposit: Floats, extent: Extent, n_axes: int
-) -> Floats:
+def gain_flat(radiation: Floats, old: Floats, bands: Floats, deposit: Floats, extent: Extent, n_axes: int) -> Floats:
     """``energy_gain`` on flat arrays. Adds group by group, axis by axis, low face then high face."""
     n = old.shape[0]
     strides = halo_strides(extent, n_axes)

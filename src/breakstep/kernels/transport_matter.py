@@ -69,9 +69,7 @@ def internal_energy(gas: Floats, place: int) -> float:
 
 
 @inlined
-def _thermal_state(
-    gas: Floats, place: int, eos: Floats, mass_numbers: Floats, charges: Floats
-) -> tuple[float, float]:
+def _thermal_state(gas: Floats, place: int, eos: Floats, mass_numbers: Floats, charges: Floats) -> tuple[float, float]:
     """Temperature [K] and heat capacity [erg/(g K)] of one zone."""
     abar, zbar = mean_nuclear(gas[FIRST_SPECIES:, place], mass_numbers, charges)
     specific = internal_energy(gas, place) / gas[0, place]
@@ -117,9 +115,7 @@ def without_halo(values: Floats, extent: Extent, n_axes: int) -> Floats:
 
 
 @compiled
-def opacities_flat(
-    density: Floats, temperature: Floats, factors: Floats, power_law: Floats
-) -> tuple[Floats, Floats]:
+def opacities_flat(density: Floats, temperature: Floats, factors: Floats, power_law: Floats) -> tuple[Floats, Floats]:
     """Absorption of each group, shape (G, n), and the grey scattering, shape (1, n) [1/cm]."""
     scale = np.empty(density.size)
     scattering = np.empty((1, density.size))

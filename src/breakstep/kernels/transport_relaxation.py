@@ -56,9 +56,7 @@ def _collect(state: Floats, g: int, at: Places) -> Lanes:
 
 
 @inlined
-def _right_side(
-    right: Floats, panel: Floats, state: Floats, places: Integers, q: int, steps: Integers
-) -> None:
+def _right_side(right: Floats, panel: Floats, state: Floats, places: Integers, q: int, steps: Integers) -> None:
     """Right-hand sides of eight zones: what is given plus what flows in from the neighbours."""
     n = right.shape[0]
     for g in range(n):

@@ -91,9 +91,7 @@ class Tiling:
         for axis, width in enumerate(widths):
             narrowest = self.narrowest(axis)
             if width > 0 and not self.mesh.active[axis]:
-                raise TilingError(
-                    f"{what} reads a halo along {AXIS_NAMES[axis]}, which the mesh does not have"
-                )
+                raise TilingError(f"{what} reads a halo along {AXIS_NAMES[axis]}, which the mesh does not have")
             if width > narrowest:
                 raise TilingError(
                     f"{what} reads a halo of {width} zones along {AXIS_NAMES[axis]}, but the narrowest tile"

@@ -124,9 +124,7 @@ def _busy_until(blocks: Blocks, thread: int, moment: int) -> int:
 
 
 @compiled_loop
-def _put(
-    parts: Integers, count: int, account: int, reason: int, task: int, low: int, high: int, amount: int
-) -> int:
+def _put(parts: Integers, count: int, account: int, reason: int, task: int, low: int, high: int, amount: int) -> int:
     """Write a part where there is room; count it either way."""
     if count < len(parts):
         parts[count, _ACCOUNT] = account
@@ -217,9 +215,7 @@ def _walk(run: Timeline, task: int, low: int, high: int, parts: Integers) -> int
 
 
 @compiled_loop
-def _walk_all(
-    run: Timeline, task: Integers, low: Integers, high: Integers, stages: int
-) -> tuple[Integers, Integers]:
+def _walk_all(run: Timeline, task: Integers, low: Integers, high: Integers, stages: int) -> tuple[Integers, Integers]:
     """Explain every gap; sum the parts by gap and account, and by stage at fault and account."""
     by_gap = np.zeros((len(task), len(WAITS)), np.int64)
     by_stage = np.zeros((stages, len(WAITS)), np.int64)
@@ -236,9 +232,7 @@ def _walk_all(
     return by_gap, by_stage
 
 
-def explain_all(
-    run: Timeline, task: Integers, low: Integers, high: Integers, stages: int
-) -> tuple[Integers, Integers]:
+def explain_all(run: Timeline, task: Integers, low: Integers, high: Integers, stages: int) -> tuple[Integers, Integers]:
     """Book every gap of a run.
 
     Parameters

@@ -164,7 +164,5 @@ def without_unrun(tables: Mapping[str, pa.Table]) -> dict[str, pa.Table]:
     kept = dict(tables)
     for table, columns in _TASK_COLUMNS.items():
         for column in columns:
-            kept[table] = kept[table].filter(
-                pc.is_in(kept[table].column(column), value_set=ran.combine_chunks())
-            )
+            kept[table] = kept[table].filter(pc.is_in(kept[table].column(column), value_set=ran.combine_chunks()))
     return kept

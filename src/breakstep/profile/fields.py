@@ -103,9 +103,7 @@ def read_fields(path: Path, manifest: Manifest, *, check_digests: bool = True) -
             _check_digests(_opened(path, cache=False), manifest, path)
     except ProfileError:
         raise
-    except (
-        Exception
-    ) as fault:  # decoders of damaged bytes raise whatever they like, none of it a defect of ours
+    except Exception as fault:  # decoders of damaged bytes raise whatever they like, none of it a defect of ours
         raise ProfileError(f"{path}: cannot be read as a Zarr store ({_brief(fault)}); {_REMEDY}") from fault
     return dataset
 
@@ -183,6 +181,4 @@ def _check_digests(dataset: xr.Dataset, manifest: Manifest, path: Path) -> None:
                 tiles=wrong,
             )
     if overall_digest(manifest["digests"]) != manifest["digest"]:
-        raise ProfileError(
-            f"{path.parent}/manifest.json: key digest does not belong to key digests; {_REMEDY}"
-        )
+        raise ProfileError(f"{path.parent}/manifest.json: key digest does not belong to key digests; {_REMEDY}")

@@ -118,9 +118,7 @@ class Ledger:
         parts = np.empty((0, len(PART_COLUMNS)), dtype=np.int64)
         if len(found):  # a task ends one gap at most
             place = int(positions(self._numbers, np.array([task]))[0])
-            parts = explain_one(
-                self._run, place, int(found["start_ns"].iloc[0]), int(found["end_ns"].iloc[0])
-            )
+            parts = explain_one(self._run, place, int(found["start_ns"].iloc[0]), int(found["end_ns"].iloc[0]))
         frame = pd.DataFrame(parts, columns=list(PART_COLUMNS))
         frame["account"] = [WAITS[code] for code in parts[:, PART_COLUMNS.index("account")]]
         frame["reason"] = [REASONS[code] for code in parts[:, PART_COLUMNS.index("reason")]]
@@ -163,9 +161,7 @@ def _book_tasks(by_thread: pd.DataFrame, frames: Frames, run: Timeline) -> None:
 
 
 @compiled_loop
-def _covered(
-    task: Integers, start: Integers, end: Integers, task_start: Integers, task_end: Integers
-) -> Integers:
+def _covered(task: Integers, start: Integers, end: Integers, task_start: Integers, task_end: Integers) -> Integers:
     """How much of each task lies inside its intervals, which are sorted by task, then start."""
     covered = np.zeros(len(task_start), np.int64)
     reached = task_start.copy()
@@ -178,9 +174,7 @@ def _covered(
     return covered
 
 
-def _book_gaps(
-    by_thread: pd.DataFrame, frames: Frames, run: Timeline, first: int
-) -> tuple[pd.DataFrame, pd.DataFrame]:
+def _book_gaps(by_thread: pd.DataFrame, frames: Frames, run: Timeline, first: int) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Book the idle time before each block of tasks."""
     blocks = run.blocks
     low, high = _gap_bounds(blocks, first)

@@ -41,9 +41,7 @@ class Profile:
         Where it was read from.
     """
 
-    def __init__(
-        self, manifest: Manifest, frames: Frames, fields: xr.Dataset, folder: Path | None = None
-    ) -> None:
+    def __init__(self, manifest: Manifest, frames: Frames, fields: xr.Dataset, folder: Path | None = None) -> None:
         self.manifest = manifest
         self.frames = frames
         self.fields = fields

@@ -61,12 +61,8 @@ TASKS = TableLayout(
     "tasks",
     (
         Column("task", _INT64, "serial number of the task, ascending in the order of emission"),
-        Column(
-            "kind", _WORD, "step; combine, a node of a reduction tree; count and release, a barrier; pack"
-        ),
-        Column(
-            "stage", _WORD, "names of the fused steps; of the reduction; of the barrier; of the stage cut"
-        ),
+        Column("kind", _WORD, "step; combine, a node of a reduction tree; count and release, a barrier; pack"),
+        Column("stage", _WORD, "names of the fused steps; of the reduction; of the barrier; of the stage cut"),
         Column("tile", _INT32, "number of the tile, -1 for none"),
         Column("cycle", _INT32, "number of the cycle, -1 before the first"),
         Column("iteration", _INT32, "number of the iteration, -1 outside a repeat"),

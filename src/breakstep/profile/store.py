@@ -171,9 +171,7 @@ def _refuse(constant: str) -> NoReturn:
 
 def _no_manifest(folder: Path) -> ProfileError:
     if not folder.is_dir():
-        return ProfileError(
-            f"{folder}: expected a profile folder, there is none; check the path", file=str(folder)
-        )
+        return ProfileError(f"{folder}: expected a profile folder, there is none; check the path", file=str(folder))
     inside = [path.name for path in profiles_in(folder)]
     if inside:
         hint = f"give one of the {len(inside)} profiles in it: {', '.join(inside)}"
@@ -185,9 +183,7 @@ def _no_manifest(folder: Path) -> ProfileError:
 def _read_table(layout: TableLayout, folder: Path, manifest: Manifest) -> pa.Table:
     file = _table_file(folder, layout.name)
     if not file.is_file():
-        raise ProfileError(
-            f"{file}: expected the table {layout.name}, the file is missing; {_REMEDY}", file=str(file)
-        )
+        raise ProfileError(f"{file}: expected the table {layout.name}, the file is missing; {_REMEDY}", file=str(file))
     try:
         table = pq.ParquetFile(file, page_checksum_verification=True).read().unify_dictionaries()
         table.validate(full=True)
@@ -210,9 +206,7 @@ def _table_fault(layout: TableLayout, table: pa.Table, rows: int) -> str | None:
             return f"column {name}: expected it once, found the columns {', '.join(names) or 'of no name'}"
     for column in layout.columns:
         if table.schema.field(column.name).type != column.type:
-            return (
-                f"column {column.name}: expected {column.type}, found {table.schema.field(column.name).type}"
-            )
+            return f"column {column.name}: expected {column.type}, found {table.schema.field(column.name).type}"
     if table.num_rows != rows:
         return f"expected {rows} rows as the manifest says, found {table.num_rows}"
     return None

@@ -81,9 +81,7 @@ def _pick_latest(
         if is_barrier[edge]:
             if at > barrier_at[c] or (at == barrier_at[c] and p < barrier_from[c]):
                 barrier_from[c], barrier_at[c] = p, at
-        elif at > data_at[c] or (
-            at == data_at[c] and (p < data_from[c] or (p == data_from[c] and k < data_kind[c]))
-        ):
+        elif at > data_at[c] or (at == data_at[c] and (p < data_from[c] or (p == data_from[c] and k < data_kind[c]))):
             data_from[c], data_kind[c], data_at[c] = p, k, at
     return data_from, data_kind, data_at, barrier_from, barrier_at
 

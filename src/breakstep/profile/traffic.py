@@ -50,9 +50,7 @@ def traffic_of(frames: Frames) -> Traffic:
     moved, tasks = frames["transfers"], frames["tasks"]
     sender = positions(integers(tasks, "task"), integers(moved, "producer"))
     codes, stages = words_of(tasks, "stage")
-    by_stage = summed(
-        pd.DataFrame({"stage": codes[sender], "bytes": integers(moved, "bytes")}), "stage", "bytes"
-    )
+    by_stage = summed(pd.DataFrame({"stage": codes[sender], "bytes": integers(moved, "bytes")}), "stage", "bytes")
     return Traffic(
         transfers=len(moved),
         total_bytes=int(integers(moved, "bytes").sum()),

@@ -6,11 +6,14 @@ the gain and its interval come from all pairs.
 
 from __future__ import annotations
 
+import math
 import statistics
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
+
+import pandas as pd
 
 from breakstep.profile.ledger import ACCOUNTS
 from breakstep.profile.run import Profile
@@ -88,9 +91,9 @@ class Comparison:
 
 
 def run_figures(profile: Profile) -> dict[str, Any]:
-    """One run's figures under the documented keys."""
+    """One run's figures under the documented keys; null where a ratio has nothing to compare."""
     ledger, imbalance = profile.ledger, profile.imbalance
-    return {
+    figures = {
         "seconds": ledger.span_ns / 1e9,
         "tasks": len(profile.tasks),
         "cycles": profile.manifest["cycles"],
@@ -110,7 +113,24 @@ def run_figures(profile: Profile) -> dict[str, Any]:
         "digest": profile.manifest["digest"],
         "barriers": profile.manifest["barriers"],
         "status": profile.manifest["status"],
+        "message": profile.manifest["message"],
     }
+    return {key: _without_nan(value) for key, value in figures.items()}
+
+
+def _without_nan(value: Any) -> Any:
+    """The same with None in place of numbers that JSON cannot hold."""
+    if isinstance(value, dict):
+        return {key: _without_nan(inner) for key, inner in value.items()}
+    return None if isinstance(value, float) and not math.isfinite(value) else value
+
+
+def compute_by(profile: Profile, column: str) -> pd.Series[int]:
+    """Time inside kernels [ns] by ``worker`` or ``tile``, every worker or tile that ran a task among them."""
+    tasks = profile.tasks.set_index("task")[column]
+    kernels = profile.intervals[profile.intervals["what"] == "kernel"]
+    spent = (kernels["end_ns"] - kernels["start_ns"]).groupby(kernels["task"]).sum()
+    return spent.reindex(tasks.index, fill_value=0).groupby(tasks).sum()
 
 
 def first_difference(reference: Profile, other: Profile) -> Difference | None:

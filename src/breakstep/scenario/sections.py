@@ -84,7 +84,7 @@ class RunSection(Section):
     )
     workers: Annotated[int, Field(ge=1, le=4096)] = Field(default=2, description="worker processes")
     threads: Annotated[int, Field(ge=1, le=256)] = Field(default=1, description="threads of each worker")
-    placement: Literal["blocks", "curve", "cyclic", "balanced", "dask"] = Field(
+    placement: Literal["blocks", "curve", "cyclic", "balanced", "shared", "dask"] = Field(
         default="blocks", description="who decides which worker owns a tile"
     )
     window: Annotated[int, Field(ge=1, le=1000)] = Field(default=4, description="cycles that may be in flight at once")

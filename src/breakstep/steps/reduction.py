@@ -62,13 +62,9 @@ class Reduction:
         check_name("reduction", self.name)
         check_reads(f"reduction {self.name!r}", self.reads)
         if not isinstance(self.lag, int) or self.lag < 0:
-            raise DeclarationError(
-                f"reduction {self.name!r}: lag must be a whole number, 0 or more, not {self.lag!r}"
-            )
+            raise DeclarationError(f"reduction {self.name!r}: lag must be a whole number, 0 or more, not {self.lag!r}")
         if not all(read.is_local for read in self.reads):
-            raise DeclarationError(
-                f"reduction {self.name!r} reads ghost zones; it may read its own zones only"
-            )
+            raise DeclarationError(f"reduction {self.name!r} reads ghost zones; it may read its own zones only")
 
 
 def combine(kind: Combine, vectors: list[Array | None]) -> Array | None:
@@ -78,9 +74,7 @@ def combine(kind: Combine, vectors: list[Array | None]) -> Array | None:
         return None
     if any(vector.shape != present[0].shape for vector in present):
         sizes = ", ".join(sorted({str(vector.size) for vector in present}))
-        raise KernelError(
-            f"tiles contribute vectors of different lengths ({sizes}) to a reduction; return one length"
-        )
+        raise KernelError(f"tiles contribute vectors of different lengths ({sizes}) to a reduction; return one length")
     total: Array = present[0].copy()
     operation: Callable[[Array, Array], Array] = _OPERATIONS[kind]
     for vector in present[1:]:

@@ -130,9 +130,7 @@ class Splitting:
         for owner, names in self._field_names():
             for name in names:
                 if name not in fields:
-                    raise DeclarationError(
-                        f"{owner} names field {name!r}; the fields are {', '.join(sorted(fields))}"
-                    )
+                    raise DeclarationError(f"{owner} names field {name!r}; the fields are {', '.join(sorted(fields))}")
 
     def _field_names(self) -> Iterator[tuple[str, list[str]]]:
         for step in self.steps():

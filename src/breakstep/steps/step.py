@@ -148,6 +148,5 @@ def check_reads(owner: str, reads: tuple[Read, ...]) -> None:
     for read in reads:
         if len(read.halo) != 3 or any(not isinstance(w, int) or w < 0 for w in read.halo):
             raise DeclarationError(
-                f"{owner} reads field {read.field!r} with halo {read.halo!r};"
-                " expected three whole numbers, 0 or more"
+                f"{owner} reads field {read.field!r} with halo {read.halo!r}; expected three whole numbers, 0 or more"
             )

@@ -56,9 +56,7 @@ class Transport:
         if not 0.0 < self.omega < 2.0:
             raise DeclarationError(f"transport: omega must lie between 0 and 2, not {self.omega}")
         if self.sweeps_per_exchange < 1:
-            raise DeclarationError(
-                f"transport: sweeps_per_exchange must be at least 1, not {self.sweeps_per_exchange}"
-            )
+            raise DeclarationError(f"transport: sweeps_per_exchange must be at least 1, not {self.sweeps_per_exchange}")
 
 
 @dataclass(frozen=True)
@@ -176,9 +174,7 @@ def transport_fields(
         Field("old_radiation", _numbered("group", n), ("erg/cm^3",), scratch=True),
         Field("bands", _numbered("band", 2 * dimensions * n), scratch=True),
         Field("system", _numbered("entry", n * (n + 1 + 2 * dimensions)), scratch=True),
-        Field(
-            "correction", ("largest_correction", "largest_energy"), ("erg/cm^3",), scratch=True, per_tile=True
-        ),
+        Field("correction", ("largest_correction", "largest_energy"), ("erg/cm^3",), scratch=True, per_tile=True),
     )
 
 
@@ -196,9 +192,7 @@ def transport_items(gas: Gas, how: Transport, dimensions: int) -> list[Item]:
         ("bands", "system", "old_radiation"),
         uses=("dt",),
     )
-    relax = Step(
-        "relax", RelaxKernel(gas, how), (Read("radiation", halo), Read("system")), ("radiation", "correction")
-    )
+    relax = Step("relax", RelaxKernel(gas, how), (Read("radiation", halo), Read("system")), ("radiation", "correction"))
     residual = Reduction(
         "residual",
         correction_of_tile,

@@ -178,7 +178,7 @@ def test_misbehaving_kernels_are_found_out(fault: str, sentence: str) -> None:
     ],
 )
 def test_contributions_must_be_vectors(vector: object, sentence: str) -> None:
-    reduction = replace(dt_reduction(), kernel=lambda arrays, call: vector)
+    reduction = replace(dt_reduction(), kernel=lambda arrays, call: vector)  # type: ignore[arg-type, return-value]
     step = Step("drift", toys.drift, (Read("w", (3, 0, 0)),), ("w",))
     with pytest.raises(KernelError, match=sentence):
         run(program_of(step, reductions=(reduction,)), 1)
@@ -186,8 +186,13 @@ def test_contributions_must_be_vectors(vector: object, sentence: str) -> None:
 
 def test_reductions_see_no_values_wherever_they_are_fused() -> None:
     """Measured at the start there are none; fused behind a step that uses dt there must be none either."""
-    seen = []
-    reduction = replace(dt_reduction(), kernel=lambda arrays, call: seen.append(call.values) or np.zeros(1))
+    seen: list[Mapping[str, Array]] = []
+
+    def spy(arrays: Mapping[str, Array], call: Call) -> Array:
+        seen.append(call.values)
+        return np.zeros(1)
+
+    reduction = replace(dt_reduction(), kernel=spy)
     step = Step("grow", toys.grow, (Read("u"), Read("w")), ("u",), uses=("dt",))
     run(program_of(step, reductions=(reduction,)), 1, {"dt": np.array([0.5, 0.0])})
     assert seen == [{}]
@@ -195,8 +200,10 @@ def test_reductions_see_no_values_wherever_they_are_fused() -> None:
 
 def test_write_protection_does_not_depend_on_the_splitting() -> None:
     """Inputs of a first step come from another task, of a second from the same one."""
-    for steps in ([Step("spy", Spy(), (Read("u"),), ("u",))] * 2, [Step("spy", Spy(), (Read("u", (1, 0, 0)),), ("u",))]):
+    for steps in (
+        [Step("spy", Spy(), (Read("u"),), ("u",))] * 2,
+        [Step("spy", Spy(), (Read("u", (1, 0, 0)),), ("u",))],
+    ):
         run(program_of(*steps), 0)
         for arrays, _ in steps[-1].kernel.seen:  # type: ignore[attr-defined]
             assert not arrays["u"].flags.writeable
-

@@ -30,7 +30,7 @@ def only_u(tile: Tile, mesh: Mesh) -> Mapping[str, Array]:
 
 def bad_state(tile: Tile, mesh: Mesh) -> Mapping[str, Array]:
     """A function with a mistake in it."""
-    return {"u": np.ones(tile.shape[7])}
+    return {"u": np.ones(list(tile.shape)[7])}
 
 
 def scratch_problem(scratch: bool, initial: object = only_u) -> Problem:
@@ -57,7 +57,9 @@ def test_scratch_that_is_read_before_it_is_made_needs_an_initial_state() -> None
     backward = replace(problem, splitting=lie(list(reversed(problem.splitting.orders[0]))))
     with pytest.raises(KernelError, match="expected new arrays for t, u, w, got t, u"):
         Program(backward, (3,)).initial(0)
-    measured = replace(problem, splitting=lie(problem.splitting.orders[0], [replace(dt_reduction(), reads=(Read("w"),))]))
+    measured = replace(
+        problem, splitting=lie(problem.splitting.orders[0], [replace(dt_reduction(), reads=(Read("w"),))])
+    )
     with pytest.raises(KernelError, match="expected new arrays for t, u, w, got t, u"):
         Program(measured, (3,)).initial(0)
 

@@ -20,7 +20,7 @@ from tests import toys
 from tests.reference import March
 from tests.toys import Arrays, Toy, dt_reduction, faulty_problem
 
-TOYS = {
+TOYS: dict[str, tuple[Toy, list[tuple[int, ...]]]] = {
     "plain": (Toy(), [(12, 9), (4, 3), (7, 4)]),
     "lagged": (Toy(dt_lag=1, residual_lag=1, cycles=4), [(12, 9), (4, 3), (3, 9)]),
     "line": (Toy((14,), (Edge.OUTFLOW,), dt_lag=2, two_orders=True, two_passes=True, cycles=5), [(14,), (5,), (7,)]),

@@ -9,7 +9,7 @@ import pytest
 from breakstep.errors import DeclarationError
 from breakstep.graph.stages import RepeatStages, Stage, Template, build_template, can_follow, parse_barriers
 from breakstep.steps.reduction import Combine, Reduction
-from breakstep.steps.splitting import Repeat, lie
+from breakstep.steps.splitting import Repeat, Splitting, lie
 from breakstep.steps.step import Read, Step
 from tests import toys
 from tests.toys import Toy, dt_reduction
@@ -109,7 +109,7 @@ def test_carried_and_needed_fields() -> None:
 
 def test_a_field_made_in_the_first_order_is_carried_to_the_second_but_needs_no_initial_state() -> None:
     make, use = step("make", Read("u"), writes=("v",)), step("use", Read("v"), writes=("u",))
-    template = build_template(toys.Splitting(((make, use), (use, make))))
+    template = build_template(Splitting(((make, use), (use, make))))
     assert template.carried == {"u", "v"}
     assert template.needed == {"u"}
 
@@ -141,6 +141,4 @@ def test_an_unknown_barrier_lists_the_choices() -> None:
     template = build_template(lie([WIDE, LOCAL]))
     with pytest.raises(DeclarationError) as caught:
         parse_barriers(template, "wide,burning")
-    assert str(caught.value) == (
-        "no barrier is called burning; choose from lockstep, tasked or a list of wide, local"
-    )
+    assert str(caught.value) == ("no barrier is called burning; choose from lockstep, tasked or a list of wide, local")

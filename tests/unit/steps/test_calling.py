@@ -62,7 +62,7 @@ def test_the_wrong_number_of_arguments_is_the_user_s_error_too() -> None:
 def test_changing_an_input_says_what_to_do_instead() -> None:
     protected = np.zeros(3)
     protected.flags.writeable = False
-    with pytest.raises(KernelError, match="read-only.*may not change the arrays it is given, only return new ones"):
+    with pytest.raises(KernelError, match=r"read-only.*may not change the arrays it is given, only return new ones"):
         call_user(np.add, protected, 1.0, protected, where="here")
 
 

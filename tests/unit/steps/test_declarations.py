@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import replace
 
+import numpy as np
 import pytest
 
 from breakstep.errors import DeclarationError, TilingError
@@ -34,7 +35,10 @@ SOLVE = Repeat("solve", (Step("relax", toys.relax, (Read("v", (1, 0, 0)),), ("v"
         (lambda: replace(SMOOTH, reads=(Read("u", (1.0, 0, 0)),)), "expected three whole numbers, 0 or more"),  # type: ignore[arg-type]
         (lambda: replace(RESIDUAL, name="1st"), "name of a reduction must be an identifier"),
         (lambda: replace(RESIDUAL, lag=-1), "lag must be a whole number, 0 or more, not -1"),
-        (lambda: replace(RESIDUAL, lag=0.5), "lag must be a whole number, 0 or more, not 0.5"),
+        (
+            lambda: replace(RESIDUAL, lag=0.5),  # type: ignore[arg-type]
+            "lag must be a whole number, 0 or more, not 0.5",
+        ),
         (lambda: replace(RESIDUAL, reads=(Read("change", (1, 0, 0)),)), "may read its own zones only"),
         (lambda: replace(SOLVE, name="s-1"), "name of a repeat must be an identifier"),
         (lambda: replace(SOLVE, body=()), "repeat 'solve' has no steps"),
@@ -124,7 +128,7 @@ def test_a_problem_refuses_tiles_that_its_halos_do_not_fit() -> None:
 
 
 def test_a_call_knows_its_share_of_the_time_step_and_its_place() -> None:
-    call = Call("burn", 4, -1, 7, (0, 0, 0), (2, 2, 1), (1.0,) * 3, (True,) * 3, {"dt": toys.np.array([0.5])}, 0.5)
+    call = Call("burn", 4, -1, 7, (0, 0, 0), (2, 2, 1), (1.0,) * 3, (True,) * 3, {"dt": np.array([0.5])}, 0.5)
     assert call.dt == 0.25
     assert call.where() == "step burn, tile 7, cycle 4"
     call.iteration = 2

@@ -6,7 +6,8 @@ import numpy as np
 import pytest
 
 from breakstep.errors import DeclarationError, KernelError
-from breakstep.steps.reduction import Combine, combine, finish_rows
+from breakstep.steps.reduction import Combine, Reduction, combine, finish_rows
+from breakstep.steps.step import Read
 from tests import toys
 from tests.toys import dt_reduction
 
@@ -53,7 +54,9 @@ def test_combining_leaves_the_contributions_alone() -> None:
     made = combine(Combine.SUM, list(parts))
     assert [part.tolist() for part in parts] == [[1.0], [2.0]]
     assert made is not None
-    assert not np.shares_memory(made, parts[0])
+    alone = combine(Combine.SUM, [parts[0]])
+    assert alone is not None
+    assert not np.shares_memory(alone, parts[0])
 
 
 def test_contributions_of_different_lengths_are_refused() -> None:
@@ -91,6 +94,6 @@ def test_results_are_write_protected() -> None:
     ],
 )
 def test_finish_functions_are_held_to_their_contract(finish: object, sentence: str) -> None:
-    reduction = toys.Reduction("dt", toys.rate, (toys.Read("u"),), Combine.MAX, finish)  # type: ignore[arg-type]
+    reduction = Reduction("dt", toys.rate, (Read("u"),), Combine.MAX, finish)  # type: ignore[arg-type]
     with pytest.raises(KernelError, match=sentence):
         finish_rows(reduction, np.array([1.0]), None, 2)

@@ -73,6 +73,8 @@ class NativeDispatch:
     def _load(self, program: Program) -> None:
         try:
             self.client.run(warm_up, program, workers=self.addresses)
+        except OSError:
+            raise
         except Exception as error:  # pickling and importing raise anything
             raise ClusterError(
                 f"the workers cannot load the problem ({type(error).__name__}: {error}); what it holds must be"
@@ -243,17 +245,13 @@ class _NativeRun:
         free = ANYWHERE in where.values()
         pinned = {} if free else {"workers": LookUp({k: [addresses[w]] for k, w in where.items()})}
         with dask.annotate(priority=LookUp(priority), **pinned):
-            futures: list[Future] = self.client.get(
-                graph, keys, sync=False, workers=addresses if free else None
-            )
+            futures: list[Future] = self.client.get(graph, keys, sync=False, workers=addresses if free else None)
         return futures
 
     def _finish(self) -> None:
         while self.result.cycles in self.last_steps:
             self._complete_cycle()
-        self._wait(
-            list(self.futures.values())
-        )  # the last barrier and what nobody reads belong to the run too
+        self._wait(list(self.futures.values()))  # the last barrier and what nobody reads belong to the run too
         tiles = range(len(self.program.tiling))
         for name in self.program.state_fields:
             phase = self.unroller.latest(name)
@@ -281,17 +279,14 @@ class _NativeRun:
         """Bring in the workers' records; a cluster that is gone leaves what the client has."""
         wire.ARRIVALS.clear()  # results gathered here are not transfers between workers
         record = self.result.record
-        present = (
-            present_workers(self.client) if self.client.status == "running" else {}
-        )
+        present = present_workers(self.client) if self.client.status == "running" else {}
         addresses = [address for address in self.dispatch.addresses if address in present]
         after = read_clocks(self.client, addresses)
         cpu = {a: r.cpu for a, r in zip(addresses, after, strict=True)}
         self.result.notes = {
             "clock_residual_ns": [reading.residual for reading in clocks],
             "worker_cpu_ns": [
-                cpu.get(a, before.cpu) - before.cpu
-                for a, before in zip(self.dispatch.addresses, clocks, strict=True)
+                cpu.get(a, before.cpu) - before.cpu for a, before in zip(self.dispatch.addresses, clocks, strict=True)
             ],
         }
         answers = self.client.run(remote.collect, self.name, self.dispatch.threads, workers=addresses)
@@ -323,7 +318,6 @@ async def _done_within(futures: list[Future], seconds: float) -> bool:
 
 def _without_frames(error: BreakstepError) -> BreakstepError:
     """The error alone: the frames it came through hold futures, which would keep arrays on the workers."""
-    error.__context__ = error.__cause__ = None
     return error.with_traceback(None)
 
 

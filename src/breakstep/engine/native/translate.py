@@ -80,9 +80,7 @@ class Translation:
         (source,) = self._refs(list(task.children))
         row = task_row(task)
         if task.making is not None:
-            return DaskTask(
-                self.name(task), remote.run_pick, self.run, row, task.making.reduction.name, source
-            )
+            return DaskTask(self.name(task), remote.run_pick, self.run, row, task.making.reduction.name, source)
         reads = {read.field: read for read in task.phase.stage.reads}
         cuts = tuple(CutSpec(name, reads[name], tile, rim.offset) for name, rim, tile in task.cuts)
         return DaskTask(self.name(task), remote.run_pack, self.run, row, cuts, source)

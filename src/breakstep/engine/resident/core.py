@@ -369,8 +369,7 @@ class Core:
         """Rims of a task that other workers are known to need, before it is finished; more may be asked later."""
         where, tile = task.where, task.tile
         return [
-            SendRims(worker, reader, tile, where.number, cuts, {})
-            for worker, reader, cuts in where.owed.get(tile, ())
+            SendRims(worker, reader, tile, where.number, cuts, {}) for worker, reader, cuts in where.owed.get(tile, ())
         ]
 
     @property
@@ -397,6 +396,11 @@ class Core:
                 for name in self.program.state_fields
             }
         return state
+
+    def handover(self) -> list[Array]:
+        """After the last phase: results of cycle-level reductions for the cycles that another run goes on with."""
+        upcoming = self.unroller.next_values()
+        return [np.stack([self.values[ref.instance][ref.row] for ref in refs]) for refs in upcoming.values()]
 
     # ---- emitting phases ----------------------------------------------------------------------------
 
@@ -497,9 +501,7 @@ class Core:
         if phase.waits_for is not None:
             self._released.discard(phase.waits_for)
 
-    def _groups(
-        self, phase: Phase
-    ) -> list[tuple[PhaseState, dict[int, tuple[int, ...]], dict[int, tuple[int, ...]]]]:
+    def _groups(self, phase: Phase) -> list[tuple[PhaseState, dict[int, tuple[int, ...]], dict[int, tuple[int, ...]]]]:
         """The versions that a phase reads: each with the neighbours, here and there, that are read too."""
         halos = self.plan.stage(phase.stage.index).halos
         by_source: dict[int, list[Any]] = {source: [] for source in phase.sources.values()}
@@ -652,9 +654,7 @@ class Core:
         previous = self.values[making.previous][-1] if making.previous is not None else None
         stage = phase.stage.index
         vector = self.program.finish(stage, making.reduction, combined, previous, making.rows)
-        self._out.extend(
-            SendItem(w, ("value", instance), vector) for w in range(self.workers) if w != self.me
-        )
+        self._out.extend(SendItem(w, ("value", instance), vector) for w in range(self.workers) if w != self.me)
         self._value(instance, vector)
 
     def _value(self, instance: int, vector: Array) -> None:

@@ -87,9 +87,7 @@ def _record_edges(
             consumers.append(consumer)
             kinds.append(np.full(len(producer), EDGE_KINDS.index(str(kind)), dtype=np.int32))
     if producers:
-        record.edges.add_table(
-            _table(np.concatenate(producers), np.concatenate(consumers), np.concatenate(kinds))
-        )
+        record.edges.add_table(_table(np.concatenate(producers), np.concatenate(consumers), np.concatenate(kinds)))
     return makers
 
 

@@ -33,9 +33,7 @@ def inputs_of(core: Core, task: TaskState) -> Inputs:
             if core.plan.owners[rim.neighbour] == core.me:
                 of_field[rim.offset] = cut(rim, core.neighbour(task, read.field, rim.neighbour))
             else:
-                of_field[rim.offset] = core.bundle(task, read.field, rim.neighbour)[
-                    read.field, tile, rim.offset
-                ]
+                of_field[rim.offset] = core.bundle(task, read.field, rim.neighbour)[read.field, tile, rim.offset]
     passes = False
     if phase.gate is not None:
         passes = program.stop(phase.stage.index, core.values[phase.gate.instance][phase.gate.row])
@@ -49,7 +47,4 @@ def inputs_of(core: Core, task: TaskState) -> Inputs:
 
 def cut_rims(order: SendRims, arrays: Mapping[str, Array]) -> dict[Any, Array]:
     """The arrays of a rims item, contiguous and no longer tied to the tile's own."""
-    return {
-        (name, tile, rim.offset): np.ascontiguousarray(cut(rim, arrays[name]))
-        for name, tile, rim in order.cuts
-    }
+    return {(name, tile, rim.offset): np.ascontiguousarray(cut(rim, arrays[name])) for name, tile, rim in order.cuts}

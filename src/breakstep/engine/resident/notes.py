@@ -52,9 +52,7 @@ class Notebook:
     def _referred(self, before: int) -> list[int]:
         """Phases that recent phases still refer to."""
         recent = [phase for number, phase in self._phases.items() if number >= before]
-        return [source for phase in recent for source in phase.sources.values() if source != INITIAL] or [
-            before
-        ]
+        return [source for phase in recent for source in phase.sources.values() if source != INITIAL] or [before]
 
     def begin_thread(self, number: int) -> None:
         """The calling thread will work under this number."""
@@ -64,9 +62,7 @@ class Notebook:
         """Begin an interval of packing."""
         return time.perf_counter_ns(), time.thread_time_ns()
 
-    def task(
-        self, task: TaskState, thread: int, start: int, output: Output, packing: tuple[int, int] | None
-    ) -> int:
+    def task(self, task: TaskState, thread: int, start: int, output: Output, packing: tuple[int, int] | None) -> int:
         """Enter a task whose rims are cut; returns its end [ns]."""
         end = time.perf_counter_ns()
         if not self.on:
@@ -93,11 +89,7 @@ class Notebook:
             number = numbering.node(*place)
             label = next(m.reduction.name for m in phase.makes if m.instance == place[0])
         else:
-            number = (
-                numbering.counter(phase.number, place[0])
-                if kind == "count"
-                else numbering.release(phase.number)
-            )
+            number = numbering.counter(phase.number, place[0]) if kind == "count" else numbering.release(phase.number)
             label = f"barrier:{phase.stage.name}"
         row = TaskRow(number, kind, label, -1, phase.cycle, phase.iteration)
         self.recorder.task(row, moment, moment, thread=0)

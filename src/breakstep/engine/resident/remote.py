@@ -1,31 +1,78 @@
-"""What the driver calls on a Dask worker: begin a run, prepare, work, look in, stop, hand over the record."""
+"""What the driver calls on a Dask worker: begin a run, prepare, work, look in, stop, hand over the record.
+
+Also what a worker does about a driver that is gone: it gives a run up when nobody has asked for a whole lease, or
+when another driver begins a run and finds that the cluster no longer knows the first.
+"""
 
 from __future__ import annotations
 
+import asyncio
+import time
+from collections.abc import Collection
 from typing import Any
 
-from distributed import Worker, get_worker
+from distributed import Worker, get_worker, secede
 
-from breakstep.engine.native.payload import Payload
 from breakstep.engine.resident import adapter
-from breakstep.engine.resident.host import Assignment, Host
+from breakstep.engine.resident.host import Assignment, Host, Status
 from breakstep.engine.resident.wire import Parcel
 from breakstep.errors import ClusterError
 from breakstep.steps.step import Array
 
-_HOSTS: dict[str, Host] = {}
+LEASE_LOOKS = 8  # a lease ends after so many looks in a row without a word from the driver
+END_SECONDS = 2.0  # most by which running kernels may hold up the hand-over of a record
+
+_HOSTS: dict[tuple[str, str], Host] = {}  # (worker's address, run): several workers may share a process
+_WATCHES: dict[tuple[str, str], asyncio.Task[None]] = {}
 
 
-async def _receive(run: str, sender: int, number: int, parcel: Parcel) -> str:
-    """A message for a run; one for a run that is over is dropped."""
-    host = _HOSTS.get(run)
-    return "gone" if host is None else await host.receive(sender, number, parcel)
+def _receiver(address: str) -> adapter.Handler:
+    """What a worker does with a message; the sender is told when the run is over here."""
+
+    async def receive(run: str, sender: int, number: int, parcel: Parcel) -> str:
+        host = _HOSTS.get((address, run))
+        return "gone" if host is None else await host.receive(sender, number, parcel)
+
+    return receive
 
 
-def begin(assignment: Assignment, dask_worker: Worker) -> None:
-    """Tell a worker of a run; from now on it takes messages for it."""
-    adapter.listen(dask_worker, _receive)
-    _HOSTS[assignment.run] = Host(assignment, dask_worker)
+def begin(assignment: Assignment, clients: Collection[str], dask_worker: Worker) -> None:
+    """Tell a worker of a run; from now on it takes messages for it.
+
+    Parameters
+    ----------
+    clients : collection of str
+        Drivers that the cluster knows; runs of others are dropped.
+    """
+    for (address, run), other in list(_HOSTS.items()):
+        if address == dask_worker.address and other.told.client not in clients:
+            _drop(address, run, "its driver is gone")
+    if not adapter.is_listening(dask_worker):
+        adapter.listen(dask_worker, _receiver(dask_worker.address))
+    key = (dask_worker.address, assignment.run)
+    _HOSTS[key] = Host(assignment, dask_worker)
+    _WATCHES[key] = adapter.event_loop(dask_worker).create_task(_watch(*key))
+
+
+async def _watch(address: str, run: str) -> None:
+    """Give a run up when its driver is silent for a whole lease.
+
+    Counts looks rather than seconds: a worker that was halted for a while has not waited in that time.
+    """
+    host = _HOSTS[address, run]
+    silent, heard = 0, host.heard
+    while silent < LEASE_LOOKS:
+        await asyncio.sleep(host.told.lease / LEASE_LOOKS)
+        silent = 0 if host.heard > heard else silent + 1
+        heard = host.heard
+    _drop(address, run, f"its driver has been silent for {host.told.lease:g} s")
+
+
+def _drop(address: str, run: str, why: str) -> None:
+    host = _HOSTS.pop((address, run))
+    del _WATCHES[address, run]
+    host.stop(ClusterError(f"the run was given up: {why}", lost=True))
+    host.close()
 
 
 def prepare(run: str) -> None:
@@ -33,46 +80,59 @@ def prepare(run: str) -> None:
     _host(run).prepare()
 
 
-def work(run: str) -> Payload:
-    """Run to the end; the final state of own tiles."""
+def work(run: str) -> Parcel:
+    """Run to the end; the final state of own tiles, as items ("final", tile)."""
     host = _host(run)
+    secede()  # or two runs at once could each hold the threads that the other's remaining workers wait for
     final = host.work()
-    arrays = {
-        (name, tile, (0, 0, 0)): array for tile, fields in final.items() for name, array in fields.items()
-    }
-    return Payload(run, host.told.worker, host.told.worker, arrays)
+    return Parcel([(("final", tile), _as_rims(tile, fields)) for tile, fields in final.items()])
 
 
-def status(run: str) -> dict[str, Any]:
-    """How far the worker is."""
-    host = _HOSTS.get(run)
-    return {"cycles": 0, "saved": [], "bytes": (0, 0), "stopped": True} if host is None else host.status()
+def _as_rims(tile: int, fields: dict[str, Array]) -> dict[Any, Array]:
+    """Whole arrays in the form in which rims travel: no offset stands for all of the tile."""
+    return {(name, tile, (0, 0, 0)): array for name, array in fields.items()}
 
 
-def stop(run: str) -> None:
+def status(run: str, dask_worker: Worker) -> Status | None:
+    """How far the worker is; None when it has given the run up."""
+    host = _HOSTS.get((dask_worker.address, run))
+    return None if host is None else host.status()
+
+
+def stop(run: str, dask_worker: Worker) -> None:
     """Call a run off."""
-    host = _HOSTS.get(run)
+    host = _HOSTS.get((dask_worker.address, run))
     if host is not None:
         host.stop()
 
 
-def collect(run: str) -> dict[str, Any]:
+async def collect(run: str, dask_worker: Worker) -> dict[str, Any]:
     """The worker's record; the run is forgotten."""
-    host = _HOSTS.pop(run, None)
+    key = (dask_worker.address, run)
+    host = _HOSTS.pop(key, None)
     if host is None:
         return {}
+    _WATCHES.pop(key).cancel()
     host.stop()
-    recorder = host.notes.recorder
+    deadline = time.monotonic() + END_SECONDS
+    while host.working and time.monotonic() < deadline:
+        await asyncio.sleep(0.01)
+    host.close()
+    return _record(host)
+
+
+def _record(host: Host) -> dict[str, Any]:
+    recorder, core = host.notes.recorder, host.core
     recorder.complete_threads(host.told.threads)
     return {
         "worker": recorder.worker,
         "zero": recorder.zero,
         "tables": recorder.record.tables(),
         "arrived": recorder.arrived,
-        "peak": host.core.peak_bytes if host.core is not None else 0,
-        "answers": host.core.answers if host.core is not None else [],
+        "peak": core.peak_bytes if core is not None else 0,
+        "answers": core.answers if core is not None else [],
         "values": _last_values(host),
-        "cycles": host.core.cycles_done if host.core is not None else 0,
+        "cycles": core.cycles_done if core is not None else 0,
     }
 
 
@@ -83,10 +143,11 @@ def _last_values(host: Host) -> dict[str, Array]:
 
 
 def _host(run: str) -> Host:
+    address = get_worker().address
     try:
-        return _HOSTS[run]
+        return _HOSTS[address, run]
     except KeyError:
         raise ClusterError(
-            f"worker {get_worker().address} was asked to work on run {run}, of which it was never told; it"
-            " restarted after the run began"
+            f"worker {address} was asked to work on run {run}, of which it was never told or which it has dropped",
+            lost=True,
         ) from None

@@ -1,7 +1,7 @@
 """What workers send each other: a parcel of items, serialised by Dask with its arrays out of band.
 
-The arrays of a parcel travel as frames of their own, without a copy into a message; packing and unpacking
-are timed where they happen.
+The arrays of a parcel travel as frames of their own, without a copy into a message; the receiver copies them out of
+what it has read. Packing and unpacking are timed where they happen.
 """
 
 from __future__ import annotations
@@ -30,7 +30,7 @@ class Parcel:
     items : list of (key, payload)
         ``payload`` is None, a vector, or a dictionary of rims by (field, tile, offset).
     sent, packed : int
-        Moment packing began, in the sender's clock, and how long it took [ns].
+        Moment packing (or, in one process, sending) began, in the sender's clock, and how long it took [ns].
     unpacked : int
         How long the reverse took at the receiver [ns].
     """
@@ -81,7 +81,9 @@ def _rim_key(shape: list[Any]) -> Key:
 
 
 def _array(frame: Any, shape: list[int]) -> Array:
-    array = np.frombuffer(frame, dtype=np.float64).reshape(shape)
+    """An array of its own: a view would keep the whole message, and may not be aligned."""
+    array = np.empty(shape)
+    array.reshape(-1).view(np.uint8)[:] = np.frombuffer(frame, dtype=np.uint8)
     array.flags.writeable = False
     return array
 

@@ -1,0 +1,5 @@
+"""``python -m breakstep``."""
+
+from breakstep.cli import main
+
+main()

@@ -1,0 +1,262 @@
+"""One start of a resident run on a fixed set of workers, seen from the client: tell, wait, look in, collect.
+
+Knows nothing of starting again; says by ``details["lost"]`` of a ClusterError that this may help.
+"""
+
+from __future__ import annotations
+
+import time
+import uuid
+from collections.abc import Callable, Mapping, Sequence
+from concurrent.futures import CancelledError
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+from distributed import Client, Future, KilledWorker, wait
+
+from breakstep.engine import checkpoint
+from breakstep.engine.clocks import ClockReading, drift, read_clocks
+from breakstep.engine.placement import owners
+from breakstep.engine.program import Program
+from breakstep.engine.resident import remote
+from breakstep.engine.resident.gather import gather_record
+from breakstep.engine.resident.host import Assignment, Saved, Status
+from breakstep.engine.run import Progress, RunOptions, RunResult
+from breakstep.engine.workers import present_clients, present_workers
+from breakstep.errors import BreakstepError, ClusterError, DeclarationError
+from breakstep.graph.tasks import ANYWHERE
+from breakstep.profile.record import RunRecord
+
+POLL_SECONDS = 0.25  # between looks at the workers; each costs them about 1 ms
+
+
+@dataclass(frozen=True)
+class Site:
+    """Where and how an attempt runs.
+
+    Attributes
+    ----------
+    client : distributed.Client
+    addresses : tuple of str
+        The workers, by number.
+    threads : int
+        Threads of each.
+    lease : float
+        A worker that hears nothing from here for so long gives up [s].
+    checkpoints : Path or None
+        Folder for checkpoints.
+    resume : Path or None
+        Checkpoint to go on from.
+    facts : mapping
+        What a checkpoint's manifest says was run.
+    """
+
+    client: Client
+    addresses: tuple[str, ...]
+    threads: int
+    lease: float
+    checkpoints: Path | None
+    resume: Path | None
+    facts: Mapping[str, Any]
+
+
+@dataclass
+class _Reports:
+    """What workers have said about the checkpoint of one cycle."""
+
+    digests: dict[str, dict[int, str]] = field(default_factory=dict)
+    workers: int = 0
+
+
+class Attempt:
+    """One start of a run."""
+
+    def __init__(self, site: Site, program: Program, options: RunOptions, progress: Progress | None) -> None:
+        self.site, self.program, self.progress = site, program, progress
+        self.client, self.addresses = site.client, list(site.addresses)
+        self.name = uuid.uuid4().hex[:8]
+        self.result = RunResult({}, {}, RunRecord(), 0.0, 0)
+        self.options, self.owners = options, owners(options.placement, program, len(self.addresses), options.costs)
+        self.result.notes["owners"] = list(self.owners)
+        self.reports: dict[int, _Reports] = {}
+        self.clocks: list[ClockReading] = []
+
+    def run(self) -> RunResult:
+        """The whole attempt; what ends it early is noted in the result."""
+        result = self.result
+        zero = time.perf_counter_ns()
+        try:
+            self._check()
+            self.clocks = read_clocks(self.client, self.addresses)
+            zero = time.perf_counter_ns()
+            self._work(zero)
+        except KeyboardInterrupt:
+            result.interrupted = True
+        except BreakstepError as error:
+            result.failure = error
+        except (KilledWorker, CancelledError, OSError) as error:
+            result.failure = _lost(error)
+        except BaseException:
+            self._collect()  # a defect of ours must not leave the workers at work
+            raise
+        result.seconds = (time.perf_counter_ns() - zero) / 1e9
+        self._collect()
+        if result.failure is not None:
+            _drop_frames(result.failure)
+        return result
+
+    def _check(self) -> None:
+        if ANYWHERE in self.owners:
+            raise DeclarationError("the placement 'dask' needs the native dispatch: here each tile has its worker")
+        if self.site.resume is not None:
+            start = int(checkpoint.read_manifest(self.site.resume)["cycle"]) + 1
+            self.options = self.options.starting_at(start)
+
+    def _work(self, zero: int) -> None:
+        self._tell(zero)
+        self._wait(self._submit(remote.prepare, "prepare"))
+        futures = self._submit(remote.work, "work")
+        self._wait(futures)
+        self._look_in()
+        for parcel in self.client.gather(futures):
+            for _, arrays in parcel.items:
+                for (name, tile, _), array in arrays.items():
+                    self.result.fields.setdefault(name, [array] * len(self.owners))[tile] = array
+
+    def _tell(self, zero: int) -> None:
+        clients = present_clients(self.client)
+        for number, (address, reading) in enumerate(zip(self.addresses, self.clocks, strict=True)):
+            told = Assignment(
+                run=self.name,
+                client=self.client.id,
+                program=self.program,
+                options=self.options,
+                worker=number,
+                addresses=tuple(self.addresses),
+                owners=tuple(self.owners),
+                threads=self.site.threads,
+                zero=zero + reading.offset,
+                lease=self.site.lease,
+                resume=self.site.resume,
+                save_to=self.site.checkpoints,
+            )
+            self.client.run(remote.begin, told, clients, workers=[address])
+
+    def _submit(self, function: Callable[[str], Any], what: str) -> list[Future]:
+        """One pinned Dask task a worker."""
+        return [
+            self.client.submit(
+                function, self.name, workers=[address], key=f"resident_{what}-{self.name}-{number}", pure=False
+            )
+            for number, address in enumerate(self.addresses)
+        ]
+
+    # ---- while the workers work ------------------------------------------------------------------
+
+    def _wait(self, futures: list[Future]) -> None:
+        """Until all are done; looks in on the workers meanwhile, and raises the most telling error."""
+        while pending := [future for future in futures if not future.done()]:
+            self.client.sync(_some_done, pending, POLL_SECONDS)
+            _raise_failed(futures)
+            self._look_for_gone()
+            self._look_in()
+        _raise_failed(futures)
+
+    def _look_for_gone(self) -> None:
+        """A task that is tied to a worker that has gone waits for ever; nothing but the list of workers tells."""
+        present = present_workers(self.client)
+        gone = [address for address in self.addresses if address not in present]
+        if gone:
+            raise ClusterError(f"worker {', '.join(gone)} has gone and took its tiles with it", lost=True)
+
+    def _look_in(self) -> None:
+        answers: dict[str, Status | None] = self.client.run(
+            remote.status, self.name, workers=self.addresses, on_error="ignore"
+        )
+        found = [status for status in answers.values() if status is not None]
+        for status in found:
+            for saved in status.saved:
+                self._report(saved)
+        if len(found) < len(self.addresses):  # the next look at the list of workers, or their tasks, will tell why
+            return
+        done = min(status.cycles for status in found)
+        if done > self.result.cycles:
+            self.result.cycles = done
+            if self.progress is not None:
+                self.progress(done)
+
+    def _report(self, saved: Saved) -> None:
+        report = self.reports.setdefault(saved.cycle, _Reports())
+        report.workers += 1
+        for name, tiles in saved.digests.items():
+            report.digests.setdefault(name, {}).update(tiles)
+        if report.workers < len(self.addresses):
+            return
+        del self.reports[saved.cycle]
+        root, facts = self.site.checkpoints, {"scenario": {}, **self.site.facts}
+        assert root is not None
+        checkpoint.complete(root, saved.cycle, self.program, report.digests, saved.values, facts, self.name)
+
+    # ---- afterwards ------------------------------------------------------------------------------
+
+    def _collect(self) -> None:
+        """Stop what still runs and bring in the workers' records; from a lost worker there is none."""
+        if self.client.status != "running":
+            return
+        try:
+            present = present_workers(self.client)
+            alive = [address for address in self.addresses if address in present]
+            self.client.run(remote.stop, self.name, workers=alive, on_error="ignore")
+            answers = self.client.run(remote.collect, self.name, workers=alive, on_error="ignore")
+            self._note_clocks(alive)
+        except OSError:
+            return
+        parts = [answers[address] for address in alive if answers.get(address)]
+        self.result.notes["worker_peak_bytes"] = [part["peak"] for part in parts]
+        if parts:
+            self._take_over(parts)
+
+    def _take_over(self, parts: Sequence[dict[str, Any]]) -> None:
+        result = self.result
+        result.cycles = min(part["cycles"] for part in parts)
+        if result.failure is None and not result.interrupted:
+            result.values = parts[0]["values"]
+        if self.options.record:
+            gather_record(result.record, parts, self.program, self.options, self.owners)
+
+    def _note_clocks(self, alive: list[str]) -> None:
+        before = dict(zip(self.addresses, self.clocks, strict=False))
+        after = dict(zip(alive, read_clocks(self.client, alive), strict=True))
+        both = [(before[a], after.get(a, before[a])) for a in self.addresses if a in before]
+        self.result.notes["clock_residual_ns"] = [drift(b, a) for b, a in both]
+        self.result.notes["worker_cpu_ns"] = [a.cpu - b.cpu for b, a in both]
+
+
+async def _some_done(futures: list[Future], seconds: float) -> None:
+    """Until one of them is done or time is up; runs on the client's loop, whose frames hold nothing afterwards."""
+    try:
+        await wait(futures, timeout=seconds, return_when="FIRST_COMPLETED")
+    except TimeoutError:
+        return
+
+
+def _raise_failed(futures: list[Future]) -> None:
+    """The most telling error: one of physics before one of the cluster."""
+    failed = [future for future in futures if future.status in ("error", "cancelled", "lost")]
+    errors = [future.exception() if future.status == "error" else CancelledError(future.key) for future in failed]
+    errors.sort(key=lambda error: isinstance(error, ClusterError | CancelledError))
+    if errors:
+        raise errors[0]
+
+
+def _lost(error: Exception) -> ClusterError:
+    if isinstance(error, CancelledError):
+        return ClusterError("the run's tasks on the Dask cluster were cancelled from outside; start the run again")
+    return ClusterError(f"the Dask cluster lost part of the run ({error!r}); start the run again", lost=True)
+
+
+def _drop_frames(error: BaseException) -> None:
+    """The error alone: the frames it came through hold futures, which would keep arrays on the workers."""
+    error.__context__ = error.__cause__ = None
+    error.__traceback__ = None

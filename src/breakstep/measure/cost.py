@@ -1,0 +1,97 @@
+"""What dispatching a task costs that does nothing: CPU time and wall time, by either dispatch.
+
+A long and a short run of the same graph are measured, and the cost of a task is the difference between them
+over the difference in tasks: what a run costs once, from the clocks' handshake to fetching the final state,
+drops out. Runs are not recorded; what recording adds is measured elsewhere.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+from typing import Any
+
+from breakstep.engine.run import RunOptions
+from breakstep.measure.bench import DISPATCHES, Bench, Usage
+from breakstep.measure.noop import Ring
+from breakstep.measure.timing import Spread, in_turn
+
+RIM_NUMBERS = 2048  # 16 KB: two rows of 32 zones with 32 numbers each
+SHORT = {"native": 256, "resident": 1024}  # step tasks of the short run, by dispatch
+LONG = {"native": 1024, "resident": 16384}
+"""Of the long run: the window of cycles fills up, and the differences are 1 s and 0.6 s of CPU time."""
+
+
+@dataclass(frozen=True)
+class Case:
+    """One halo graph and who owns its tiles."""
+
+    grid: tuple[int, ...]
+    placement: str = "blocks"
+    components: int = 1
+
+    def ring(self, tasks: int) -> Ring:
+        """The graph with at least so many tasks."""
+        one = Ring(self.grid, 1, self.components)
+        return replace(one, cycles=max(1, tasks // one.tiles))
+
+    def facts(self) -> dict[str, Any]:
+        """The case in plain figures."""
+        return {
+            "tiles": Ring(self.grid, 1).tiles,
+            "inputs": 1 + 2 * len(self.grid),
+            "placement": self.placement,
+            "rim_bytes": 8 * self.components,
+        }
+
+
+HEADLINE = Case((256,))
+WORST = Case((256,), "cyclic", RIM_NUMBERS)
+ALL = (
+    *(Case((n,), place, size) for n in (32, 256) for place in ("blocks", "cyclic") for size in (1, RIM_NUMBERS)),
+    Case((16, 16)),
+)
+
+
+def cost_of_task(bench: Bench, dispatch: str, case: Case) -> Usage:
+    """What one more task costs [s]."""
+    options = RunOptions(placement=case.placement, record=False)
+    short, long = (case.ring(tasks[dispatch]) for tasks in (SHORT, LONG))
+    before, after = (bench.run(dispatch, ring, options) for ring in (short, long))
+    return (after - before).scaled(1.0 / (long.tasks - short.tasks))
+
+
+def cost_row(bench: Bench, case: Case, rounds: int, dispatches: Sequence[str] = DISPATCHES) -> dict[str, Any]:
+    """One case by the dispatches in turn, in plain figures."""
+    samples: dict[str, list[Usage]] = {name: [] for name in dispatches}
+    for number in range(rounds):
+        for name in in_turn(dispatches, number):
+            samples[name].append(cost_of_task(bench, name, case))
+    row = {**case.facts(), "workers": bench.workers, "threads": bench.threads}
+    row |= {name: figures_of(found) for name, found in samples.items()}
+    row["ratio"] = _ratio(samples)
+    return row
+
+
+def figures_of(samples: Sequence[Usage]) -> dict[str, Any]:
+    """Microseconds a task."""
+    return {
+        "cpu_us": spread([1e6 * one.cpu for one in samples]),
+        "wall_us": spread([1e6 * one.wall for one in samples]),
+        "client_cpu_us": spread([1e6 * one.client for one in samples]),
+        "worker_cpu_us": spread([1e6 * one.workers for one in samples]),
+    }
+
+
+def _ratio(samples: Mapping[str, Sequence[Usage]]) -> dict[str, float] | None:
+    """CPU time of native over resident, round by round."""
+    if set(samples) != set(DISPATCHES):
+        return None
+    pairs = zip(samples["native"], samples["resident"], strict=True)
+    return spread([native.cpu / resident.cpu for native, resident in pairs])
+
+
+def spread(values: Sequence[float]) -> dict[str, float]:
+    """Median and quartiles as plain figures."""
+    found = Spread.of(values)
+    return {"median": found.median, "low": found.low, "high": found.high}

@@ -1,0 +1,146 @@
+"""Why the two ways of running differ, or do not: sentences, each with the figures it rests on.
+
+What is said follows from the recorded accounts alone; a cause that took little is not mentioned. Sentences
+come with a weight, the share of core-seconds that they speak of, so that a short text can keep the heaviest.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+
+from breakstep.profile.run import Profile
+from breakstep.report.comparison import compute_by
+from breakstep.report.wording import in_mode, listed, unevenness
+
+NOTABLE_SHARE = 0.02  # a cause below 2 % of the core-seconds is not worth a line
+UNEVEN = 1.1  # busiest over mean below which work counts as even: barriers then stretch it by 10 % at most
+MUCH_ENGINE = 0.1  # above this the dispatch hides what the comparison is about
+
+Reason = tuple[float, str]
+
+
+def reasons(lockstep: Profile, tasked: Profile) -> list[str]:
+    """Sentences about a pair of runs: first what the barriers cost, then the rest by weight."""
+    if lockstep.ledger.threads == 1:
+        return ["On one thread nothing can wait for anything: use more workers to see what barriers cost."]
+    others = [
+        *_reduction_reason(tasked),
+        *_neighbour_reason(tasked),
+        *_placement_reason(tasked),
+        *_engine_reason(tasked),
+    ]
+    heaviest_first = [sentence for _, sentence in sorted(others, key=lambda reason: -reason[0])]
+    return [*_barrier_reason(lockstep), *heaviest_first]
+
+
+def share(profile: Profile, account: str) -> float:
+    """Part of all core-seconds in an account."""
+    return profile.ledger.accounts_ns[account] / max(profile.ledger.available_ns, 1)
+
+
+def _percent(part: float) -> str:
+    return f"{100 * part:.0f} %" if part >= NOTABLE_SHARE else f"{100 * part:.1f} %"
+
+
+def _most_at_fault(profile: Profile, account: str) -> str:
+    """The stage that most of an account's waits are for."""
+    return str(profile.ledger.waits_by_stage[account].idxmax())
+
+
+def _costliest(profile: Profile, stage: str) -> str:
+    """The step of a stage that computes longest."""
+    costs = profile.work["compute_ns"]
+    return max(stage.split("+"), key=lambda name: int(costs[name]) if name in costs.index else 0)
+
+
+def _barrier_reason(lockstep: Profile) -> Iterator[str]:
+    if not lockstep.manifest["barriers"]:
+        return
+    part, where = share(lockstep, "barrier"), in_mode(lockstep)
+    if part < NOTABLE_SHARE:
+        yield f"Why: {where} cores waited at barriers for only {_percent(part)} of their time{_instead(lockstep)}."
+        return
+    step = _costliest(lockstep, _most_at_fault(lockstep, "barrier"))
+    yield (
+        f"Why: {where} cores waited at barriers for {_percent(part)} of their time, most of it for"
+        f" {step}{_unevenness_of(lockstep, step)}."
+    )
+
+
+def _instead(lockstep: Profile) -> str:
+    """Why barriers cost little: even phases, or a reduction that makes cores wait before the barrier does."""
+    reduction = share(lockstep, "reduction")
+    if reduction >= NOTABLE_SHARE:
+        return f", and for reductions, which hold tasks back as well, for {_percent(reduction)}"
+    work = lockstep.work["compute_ns"]
+    if len(work) and float(lockstep.imbalance["phases_weighted"][str(work.idxmax())]) < UNEVEN:
+        return "; the phases are even"
+    return ""
+
+
+def _unevenness_of(lockstep: Profile, step: str) -> str:
+    if step not in lockstep.imbalance.index:
+        return ""
+    phases, tiles = (float(lockstep.imbalance[column][step]) for column in ("phases_weighted", "tiles"))
+    if not math.isfinite(phases) or phases < UNEVEN:
+        return ""
+    busiest = f" (busiest tile: {tiles:.1f} times the mean tile)" if math.isfinite(tiles) else ""
+    return f", where the busiest worker of a phase has {unevenness(phases)} times the mean work{busiest}"
+
+
+def _reduction_reason(tasked: Profile) -> Iterator[Reason]:
+    part = share(tasked, "reduction")
+    if part < NOTABLE_SHARE:
+        return
+    stage = _costliest(tasked, _most_at_fault(tasked, "reduction"))
+    sentence = f"Without barriers, {_percent(part)} still goes to waiting for reductions, most of it behind {stage}."
+    lags: dict[str, int] = tasked.manifest["notes"].get("lags", {})
+    prompt = [name for name, lag in lags.items() if lag == 0]
+    if prompt:
+        sentence += (
+            f" With lag 0, {listed(prompt)} {'makes' if len(prompt) == 1 else 'make'} every tile wait for the"
+            " slowest, barriers or not; lag 1 would let tiles run ahead, at a price."
+        )
+    yield part, sentence
+
+
+def _neighbour_reason(tasked: Profile) -> Iterator[Reason]:
+    part = share(tasked, "neighbour")
+    if part >= NOTABLE_SHARE:
+        stage = _costliest(tasked, _most_at_fault(tasked, "neighbour"))
+        yield part, f"Without barriers, {_percent(part)} goes to waiting for neighbour tiles, most of it for {stage}."
+
+
+def _placement_reason(tasked: Profile) -> Iterator[Reason]:
+    """Work that is uneven over the whole run: no order of tasks helps; other owners may, if tiles are small enough."""
+    workers = tasked.manifest["workers"]
+    by_worker = compute_by(tasked, "worker")
+    total = int(by_worker.sum())
+    if workers < 2 or not total:
+        return
+    mean, busiest = total / workers, int(by_worker.max())
+    if busiest < UNEVEN * mean:
+        return
+    tile = int(compute_by(tasked, "tile").max())
+    cure = (
+        "its busiest tile alone has more than that mean, which smaller tiles cure, and no order of tasks does"
+        if tile > mean
+        else "unevenness that stays in place is cured by placement, not by tasks"
+    )
+    yield 1.0 - mean / busiest, f"Over the whole run one worker has {busiest / mean:.2f} times the mean work: {cure}."
+
+
+def _engine_reason(tasked: Profile) -> Iterator[Reason]:
+    part = share(tasked, "engine")
+    steps = tasked.tasks[tasked.tasks["kind"] == "step"]
+    if part < NOTABLE_SHARE or not len(steps):
+        return
+    mean = float((steps["end_ns"] - steps["start_ns"]).mean()) / 1e6
+    verdict = " Use larger tiles before drawing conclusions about barriers." if part > MUCH_ENGINE else ""
+    yield (
+        part,
+        (
+            f"The dispatch itself takes {_percent(part)} of the tasked core-seconds, with {mean:.2g} ms a step task.{verdict}"
+        ),
+    )

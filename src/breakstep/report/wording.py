@@ -1,0 +1,64 @@
+"""Numbers and names as the terminal shows them."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+
+from breakstep.profile.run import Profile
+
+FULL_CHOICES = ("lockstep", "tasked")
+
+
+def counted(count: int, noun: str) -> str:
+    """A number with its noun: ``1 pair``, ``3 pairs``."""
+    return f"{count} {noun}" if count == 1 else f"{count} {noun}s"
+
+
+def ratio(value: float) -> str:
+    """A ratio of times; with more digits beside 1, so that none is rounded onto it."""
+    return f"{value:.2f}" if abs(value - 1.0) >= 0.01 else f"{value:.4f}"
+
+
+def unevenness(value: float) -> str:
+    """A largest over a mean; a dash where there was nothing to compare."""
+    return f"{value:.2f}" if math.isfinite(value) else "-"
+
+
+def seconds(value: float) -> str:
+    """A wall time with three digits."""
+    if value >= 1.0:
+        return f"{value:.{2 if value < 10.0 else 1 if value < 100.0 else 0}f} s"
+    return f"{value * 1e3:.3g} ms"
+
+
+def size(count: float) -> str:
+    """A number of bytes in decimal units."""
+    for unit in ("B", "kB", "MB", "GB"):
+        if count < 1000:
+            return f"{count:.0f} {unit}" if unit == "B" else f"{count:.1f} {unit}"
+        count /= 1000
+    return f"{count:.1f} TB"
+
+
+def listed(names: Sequence[str]) -> str:
+    """Names in a row, the last after ``and``."""
+    return " and ".join(part for part in (", ".join(names[:-1]), *names[-1:]) if part)
+
+
+def barriers_of(profile: Profile) -> str:
+    """The barriers of a run that had neither all nor none: ``the barriers burn and solve``."""
+    names = profile.manifest["barriers"]
+    return f"the {'barrier' if len(names) == 1 else 'barriers'} {listed(names)}"
+
+
+def column_name(profile: Profile) -> str:
+    """The run's choice of barriers in a word or two."""
+    mode, names = profile.manifest["mode"], profile.manifest["barriers"]
+    return mode if mode in FULL_CHOICES else counted(len(names), "barrier")
+
+
+def in_mode(profile: Profile) -> str:
+    """The run's choice of barriers as an adverb."""
+    mode = profile.manifest["mode"]
+    return {"lockstep": "in lockstep", "tasked": "tasked"}.get(mode) or f"with {barriers_of(profile)}"
