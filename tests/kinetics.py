@@ -7,12 +7,12 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from breakstep.kernels.burning.network import Network, Reaction, Species, build_network
+from breakstep.kernels.burning.network_layout import read_only
+from breakstep.kernels.burning.stiff import integrate, stiff_scratch
+from breakstep.kernels.burning.zone_equations import Zone
 from breakstep.kernels.eos import state_from_temperature
-from breakstep.kernels.network import Network, Reaction, Species, build_network
-from breakstep.kernels.network_layout import read_only
-from breakstep.kernels.stiff import integrate, stiff_scratch
 from breakstep.kernels.unmanaged import unmanaged
-from breakstep.kernels.zone_equations import Zone
 
 Floats = NDArray[np.float64]
 

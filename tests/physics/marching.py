@@ -10,8 +10,8 @@ from collections.abc import Callable
 import numpy as np
 import numpy.typing as npt
 
-from breakstep.kernels import hydro
 from breakstep.kernels.eos import GammaLaw
+from breakstep.kernels.hydro import sweep as hydro
 
 Array = npt.NDArray[np.float64]
 Fill = Callable[[Array, int], Array]

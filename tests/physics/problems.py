@@ -16,10 +16,10 @@ import numpy.typing as npt
 from breakstep.engine.program import Program
 from breakstep.engine.run import RunOptions, RunResult, whole_field
 from breakstep.engine.serial import SerialDispatch
+from breakstep.kernels.burning.network import Network
 from breakstep.kernels.constants import A_RAD
 from breakstep.kernels.eos import GammaLaw, Stellar, state_from_temperature
-from breakstep.kernels.network import Network
-from breakstep.kernels.opacity import PhotonGroups, PowerLawOpacity, planck_fractions
+from breakstep.kernels.transport.opacity import PhotonGroups, PowerLawOpacity, planck_fractions
 from breakstep.mesh.mesh import Edge, Mesh
 from breakstep.mesh.tiling import Tile
 from breakstep.steps.burning import Burning, burn

@@ -5,11 +5,11 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from breakstep.kernels.burning import burn
-from breakstep.kernels.burning_scipy import ZoneProblem, compare_with_scipy
+from breakstep.kernels.burning.network import load_network
+from breakstep.kernels.burning.rosenbrock import ORDER
+from breakstep.kernels.burning.scipy_form import ZoneProblem, compare_with_scipy
+from breakstep.kernels.burning.zones import burn
 from breakstep.kernels.eos import GammaLaw, Stellar
-from breakstep.kernels.network import load_network
-from breakstep.kernels.rosenbrock import ORDER
 from tests.kinetics import CUTOFF, one_zone, run
 from tests.physics import burning_values as published
 

@@ -7,7 +7,7 @@ from collections.abc import Callable
 import numpy as np
 import pytest
 
-from breakstep.kernels.network import Network
+from breakstep.kernels.burning.network import Network
 from tests.physics.problems import Array, Embers, initial, run, transport
 
 pytestmark = pytest.mark.physics

@@ -18,10 +18,10 @@ from functools import cache, cached_property
 import numpy as np
 import pytest
 
+from breakstep.kernels.burning.network import Reaction, Species, build_network
+from breakstep.kernels.burning.network_layout import MEV
 from breakstep.kernels.constants import GAS_CONSTANT, N_A
 from breakstep.kernels.eos import GammaLaw
-from breakstep.kernels.network import Reaction, Species, build_network
-from breakstep.kernels.network_layout import MEV
 from breakstep.mesh.mesh import Edge, Mesh
 from breakstep.mesh.tiling import Tile
 from breakstep.steps.burning import Burning, burn

@@ -14,8 +14,8 @@ from dataclasses import dataclass
 import numpy as np
 import pytest
 
+from breakstep.kernels.burning.network import load_network
 from breakstep.kernels.eos import GammaLaw, Stellar
-from breakstep.kernels.network import load_network
 from breakstep.mesh.mesh import Edge, Mesh
 from breakstep.mesh.tiling import Tile
 from breakstep.steps.burning import Burning, burn

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from breakstep.kernels.stiff import DONE
+from breakstep.kernels.burning.stiff import DONE
 from tests.kinetics import hires, oregonator, robertson, run
 
 pytestmark = pytest.mark.physics

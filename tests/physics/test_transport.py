@@ -9,8 +9,8 @@ import pytest
 from numpy.typing import NDArray
 from scipy.linalg import expm
 
-from breakstep.kernels import transport
-from breakstep.kernels.transport_assembly import face_row
+from breakstep.kernels.transport import solve as transport
+from breakstep.kernels.transport.assembly import face_row
 from tests.physics import transport_tables as tables
 from tests.unit.kernels.transport_driver import Mesh, assemble, linear_steps, solve
 

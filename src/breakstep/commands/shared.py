@@ -32,7 +32,7 @@ def run_options(function: _F) -> _F:
     options = [
         click.argument("scenario", required=False),
         click.option("--set", "overrides", multiple=True, metavar="KEY.PATH=VALUE", help="Override a scenario value."),
-        click.option("--workers", type=click.IntRange(1), help="Workers (default: the scenario's, or all of your cluster)."),
+        click.option("--workers", type=click.IntRange(1), help="Workers (default: the scenario's; all of a cluster)."),
         click.option("--threads", type=click.IntRange(1), help="Threads a worker (default: the scenario's)."),
         click.option("--placement", type=click.Choice(PLACEMENTS), help="Who owns which tile."),
         click.option("--dispatch", type=click.Choice(["resident", "native", "serial"]), help="Who runs the tasks."),

@@ -27,7 +27,7 @@ _FLAGS: dict[str, Any] = {"nogil": True, "cache": True, "error_model": "numpy", 
 
 def _sources_digest() -> str:
     digest = hashlib.sha256(repr(sorted(_FLAGS.items())).encode())
-    for source in sorted(Path(__file__).parent.glob("*.py")):
+    for source in sorted(Path(__file__).parent.rglob("*.py")):
         digest.update(source.read_bytes())
     return digest.hexdigest()[:16]
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from breakstep.errors import KernelError
-from breakstep.kernels.blocks import factor_and_solve
+from breakstep.kernels.transport.blocks import factor_and_solve
 from breakstep.measure.states import Array
 from breakstep.measure.timing import Effort, Row, Work, ratio, take_turns
 

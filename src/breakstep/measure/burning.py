@@ -18,10 +18,10 @@ from typing import Any
 import numpy as np
 
 from breakstep.errors import ConvergenceError, KernelError
-from breakstep.kernels.burning import COUNTERS, Counters, burn, failure
-from breakstep.kernels.burning_scipy import ATOL_PER_RTOL, WorkPrecision, ZoneProblem, seconds_at
+from breakstep.kernels.burning.network import load_network
+from breakstep.kernels.burning.scipy_form import ATOL_PER_RTOL, WorkPrecision, ZoneProblem, seconds_at
+from breakstep.kernels.burning.zones import COUNTERS, Counters, burn, failure
 from breakstep.kernels.eos import Stellar
-from breakstep.kernels.network import load_network
 from breakstep.measure.states import DENSITY, Array, fuel_at_rest, fuel_fractions
 from breakstep.measure.timing import Effort, Row, Spread, Work, take_turns
 

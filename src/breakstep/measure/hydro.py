@@ -7,10 +7,11 @@ from functools import partial
 import numpy as np
 
 from breakstep.errors import KernelError
-from breakstep.kernels import hydro, hydro_numpy
+from breakstep.kernels.burning.network import load_network
 from breakstep.kernels.eos import GammaLaw, Stellar
-from breakstep.kernels.hydro_rows import HALO
-from breakstep.kernels.network import load_network
+from breakstep.kernels.hydro import numpy_form as hydro_numpy
+from breakstep.kernels.hydro import sweep as hydro
+from breakstep.kernels.hydro.rows import HALO
 from breakstep.measure.states import Array, Waves
 from breakstep.measure.timing import Effort, Row, Work, ratio, take_turns
 

@@ -5,7 +5,6 @@ Knows what is measured and how much of it. Refuses to know how figures are shown
 
 from __future__ import annotations
 
-import time
 from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any

@@ -13,8 +13,8 @@ from breakstep.kernels.compiled import compiled  # isort: skip  (must precede nu
 import numpy as np
 from numpy.typing import NDArray
 
+from breakstep.kernels.burning.network import Network
 from breakstep.kernels.eos import GammaLaw, Stellar, state_from_temperature
-from breakstep.kernels.network import Network
 
 Array = NDArray[np.float64]
 

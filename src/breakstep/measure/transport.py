@@ -7,13 +7,13 @@ from functools import partial
 import numpy as np
 
 from breakstep.errors import KernelError
-from breakstep.kernels import transport
+from breakstep.kernels.burning.network import load_network
 from breakstep.kernels.constants import A_RAD
 from breakstep.kernels.eos import Stellar
-from breakstep.kernels.network import load_network
-from breakstep.kernels.opacity import PhotonGroups, PowerLawOpacity
-from breakstep.kernels.transport_layout import panel_rows
-from breakstep.kernels.transport_matter import describe_matter
+from breakstep.kernels.transport import solve as transport
+from breakstep.kernels.transport.layout import panel_rows
+from breakstep.kernels.transport.matter import describe_matter
+from breakstep.kernels.transport.opacity import PhotonGroups, PowerLawOpacity
 from breakstep.measure.states import Array, Waves
 from breakstep.measure.timing import Effort, Work, take_turns
 

@@ -138,9 +138,4 @@ def _engine_reason(tasked: Profile) -> Iterator[Reason]:
         return
     mean = float((steps["end_ns"] - steps["start_ns"]).mean()) / 1e6
     verdict = " Use larger tiles before drawing conclusions about barriers." if part > MUCH_ENGINE else ""
-    yield (
-        part,
-        (
-            f"The dispatch itself takes {_percent(part)} of the tasked core-seconds, with {mean:.2g} ms a step task.{verdict}"
-        ),
-    )
+    yield part, f"The dispatch itself takes {_percent(part)} of the time, at {mean:.2g} ms a step task.{verdict}"

@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-import textwrap
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from typing import Any
 
 WIDTH = 80

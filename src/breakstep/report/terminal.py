@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import textwrap
 from collections.abc import Iterable, Iterator
 
@@ -33,6 +34,7 @@ WAITING = {
 }
 TOP_STEPS = 4
 TOP_LINKS = 8  # busiest pairs of workers that a ledger lists; 16 workers have 240
+UNIT = re.compile(r"(\d) (?=(?:%|[kMGT]?B|m?s|times)(?:\W|$))")
 WIDE = 1.1  # high over low end from which an interval leaves a gain of some percent undecided
 
 
@@ -110,7 +112,7 @@ def _subline(comparison: Comparison) -> str:
     same = " Same bits in all runs." if comparison.identical else ""
     return (
         f"{_crew(left)}, {left.manifest['dispatch']} dispatch, {counted(pairs, 'pair')}:"
-        f" {spans[0]}, {spans[1]}; gain {ratio(gain.median)}, {evidence}.{same}"
+        f" {spans[0]}, {spans[1]}; median gain {ratio(gain.median)}, {evidence}.{same}"
     )
 
 
@@ -159,7 +161,7 @@ def _steps(comparison: Comparison, digits: int) -> Iterator[str]:
 
 
 def _bytes_sentence(left: Profile, right: Profile) -> str:
-    names = [column_name(p) for p in (left, right)]
+    names = [column_name(p) if p.manifest["mode"] in FULL_CHOICES else f"with {column_name(p)}" for p in (left, right)]
     moved = [f"{size(p.traffic.total_bytes)} {name}" for p, name in zip((left, right), names, strict=True)]
     live = [size(p.live.peak_bytes) for p in (left, right)]
     by_stage = right.traffic.by_stage
@@ -168,7 +170,10 @@ def _bytes_sentence(left: Profile, right: Profile) -> str:
 
 
 def _wrap(text: str, bullet: bool = False) -> list[str]:
-    return textwrap.wrap(text, WIDTH, subsequent_indent="  " if bullet else "", break_on_hyphens=False)
+    """Lines of at most WIDTH; a number stays with its unit."""
+    joined = UNIT.sub("\\1\u00a0", text)
+    lines = textwrap.wrap(joined, WIDTH, subsequent_indent="  " if bullet else "", break_on_hyphens=False)
+    return [line.replace("\u00a0", " ") for line in lines]
 
 
 def ledger_lines(profile: Profile) -> list[str]:

@@ -13,11 +13,11 @@ from typing import Any
 import numpy as np
 
 from breakstep.errors import DeclarationError
+from breakstep.kernels.burning.network import load_network
+from breakstep.kernels.burning.network_layout import MEV
 from breakstep.kernels.constants import K_B
 from breakstep.kernels.eos import GammaLaw, Stellar
-from breakstep.kernels.network import load_network
-from breakstep.kernels.network_layout import MEV
-from breakstep.kernels.opacity import PhotonGroups, PowerLawOpacity
+from breakstep.kernels.transport.opacity import PhotonGroups, PowerLawOpacity
 from breakstep.mesh.fields import Field
 from breakstep.mesh.mesh import AXIS_NAMES, Edge, Mesh
 from breakstep.scenario.initial import InitialState, gas_values, radiation_values, temperature_at

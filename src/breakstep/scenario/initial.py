@@ -15,7 +15,7 @@ import numpy as np
 
 from breakstep.kernels.constants import A_RAD
 from breakstep.kernels.eos import GAMMA_LAW, mean_nuclear, state_from_temperature
-from breakstep.kernels.opacity import PhotonGroups, planck_fractions
+from breakstep.kernels.transport.opacity import PhotonGroups, planck_fractions
 from breakstep.mesh.mesh import Mesh
 from breakstep.mesh.tiling import Tile
 from breakstep.scenario.layouts import Array, Layout, State, Zones, uniform

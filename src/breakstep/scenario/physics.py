@@ -11,7 +11,7 @@ from typing import Annotated, Literal
 
 from pydantic import AfterValidator, BeforeValidator, Field
 
-from breakstep.kernels.network import PACKAGED_NETWORKS
+from breakstep.kernels.burning.network import PACKAGED_NETWORKS
 from breakstep.scenario.sections import NotNegative, Section, Temperature, Word, known_word, lists
 
 Share = Annotated[float, Field(ge=0.0, le=1.0)]

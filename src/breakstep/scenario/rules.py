@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 
 from breakstep.errors import BreakstepError
-from breakstep.kernels.hydro_rows import HALO
+from breakstep.kernels.hydro.rows import HALO
 from breakstep.mesh.mesh import AXIS_NAMES
 from breakstep.mesh.tiling import Tiling
 from breakstep.scenario.build import build_mesh

@@ -6,8 +6,8 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 from breakstep.errors import KernelError
-from breakstep.kernels import burning
-from breakstep.kernels.network import Network, load_network
+from breakstep.kernels.burning import zones as burning
+from breakstep.kernels.burning.network import Network, load_network
 from breakstep.steps.hydro import Gas
 from breakstep.steps.step import Array, Call, Read, Step
 

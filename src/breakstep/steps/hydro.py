@@ -9,9 +9,9 @@ from functools import cached_property
 import numpy as np
 
 from breakstep.errors import CourantError, KernelError
-from breakstep.kernels import hydro
 from breakstep.kernels.eos import GammaLaw, Stellar
-from breakstep.kernels.hydro_rows import HALO
+from breakstep.kernels.hydro import sweep as hydro
+from breakstep.kernels.hydro.rows import HALO
 from breakstep.mesh.fields import Field
 from breakstep.mesh.mesh import AXIS_NAMES, Triple
 from breakstep.steps.step import Array, Call, Read, Step

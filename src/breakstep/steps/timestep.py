@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from breakstep.errors import DeclarationError, KernelError
-from breakstep.kernels import hydro
+from breakstep.kernels.hydro import sweep as hydro
 from breakstep.steps.hydro import Gas, describe_zone
 from breakstep.steps.reduction import Combine, Reduction
 from breakstep.steps.step import Array, Call, Read

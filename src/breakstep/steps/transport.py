@@ -13,9 +13,9 @@ from functools import cached_property
 import numpy as np
 
 from breakstep.errors import DeclarationError, KernelError
-from breakstep.kernels import transport
-from breakstep.kernels.opacity import PhotonGroups, PowerLawOpacity
-from breakstep.kernels.transport_matter import Matter, describe_matter
+from breakstep.kernels.transport import solve as transport
+from breakstep.kernels.transport.matter import Matter, describe_matter
+from breakstep.kernels.transport.opacity import PhotonGroups, PowerLawOpacity
 from breakstep.mesh.fields import Field
 from breakstep.mesh.mesh import Triple
 from breakstep.steps.hydro import Gas, describe_zone, interior

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from breakstep.kernels.blocks import LANES, factor_and_solve, factor_panel, solve_panel
+from breakstep.kernels.transport.blocks import LANES, factor_and_solve, factor_panel, solve_panel
 
 EPS = float(np.finfo(float).eps)
 

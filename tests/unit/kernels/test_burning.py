@@ -7,7 +7,10 @@ from concurrent.futures import ThreadPoolExecutor
 import numpy as np
 import pytest
 
-from breakstep.kernels.burning import (
+from breakstep.kernels.burning.network import load_network
+from breakstep.kernels.burning.scipy_form import ZoneProblem
+from breakstep.kernels.burning.stiff import DONE, SUBSTEP_LIMIT
+from breakstep.kernels.burning.zones import (
     BAD_INPUT,
     COUNTERS,
     NEGATIVE_ENERGY,
@@ -15,10 +18,7 @@ from breakstep.kernels.burning import (
     burn,
     failure,
 )
-from breakstep.kernels.burning_scipy import ZoneProblem
 from breakstep.kernels.eos import GammaLaw, Stellar
-from breakstep.kernels.network import load_network
-from breakstep.kernels.stiff import DONE, SUBSTEP_LIMIT
 from tests.kinetics import CUTOFF, one_zone, tile
 
 ALPHA = load_network("alpha13")

@@ -11,10 +11,11 @@ import numpy.typing as npt
 import pytest
 
 from breakstep.errors import KernelError
-from breakstep.kernels import hydro, hydro_numpy
 from breakstep.kernels.eos import GammaLaw, Stellar
-from breakstep.kernels.hydro_chunks import chunk_plan
-from breakstep.kernels.hydro_rows import ROW
+from breakstep.kernels.hydro import numpy_form as hydro_numpy
+from breakstep.kernels.hydro import sweep as hydro
+from breakstep.kernels.hydro.chunks import chunk_plan
+from breakstep.kernels.hydro.rows import ROW
 from tests.physics.marching import periodic
 
 Array = npt.NDArray[np.float64]

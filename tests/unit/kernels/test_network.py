@@ -11,8 +11,7 @@ import numpy as np
 import pytest
 
 from breakstep.errors import DeclarationError
-from breakstep.kernels.constants import N_A
-from breakstep.kernels.network import (
+from breakstep.kernels.burning.network import (
     Network,
     Reaction,
     Species,
@@ -20,7 +19,8 @@ from breakstep.kernels.network import (
     load_network,
     read_network,
 )
-from breakstep.kernels.network_layout import MEV
+from breakstep.kernels.burning.network_layout import MEV
+from breakstep.kernels.constants import N_A
 from tests.kinetics import abstract_species, robertson
 
 
@@ -31,7 +31,7 @@ def alpha() -> Network:
 
 @pytest.fixture
 def alpha_file() -> dict:
-    return json.loads(resources.files("breakstep.kernels").joinpath("alpha13.json").read_text("utf-8"))
+    return json.loads(resources.files("breakstep.kernels.burning").joinpath("alpha13.json").read_text("utf-8"))
 
 
 def mixture(network: Network, seed: int) -> np.ndarray:

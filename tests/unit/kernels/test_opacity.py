@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from breakstep.kernels.opacity import (
+from breakstep.kernels.transport.opacity import (
     SPLIT,
     PhotonGroups,
     PowerLawOpacity,

@@ -5,8 +5,8 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from breakstep.kernels.network import load_network
-from breakstep.kernels.sparse_lu import analyse, factorise, solve
+from breakstep.kernels.burning.network import load_network
+from breakstep.kernels.burning.sparse_lu import analyse, factorise, solve
 
 
 def sparse_solve(matrix: np.ndarray, pattern: np.ndarray, vector: np.ndarray) -> np.ndarray:

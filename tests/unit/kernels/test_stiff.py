@@ -5,10 +5,9 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from breakstep.kernels.eos import GammaLaw
-from breakstep.kernels.network import Network, Reaction, Species, build_network
-from breakstep.kernels.rosenbrock import EMBEDDED_ORDER, GAMMA, ORDER, STAGES, A, C
-from breakstep.kernels.stiff import (
+from breakstep.kernels.burning.network import Network, Reaction, Species, build_network
+from breakstep.kernels.burning.rosenbrock import EMBEDDED_ORDER, GAMMA, ORDER, STAGES, A, C
+from breakstep.kernels.burning.stiff import (
     DONE,
     FACTORISATIONS,
     JACOBIANS,
@@ -18,6 +17,7 @@ from breakstep.kernels.stiff import (
     SUB_STEPS,
     SUBSTEP_LIMIT,
 )
+from breakstep.kernels.eos import GammaLaw
 from tests.kinetics import Integration, abstract_species, hires, robertson, run
 
 # One sub-step over the whole duration: every error is below such a tolerance.

@@ -12,11 +12,11 @@ import scipy.sparse.linalg as spla
 from numpy.typing import NDArray
 
 from breakstep.errors import KernelError
-from breakstep.kernels import transport
 from breakstep.kernels.constants import A_RAD, C_LIGHT, GAS_CONSTANT
 from breakstep.kernels.eos import GammaLaw
-from breakstep.kernels.opacity import PhotonGroups, PowerLawOpacity, planck_fractions
-from breakstep.kernels.transport_matter import Matter, describe_matter
+from breakstep.kernels.transport import solve as transport
+from breakstep.kernels.transport.matter import Matter, describe_matter
+from breakstep.kernels.transport.opacity import PhotonGroups, PowerLawOpacity, planck_fractions
 from tests.unit.kernels.transport_driver import Mesh, assemble, gain, protected, solve
 
 Floats = NDArray[np.float64]

@@ -5,9 +5,9 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from breakstep.kernels.burning_scipy import ZoneProblem
+from breakstep.kernels.burning.network import load_network
+from breakstep.kernels.burning.scipy_form import ZoneProblem
 from breakstep.kernels.eos import GammaLaw, Stellar
-from breakstep.kernels.network import load_network
 from tests.kinetics import run, specific_energy
 
 EQUATIONS = {

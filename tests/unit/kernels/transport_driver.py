@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from breakstep.kernels import transport
+from breakstep.kernels.transport import solve as transport
 
 Floats = NDArray[np.float64]
 Box = tuple[slice, slice, slice]

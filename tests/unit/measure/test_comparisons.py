@@ -6,8 +6,8 @@ import numpy as np
 import pytest
 
 from breakstep.errors import ConvergenceError
-from breakstep.kernels.burning_scipy import WorkPrecision
-from breakstep.kernels.network import load_network
+from breakstep.kernels.burning.network import load_network
+from breakstep.kernels.burning.scipy_form import WorkPrecision
 from breakstep.measure.blocks import dominant_blocks, operations
 from breakstep.measure.burning import bracket
 from breakstep.measure.states import DENSITY, Waves, fuel_fractions

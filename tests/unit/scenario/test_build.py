@@ -6,7 +6,7 @@ from typing import Any
 
 import pytest
 
-from breakstep.kernels.opacity import PhotonGroups
+from breakstep.kernels.transport.opacity import PhotonGroups
 from breakstep.mesh.mesh import Edge
 from breakstep.scenario.build import KELVIN_PER_KEV, build_transport
 from breakstep.scenario.load import scenario_from

@@ -9,7 +9,7 @@ import pytest
 
 from breakstep.kernels.constants import A_RAD
 from breakstep.kernels.eos import GammaLaw, Stellar, state_from_temperature
-from breakstep.kernels.opacity import PhotonGroups
+from breakstep.kernels.transport.opacity import PhotonGroups
 from breakstep.mesh.mesh import Edge, Mesh
 from breakstep.mesh.tiling import Tiling
 from breakstep.scenario.initial import InitialState, energy_densities, gas_array, temperature_at

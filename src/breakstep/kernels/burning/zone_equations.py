@@ -24,8 +24,7 @@ from breakstep.kernels.unmanaged import merged  # isort: skip  (must precede num
 import numpy as np
 from numpy.typing import NDArray
 
-from breakstep.kernels.eos import state_from_temperature
-from breakstep.kernels.reactions import (
+from breakstep.kernels.burning.reactions import (
     KineticsScratch,
     NetworkArrays,
     abundance_change,
@@ -37,6 +36,7 @@ from breakstep.kernels.reactions import (
     heat_gradient,
     heat_release,
 )
+from breakstep.kernels.eos import state_from_temperature
 
 Floats = NDArray[np.float64]
 

@@ -16,8 +16,8 @@ import numpy as np
 
 from breakstep.kernels.constants import A_RAD
 from breakstep.kernels.eos import mean_nuclear, state_from_energy
-from breakstep.kernels.opacity import PhotonGroups, PowerLawOpacity, planck_fractions
-from breakstep.kernels.transport_layout import Extent, Floats, halo_strides
+from breakstep.kernels.transport.layout import Extent, Floats, halo_strides
+from breakstep.kernels.transport.opacity import PhotonGroups, PowerLawOpacity, planck_fractions
 
 FIRST_SPECIES = 5
 """Component of the gas that holds the first partial density."""

@@ -2,7 +2,7 @@
 
 This module knows arrays of zones with a halo on one axis, and refuses to know tiles, neighbours, boundary
 conditions and the order of sweeps. It cuts a padded array into chunks that stay in the second-level cache
-and runs the loops of ``hydro_gas`` and ``hydro_species`` over each.
+and runs the loops of ``gas`` and ``species`` over each.
 
 Scheme: finite volumes, MUSCL-Hancock (van Leer 1979; Toro, Riemann Solvers and Numerical Methods for Fluid
 Dynamics, section 14.4) with limited primitive variables and the HLLC Riemann solver. The equation of
@@ -28,7 +28,7 @@ import numpy.typing as npt
 from breakstep.errors import KernelError
 from breakstep.kernels.compiled import compiled, inlined
 from breakstep.kernels.eos import STELLAR
-from breakstep.kernels.hydro_chunks import (
+from breakstep.kernels.hydro.chunks import (
     NONE,
     Plan,
     add,
@@ -40,7 +40,7 @@ from breakstep.kernels.hydro_chunks import (
     load,
     store,
 )
-from breakstep.kernels.hydro_gas import (
+from breakstep.kernels.hydro.gas import (
     crossing_rates,
     differences,
     face_states,
@@ -53,7 +53,7 @@ from breakstep.kernels.hydro_gas import (
     update,
     weights,
 )
-from breakstep.kernels.hydro_rows import (
+from breakstep.kernels.hydro.rows import (
     DENSITY,
     ENERGY,
     HALO,
@@ -66,7 +66,7 @@ from breakstep.kernels.hydro_rows import (
     part,
     scratch_for,
 )
-from breakstep.kernels.hydro_species import face_fractions, fractions, mean_nuclei, species_changes
+from breakstep.kernels.hydro.species import face_fractions, fractions, mean_nuclei, species_changes
 
 Array = npt.NDArray[np.float64]
 

@@ -1,8 +1,8 @@
 """The loops of a sweep over one chunk: density, momentum and energy.
 
-This module knows the scratch rows of ``hydro_rows`` and refuses to know where the zones came from.
+This module knows the scratch rows of ``rows`` and refuses to know where the zones came from.
 Each loop is one function because each vectorises by itself; the order of operations inside is that of
-``hydro_numpy``.
+``numpy_form``.
 """
 
 from __future__ import annotations
@@ -12,7 +12,8 @@ import numpy.typing as npt
 
 from breakstep.kernels.compiled import compiled, inlined
 from breakstep.kernels.eos import GAMMA_LAW, stellar_state, stellar_temperature
-from breakstep.kernels.hydro_rows import (
+from breakstep.kernels.hydro.riemann import contact_speed, limited_difference, side_flux, wave_speeds
+from breakstep.kernels.hydro.rows import (
     ABAR,
     DENSITY,
     DIFFERENCE,
@@ -38,7 +39,6 @@ from breakstep.kernels.hydro_rows import (
     ZBAR,
     part,
 )
-from breakstep.kernels.riemann import contact_speed, limited_difference, side_flux, wave_speeds
 
 Array = npt.NDArray[np.float64]
 

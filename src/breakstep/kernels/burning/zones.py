@@ -25,10 +25,9 @@ from breakstep.kernels.unmanaged import merged, unmanaged  # isort: skip  (must 
 import numpy as np
 from numpy.typing import NDArray
 
-from breakstep.kernels.eos import state_from_energy, state_from_temperature
-from breakstep.kernels.network_layout import read_only
-from breakstep.kernels.reactions import NetworkArrays, weigh_by_density
-from breakstep.kernels.stiff import (
+from breakstep.kernels.burning.network_layout import read_only
+from breakstep.kernels.burning.reactions import NetworkArrays, weigh_by_density
+from breakstep.kernels.burning.stiff import (
     DONE,
     NOT_FINITE,
     RIGHT_HAND_SIDES,
@@ -37,7 +36,8 @@ from breakstep.kernels.stiff import (
     integrate,
     stiff_scratch,
 )
-from breakstep.kernels.zone_equations import Zone, right_hand_side
+from breakstep.kernels.burning.zone_equations import Zone, right_hand_side
+from breakstep.kernels.eos import state_from_energy, state_from_temperature
 
 Floats = NDArray[np.float64]
 Counters = NDArray[np.int64]

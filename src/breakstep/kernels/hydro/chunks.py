@@ -1,7 +1,7 @@
 """How a padded tile is cut into chunks, and how chunks are read and written.
 
 This module knows places in memory and refuses to know physics. A chunk fits into a scratch row
-(``hydro_rows``) and is either some whole lines of zones or some columns of them, so that reading and writing
+(``rows``) and is either some whole lines of zones or some columns of them, so that reading and writing
 run over contiguous pieces.
 """
 
@@ -14,7 +14,7 @@ import numpy as np
 import numpy.typing as npt
 
 from breakstep.kernels.compiled import inlined
-from breakstep.kernels.hydro_rows import HALO, ROW, SPEED, part
+from breakstep.kernels.hydro.rows import HALO, ROW, SPEED, part
 
 Array = npt.NDArray[np.float64]
 Plan = npt.NDArray[Any]

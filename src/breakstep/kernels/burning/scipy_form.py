@@ -20,11 +20,11 @@ import numpy as np
 from scipy.integrate import solve_ivp
 
 from breakstep.errors import ConvergenceError
-from breakstep.kernels.network import Network
-from breakstep.kernels.network_layout import read_only
-from breakstep.kernels.reactions import NetworkArrays, weigh_by_density
-from breakstep.kernels.stiff import DONE, SUB_STEPS, StiffScratch, integrate, stiff_scratch
-from breakstep.kernels.zone_equations import Floats, Zone, linearise, right_hand_side
+from breakstep.kernels.burning.network import Network
+from breakstep.kernels.burning.network_layout import read_only
+from breakstep.kernels.burning.reactions import NetworkArrays, weigh_by_density
+from breakstep.kernels.burning.stiff import DONE, SUB_STEPS, StiffScratch, integrate, stiff_scratch
+from breakstep.kernels.burning.zone_equations import Floats, Zone, linearise, right_hand_side
 
 Method = Literal["BDF", "Radau", "LSODA"]
 RTOLS = (1e-3, 1e-4, 1e-5, 1e-6, 1e-7)

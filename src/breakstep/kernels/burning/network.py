@@ -21,8 +21,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from breakstep.errors import DeclarationError
-from breakstep.kernels.network_layout import Reaction, Species, lay_out
-from breakstep.kernels.reactions import (
+from breakstep.kernels.burning.network_layout import Reaction, Species, lay_out
+from breakstep.kernels.burning.reactions import (
     MAX_REACTANTS,
     KineticsScratch,
     NetworkArrays,
@@ -139,7 +139,7 @@ def load_network(name: str) -> Network:
     if name not in PACKAGED_NETWORKS:
         known = ", ".join(PACKAGED_NETWORKS)
         raise DeclarationError(f"network {name!r} is not known; packaged networks: {known}", network=name)
-    return _parse(name, resources.files("breakstep.kernels").joinpath(f"{name}.json").read_text("utf-8"))
+    return _parse(name, resources.files("breakstep.kernels.burning").joinpath(f"{name}.json").read_text("utf-8"))
 
 
 def read_network(path: Path) -> Network:

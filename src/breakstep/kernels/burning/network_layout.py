@@ -1,6 +1,6 @@
 """From declared species and reactions to the flat arrays that compiled kinetics follow.
 
-Knows how :mod:`breakstep.kernels.reactions` wants its index lists. Refuses to know files, and does not
+Knows how :mod:`breakstep.kernels.burning.reactions` wants its index lists. Refuses to know files, and does not
 check: the declarations are taken to be consistent.
 """
 
@@ -14,9 +14,9 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from breakstep.kernels.burning.reactions import MAX_REACTANTS, NetworkArrays, RateTable, Stoichiometry
+from breakstep.kernels.burning.sparse_lu import Indices, analyse
 from breakstep.kernels.constants import N_A
-from breakstep.kernels.reactions import MAX_REACTANTS, NetworkArrays, RateTable, Stoichiometry
-from breakstep.kernels.sparse_lu import Indices, analyse
 
 Floats = NDArray[np.float64]
 

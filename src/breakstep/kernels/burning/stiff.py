@@ -16,10 +16,10 @@ from breakstep.kernels.unmanaged import merged, unmanaged  # isort: skip  (must 
 import numpy as np
 from numpy.typing import NDArray
 
-from breakstep.kernels.reactions import KineticsScratch, NetworkArrays, kinetics_scratch, weigh_by_density
-from breakstep.kernels.rosenbrock import GAMMA, STAGES, A, C
-from breakstep.kernels.sparse_lu import factorise, solve
-from breakstep.kernels.zone_equations import Floats, Zone, linearise, right_hand_side
+from breakstep.kernels.burning.reactions import KineticsScratch, NetworkArrays, kinetics_scratch, weigh_by_density
+from breakstep.kernels.burning.rosenbrock import GAMMA, STAGES, A, C
+from breakstep.kernels.burning.sparse_lu import factorise, solve
+from breakstep.kernels.burning.zone_equations import Floats, Zone, linearise, right_hand_side
 
 Counters = NDArray[np.int64]
 

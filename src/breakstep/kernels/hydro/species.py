@@ -12,8 +12,8 @@ import numpy as np
 import numpy.typing as npt
 
 from breakstep.kernels.compiled import compiled
-from breakstep.kernels.hydro_gas import row_differences
-from breakstep.kernels.hydro_rows import (
+from breakstep.kernels.hydro.gas import row_differences
+from breakstep.kernels.hydro.rows import (
     ABAR,
     DIFFERENCE,
     FACE_SUM,

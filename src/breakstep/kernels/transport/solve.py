@@ -4,8 +4,8 @@ This module is what a step calls: arrays in, new arrays out, inputs unchanged. I
 a halo of one zone; it refuses to know how halos are filled, when to stop iterating and who computes where.
 
 Method: flux-limited diffusion in G photon groups, backward Euler, matter linearised in theta = a T^4 and
-eliminated zone by zone (``transport_assembly`` gives the equations), block relaxation by colour
-(``transport_relaxation``). One time step is
+eliminated zone by zone (``assembly`` gives the equations), block relaxation by colour
+(``relaxation``). One time step is
 
 1. :func:`assemble_gas` (or :func:`assemble`) from the old radiation and gas, each with halo;
 2. :func:`relax` until the largest correction is small against the largest energy density, the halo
@@ -32,9 +32,9 @@ from typing import NamedTuple
 import numpy as np
 
 from breakstep.kernels.constants import C_LIGHT
-from breakstep.kernels.transport_assembly import Spacing, assemble_flat
-from breakstep.kernels.transport_exchange import first_not_positive, gain_flat
-from breakstep.kernels.transport_layout import (
+from breakstep.kernels.transport.assembly import Spacing, assemble_flat
+from breakstep.kernels.transport.exchange import first_not_positive, gain_flat
+from breakstep.kernels.transport.layout import (
     Axes,
     Floats,
     flat,
@@ -43,8 +43,8 @@ from breakstep.kernels.transport_layout import (
     inner_shape,
     tile_extent,
 )
-from breakstep.kernels.transport_matter import TOTAL_ENERGY, Matter, matter_flat
-from breakstep.kernels.transport_relaxation import inner_zones, relax_flat
+from breakstep.kernels.transport.matter import TOTAL_ENERGY, Matter, matter_flat
+from breakstep.kernels.transport.relaxation import inner_zones, relax_flat
 
 
 class Material(NamedTuple):
@@ -75,7 +75,7 @@ class Assembly(NamedTuple):
     system: Floats
     """Factored blocks, right-hand sides and couplings, shape (G (G + 1 + 2 n_axes), nx, ny, nz).
 
-    Only :func:`relax` reads it: within the tile its numbers are in panel order (``transport_layout``), so it
+    Only :func:`relax` reads it: within the tile its numbers are in panel order (``layout``), so it
     can be sent and stored whole, but not be cut, joined or compared between tilings."""
     bad_zone: int
     """Flat index of a zone whose block has a pivot that is not positive and finite (NaN input, negative

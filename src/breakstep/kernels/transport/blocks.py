@@ -7,7 +7,7 @@ at ``panel[j * N + i, z]``, so that each step of the elimination is the same ins
 right-hand side of a panel has shape (N, 8). A panel of 16 x 16 blocks takes 16 KB, half a first-level cache.
 
 **Why no pivoting.** The blocks of implicit transport are M-matrices: off-diagonal entries are not positive
-and each column is strictly dominated by its diagonal (see ``transport_assembly``). Elimination preserves
+and each column is strictly dominated by its diagonal (see ``assembly``). Elimination preserves
 both properties, partial pivoting would never exchange a row, and the growth factor stays below 2
 (Higham, Accuracy and Stability of Numerical Algorithms, 2nd ed., theorem 9.9 on diagonal dominance; from
 memory). All pivots of such a matrix are positive, so :func:`factor_panel` reports any pivot that is

@@ -1,6 +1,6 @@
 """Mass-action kinetics on flat arrays: rates, their change of abundances and energy, the Jacobian.
 
-Everything here follows index lists that :mod:`breakstep.kernels.network` made, so an alpha chain and a
+Everything here follows index lists that :mod:`breakstep.kernels.burning.network` made, so an alpha chain and a
 textbook kinetics problem run through the same compiled code. A reaction's flux is ::
 
     prefactor * density**density_exponent * rate(T) * (product of its reactants' molar abundances)
@@ -21,8 +21,8 @@ from breakstep.kernels.unmanaged import merged  # isort: skip  (must precede num
 import numpy as np
 from numpy.typing import NDArray
 
+from breakstep.kernels.burning.sparse_lu import Elimination, Floats, Indices
 from breakstep.kernels.exponential import exponentials
-from breakstep.kernels.sparse_lu import Elimination, Floats, Indices
 
 MAX_REACTANTS = 3
 

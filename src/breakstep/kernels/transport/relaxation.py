@@ -10,8 +10,8 @@ from breakstep.kernels.compiled import compiled, inlined  # isort: skip  (must p
 
 import numpy as np
 
-from breakstep.kernels.blocks import LANES, Lanes, load, plus, solve_panel, store
-from breakstep.kernels.transport_layout import (
+from breakstep.kernels.transport.blocks import LANES, Lanes, load, plus, solve_panel, store
+from breakstep.kernels.transport.layout import (
     Extent,
     Floats,
     Integers,

@@ -30,7 +30,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from breakstep.errors import KernelError
-from breakstep.kernels.blocks import LANES
+from breakstep.kernels.transport.blocks import LANES
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]

@@ -2,7 +2,7 @@
 
 This module knows scalars, and refuses to know arrays, axes and the order in which faces are visited: the
 compiled sweep inlines these functions into its loops. Operations are written in the order in which
-``hydro_numpy`` repeats them on whole arrays; the two must agree to the last bit, so neither may be
+``numpy_form`` repeats them on whole arrays; the two must agree to the last bit, so neither may be
 rearranged alone.
 """
 

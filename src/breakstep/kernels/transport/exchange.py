@@ -9,8 +9,8 @@ from breakstep.kernels.compiled import compiled, inlined  # isort: skip  (must p
 
 import numpy as np
 
-from breakstep.kernels.transport_layout import Extent, Floats, halo_strides
-from breakstep.kernels.transport_matter import internal_energy
+from breakstep.kernels.transport.layout import Extent, Floats, halo_strides
+from breakstep.kernels.transport.matter import internal_energy
 
 
 @compiled

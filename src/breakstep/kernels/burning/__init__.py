@@ -1,0 +1,1 @@
+"""Nuclear burning of one tile's zones (`zones`), on networks of reactions (`network`)."""

@@ -1,0 +1,1 @@
+"""Implicit multi-group radiation transport on one tile: assemble, relax, exchange (`solve`)."""
