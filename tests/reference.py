@@ -58,7 +58,8 @@ def _pad_side(
 def beyond(own: tuple[int, ...], widths: Triple) -> Array:
     """Along how many axes each zone of a padded array is a ghost zone."""
     ghost = [np.pad(np.zeros(n, dtype=int), w, constant_values=1) for n, w in zip(own, widths, strict=True)]
-    return ghost[0][:, None, None] + ghost[1][None, :, None] + ghost[2][None, None, :]
+    along: Array = ghost[0][:, None, None] + ghost[1][None, :, None] + ghost[2][None, None, :]
+    return along
 
 
 @dataclass

@@ -148,4 +148,5 @@ class Shuffled:
 def _contribution(made: Any, reduction: str) -> Array | None:
     if isinstance(made, Output):
         return made.partials[reduction]
-    return made["partial"] if isinstance(made, dict) else made
+    vector: Array | None = made["partial"] if isinstance(made, dict) else made
+    return vector

@@ -9,7 +9,7 @@ from __future__ import annotations
 import itertools
 import time
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -18,7 +18,7 @@ from breakstep.mesh.mesh import Edge, Mesh, Triple
 from breakstep.mesh.tiling import Tile
 from breakstep.steps.problem import Problem
 from breakstep.steps.reduction import Combine, Reduction
-from breakstep.steps.splitting import Item, Repeat, Splitting
+from breakstep.steps.splitting import Item, Repeat, Splitting, lie
 from breakstep.steps.step import Array, Call, Read, Step
 
 Arrays = Mapping[str, Array]
@@ -61,7 +61,8 @@ def blur(arrays: Arrays, call: Call) -> dict[str, Array]:
     """Average ``u`` over the whole box of neighbours, diagonal ones included."""
     padded, widths = arrays["u"], widths_of(call)
     total = np.zeros((1, *call.shape))
-    for weight, offset in enumerate(itertools.product(*(range(-w, w + 1) for w in widths)), start=1):
+    along_x, along_y, along_z = (range(-w, w + 1) for w in widths)
+    for weight, offset in enumerate(itertools.product(along_x, along_y, along_z), start=1):
         total = total + weight / (1 + weight * weight) * moved(padded, widths, offset)
     return {"u": total / 3.0}
 
@@ -231,6 +232,26 @@ class Delayed:
         hot = call.tile == self.hot_tile + self.speed * call.cycle
         time.sleep(self.seconds * (self.hot_factor if hot else 1.0))
         return self.kernel(arrays, call)  # type: ignore[operator, no-any-return]
+
+
+@dataclass(frozen=True)
+class Scripted:
+    """A residual that follows a script, whatever the arrays hold."""
+
+    residuals: tuple[float, ...]
+
+    def __call__(self, arrays: Arrays, call: Call) -> Array:
+        return np.array([self.residuals[min(call.iteration, len(self.residuals) - 1)]])
+
+
+def rising_problem(lag: int) -> Problem:
+    """A repeat whose residual is small at its third iteration, and large again at the two behind it."""
+    problem = Toy((12,)).problem()
+    *steps, solve = problem.splitting.orders[0]
+    assert isinstance(solve, Repeat)
+    script = Scripted((1.0, 1.0, 0.0, 1.0, 1.0, 0.0))
+    until = Reduction("residual", script, (Read("change"),), Combine.MAX, as_it_is, lag)
+    return replace(problem, splitting=lie([*steps, replace(solve, until=until)], [dt_reduction()]))
 
 
 @dataclass(frozen=True)

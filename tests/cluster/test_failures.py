@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import json
 import os
 import signal
@@ -33,7 +34,9 @@ from tests.toys import Toy, faulty_problem
 
 pytestmark = pytest.mark.cluster
 
-LOST_SECONDS = 15.0  # a lost worker is noticed at the second look, each 2 s apart; the rest is a loaded machine's
+# A lost worker is noticed at the second look, each 2 s apart, and measured after 2 to 4 s; the rest is a loaded
+# machine's. Without the look, the run would wait for ever.
+LOST_SECONDS = 25.0
 
 
 def run(client: Client, program: Program, **options: object) -> RunResult:
@@ -111,20 +114,21 @@ def test_ctrl_c_in_a_terminal_spares_the_workers() -> None:
     """It reaches every process of the group, the workers too: they must live to hand over their records."""
     command = [sys.executable, "-m", "tests.cluster.interrupted"]
     folder = Path(__file__).parents[2]
-    process = subprocess.Popen(
+    with subprocess.Popen(
         command, cwd=folder, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True, start_new_session=True
-    )
-    try:
-        assert process.stdout is not None
-        for line in process.stdout:
-            if line.strip() == "2":
-                break
-        os.killpg(process.pid, signal.SIGINT)
-        told, complaints = process.communicate(timeout=30)
-    finally:
-        process.kill()
+    ) as process:
+        try:
+            assert process.stdout is not None
+            for line in process.stdout:
+                if line.strip() == "2":
+                    break
+            os.killpg(process.pid, signal.SIGINT)
+            told, complaints = process.communicate(timeout=60)
+        finally:
+            with contextlib.suppress(ProcessLookupError):
+                os.killpg(process.pid, signal.SIGKILL)
+    assert "Traceback" not in complaints
     facts = json.loads(told.strip().splitlines()[-1])
-    assert complaints == ""
     assert facts["interrupted"]
     assert facts["failure"] == "None"
     assert facts["workers"] == [0, 1]

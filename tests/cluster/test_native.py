@@ -16,6 +16,7 @@ from breakstep.engine.native import payload as wire
 from breakstep.engine.native import worker as remote
 from breakstep.engine.native.payload import Payload
 from breakstep.engine.program import Program
+from breakstep.engine.resident import ResidentDispatch
 from breakstep.engine.run import RunOptions, RunResult, unroller_for, whole_field
 from breakstep.engine.serial import SerialDispatch
 from breakstep.errors import ClusterError, KernelError
@@ -28,7 +29,7 @@ from breakstep.steps.splitting import lie
 from breakstep.steps.step import Array, Call, Read, Step
 from tests.cluster.conftest import NOTHING, leftovers
 from tests.cluster.interrupted import slow_problem
-from tests.toys import Arrays, Faulty, Toy, dt_reduction, smooth
+from tests.toys import Arrays, Faulty, Toy, dt_reduction, rising_problem, smooth
 
 pytestmark = pytest.mark.cluster
 
@@ -91,6 +92,20 @@ def test_native_equals_serial_to_the_bit(client: Client, name: str) -> None:
         assert np.array_equal(whole_field(program, result.fields[field]), whole_field(program, expected.fields[field]))
     assert np.array_equal(result.values["dt"], expected.values["dt"])
     assert leftovers(client) == NOTHING
+
+
+@pytest.mark.parametrize("lag", [1, 2])
+@pytest.mark.parametrize("dispatch", [NativeDispatch, ResidentDispatch])
+def test_a_residual_that_rises_again_within_its_lag(
+    client: Client, dispatch: type[NativeDispatch] | type[ResidentDispatch], lag: int
+) -> None:
+    """Every dispatch lets a verdict stand, as the serial one does."""
+    program = Program(rising_problem(lag), (3,))
+    expected = SerialDispatch().run(program, RunOptions())
+    result = dispatch(client, 2).run(program, RunOptions())
+    assert result.failure is None
+    for field in program.state_fields:
+        assert np.array_equal(whole_field(program, result.fields[field]), whole_field(program, expected.fields[field]))
 
 
 def emitted(program: Program, result: RunResult, owners: list[int], barriers: tuple[str, ...]) -> dict[str, int]:

@@ -6,7 +6,8 @@ from pathlib import Path
 
 import click
 
-from breakstep.commands.shared import check_json, write_json
+from breakstep.commands.shared import check_json, reading, write_json
+from breakstep.errors import ProfileError
 from breakstep.profile.store import read_profile
 from breakstep.report.comparison import run_figures
 from breakstep.report.terminal import ledger_lines
@@ -18,7 +19,8 @@ from breakstep.report.terminal import ledger_lines
 def ledger(profile: Path, json_file: Path | None) -> None:
     """Print the accounts of PROFILE, a folder that a run recorded."""
     check_json(json_file)
-    recorded = read_profile(profile)
+    with reading(profile, ProfileError):
+        recorded = read_profile(profile)
     for line in ledger_lines(recorded):
         click.echo(line)
     write_json(json_file, {"scenario": recorded.manifest["scenario"].get("name", ""), **run_figures(recorded)})

@@ -8,7 +8,15 @@ from pathlib import Path
 import click
 
 from breakstep.commands.session import Session, Stopped
-from breakstep.commands.shared import check_json, choose_place, open_dispatch, output_folder, run_options, write_json
+from breakstep.commands.shared import (
+    check_json,
+    choose_place,
+    open_dispatch,
+    output_folder,
+    reading,
+    run_options,
+    write_json,
+)
 from breakstep.engine.checkpoint import checkpoints, last_checkpoint, read_manifest
 from breakstep.errors import BreakstepError, CheckpointError, ScenarioError
 from breakstep.report.comparison import run_figures
@@ -99,8 +107,9 @@ def _begin(
         return None, session, choice
     if scenario is not None:
         raise ScenarioError("--resume takes its scenario from the checkpoint; leave SCENARIO out")
-    folder = last_checkpoint(resume / CHECKPOINTS if (resume / CHECKPOINTS).is_dir() else resume)
-    manifest = read_manifest(folder)
+    with reading(resume, CheckpointError):
+        folder = last_checkpoint(resume / CHECKPOINTS if (resume / CHECKPOINTS).is_dir() else resume)
+        manifest = read_manifest(folder)
     session = Session.from_tables(manifest["scenario"], folder, overrides, placement, memory_limit or 0)
     if list(session.program.tile_shape) != manifest["tile"]:
         raise CheckpointError(

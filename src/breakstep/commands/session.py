@@ -7,14 +7,14 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
-from breakstep.commands.shared import progress_bar
+from breakstep.commands.shared import progress_bar, reading
 from breakstep.engine.pilot import measure_costs
 from breakstep.engine.program import Program
 from breakstep.engine.recorded import run_and_record
 from breakstep.engine.run import Dispatch, RunOptions, RunResult
 from breakstep.engine.serial import SerialDispatch
 from breakstep.engine.warm import warm_up
-from breakstep.errors import BreakstepError
+from breakstep.errors import BreakstepError, ScenarioError
 from breakstep.graph.stages import parse_barriers
 from breakstep.profile.run import Profile
 from breakstep.scenario.load import Scenario, load_scenario, scenario_from
@@ -56,7 +56,9 @@ class Session:
         ScenarioError
             All its faults together.
         """
-        return cls._of(load_scenario(name, overrides), placement, memory_limit)
+        with reading(name, ScenarioError):
+            scenario = load_scenario(name, overrides)
+        return cls._of(scenario, placement, memory_limit)
 
     @classmethod
     def _of(cls, scenario: Scenario, placement: str | None, memory_limit: int) -> Session:

@@ -21,7 +21,7 @@ from breakstep.engine.recorded import check_folder
 from breakstep.engine.resident import ResidentDispatch
 from breakstep.engine.run import Dispatch
 from breakstep.engine.serial import SerialDispatch
-from breakstep.errors import OutputError
+from breakstep.errors import BreakstepError, OutputError
 from breakstep.scenario.sections import RunSection
 
 _F = TypeVar("_F", bound=Callable[..., Any])
@@ -160,6 +160,15 @@ def _new_folder(wanted: Path) -> Path:
         number += 1
         folder = wanted.with_name(f"{wanted.name}-{number}")
     return folder
+
+
+@contextlib.contextmanager
+def reading(source: object, kind: type[BreakstepError]) -> Iterator[None]:
+    """Give an error of the file system, such as missing permission, the words and the kind of our own errors."""
+    try:
+        yield
+    except OSError as error:
+        raise kind(f"{source}: cannot be read ({error.strerror or error}); check the path") from error
 
 
 def check_json(path: Path | None) -> None:

@@ -80,10 +80,10 @@ def _connect(address: str | None, scheduler_file: Path | None) -> Client:
 
 def _address_in(scheduler_file: Path) -> str:
     """The address that a scheduler wrote into its file."""
-    if not scheduler_file.is_file():
-        raise ClusterError(f"there is no scheduler file {scheduler_file}; is the scheduler running?")
     try:
         return str(json.loads(scheduler_file.read_text(encoding="utf-8"))["address"])
+    except FileNotFoundError as error:
+        raise ClusterError(f"there is no scheduler file {scheduler_file}; is the scheduler running?") from error
     except (OSError, ValueError, LookupError, TypeError) as error:
         raise ClusterError(
             f"{scheduler_file} is no scheduler file: expected JSON with the key address"

@@ -50,12 +50,14 @@ def runs(order: Sequence[int], costs: Sequence[float], workers: int) -> list[int
 
     A tile goes to the worker in whose share of the total cost its middle lies.
     """
-    total = sum(costs[tile] for tile in order)
+    if sum(costs) <= 0:
+        costs = [1.0] * len(costs)
+    total = sum(costs)
     owned = [0] * len(costs)
     before = 0.0
     for tile in order:
         middle = before + 0.5 * costs[tile]
-        owned[tile] = min(int(middle * workers / total), workers - 1) if total > 0 else 0
+        owned[tile] = min(int(middle * workers / total), workers - 1)
         before += costs[tile]
     return owned
 

@@ -17,6 +17,7 @@ from breakstep.engine.interrupts import interrupts_held
 from breakstep.engine.placement import owners
 from breakstep.engine.program import Program
 from breakstep.engine.run import Dispatch, Progress, RunOptions, RunResult, whole_field
+from breakstep.engine.unfinished import tidy
 from breakstep.errors import OutputError, ProfileError
 from breakstep.graph.tasks import ANYWHERE
 from breakstep.profile.record import FinalField, RunRecord
@@ -74,7 +75,7 @@ def _complete(result: RunResult, dispatch: Dispatch, program: Program, options: 
     """Add to the record what the dispatch left out: manifest, final fields, coordinates."""
     record = result.record
     if result.failure is not None or result.interrupted:
-        _name_all_threads(record, dispatch)
+        tidy(record, dispatch.workers, dispatch.threads)
     record.manifest.update(_manifest(dispatch, program, options, result), **facts)
     mesh = program.problem.mesh
     if result.fields:
@@ -87,14 +88,6 @@ def _complete(result: RunResult, dispatch: Dispatch, program: Program, options: 
         axis: np.asarray(origin[i] + (np.arange(mesh.zones[i]) + 0.5) * mesh.widths[i], dtype=np.float64)
         for i, axis in enumerate("xyz")
     }
-
-
-def _name_all_threads(record: RunRecord, dispatch: Dispatch) -> None:
-    """List the threads of workers whose records are lost, so that what there is can be accounted for."""
-    table = record.threads.table().to_pydict()
-    known = set(zip(table["worker"], table["thread"], strict=True))
-    every = {(worker, thread) for worker in range(dispatch.workers) for thread in range(dispatch.threads)}
-    record.threads.extend(sorted(every - known))
 
 
 def check_folder(folder: Path) -> None:

@@ -70,7 +70,7 @@ class RunResult:
         Last result of each cycle-level reduction.
     record : RunRecord
     seconds : float
-        Wall time from the first task's start to the last task's end, as the driver saw it.
+        Wall time as the driver saw it: the initial state and the gathering of the final one included.
     cycles : int
         Cycles that were completed.
     interrupted : bool

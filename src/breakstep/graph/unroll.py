@@ -61,7 +61,7 @@ class Phase:
         Verdict that turns the phase into a pass-through.
     makes : tuple of Making
     waits_for : int or None
-        Phase behind whose barrier this one stands.
+        Newest phase before this one behind which a barrier stands.
     """
 
     number: int
@@ -118,6 +118,7 @@ class Unroller:
         self._latest: dict[str, int] = {}
         self._written_in: dict[str, int] = {}  # field -> cycle of its newest version
         self._last_phase: Phase | None = None
+        self._barred: int | None = None  # newest phase behind which a barrier stands
         self._cycle_results: dict[str, list[int]] = {r.name: [] for r in self.template.splitting.reductions}
         self._iterations: dict[str, int] = {}
 
@@ -251,8 +252,6 @@ class Unroller:
         gate: ValueRef | None = None,
     ) -> Phase:
         reductions = {r.name: r for r in self.template.splitting.reductions}
-        before = self._last_phase
-        barrier = before is not None and before.stage.index in self._barrier_stages
         phase = Phase(
             number=self._phase_count,
             stage=stage,
@@ -262,12 +261,14 @@ class Unroller:
             values={name: self._cycle_value(reductions[name], cycle) for name in stage.uses},
             gate=gate,
             makes=makes,
-            waits_for=before.number if before is not None and barrier else None,
+            waits_for=self._barred,
         )
         self._phase_count += 1
         self._latest.update(dict.fromkeys(stage.writes, phase.number))
         self._written_in.update(dict.fromkeys(stage.writes, cycle))
         self._last_phase = phase
+        if stage.index in self._barrier_stages:
+            self._barred = phase.number  # everything after stands behind it, whatever lies between
         return phase
 
     def _next_instance(self) -> int:

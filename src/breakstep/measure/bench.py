@@ -70,9 +70,9 @@ class Bench:
 
     def __init__(self, client: Any, idle_seconds: float) -> None:
         self.client = client
-        self.dispatches = {"native": NativeDispatch(client), "resident": ResidentDispatch(client)}
-        self.addresses = self.dispatches["resident"].addresses
-        self.workers, self.threads = len(self.addresses), self.dispatches["resident"].threads
+        native, resident = NativeDispatch(client), ResidentDispatch(client)
+        self.dispatches: dict[str, NativeDispatch | ResidentDispatch] = {"native": native, "resident": resident}
+        self.addresses, self.workers, self.threads = native.addresses, native.workers, native.threads
         self.pids: list[int] = list(client.run(os.getpid).values())
         self.idle = Usage(1.0, 0.0, 0.0)
         self._warm_up()

@@ -23,8 +23,8 @@ from breakstep.measure.noop import Pace, Ring
 from breakstep.profile.run import Profile
 
 LIMIT = 0.05  # of the core-seconds
-TILES = 16
-FEWEST_CYCLES = 4  # as many as may be under way at once
+TILES = 32
+FEWEST_CYCLES = 3
 _NEXT_TO_NOTHING = 1e-6  # a share to take the logarithm of where none was booked
 
 
@@ -73,9 +73,7 @@ def grain_figures(
         **spread([milliseconds for milliseconds, _ in grains]),
         "extrapolated": any(outside for _, outside in grains),
         "limit": LIMIT,
-        "points": [
-            {"nominal_ms": length, **_medians(column)} for length, column in zip(lengths, columns, strict=True)
-        ],
+        "points": [{"nominal_ms": length, **_medians(column)} for length, column in zip(lengths, columns, strict=True)],
     }
 
 
@@ -84,9 +82,7 @@ def _medians(points: Sequence[GrainPoint]) -> dict[str, dict[str, float]]:
     return {name: spread([getattr(point, name) for point in points]) for name in names}
 
 
-def _point(
-    bench: Bench, dispatch: str, length: float, pace: Pace, seconds: float, once: Usage
-) -> GrainPoint:
+def _point(bench: Bench, dispatch: str, length: float, pace: Pace, seconds: float, once: Usage) -> GrainPoint:
     cycles = max(FEWEST_CYCLES, round(1e3 * seconds * bench.slots / (length * TILES)))
     ring = Ring((TILES,), cycles, kernel=pace.busy(length))
     used, profile = bench.record(dispatch, ring, RunOptions())

@@ -11,7 +11,7 @@ from typing import Any
 
 from breakstep.measure import cost
 from breakstep.measure.bench import Bench, Machine, open_bench
-from breakstep.measure.cost import Case, cost_row
+from breakstep.measure.cost import Case, cost_row, recording_noop
 from breakstep.measure.grain import grain_figures
 from breakstep.measure.limits import cores
 from breakstep.measure.long_run import CYCLES, long_figures
@@ -19,7 +19,9 @@ from breakstep.measure.noop import Pace
 from breakstep.measure.pairs import lockstep_figures, recording_figures
 from breakstep.measure.sharing import sharing_rows
 
-Progress = Callable[[str], None]
+BUSY = 0.1  # cores: more than a machine at rest takes for itself
+
+Report = Callable[[str], None]
 
 
 @dataclass(frozen=True)
@@ -60,11 +62,11 @@ class Extent:
 FULL = Extent(
     rounds=3,
     cases=cost.ALL,
-    lengths={"resident": (0.2, 0.5, 1.0, 2.0, 5.0), "native": (5.0, 10.0, 20.0, 50.0)},
+    lengths={"resident": (0.2, 0.5, 1.0, 2.0, 5.0, 10.0), "native": (5.0, 10.0, 20.0, 50.0)},
     shared=(0.5, 2.0, 5.0),
     seconds=0.5,
     pairs=9,
-    pair_cycles=8,
+    pair_cycles=5,
     long_cycles=CYCLES,
     idle_seconds=2.0,
 )
@@ -75,7 +77,7 @@ QUICK = Extent(
     shared=(0.5, 5.0),
     seconds=0.25,
     pairs=5,
-    pair_cycles=4,
+    pair_cycles=3,
     long_cycles=0,
     idle_seconds=1.0,
 )
@@ -86,7 +88,7 @@ def _silent(what: str) -> None:
 
 
 def selfcheck_figures(
-    workers: int = 2, quick: bool = False, progress: Progress = _silent, extent: Extent | None = None
+    workers: int = 2, quick: bool = False, progress: Report = _silent, extent: Extent | None = None
 ) -> dict[str, Any]:
     """Measure everything.
 
@@ -130,7 +132,7 @@ def selfcheck_figures(
     }
 
 
-def _on_processes(bench: Bench, extent: Extent, pace: Pace, progress: Progress) -> dict[str, Any]:
+def _on_processes(bench: Bench, extent: Extent, pace: Pace, progress: Report) -> dict[str, Any]:
     progress("the cost of a task")
     costs = [cost_row(bench, case, extent.rounds) for case in extent.cases]
     progress("the grain")
@@ -140,6 +142,7 @@ def _on_processes(bench: Bench, extent: Extent, pace: Pace, progress: Progress) 
     }
     progress("recording, lockstep against itself, balanced work")
     recording = recording_figures(bench, pace, extent.pairs, extent.pair_cycles)
+    recording["noop_cpu_us"] = recording_noop(bench, extent.rounds)
     gains = lockstep_figures(bench, pace, extent.pairs, extent.pair_cycles)
     if extent.long_cycles:
         progress("a long run")
@@ -155,9 +158,7 @@ def _on_processes(bench: Bench, extent: Extent, pace: Pace, progress: Progress) 
     }
 
 
-def _with_threads(
-    processes: Bench, threads: Bench, extent: Extent, pace: Pace, progress: Progress
-) -> dict[str, Any]:
+def _with_threads(processes: Bench, threads: Bench, extent: Extent, pace: Pace, progress: Report) -> dict[str, Any]:
     progress("threads against processes")
     row = cost_row(threads, cost.HEADLINE, extent.rounds, ["resident"])
     benches = {"threads": threads, "processes": processes}
@@ -188,6 +189,3 @@ def warnings(available: int, workers: int, others: float | None, quick: bool) ->
     if quick:
         found.append("few and short rounds, no long run; judge by a full run.")
     return found
-
-
-BUSY = 0.1  # cores: a tenth is what a desktop at rest takes

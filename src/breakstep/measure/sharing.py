@@ -17,7 +17,7 @@ from breakstep.measure.noop import Pace, Ring
 from breakstep.measure.timing import in_turn
 
 TILES = 32
-FEWEST_CYCLES = 4
+FEWEST_CYCLES = 3
 
 
 def sharing_rows(

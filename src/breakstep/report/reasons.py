@@ -44,8 +44,9 @@ def _percent(part: float) -> str:
 
 
 def _most_at_fault(profile: Profile, account: str) -> str:
-    """The stage that most of an account's waits are for."""
-    return str(profile.ledger.waits_by_stage[account].idxmax())
+    """The step that most of an account's waits are for; a stage of several counts for its costliest."""
+    waits = profile.ledger.waits_by_stage[account]
+    return str(waits.groupby([_costliest(profile, str(stage)) for stage in waits.index]).sum().idxmax())
 
 
 def _costliest(profile: Profile, stage: str) -> str:
@@ -61,9 +62,9 @@ def _barrier_reason(lockstep: Profile) -> Iterator[str]:
     if part < NOTABLE_SHARE:
         yield f"Why: {where} cores waited at barriers for only {_percent(part)} of their time{_instead(lockstep)}."
         return
-    step = _costliest(lockstep, _most_at_fault(lockstep, "barrier"))
+    step = _most_at_fault(lockstep, "barrier")
     yield (
-        f"Why: {where} cores waited at barriers for {_percent(part)} of their time, most of it for"
+        f"Why: {where} cores waited at barriers for {_percent(part)} of their time, mostly for"
         f" {step}{_unevenness_of(lockstep, step)}."
     )
 
@@ -74,7 +75,7 @@ def _instead(lockstep: Profile) -> str:
     if reduction >= NOTABLE_SHARE:
         return f", and for reductions, which hold tasks back as well, for {_percent(reduction)}"
     work = lockstep.work["compute_ns"]
-    if len(work) and float(lockstep.imbalance["phases_weighted"][str(work.idxmax())]) < UNEVEN:
+    if len(work) and float(lockstep.imbalance["phases_weighted"].get(str(work.idxmax()), math.inf)) < UNEVEN:
         return "; the phases are even"
     return ""
 
@@ -85,22 +86,22 @@ def _unevenness_of(lockstep: Profile, step: str) -> str:
     phases, tiles = (float(lockstep.imbalance[column][step]) for column in ("phases_weighted", "tiles"))
     if not math.isfinite(phases) or phases < UNEVEN:
         return ""
-    busiest = f" (busiest tile: {tiles:.1f} times the mean tile)" if math.isfinite(tiles) else ""
-    return f", where the busiest worker of a phase has {unevenness(phases)} times the mean work{busiest}"
+    tile = f", the busiest tile {unevenness(tiles)} times the mean tile's" if math.isfinite(tiles) else ""
+    return f" (the busiest worker of a phase has {unevenness(phases)} times the mean work{tile})"
 
 
 def _reduction_reason(tasked: Profile) -> Iterator[Reason]:
     part = share(tasked, "reduction")
     if part < NOTABLE_SHARE:
         return
-    stage = _costliest(tasked, _most_at_fault(tasked, "reduction"))
-    sentence = f"Without barriers, {_percent(part)} still goes to waiting for reductions, most of it behind {stage}."
+    step = _most_at_fault(tasked, "reduction")
+    sentence = f"Without barriers, {_percent(part)} still goes to waiting for reductions, mostly behind {step}."
     lags: dict[str, int] = tasked.manifest["notes"].get("lags", {})
     prompt = [name for name, lag in lags.items() if lag == 0]
     if prompt:
         sentence += (
             f" With lag 0, {listed(prompt)} {'makes' if len(prompt) == 1 else 'make'} every tile wait for the"
-            " slowest, barriers or not; lag 1 would let tiles run ahead, at a price."
+            " slowest one; lag 1 would let tiles run ahead, at a price."
         )
     yield part, sentence
 
@@ -108,8 +109,8 @@ def _reduction_reason(tasked: Profile) -> Iterator[Reason]:
 def _neighbour_reason(tasked: Profile) -> Iterator[Reason]:
     part = share(tasked, "neighbour")
     if part >= NOTABLE_SHARE:
-        stage = _costliest(tasked, _most_at_fault(tasked, "neighbour"))
-        yield part, f"Without barriers, {_percent(part)} goes to waiting for neighbour tiles, most of it for {stage}."
+        step = _most_at_fault(tasked, "neighbour")
+        yield part, f"Without barriers, {_percent(part)} goes to waiting for neighbour tiles, mostly for {step}."
 
 
 def _placement_reason(tasked: Profile) -> Iterator[Reason]:
@@ -128,7 +129,11 @@ def _placement_reason(tasked: Profile) -> Iterator[Reason]:
         if tile > mean
         else "unevenness that stays in place is cured by placement, not by tasks"
     )
-    yield 1.0 - mean / busiest, f"Over the whole run one worker has {busiest / mean:.2f} times the mean work: {cure}."
+    idle = sum(share(tasked, account) for account in ("neighbour", "reduction", "unemployed"))
+    yield (
+        min(1.0 - mean / busiest, idle),
+        f"Over the whole run one worker has {busiest / mean:.2f} times the mean work: {cure}.",
+    )
 
 
 def _engine_reason(tasked: Profile) -> Iterator[Reason]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import re
 import textwrap
 from collections.abc import Iterable, Iterator
@@ -40,21 +41,22 @@ WIDE = 1.1  # high over low end from which an interval leaves a gain of some per
 
 def comparison_lines(comparison: Comparison) -> list[str]:
     """The whole text of ``compare``."""
-    lines = [*_wrap(headline(comparison)), *_wrap(_subline(comparison)), ""]
-    lines += _accounts(comparison)
-    lines.append("")
+    first = [*_wrap(headline(comparison)), *_wrap(_subline(comparison)), ""]
+    table, steps = _accounts(comparison), list(_steps(comparison))
     last = _wrap(_bytes_sentence(*comparison.shown), bullet=True)
-    room = LINES - len(lines) - len(last)
-    return [*lines, *_fitting(reasons(*comparison.shown), room), *last]
+    why = [_wrap(sentence, bullet=True) for sentence in reasons(*comparison.shown)]
+    room = LINES - len(first) - len(table) - len(last) - 1
+    shown = min(len(steps), max(1, room - sum(map(len, why))))
+    at = 2  # below the heading and the account of compute
+    return [*first, *table[:at], *steps[:shown], *table[at:], "", *_fitting(why, room - shown), *last]
 
 
-def _fitting(sentences: Iterable[str], room: int) -> Iterator[str]:
-    """Those sentences, the first ones first, for which there is room."""
-    for sentence in sentences:
-        wrapped = _wrap(sentence, bullet=True)
-        if len(wrapped) <= room:
-            room -= len(wrapped)
-            yield from wrapped
+def _fitting(sentences: Iterable[list[str]], room: int) -> Iterator[str]:
+    """Lines of those sentences, the first ones first, for which there is room."""
+    for lines in sentences:
+        if len(lines) <= room:
+            room -= len(lines)
+            yield from lines
 
 
 def headline(comparison: Comparison) -> str:
@@ -95,9 +97,9 @@ def describe_difference(comparison: Comparison) -> str:
     if not found.step:
         return (
             f"field {found.field} differs at the end, first on tile {found.tile}; a traced second run did not"
-            " show where it began"
+            " show where it began."
         )
-    return f"they differ first in {found.field} after step {found.step} on tile {found.tile} in cycle {found.cycle}"
+    return f"they differ first in {found.field} after step {found.step} on tile {found.tile} in cycle {found.cycle}."
 
 
 def _subline(comparison: Comparison) -> str:
@@ -112,7 +114,7 @@ def _subline(comparison: Comparison) -> str:
     same = " Same bits in all runs." if comparison.identical else ""
     return (
         f"{_crew(left)}, {left.manifest['dispatch']} dispatch, {counted(pairs, 'pair')}:"
-        f" {spans[0]}, {spans[1]}; median gain {ratio(gain.median)}, {evidence}.{same}"
+        f" {spans[0]}, {spans[1]}; {'median ' if pairs > 1 else ''}gain {ratio(gain.median)}, {evidence}.{same}"
     )
 
 
@@ -125,12 +127,9 @@ def _crew(profile: Profile) -> str:
 def _accounts(comparison: Comparison) -> list[str]:
     left, right = (p.ledger for p in comparison.shown)
     names = [column_name(p) for p in comparison.shown]
-    digits = _digits(max(left.available_ns, right.available_ns) / 1e9)
+    digits = _digits(left, right)
     lines = [f"{'core-seconds':<24}{names[0]:>17}{names[1]:>18}{'handed back':>15}"]
-    for account in ACCOUNTS:
-        lines.append(_row(WAITING.get(account, account), left, right, account, digits))
-        if account == "compute":
-            lines += _steps(comparison, digits)
+    lines += [_row(WAITING.get(account, account), left, right, account, digits) for account in ACCOUNTS]
     total = [ledger.available_ns / 1e9 for ledger in (left, right)]
     closure = max(left.closure_error, right.closure_error)
     lines.append(
@@ -140,8 +139,9 @@ def _accounts(comparison: Comparison) -> list[str]:
     return lines
 
 
-def _digits(largest: float) -> int:
-    """Decimals that leave a number of core-seconds with three or four digits."""
+def _digits(*ledgers: Ledger) -> int:
+    """Decimals that leave the largest number of core-seconds with about four digits."""
+    largest = max(ledger.available_ns for ledger in ledgers) / 1e9
     return 2 if largest >= 10.0 else 3 if largest >= 1.0 else 4
 
 
@@ -151,9 +151,10 @@ def _row(label: str, left: Ledger, right: Ledger, account: str, digits: int) -> 
     return f"{label:<24}{a:>10.{digits}f}{shares[0]:>5.0f} %{b:>11.{digits}f}{shares[1]:>5.0f} %{a - b:>15.{digits}f}"
 
 
-def _steps(comparison: Comparison, digits: int) -> Iterator[str]:
-    """The costliest steps, under ``compute``."""
+def _steps(comparison: Comparison) -> Iterator[str]:
+    """The costliest steps, to stand under ``compute``."""
     left, right = (p.work["compute_seconds"] for p in comparison.shown)
+    digits = _digits(*(p.ledger for p in comparison.shown))
     notable = NOTABLE_SHARE * float(left.sum())
     for step in left[left >= notable].sort_values(ascending=False).index[:TOP_STEPS]:
         a, b = float(left[step]), float(right.get(step, 0.0))
@@ -193,7 +194,7 @@ def ledger_lines(profile: Profile) -> list[str]:
 
 def _account_table(profile: Profile) -> Iterator[str]:
     ledger = profile.ledger
-    digits = _digits(ledger.available_ns / 1e9) + 1
+    digits = _digits(ledger) + 1
     yield f"{'account':<24}{'core-seconds':>14}{'share':>9}"
     for account in ACCOUNTS:
         spent = ledger.accounts_seconds[account]
@@ -205,10 +206,10 @@ def _account_table(profile: Profile) -> Iterator[str]:
 
 
 def _step_table(profile: Profile) -> Iterator[str]:
-    digits = _digits(profile.ledger.available_ns / 1e9) + 1
+    digits, among = _digits(profile.ledger) + 1, profile.imbalance
     yield f"{'step':<16}{'compute s':>11}{'CPU s':>11}{'workers':>10}{'phases':>9}{'tiles':>8}   busiest/mean"
     for step, row in profile.work.sort_values("compute_ns", ascending=False).iterrows():
-        uneven = [unevenness(float(profile.imbalance[c][str(step)])) for c in ("workers", "phases_weighted", "tiles")]
+        uneven = [unevenness(float(among[c].get(str(step), math.nan))) for c in ("workers", "phases_weighted", "tiles")]
         yield (
             f"{step!s:<16}{row['compute_seconds']:>11.{digits}f}{row['cpu_seconds']:>11.{digits}f}"
             f"{uneven[0]:>10}{uneven[1]:>9}{uneven[2]:>8}"

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
-from dataclasses import dataclass, replace
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -13,12 +13,11 @@ from breakstep.engine.run import RunOptions, RunResult, whole_field
 from breakstep.engine.serial import SerialDispatch
 from breakstep.errors import ConvergenceError, KernelError
 from breakstep.mesh.mesh import Edge
-from breakstep.steps.reduction import Combine, Reduction
-from breakstep.steps.splitting import Repeat, lie
-from breakstep.steps.step import Array, Call, Read, Step
+from breakstep.steps.splitting import lie
+from breakstep.steps.step import Read, Step
 from tests import toys
 from tests.reference import March
-from tests.toys import Arrays, Toy, dt_reduction, faulty_problem
+from tests.toys import Toy, faulty_problem, rising_problem
 
 TOYS: dict[str, tuple[Toy, list[tuple[int, ...]]]] = {
     "plain": (Toy(), [(12, 9), (4, 3), (7, 4)]),
@@ -59,25 +58,10 @@ def test_barriers_change_the_graph_and_not_the_answer() -> None:
     assert kinds[1]["release"] * len(program.tiling) == kinds[1]["step"]
 
 
-@dataclass(frozen=True)
-class Scripted:
-    """A residual that follows a script, whatever the arrays hold."""
-
-    residuals: tuple[float, ...]
-
-    def __call__(self, arrays: Arrays, call: Call) -> Array:
-        return np.array([self.residuals[min(call.iteration, len(self.residuals) - 1)]])
-
-
 @pytest.mark.parametrize("lag", [0, 1, 2])
 def test_a_residual_that_rises_again_within_its_lag(lag: int) -> None:
     """The repeat ends once; what the iterations behind the verdict measure starts nothing anew."""
-    script = Scripted((1.0, 1.0, 0.0, 1.0, 1.0, 0.0))
-    problem = Toy((12,)).problem()
-    *steps, solve = problem.splitting.orders[0]
-    assert isinstance(solve, Repeat)
-    until = Reduction("residual", script, (Read("change"),), Combine.MAX, toys.as_it_is, lag)
-    problem = replace(problem, splitting=lie([*steps, replace(solve, until=until)], [dt_reduction()]))
+    problem = rising_problem(lag)
     expected = March(problem)
     assert expected.iterations == [3 + lag] * 3
     program = Program(problem, (3,))

@@ -16,6 +16,7 @@ from distributed import Client, Worker, connect
 from distributed.protocol import to_serialize
 
 ITEMS = "breakstep_items"
+TILES = "breakstep_tiles"
 CONNECT_SECONDS = 5  # to a worker from the client: a wall between them may swallow every attempt
 
 Handler = Callable[..., Awaitable[Any]]
@@ -35,6 +36,16 @@ async def send(worker: Worker, address: str, run: str, sender: int, number: int,
     """Send a parcel and wait for the answer; raises OSError when the connection fails."""
     call = getattr(worker.rpc(address), ITEMS)
     return await call(run=run, sender=sender, number=number, parcel=to_serialize(parcel))
+
+
+async def fetch(worker: Worker, address: str, run: str, tiles: list[int]) -> Any:
+    """Ask a worker for the state of tiles that it owned in a run; answered by what :func:`parcelled` made."""
+    return await getattr(worker.rpc(address), TILES)(run=run, tiles=tiles)
+
+
+def parcelled(parcel: Any) -> Any:
+    """A handler's answer that travels with its arrays out of band."""
+    return to_serialize(parcel)
 
 
 def event_loop(worker: Worker) -> asyncio.AbstractEventLoop:

@@ -5,11 +5,12 @@ Knows nothing of starting again; says by ``details["lost"]`` of a ClusterError t
 
 from __future__ import annotations
 
+import asyncio
 import time
 import uuid
 from collections.abc import Callable, Mapping, Sequence
 from concurrent.futures import CancelledError
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -22,12 +23,15 @@ from breakstep.engine.program import Program
 from breakstep.engine.resident import remote
 from breakstep.engine.resident.gather import gather_record
 from breakstep.engine.resident.host import Assignment, Saved, Status
+from breakstep.engine.resident.wire import Parcel
 from breakstep.engine.run import Progress, RunOptions, RunResult
 from breakstep.engine.workers import present_clients, present_workers
 from breakstep.errors import BreakstepError, ClusterError, DeclarationError
+from breakstep.graph.numbering import Numbering
 from breakstep.graph.tasks import ANYWHERE
 from breakstep.profile.record import RunRecord
 
+WORTH_MOVING = 1.05  # tiles change owner when the busiest worker would have 5 % less to do
 POLL_SECONDS = 0.25  # between looks at the workers; each costs them about 1 ms
 
 
@@ -69,16 +73,31 @@ class _Reports:
     workers: int = 0
 
 
+@dataclass
+class Segment:
+    """Some cycles of a run with fixed owners."""
+
+    name: str
+    options: RunOptions
+    owners: tuple[int, ...]
+    is_in: bool = False
+
+
 class Attempt:
     """One start of a run."""
 
     def __init__(self, site: Site, program: Program, options: RunOptions, progress: Progress | None) -> None:
         self.site, self.program, self.progress = site, program, progress
         self.client, self.addresses = site.client, list(site.addresses)
-        self.name = uuid.uuid4().hex[:8]
+        self.base = uuid.uuid4().hex[:8]
         self.result = RunResult({}, {}, RunRecord(), 0.0, 0)
         self.options, self.owners = options, owners(options.placement, program, len(self.addresses), options.costs)
         self.result.notes["owners"] = list(self.owners)
+        self.segments: list[Segment] = []
+        self.moves = 0
+        self.peaks: list[int] = []
+        barriers = program.template.stages_with_barrier(options.barriers)
+        self.numbering = Numbering(len(self.owners), len(self.addresses), barriers)
         self.reports: dict[int, _Reports] = {}
         self.clocks: list[ClockReading] = []
 
@@ -114,32 +133,71 @@ class Attempt:
             self.options = self.options.starting_at(start)
 
     def _work(self, zero: int) -> None:
-        self._tell(zero)
-        self._wait(self._submit(remote.prepare, "prepare"))
-        futures = self._submit(remote.work, "work")
-        self._wait(futures)
-        self._look_in()
-        for parcel in self.client.gather(futures):
+        """One segment; with shared placement, one for each window of cycles."""
+        end, share = self.program.problem.cycles, self.options.placement == "shared"
+        start = self.options.start
+        while True:
+            stop = min(start + self.options.window, end) if share else end
+            futures = self._segment(start, stop, zero)
+            if stop >= end or self.result.cycles < stop:
+                break
+            self._share_anew()
+            start = stop
+        for parcel in self._fetch(futures):
             for _, arrays in parcel.items:
                 for (name, tile, _), array in arrays.items():
                     self.result.fields.setdefault(name, [array] * len(self.owners))[tile] = array
 
-    def _tell(self, zero: int) -> None:
-        clients = present_clients(self.client)
+    def _segment(self, start: int, stop: int, zero: int) -> list[Future]:
+        """Run some cycles; the segment before hands its state over, then its record."""
+        earlier = self.segments[-1] if self.segments else None
+        options = replace(self.options, start=start, stop=stop)
+        self.segments.append(Segment(f"{self.base}-{len(self.segments)}", options, tuple(self.owners)))
+        self._tell(zero, earlier)
+        self._wait(self._submit(remote.prepare, "prepare"))
+        if earlier is not None:
+            self._bring_in(earlier, self.addresses)
+        futures = self._submit(remote.work, "work")
+        self._wait(futures)
+        self._look_in()
+        return futures
+
+    def _share_anew(self) -> None:
+        """Owners by the costs measured in the newest segment, if that promises enough."""
+        answers = self.client.run(remote.status, self.name, workers=self.addresses)
+        costs = [0.0] * len(self.owners)
+        for status in answers.values():
+            for tile, spent in status.costs.items():
+                costs[tile] = float(spent)
+        better = owners("balanced", self.program, len(self.addresses), costs)
+        if _busiest(better, costs) * WORTH_MOVING < _busiest(self.owners, costs):
+            self.moves += sum(old != new for old, new in zip(self.owners, better, strict=True))
+            self.owners = better
+            self.result.notes["owners"] = list(better)
+
+    @property
+    def name(self) -> str:
+        """Name of the newest segment, under which workers know it."""
+        return self.segments[-1].name if self.segments else self.base
+
+    def _tell(self, zero: int, earlier: Segment | None) -> None:
+        clients, segment = present_clients(self.client), self.segments[-1]
         for number, (address, reading) in enumerate(zip(self.addresses, self.clocks, strict=True)):
             told = Assignment(
-                run=self.name,
+                run=segment.name,
                 client=self.client.id,
                 program=self.program,
-                options=self.options,
+                options=segment.options,
                 worker=number,
                 addresses=tuple(self.addresses),
-                owners=tuple(self.owners),
+                owners=segment.owners,
                 threads=self.site.threads,
                 zero=zero + reading.offset,
                 lease=self.site.lease,
-                resume=self.site.resume,
+                resume=self.site.resume if earlier is None else None,
                 save_to=self.site.checkpoints,
+                previous=None if earlier is None else earlier.name,
+                previous_owners=() if earlier is None else earlier.owners,
             )
             self.client.run(remote.begin, told, clients, workers=[address])
 
@@ -162,6 +220,17 @@ class Attempt:
             self._look_for_gone()
             self._look_in()
         _raise_failed(futures)
+
+    def _fetch(self, futures: list[Future]) -> list[Parcel]:
+        """The results of finished tasks; a worker that goes before its own is here is noticed."""
+        fetching: asyncio.Task[list[Parcel]] = self.client.sync(_begin_to_fetch, self.client, futures)
+        try:
+            while not self.client.sync(_is_fetched, fetching, POLL_SECONDS):
+                self._look_for_gone()
+                self._look_in()
+            return fetching.result()
+        finally:
+            self.client.sync(_cancel, fetching)
 
     def _look_for_gone(self) -> None:
         """A task that is tied to a worker that has gone waits for ever; nothing but the list of workers tells."""
@@ -207,23 +276,37 @@ class Attempt:
         try:
             present = present_workers(self.client)
             alive = [address for address in self.addresses if address in present]
-            self.client.run(remote.stop, self.name, workers=alive, on_error="ignore")
-            answers = self.client.run(remote.collect, self.name, workers=alive, on_error="ignore")
+            open_segments = [segment for segment in self.segments if not segment.is_in]
+            for segment in open_segments:
+                self.client.run(remote.stop, segment.name, workers=alive, on_error="ignore")
+            for segment in open_segments:
+                self._bring_in(segment, alive)
             self._note_clocks(alive)
         except OSError:
             return
-        parts = [answers[address] for address in alive if answers.get(address)]
-        self.result.notes["worker_peak_bytes"] = [part["peak"] for part in parts]
-        if parts:
-            self._take_over(parts)
+        if self.options.placement == "shared":
+            self.result.notes["tiles_moved"] = self.moves
 
-    def _take_over(self, parts: Sequence[dict[str, Any]]) -> None:
+    def _bring_in(self, segment: Segment, addresses: list[str]) -> None:
+        """A segment's record; its workers forget it."""
+        segment.is_in = True
+        answers = self.client.run(remote.collect, segment.name, workers=addresses, on_error="ignore")
+        parts = [answers[address] for address in addresses if answers.get(address)]
+        peaks = [int(part["peak"]) for part in parts]
+        if len(self.peaks) == len(peaks):
+            peaks = [max(pair) for pair in zip(self.peaks, peaks, strict=True)]
+        self.peaks = peaks
+        self.result.notes["worker_peak_bytes"] = peaks
+        if parts:
+            self._take_over(segment, parts)
+
+    def _take_over(self, segment: Segment, parts: Sequence[dict[str, Any]]) -> None:
         result = self.result
         result.cycles = min(part["cycles"] for part in parts)
         if result.failure is None and not result.interrupted:
             result.values = parts[0]["values"]
         if self.options.record:
-            gather_record(result.record, parts, self.program, self.options, self.owners)
+            gather_record(result.record, parts, self.program, segment.options, segment.owners, self.numbering)
 
     def _note_clocks(self, alive: list[str]) -> None:
         before = dict(zip(self.addresses, self.clocks, strict=False))
@@ -233,12 +316,33 @@ class Attempt:
         self.result.notes["worker_cpu_ns"] = [a.cpu - b.cpu for b, a in both]
 
 
+def _busiest(owned: Sequence[int], costs: Sequence[float]) -> float:
+    """The cost of the worker that has most to do."""
+    loads: dict[int, float] = {}
+    for cost, owner in zip(costs, owned, strict=True):
+        loads[owner] = loads.get(owner, 0.0) + cost
+    return max(loads.values())
+
+
 async def _some_done(futures: list[Future], seconds: float) -> None:
     """Until one of them is done or time is up; runs on the client's loop, whose frames hold nothing afterwards."""
     try:
         await wait(futures, timeout=seconds, return_when="FIRST_COMPLETED")
     except TimeoutError:
         return
+
+
+async def _begin_to_fetch(client: Client, futures: list[Future]) -> asyncio.Task[list[Parcel]]:
+    return asyncio.ensure_future(client.gather(futures))
+
+
+async def _is_fetched(fetching: asyncio.Task[list[Parcel]], seconds: float) -> bool:
+    done, _ = await asyncio.wait([fetching], timeout=seconds)
+    return bool(done)
+
+
+async def _cancel(fetching: asyncio.Task[list[Parcel]]) -> None:
+    fetching.cancel()
 
 
 def _raise_failed(futures: list[Future]) -> None:

@@ -9,7 +9,7 @@ Events (method, what happened)
 start        the run may begin: phases are emitted as far as the window and known values allow
 take         a thread asks for work: the most urgent ready task, or None
 finish       a thread has run a task: its arrays and contributions are here
-arrive       another worker's item is here: rims, a contribution, a node, a value, a count or a release
+arrive       another worker's item is here: rims, a part of a reduction, a value, a count or a release
 saved        a checkpoint of a cycle has been written
 
 Instructions (what the host must do)
@@ -21,168 +21,90 @@ Save         write the state of own tiles at the end of a cycle
 Life of a task
 --------------
 ==========  ====================================  ========================================
-state       moves on                              to
+state       moves on when                         to
 ==========  ====================================  ========================================
-waiting     last missing input is there           ready
-ready       taken by a thread                     running
-running     finished                              done (its state is dropped)
+waiting     the last missing input is there       ready
+ready       a thread takes it                     running
+running     it is finished                        done (its state is dropped)
 ==========  ====================================  ========================================
 
-There are no other moves; a failed run drops everything at once.
+There are no other moves; a failed run drops everything at once. :meth:`TaskState.move` holds the table.
 
-Invariants (checked by :meth:`Core.check` after every event in the tests)
--------------------------------------------------------------------------
-1. A waiting task misses exactly as many inputs as it is registered for; a ready or running one misses none.
-2. An array is held while a task that reads it is not done, while rims are owed from it, while a checkpoint
-   needs it, or while its phase holds the newest version of a field; and no longer.
-3. Live bytes are the sum of what is held.
-4. Unfinished own tasks of a cycle are counted exactly; cycles complete in order.
-5. An item that arrives twice changes nothing (the host drops repeated messages by their numbers).
+Life of what else there is
+--------------------------
+==========  ====================  ====================================  ========================================
+what        comes to be when      goes on when                          is dropped when
+==========  ====================  ====================================  ========================================
+phase       emitted               it holds no newest version any more:  its tasks are done and it holds no array
+                                  it may lose what nobody reads
+array       its task is done                                            it is not newest and its readers are done
+bundle      rims arrive                                                 its readers are done
+node        its phase is emitted  the last part is there: combined      combined
+result      made or arrived                                             its cycle is closed, and so are as many
+                                                                        after it as it may lag behind
+barrier     its phase is emitted  own tasks are done and the workers    released
+                                  below have reported: reports
+checkpoint  its cycle is whole    the last array and result are there:  saved
+                                  to be saved
+==========  ====================  ====================================  ========================================
 
-Progress under a limit on live bytes: a task of the oldest phase that has unfinished own tasks may always
+Invariants (checked by :func:`breakstep.engine.resident.invariants.check` after every event in the tests)
+-----------------------------------------------------------------------------------------------------------
+1. A waiting task misses exactly as many inputs as are not there, and is registered once for each of them; a ready or
+   running one misses none. The same holds for the roots of trees and for checkpoints.
+2. An array is held while a task that is not done or a checkpoint that is not saved reads it, or while its phase holds
+   the newest version of a field; and no longer. A bundle of rims is held while tasks that are not done read it. Rims
+   are owed from tasks that are not done, and only from those.
+3. Live bytes are the sum of what is held, each array once, of bundles, and of what is on its way to other workers.
+4. Tasks, results, releases and checkpoints that a cycle misses are counted exactly; cycles are done, and closed, in
+   order. Nothing is kept of closed cycles but results that may still be used.
+5. An item that arrives twice, at whatever time, changes nothing.
+6. The queue holds each ready task once, and gives out the smallest (cycle, -rank, phase, order of arrival).
+7. What is kept of phases that are not emitted here came from workers that are ahead.
+8. The run is over here when, and only when, all phases are emitted and all cycles closed.
+
+Progress under a limit on live bytes: a task of the oldest phase that has own tasks which are not done may always
 run. Over all workers, the tasks of the oldest unfinished phase have all their inputs on the way or there,
 so some worker can always go on, whatever the limit; run-ahead is what is held back.
 """
 
 from __future__ import annotations
 
-import heapq
+from collections import deque
 from collections.abc import Callable, Generator, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from typing import Any, TypeAlias
 
 import numpy as np
 
-from breakstep.engine.resident.plan import Cut, ReductionTree, WorkerPlan
+from breakstep.engine.resident.barriers import Barriers
+from breakstep.engine.resident.checkpoints import Checkpoint, Checkpoints
+from breakstep.engine.resident.cycles import Cycles, longest_lag
+from breakstep.engine.resident.livebytes import LiveBytes
+from breakstep.engine.resident.plan import WorkerPlan
 from breakstep.engine.resident.ranks import Ranks
-from breakstep.graph.tasks import TREE_ARITY
-from breakstep.graph.unroll import INITIAL, Making, Need, Phase, Unroller, ValueRef
-from breakstep.steps.reduction import combine
+from breakstep.engine.resident.ready import ReadyQueue
+from breakstep.engine.resident.reductions import Node, Reductions
+from breakstep.engine.resident.results import Results
+from breakstep.engine.resident.states import (
+    DONE,
+    Bundle,
+    Control,
+    Exits,
+    Instruction,
+    PhaseState,
+    Save,
+    SendItem,
+    SendRims,
+    TaskState,
+    Waiter,
+)
+from breakstep.graph.unroll import INITIAL, Need, Phase, Unroller
 from breakstep.steps.step import Array
 
-WORKER_ARITY = 8  # children of a worker in the barrier tree
+BundleKey: TypeAlias = tuple[int, int, int]  # reading phase, tile, phase that made it
 
-WAITING, READY, RUNNING, DONE = range(4)
-
-
-@dataclass(frozen=True)
-class SendRims:
-    """Cut rims from a tile's arrays and send them: item ("rims", phase, tile, source) with the arrays."""
-
-    worker: int
-    phase: int
-    tile: int
-    source: int
-    cuts: tuple[Cut, ...]
-    arrays: Mapping[str, Array]
-
-
-@dataclass(frozen=True)
-class SendItem:
-    """Send a small item: its key and, where it carries one, a vector."""
-
-    worker: int
-    key: tuple[Any, ...]
-    vector: Array | None = None
-
-
-@dataclass(frozen=True)
-class Save:
-    """Write the state of own tiles at the end of a cycle, then report :meth:`Core.saved`."""
-
-    cycle: int
-    tiles: Mapping[int, Mapping[str, Array]]
-    values: Mapping[str, Array]
-
-
-Instruction: TypeAlias = SendRims | SendItem | Save
-
-
-@dataclass(slots=True)
-class Held:
-    """Arrays of one finished task of this worker."""
-
-    arrays: Mapping[str, Array]
-    nbytes: int
-
-
-class PhaseState:
-    """One phase on this worker: its tasks, the arrays they made, and who reads them."""
-
-    __slots__ = ("held", "live", "number", "owed", "phase", "readers", "remaining", "tasks", "waiting")
-
-    def __init__(self, number: int, phase: Phase | None) -> None:
-        self.number = number
-        self.phase = phase
-        self.live = True
-        self.held: dict[int, Held] = {}  # tile -> arrays
-        self.readers: dict[int, int] = {}  # tile -> readers not done
-        self.waiting: dict[int, list[Waiter]] = {}  # tile -> who misses it
-        self.owed: dict[int, list[tuple[int, int, tuple[Cut, ...]]]] = {}  # tile -> (worker, phase, cuts)
-        self.tasks: dict[int, TaskState] = {}
-        self.remaining = 0
-
-
-class TaskState:
-    """One own task that is not done."""
-
-    __slots__ = ("bundles", "missing", "priority", "reads", "state", "tile", "where")
-
-    def __init__(self, where: PhaseState, tile: int) -> None:
-        self.where = where
-        self.tile = tile
-        self.state = WAITING
-        self.missing = 0
-        self.priority: tuple[int, int, int] = (0, 0, 0)
-        self.reads: list[tuple[PhaseState, int]] = []  # (phase, tile) whose arrays it reads
-        self.bundles: list[tuple[int, int, int]] = []  # (phase, tile, source) of rims it reads
-
-    @property
-    def phase(self) -> Phase:
-        """The phase it belongs to."""
-        phase = self.where.phase
-        assert phase is not None
-        return phase
-
-
-@dataclass(slots=True)
-class Bundle:
-    """Rims that came from one tile of another worker for one phase."""
-
-    arrays: Mapping[Any, Array]
-    nbytes: int
-    readers: int
-
-
-@dataclass(slots=True)
-class Node:
-    """One node of one reduction while its contributions come in."""
-
-    place: tuple[int, int, int]  # instance, level, index
-    parts: list[Array | None]
-    missing: int
-
-
-@dataclass(slots=True)
-class Checkpoint:
-    """A cycle's end that is to be saved, until all of it is there."""
-
-    cycle: int
-    fields: dict[str, PhaseState]
-    values: dict[str, list[ValueRef]]
-    reads: list[tuple[PhaseState, int]] = field(default_factory=list)
-    missing: int = 1
-
-
-@dataclass(slots=True)
-class Counter:
-    """What a worker still misses before it reports that a phase is done here and below it."""
-
-    phase: Phase
-    missing: int
-
-
-Waiter: TypeAlias = TaskState | Node | Checkpoint
+__all__ = ["BundleKey", "Core", "CoreOptions", "Instruction", "Save", "SendItem", "SendRims", "TaskState"]
 
 
 @dataclass(frozen=True)
@@ -218,6 +140,18 @@ class Core:
         The state of own tiles that the run begins with.
     given : sequence of ndarray
         Results of reductions that the run begins with, when it goes on from a checkpoint.
+    control : callable
+        Called when a node, a counter or a release has done its work: kind, phase, place.
+
+    Attributes
+    ----------
+    values : dict of int to ndarray
+        Results of reductions by instance, as far as they are known and may still be used.
+    answers : list of list of ndarray
+        What the unrolling was answered: with it, it can be repeated elsewhere.
+    on_phase : callable
+        Called with each phase that is emitted.
+    finished : bool
     """
 
     def __init__(
@@ -228,83 +162,68 @@ class Core:
         options: CoreOptions,
         initial: Mapping[int, Mapping[str, Array]],
         given: Sequence[Array] = (),
-        control: Callable[[str, Phase, tuple[int, ...]], None] = lambda *_: None,
+        control: Control = lambda *_: None,
     ) -> None:
         self.plan, self.unroller, self.workers, self.options = plan, unroller, workers, options
         self.program, self.me = plan.program, plan.worker
-        self.tree = ReductionTree(plan.owners)
-        self.ranks = Ranks(plan)
-        self.values: dict[int, Array] = dict(enumerate(given))
         self.answers: list[list[Array]] = []
-        self.cycles_done = unroller.start
-        self.live_bytes = self.peak_bytes = 0
         self.finished = False
         self.on_phase: Callable[[Phase], None] = lambda _: None
-        self._control = control
-        self._own_nodes = sum(1 for node in self.tree.nodes.values() if node.home == self.me)
-        self._longest_lag = max((r.lag for r in self.program.problem.splitting.all_reductions()), default=0)
-        self._barriers = self.program.template.stages_with_barrier(unroller.barriers)
+        self._out: list[Instruction] = []
+        exits = Exits(self._satisfy, self._out, control)
+        lag = longest_lag(self.program.problem.splitting.all_reductions())
+        stages = self.program.template.stages_with_barrier(unroller.barriers)
+        self._longest_lag = lag
+        self._bytes = LiveBytes()
+        self._cycles = Cycles(unroller.start, options.window, lag)
+        self._results = Results(given, unroller.start - 1)
+        self._reductions = Reductions(plan, workers, self._results, exits, self._value)
+        self._barriers = Barriers(self.me, workers, stages, self._cycles, exits)
+        self._checkpoints = Checkpoints(plan.tiles, self._results, self._cycles, exits)
+        self._ready = ReadyQueue(by_phase=options.limit > 0)
+        self._ranks = Ranks(plan)
+        self.values = self._results.known
         self._phases: dict[int, PhaseState] = {}
-        self._bundles: dict[tuple[int, int, int], Bundle] = {}
-        self._bundle_waiting: dict[tuple[int, int, int], list[Waiter]] = {}
-        self._value_waiting: dict[int, list[Waiter]] = {}
-        self._made_in: dict[int, int] = {}  # instance -> cycle
-        self._makings: dict[int, tuple[Making, Phase]] = {}  # of instances with nodes here still open
-        self._nodes_open: dict[int, int] = {}
-        self._nodes: dict[tuple[int, int, int], Node] = {}
-        self._early_parts: dict[int, list[tuple[int, int, Array | None]]] = {}
-        self._released: set[int] = set()
-        self._release_waiting: dict[int, list[Waiter]] = {}
-        self._counts: dict[int, Counter] = {}  # by phase
-        self._early_counts: dict[int, int] = {}
-        self._ready: list[tuple[tuple[int, int, int], int, TaskState]] = []
-        self._entries = 0
-        self._unfinished: dict[int, int] = {}  # cycle -> own tasks not done
-        self._emitted_to = unroller.start - 1  # newest cycle of which a phase was emitted
+        self._unfinished: deque[PhaseState] = deque()  # oldest first; some are done
+        self._bundles: dict[BundleKey, Bundle] = {}
+        self._bundle_waiting: dict[BundleKey, list[TaskState]] = {}
+        self._emitted = INITIAL  # newest phase
+        self._live: frozenset[int] = frozenset({INITIAL})
         self._generator: Generator[Phase | Need, list[Array] | None, None] = unroller.run()
         self._pending: Phase | Need | None = None
-        self._boundary: tuple[dict[str, int], dict[str, list[ValueRef]]] = ({}, {})
-        self._exhausted = self._advancing = False
-        self._checkpoints: dict[int, Checkpoint] = {}
-        self._out: list[Instruction] = []
+        self._exhausted = False
         self._begin(initial)
 
     def _begin(self, initial: Mapping[int, Mapping[str, Array]]) -> None:
-        begin = PhaseState(INITIAL, None)
-        begin.held = {tile: _hold(arrays) for tile, arrays in initial.items()}
-        self._phases[INITIAL] = begin
-        self._grow(sum(held.nbytes for held in begin.held.values()))
+        begin = self._phases[INITIAL] = PhaseState(INITIAL, None)
+        for tile, arrays in initial.items():
+            begin.held[tile] = arrays
+            self._bytes.hold(arrays)
 
     # ---- events -------------------------------------------------------------------------------------
 
     def start(self) -> list[Instruction]:
         """Emit the first phases."""
         self._step(None)
-        self._advance()
-        return self._flush()
+        return self._close_event()
 
     def take(self) -> TaskState | None:
         """The most urgent ready task that the limit on live bytes allows, now running."""
-        task = self._pop()
-        if task is not None:
-            task.state = RUNNING
-        return task
+        limit = self.options.limit
+        if not limit or self._bytes.now <= limit:
+            return self._ready.pop()
+        oldest = self._oldest()
+        return self._ready.pop_from(oldest) if oldest is not None else None
 
     def finish(
-        self,
-        task: TaskState,
-        arrays: Mapping[str, Array],
-        partials: Mapping[str, Array | None],
-        new: bool = True,
+        self, task: TaskState, arrays: Mapping[str, Array], partials: Mapping[str, Array | None]
     ) -> list[Instruction]:
-        """A task has made its arrays; ``new`` is False when it handed its inputs on."""
+        """A task has made its arrays (or handed its inputs on) and its contributions to reductions."""
         where, tile, phase = task.where, task.tile, task.phase
-        held = _hold(arrays) if new else Held(arrays, 0)
-        where.held[tile] = held
-        self._grow(held.nbytes)
+        task.move(DONE)
         del where.tasks[tile]
-        where.remaining -= 1
-        task.state = DONE
+        where.held[tile] = arrays
+        self._bytes.hold(arrays)
         for waiter in where.waiting.pop(tile, ()):
             self._satisfy(waiter)
         for worker, reader, cuts in where.owed.pop(tile, ()):
@@ -312,54 +231,59 @@ class Core:
         self._release_inputs(task)
         self._drop_if_unread(where, tile)
         for making in phase.makes:
-            self._part(making.instance, 0, tile, partials[making.reduction.name])
-        if phase.stage.index in self._barriers and where.remaining == 0:
-            self._count(where.number)
-        self._unfinished[phase.cycle] -= 1
-        if self._complete_cycles():
-            self._advance()
-        self._settle()
-        return self._flush()
+            self._reductions.part(making.instance, 0, tile, partials[making.reduction.name])
+        self._cycles.open[phase.cycle].tasks -= 1
+        if not where.tasks:
+            self._end(where)
+        return self._close_event()
+
+    def _end(self, where: PhaseState) -> None:
+        """All own tasks of a phase are done; it may stay for what they made, and must not keep what they read."""
+        where.reads.clear()
+        where.ready.clear()
+        self._oldest()
+        self._barriers.count(where.number, self.me)
 
     def arrive(self, key: tuple[Any, ...], payload: Any) -> list[Instruction]:
         """An item from another worker: its key says what it is."""
         kind = key[0]
         if kind == "rims":
-            self._arrive_rims(key[1:], payload)
+            self._arrive_rims((key[1], key[2], key[3]), payload)
         elif kind == "part":
-            _, instance, level, index = key
-            self._part(instance, level, index, payload)
+            self._reductions.part(key[1], key[2], key[3], payload)
         elif kind == "value":
             self._value(key[1], payload)
         elif kind == "count":
-            self._count(key[1])
+            self._barriers.count(key[1], key[2])
         elif kind == "release":
-            self._release(key[1])
-        self._settle()
-        return self._flush()
+            self._barriers.release(key[1])
+        return self._close_event()
 
     def saved(self, cycle: int) -> list[Instruction]:
         """The checkpoint of a cycle is on disk: its arrays may go."""
-        checkpoint = self._checkpoints.pop(cycle)
-        for where, tile in checkpoint.reads:
-            self._unread(where, tile)
-        self._settle()
-        return self._flush()
+        for state in self._checkpoints.saved(cycle):
+            self._unread(state, self.plan.tiles)
+        return self._close_event()
+
+    def _close_event(self) -> list[Instruction]:
+        """Whatever has happened may let further phases be emitted."""
+        self._advance()
+        if not self._out:
+            return []
+        out = self._out.copy()
+        self._out.clear()
+        return out
 
     # ---- what a thread needs to run a task ----------------------------------------------------------
 
     def own_arrays(self, task: TaskState) -> dict[str, Array]:
         """The tile's own zones of every field the task reads."""
-        tile = task.tile
-        return {
-            name: self._phases[source].held[tile].arrays[name]
-            for name, source in task.phase.sources.items()
-            if name in self._phases[source].held[tile].arrays
-        }
+        held = {name: self._phases[source].held[task.tile] for name, source in task.phase.sources.items()}
+        return {name: arrays[name] for name, arrays in held.items() if name in arrays}
 
     def neighbour(self, task: TaskState, name: str, tile: int) -> Array:
         """A neighbour's whole array of one field, when it lies on this worker."""
-        return self._phases[task.phase.sources[name]].held[tile].arrays[name]
+        return self._phases[task.phase.sources[name]].held[tile][name]
 
     def bundle(self, task: TaskState, name: str, tile: int) -> Mapping[Any, Array]:
         """The rims that came from one tile of another worker."""
@@ -372,30 +296,42 @@ class Core:
             SendRims(worker, reader, tile, where.number, cuts, {}) for worker, reader, cuts in where.owed.get(tile, ())
         ]
 
+    # ---- what the host tells and asks ---------------------------------------------------------------
+
     @property
     def ready_count(self) -> int:
         """Tasks that wait for nothing but a thread."""
         return len(self._ready)
 
+    @property
+    def cycles_done(self) -> int:
+        """All own tasks of the cycles below this one are done."""
+        return self._cycles.done
+
+    @property
+    def live_bytes(self) -> int:
+        """Bytes held here and on their way from here."""
+        return self._bytes.now
+
+    @property
+    def peak_bytes(self) -> int:
+        """Most live bytes so far."""
+        return self._bytes.peak
+
     def in_flight(self, nbytes: int) -> None:
         """Bytes that the host has queued for other workers (negative: has got rid of)."""
-        self._grow(nbytes)
+        self._bytes.move(nbytes)
 
     def measured(self, task: TaskState, nanoseconds: int) -> None:
-        """Note what a task cost, for the ranks of those to come."""
-        self.ranks.note(task.phase, task.tile, nanoseconds)
+        """Note what a running task has cost, for the ranks of those to come."""
+        self._ranks.note(task.phase, task.tile, nanoseconds)
 
     # ---- the state at the end -----------------------------------------------------------------------
 
     def final(self) -> dict[int, dict[str, Array]]:
         """The state of own tiles after the last phase."""
-        state: dict[int, dict[str, Array]] = {}
-        for tile in self.plan.tiles:
-            state[tile] = {
-                name: self._phases[self.unroller.latest(name)].held[tile].arrays[name]
-                for name in self.program.state_fields
-            }
-        return state
+        newest = {name: self._phases[self.unroller.latest(name)] for name in self.program.state_fields}
+        return {tile: {name: state.held[tile][name] for name, state in newest.items()} for tile in self.plan.tiles}
 
     def handover(self) -> list[Array]:
         """After the last phase: results of cycle-level reductions for the cycles that another run goes on with."""
@@ -406,123 +342,92 @@ class Core:
 
     def _advance(self) -> None:
         """Emit phases until a value is missing, the window is full or the run is over."""
-        if self._advancing:  # emitting a phase can complete a value: the loop below will see it
-            return
-        self._advancing = True
+        self._settle()
         while self._pending is not None and self._may_emit(self._pending):
             if isinstance(self._pending, Need):
                 answer = [self.values[instance] for instance in self._pending.instances]
                 self.answers.append(answer)
                 self._step(answer)
             else:
-                self._note_checkpoint(self._pending.cycle)
                 self._emit(self._pending)
                 self._step(None)
-            self._complete_cycles()
-        self._advancing = False
-        self._settle()
+            self._settle()
+        self.finished = self._exhausted and self._cycles.closed == self._cycles.whole
 
     def _may_emit(self, pending: Phase | Need) -> bool:
         if isinstance(pending, Need):
             return all(instance in self.values for instance in pending.instances)
-        return pending.cycle - self.cycles_done < self.options.window
+        return self._cycles.may_emit(pending.cycle)
 
     def _step(self, answer: list[Array] | None) -> None:
-        if self.options.checkpoint_every:  # what the state is made of before the next phase changes it
-            names = self.program.state_fields
-            self._boundary = (
-                {name: self.unroller.latest(name) for name in names},
-                self.unroller.next_values(),
-            )
+        """Have the unrolling go on; note when it leaves a cycle behind."""
+        unroller, cycle = self.unroller, self._cycles.emitted
+        names = self.program.state_fields if self._is_due(cycle) else ()
+        newest = {name: self._phases[unroller.latest(name)] for name in names}
+        values = unroller.next_values() if names else {}
         try:
             self._pending = self._generator.send(answer)
         except StopIteration:
-            self._pending = None
-            self._exhausted = True
-            self._note_checkpoint(self._emitted_to + 1)
+            self._pending, self._exhausted = None, True
+        if self._exhausted or (isinstance(self._pending, Phase) and self._pending.cycle > cycle):
+            self._cycles.whole = cycle + 1
+            if names:
+                self._checkpoints.pin(cycle, newest, values)
+
+    def _is_due(self, cycle: int) -> bool:
+        """Whether there is to be a checkpoint at the end of a cycle."""
+        every = self.options.checkpoint_every
+        return every > 0 and (cycle + 1) % every == 0 and cycle >= self.unroller.start
+
+    def _settle(self) -> None:
+        """Let go of what cycles that are done, or closed, leave behind."""
+        if self._cycles.settle():
+            self._ranks.close(self._cycles.done)
+            self._results.forget(self._cycles.closed - 1 - self._longest_lag)
 
     def _emit(self, phase: Phase) -> None:
-        where = PhaseState(phase.number, phase)
-        where.remaining = len(self.plan.tiles)
+        where = self._phases[phase.number] = PhaseState(phase.number, phase)
+        self._emitted = phase.number
         self.on_phase(phase)
-        self._phases[phase.number] = where
-        self._emitted_to = max(self._emitted_to, phase.cycle)
-        self._unfinished[phase.cycle] = self._unfinished.get(phase.cycle, 0) + where.remaining
+        self._cycles.emit(phase.cycle, len(self.plan.tiles))
+        self._ranks.emit(phase)
         self._create_tasks(where, phase)
         self._owe(phase)
-        self._open_nodes(phase)
-        self._open_barrier(phase)
+        for making in phase.makes:
+            if self._results.announce(making.instance, phase.cycle):
+                self._cycles.of(phase.cycle).controls += 1
+            self._reductions.open(making, phase)
+        self._barriers.emit(phase, len(self.plan.tiles))
         self._retire()
 
-    def _open_nodes(self, phase: Phase) -> None:
-        for making in phase.makes:
-            self._made_in[making.instance] = phase.cycle
-            if self._own_nodes:
-                self._makings[making.instance] = (making, phase)
-                self._nodes_open[making.instance] = self._own_nodes
-                for level, index, vector in self._early_parts.pop(making.instance, ()):
-                    self._part(making.instance, level, index, vector)
-
-    def _open_barrier(self, phase: Phase) -> None:
-        if phase.stage.index not in self._barriers:
-            return
-        self._counts[phase.number] = Counter(phase, 1 + len(self._barrier_children()))
-        early = self._early_counts.pop(phase.number, 0) + (0 if self.plan.tiles else 1)
-        for _ in range(early):
-            self._count(phase.number)
-
     def _create_tasks(self, where: PhaseState, phase: Phase) -> None:
-        groups = self._groups(phase)
+        if not self.plan.tiles:
+            return
+        self._unfinished.append(where)
+        where.reads = [(self._phases[source], reach) for source, reach in self.plan.reaches(phase)]
         values = {ref.instance for ref in phase.values.values()}
         if phase.gate is not None:
             values.add(phase.gate.instance)
-        absent = [instance for instance in values if instance not in self.values]
-        gated = phase.waits_for is not None and phase.waits_for not in self._released
-        ranks = self.ranks.of_phase(phase)
+        ranks, number, cycle = self._ranks.of_phase(phase), phase.number, phase.cycle
         for tile in self.plan.tiles:
-            task = TaskState(where, tile)
-            where.tasks[tile] = task
-            task.priority = (phase.cycle, -ranks.get(tile, 0), phase.number)
-            for source, here, there in groups:
-                self._read(task, source, tile)
-                for neighbour in here.get(tile, ()):
-                    self._read(task, source, neighbour)
-                for neighbour in there.get(tile, ()):
-                    self._read_bundle(task, (phase.number, neighbour, source.number))
-            for instance in absent:
-                task.missing += 1
-                self._value_waiting.setdefault(instance, []).append(task)
-            if gated:
-                assert phase.waits_for is not None
-                task.missing += 1
-                self._release_waiting.setdefault(phase.waits_for, []).append(task)
+            task = where.tasks[tile] = TaskState(where, tile, (cycle, -ranks.get(tile, 0), number))
+            self._register(task)
+            for instance in values:
+                self._results.need(instance, task)
+            if phase.waits_for is not None:
+                self._barriers.need(phase.waits_for, task)
             if task.missing == 0:
-                self._make_ready(task)
-        if phase.waits_for is not None:
-            self._released.discard(phase.waits_for)
+                self._ready.push(task)
 
-    def _groups(self, phase: Phase) -> list[tuple[PhaseState, dict[int, tuple[int, ...]], dict[int, tuple[int, ...]]]]:
-        """The versions that a phase reads: each with the neighbours, here and there, that are read too."""
-        halos = self.plan.stage(phase.stage.index).halos
-        by_source: dict[int, list[Any]] = {source: [] for source in phase.sources.values()}
-        for halo in halos:
-            by_source[phase.sources[halo.read.field]].append(halo)
-        groups = []
-        for source, read in by_source.items():
-            here = read[0].here if len(read) == 1 else _merged([halo.here for halo in read])
-            there = read[0].there if len(read) == 1 else _merged([halo.there for halo in read])
-            groups.append((self._phases[source], here, there))
-        return groups
+    def _register(self, task: TaskState) -> None:
+        """Enter a task as a reader of all arrays and rims that it reads."""
+        where, tile = task.where, task.tile
+        for source, reach in where.reads:
+            source.read(reach.here[tile], task)
+            for other in reach.there[tile]:
+                self._read_bundle(task, (where.number, other, source.number))
 
-    def _read(self, task: TaskState, source: PhaseState, tile: int) -> None:
-        task.reads.append((source, tile))
-        source.readers[tile] = source.readers.get(tile, 0) + 1
-        if tile not in source.held:
-            task.missing += 1
-            source.waiting.setdefault(tile, []).append(task)
-
-    def _read_bundle(self, task: TaskState, key: tuple[int, int, int]) -> None:
-        task.bundles.append(key)
+    def _read_bundle(self, task: TaskState, key: BundleKey) -> None:
         bundle = self._bundles.get(key)
         if bundle is None:
             task.missing += 1
@@ -532,20 +437,15 @@ class Core:
 
     def _owe(self, phase: Phase) -> None:
         """Rims that other workers need for this phase: sent now, or when their tile is done."""
-        owed: dict[tuple[int, int, int], tuple[Cut, ...]] = {}
-        for halo in self.plan.stage(phase.stage.index).halos:
-            source = phase.sources[halo.read.field]
-            for tile, workers in halo.cuts.items():
+        for source, reach in self.plan.reaches(phase):
+            state = self._phases[source]
+            for tile, workers in reach.cuts.items():
+                held = state.held.get(tile)
                 for worker, cuts in workers.items():
-                    key = (source, tile, worker)
-                    owed[key] = owed.get(key, ()) + cuts
-        for (number, tile, worker), cuts in owed.items():
-            source_state = self._phases[number]
-            held = source_state.held.get(tile)
-            if held is None:
-                source_state.owed.setdefault(tile, []).append((worker, phase.number, cuts))
-            else:
-                self._out.append(SendRims(worker, phase.number, tile, number, cuts, held.arrays))
+                    if held is None:
+                        state.owed.setdefault(tile, []).append((worker, phase.number, cuts))
+                    else:
+                        self._out.append(SendRims(worker, phase.number, tile, source, cuts, held))
 
     # ---- inputs -------------------------------------------------------------------------------------
 
@@ -555,241 +455,82 @@ class Core:
         if waiter.missing:
             return
         if isinstance(waiter, TaskState):
-            self._make_ready(waiter)
+            self._ready.push(waiter)
         elif isinstance(waiter, Node):
-            self._combine(waiter)
-        else:
-            self._save(waiter)
+            self._reductions.combine(waiter)
+        elif isinstance(waiter, Checkpoint):
+            self._checkpoints.save(waiter)
 
-    def _make_ready(self, task: TaskState) -> None:
-        task.state = READY
-        self._entries += 1
-        heapq.heappush(self._ready, (task.priority, self._entries, task))
-
-    def _arrive_rims(self, key: tuple[Any, ...], arrays: Mapping[Any, Array]) -> None:
-        place = (key[0], key[1], key[2])
-        waiters = self._bundle_waiting.pop(place, [])
+    def _arrive_rims(self, key: BundleKey, arrays: Mapping[Any, Array]) -> None:
+        """Rims of a phase that is emitted and that nobody waits for have been here before."""
+        waiters = self._bundle_waiting.pop(key, None)
+        if key in self._bundles or (waiters is None and key[0] <= self._emitted):
+            return
+        waiters = waiters or []
         nbytes = sum(array.nbytes for array in arrays.values())
-        self._bundles[place] = Bundle(arrays, nbytes, len(waiters))
-        self._grow(nbytes)
+        self._bundles[key] = Bundle(arrays, nbytes, len(waiters))
+        self._bytes.add(nbytes)
         for waiter in waiters:
             self._satisfy(waiter)
 
-    def _release_inputs(self, task: TaskState) -> None:
-        for where, tile in task.reads:
-            self._unread(where, tile)
-        for key in task.bundles:
-            bundle = self._bundles[key]
-            bundle.readers -= 1
-            if bundle.readers == 0:
-                self._grow(-bundle.nbytes)
-                del self._bundles[key]
+    def _value(self, instance: int, vector: Array) -> None:
+        """A result has come, or has been made here."""
+        if not self._results.is_new(instance):
+            return
+        waiters, cycle = self._results.put(instance, vector)
+        if cycle is not None:
+            self._cycles.open[cycle].controls -= 1
+        for waiter in waiters:
+            self._satisfy(waiter)
 
-    def _unread(self, where: PhaseState, tile: int) -> None:
-        where.readers[tile] -= 1
-        self._drop_if_unread(where, tile)
+    # ---- letting go ---------------------------------------------------------------------------------
+
+    def _release_inputs(self, task: TaskState) -> None:
+        where, tile = task.where, task.tile
+        for source, reach in where.reads:
+            self._unread(source, reach.here[tile])
+            for other in reach.there[tile]:
+                self._unread_bundle((where.number, other, source.number))
+
+    def _unread(self, where: PhaseState, tiles: Sequence[int]) -> None:
+        readers = where.readers
+        for tile in tiles:
+            readers[tile] -= 1
+            if not readers[tile]:
+                self._drop_if_unread(where, tile)
+
+    def _unread_bundle(self, key: BundleKey) -> None:
+        bundle = self._bundles[key]
+        bundle.readers -= 1
+        if bundle.readers == 0:
+            self._bytes.add(-bundle.nbytes)
+            del self._bundles[key]
 
     def _drop_if_unread(self, where: PhaseState, tile: int) -> None:
-        if where.live or where.readers.get(tile, 0) or tile not in where.held:
+        if where.live or where.readers.get(tile) or tile not in where.held:
             return
-        self._grow(-where.held.pop(tile).nbytes)
+        self._bytes.let_go(where.held.pop(tile))
         where.readers.pop(tile, None)
-        if not where.held and not where.tasks:
-            self._phases.pop(where.number, None)
+        self._drop_if_empty(where)
+
+    def _drop_if_empty(self, where: PhaseState) -> None:
+        if not (where.live or where.held or where.tasks):
+            del self._phases[where.number]
 
     def _retire(self) -> None:
         """Phases that hold no newest version any more may lose what nobody reads."""
-        live = self.unroller.live_phases(self.program.state_fields)
-        for number in [n for n, state in self._phases.items() if state.live and n not in live]:
+        self._live, before = self.unroller.live_phases(self.program.state_fields), self._live
+        for number in [*(before - self._live), *({self._emitted} - self._live)]:
             state = self._phases[number]
             state.live = False
             for tile in list(state.held):
                 self._drop_if_unread(state, tile)
-            if not state.held and not state.tasks:
-                self._phases.pop(number, None)
+            if number in self._phases:
+                self._drop_if_empty(state)
 
-    def _grow(self, nbytes: int) -> None:
-        self.live_bytes += nbytes
-        self.peak_bytes = max(self.peak_bytes, self.live_bytes)
-
-    # ---- reductions ---------------------------------------------------------------------------------
-
-    def _part(self, instance: int, level: int, index: int, vector: Array | None) -> None:
-        """A contribution to a node (a tile's at level 0): kept here, or sent to the node's home."""
-        parent = index // TREE_ARITY
-        shape = self.tree.nodes[level, parent]
-        if shape.home != self.me:
-            self._out.append(SendItem(shape.home, ("part", instance, level, index), vector))
-            return
-        if instance not in self._makings:  # another worker is ahead of this one
-            self._early_parts.setdefault(instance, []).append((level, index, vector))
-            return
-        place = (instance, level, parent)
-        if place not in self._nodes:
-            self._open_node(place, shape.children)
-        node = self._nodes[place]
-        node.parts[index % TREE_ARITY] = vector
-        self._satisfy(node)
-
-    def _open_node(self, place: tuple[int, int, int], children: int) -> None:
-        """The root also waits for the result before its own, from which it goes on."""
-        node = self._nodes[place] = Node(place, [None] * children, children)
-        previous = self._makings[place[0]][0].previous
-        if place[1] == self.tree.top and previous is not None and previous not in self.values:
-            node.missing += 1
-            self._value_waiting.setdefault(previous, []).append(node)
-
-    def _combine(self, node: Node) -> None:
-        instance, level, index = node.place
-        making, phase = self._makings[instance]
-        del self._nodes[node.place]
-        self._nodes_open[instance] -= 1
-        if self._nodes_open[instance] == 0:
-            del self._makings[instance], self._nodes_open[instance]
-        combined = combine(making.reduction.combine, node.parts)
-        self._control("combine", phase, (instance, level, index))
-        if level < self.tree.top:
-            self._part(instance, level + 1, index, combined)
-            return
-        previous = self.values[making.previous][-1] if making.previous is not None else None
-        stage = phase.stage.index
-        vector = self.program.finish(stage, making.reduction, combined, previous, making.rows)
-        self._out.extend(SendItem(w, ("value", instance), vector) for w in range(self.workers) if w != self.me)
-        self._value(instance, vector)
-
-    def _value(self, instance: int, vector: Array) -> None:
-        self.values[instance] = vector
-        for waiter in self._value_waiting.pop(instance, ()):
-            self._satisfy(waiter)
-        self._advance()
-
-    # ---- barriers -----------------------------------------------------------------------------------
-
-    def _barrier_children(self) -> list[int]:
-        first = WORKER_ARITY * self.me + 1
-        return [w for w in range(first, first + WORKER_ARITY) if w < self.workers]
-
-    def _count(self, number: int) -> None:
-        """One of the things a worker counts before it reports: its own tasks, or a worker below it."""
-        if number not in self._counts:
-            self._early_counts[number] = self._early_counts.get(number, 0) + 1
-            return
-        counter = self._counts[number]
-        counter.missing -= 1
-        if counter.missing:
-            return
-        phase = self._counts.pop(number).phase
-        self._control("count", phase, (self.me,))
-        if self.me != 0:
-            self._out.append(SendItem((self.me - 1) // WORKER_ARITY, ("count", number)))
-            return
-        self._control("release", phase, ())
-        self._release(number)
-
-    def _release(self, number: int) -> None:
-        self._out.extend(SendItem(worker, ("release", number)) for worker in self._barrier_children())
-        if number in self._release_waiting:
-            for waiter in self._release_waiting.pop(number):
-                self._satisfy(waiter)
-        else:
-            self._released.add(number)
-
-    # ---- cycles, checkpoints, limits ----------------------------------------------------------------
-
-    def _complete_cycles(self) -> bool:
-        """Count cycles whose own tasks are all done; whether there are new ones."""
-        before = self.cycles_done
-        while self._unfinished.get(self.cycles_done) == 0 and self._is_emitted(self.cycles_done):
-            del self._unfinished[self.cycles_done]
-            self.ranks.close(self.cycles_done)
-            self.cycles_done += 1
-        if self.cycles_done > before:
-            self._forget_values()
-        return self.cycles_done > before
-
-    def _is_emitted(self, cycle: int) -> bool:
-        """Whether no further phase of a cycle is to come."""
-        pending = self._pending
-        return self._exhausted or (isinstance(pending, Phase) and pending.cycle > cycle)
-
-    def _settle(self) -> None:
-        """The run is over here when nothing is left to do for this worker or for those that count on it."""
-        self.finished = (
-            self._exhausted
-            and not any(self._unfinished.values())
-            and not (self._checkpoints or self._makings or self._counts)
-            and all(instance in self.values for instance in self.unroller.last_values().values())
-        )
-
-    def _forget_values(self) -> None:
-        """Results that no phase to come can use."""
-        oldest = self.cycles_done - self._longest_lag - 2
-        needed = set(self.unroller.last_values().values())
-        for instance in [i for i, cycle in self._made_in.items() if cycle < oldest and i not in needed]:
-            del self._made_in[instance]
-            self.values.pop(instance, None)
-
-    def _note_checkpoint(self, next_cycle: int) -> None:
-        """Before the first phase of a cycle is emitted, pin the state that the cycle before ends with."""
-        every, cycle = self.options.checkpoint_every, next_cycle - 1
-        due = every and next_cycle % every == 0 and cycle >= self.unroller.start
-        if not due or self._emitted_to != cycle or cycle in self._checkpoints:
-            return
-        newest, values = self._boundary
-        fields = {name: self._phases[number] for name, number in newest.items()}
-        checkpoint = self._checkpoints[cycle] = Checkpoint(cycle, fields, values)
-        for state in {state.number: state for state in fields.values()}.values():
-            for tile in self.plan.tiles:
-                self._pin(checkpoint, state, tile)
-        for instance in {ref.instance for refs in checkpoint.values.values() for ref in refs}:
-            if instance not in self.values:
-                checkpoint.missing += 1
-                self._value_waiting.setdefault(instance, []).append(checkpoint)
-        self._satisfy(checkpoint)
-
-    def _pin(self, checkpoint: Checkpoint, state: PhaseState, tile: int) -> None:
-        checkpoint.reads.append((state, tile))
-        state.readers[tile] = state.readers.get(tile, 0) + 1
-        if tile not in state.held:
-            checkpoint.missing += 1
-            state.waiting.setdefault(tile, []).append(checkpoint)
-
-    def _save(self, checkpoint: Checkpoint) -> None:
-        tiles = {
-            tile: {name: state.held[tile].arrays[name] for name, state in checkpoint.fields.items()}
-            for tile in self.plan.tiles
-        }
-        values = {
-            name: np.stack([self.values[ref.instance][ref.row] for ref in refs])
-            for name, refs in checkpoint.values.items()
-        }
-        self._out.append(Save(checkpoint.cycle, tiles, values))
-
-    def _pop(self) -> TaskState | None:
-        if not self._ready:
-            return None
-        limit = self.options.limit
-        if not limit or self.live_bytes <= limit:
-            return heapq.heappop(self._ready)[2]
-        oldest = min((n for n, state in self._phases.items() if state.tasks), default=-1)
-        for place, (_, _, task) in enumerate(self._ready):
-            if task.where.number == oldest:
-                self._ready[place] = self._ready[-1]
-                self._ready.pop()
-                heapq.heapify(self._ready)
-                return task
-        return None
-
-    def _flush(self) -> list[Instruction]:
-        out, self._out = self._out, []
-        return out
-
-
-def _hold(arrays: Mapping[str, Array]) -> Held:
-    return Held(arrays, sum(array.nbytes for array in arrays.values()))
-
-
-def _merged(neighbours: list[dict[int, tuple[int, ...]]]) -> dict[int, tuple[int, ...]]:
-    """Neighbours of several fields that one phase wrote, each once."""
-    tiles = {tile for one in neighbours for tile in one}
-    return {t: tuple(dict.fromkeys(n for one in neighbours for n in one.get(t, ()))) for t in tiles}
+    def _oldest(self) -> PhaseState | None:
+        """The oldest phase that has own tasks which are not done."""
+        unfinished = self._unfinished
+        while unfinished and not unfinished[0].tasks:
+            unfinished.popleft()
+        return unfinished[0] if unfinished else None

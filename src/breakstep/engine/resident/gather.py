@@ -13,9 +13,10 @@ import numpy as np
 import pyarrow as pa
 
 from breakstep.engine.program import Program
-from breakstep.engine.resident.core import WORKER_ARITY
+from breakstep.engine.resident.barriers import WORKER_ARITY
 from breakstep.engine.resident.notes import producer_of
 from breakstep.engine.run import RunOptions, unroller_for
+from breakstep.errors import BreakstepError
 from breakstep.graph.numbering import Numbering, PhaseEdges
 from breakstep.graph.unroll import Need
 from breakstep.profile.record import RunRecord
@@ -29,15 +30,25 @@ def gather_record(
     program: Program,
     options: RunOptions,
     owners: Sequence[int],
+    numbering: Numbering,
 ) -> None:
-    """Fill a record from what :func:`breakstep.engine.resident.remote.collect` returned."""
+    """Add to a record what :func:`breakstep.engine.resident.remote.collect` returned for one segment.
+
+    Parameters
+    ----------
+    parts : sequence of dict
+        From the workers that are left; at least one.
+    numbering : Numbering
+        Where the segment before left off, or fresh; left where this one does.
+    """
     longest = max(parts, key=lambda part: len(part["answers"]))
-    workers = 1 + max(owners) if len(parts) <= max(owners) else len(parts)
-    numbering = Numbering(len(owners), workers, program.template.stages_with_barrier(options.barriers))
+    is_first = len(record.threads) == 0  # every segment has the same threads
+    if numbering.phases:
+        numbering.go_on(max(numbering.phases))
     makers = _record_edges(record, program, options, owners, numbering, longest["answers"])
     zeros = {part["worker"]: part["zero"] for part in parts}
     for part in parts:
-        record.add_tables(part["tables"])
+        record.add_tables({n: table for n, table in part["tables"].items() if n != "threads" or is_first})
         for key, name, sender, size, packed, unpacked, sent, arrived in part["arrived"]:
             producer = _producer(key, sender, numbering, makers)
             if producer >= 0 and sender in zeros:
@@ -72,7 +83,7 @@ def _record_edges(
     while True:
         try:
             event = phases.send(answer)
-        except StopIteration:
+        except (StopIteration, BreakstepError):  # over, or where the run failed, this fails too
             break
         answer = None
         if isinstance(event, Need):

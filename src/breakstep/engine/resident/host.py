@@ -7,6 +7,7 @@ loop feeds in what arrives. Knows nothing of how the run was started, nor of who
 from __future__ import annotations
 
 import asyncio
+import asyncio
 import threading
 import time
 from collections.abc import Mapping, Sequence
@@ -24,7 +25,7 @@ from breakstep.engine.resident.inputs import cut_rims, inputs_of, site_of
 from breakstep.engine.resident.notes import Notebook
 from breakstep.engine.resident.plan import WorkerPlan
 from breakstep.engine.resident.post import Letter, Post
-from breakstep.engine.resident.wire import Parcel
+from breakstep.engine.resident.wire import Item, Parcel
 from breakstep.engine.run import RunOptions, unroller_for
 from breakstep.errors import ClusterError, KernelError
 from breakstep.graph.unroll import Phase
@@ -33,6 +34,7 @@ from breakstep.steps.step import Array
 LEASE_SECONDS = 120.0  # a worker that hears nothing from its driver for so long gives up
 WAIT_SECONDS = 1.0  # how often an idle thread looks up, should nobody wake it
 DRAIN_SECONDS = 0.0005  # between looks at the post when all tasks are done
+ANSWERS = ("taken", "known", "stopped")  # of a worker that has the run; a worker that never heard of it says nothing
 PUSH_BACK_SECONDS = 0.02  # most by which an answer is held back while memory is short
 
 
@@ -62,6 +64,8 @@ class Assignment:
         Checkpoint to go on from.
     save_to : Path or None
         Folder for checkpoints.
+    previous, previous_owners : str or None, tuple of int
+        The run whose final state this one goes on from, still held by the workers, and who owned what there.
     """
 
     run: str
@@ -76,6 +80,8 @@ class Assignment:
     lease: float = LEASE_SECONDS
     resume: Path | None = None
     save_to: Path | None = None
+    previous: str | None = None
+    previous_owners: tuple[int, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -89,16 +95,17 @@ class Saved:
 
 @dataclass(frozen=True)
 class Status:
-    """How far a worker is: cycles done, shares of checkpoints saved since the last look."""
+    """How far a worker is: cycles done, shares of checkpoints saved since the last look, kernel time by tile [ns]."""
 
     cycles: int
     saved: tuple[Saved, ...]
+    costs: Mapping[int, int]
 
 
 class Host:
     """A worker's part in one run."""
 
-    def __init__(self, assignment: Assignment, worker: Worker) -> None:
+    def __init__(self, assignment: Assignment, worker: Worker, earlier: Host | None = None) -> None:
         self.told = assignment
         self.dask = worker
         self.lock = threading.Lock()
@@ -108,7 +115,9 @@ class Host:
             adapter.event_loop(worker), len(assignment.addresses), self._send, self._moved, self._unreachable
         )
         self.core: Core | None = None
-        self.notes = Notebook(assignment)
+        self.earlier = earlier
+        self.costs: dict[int, int] = {}  # tile -> processor time in kernels [ns]
+        self.notes: Notebook = Notebook(assignment, earlier.notes if earlier is not None else None)
         self.error: BaseException | None = None
         self.stopped = False
         self.working = False
@@ -125,7 +134,9 @@ class Host:
         told, program = self.told, self.told.program
         plan = WorkerPlan(program, told.owners, told.worker)
         unroller = unroller_for(program, told.options)
-        if told.resume is None:
+        if self.earlier is not None:
+            initial, given = self._taken_over(self.earlier, plan.tiles)
+        elif told.resume is None:
             initial, given = {tile: program.initial(tile) for tile in plan.tiles}, []
         else:
             initial = load_tiles(told.resume, program, plan.tiles)
@@ -135,6 +146,34 @@ class Host:
         core.on_phase = self.notes.phase
         with self.lock:
             self.core = core
+
+    def _taken_over(self, earlier: Host, tiles: Sequence[int]) -> tuple[dict[int, dict[str, Array]], list[Array]]:
+        """The state that the run before left: tiles owned then are here, others are fetched from who owned them."""
+        core = earlier._core()
+        state, self.earlier = core.final(), None
+        by_owner: dict[int, list[int]] = {}
+        for tile in tiles:
+            if tile not in state:
+                by_owner.setdefault(self.told.previous_owners[tile], []).append(tile)
+        for owner, wanted in by_owner.items():
+            request = adapter.fetch(self.dask, self.told.addresses[owner], earlier.told.run, wanted)
+            parcel = asyncio.run_coroutine_threadsafe(request, adapter.event_loop(self.dask)).result()
+            self.notes.arrivals(owner, parcel, time.perf_counter_ns())
+            for _, arrays in parcel.items:
+                for (name, tile, _), array in arrays.items():
+                    state.setdefault(tile, {})[name] = array
+        return {tile: {**self.told.program.scratch_values(tile), **state[tile]} for tile in tiles}, core.handover()
+
+    def hand_over(self, tiles: Sequence[int]) -> Parcel:
+        """The final state of some tiles, for the worker that owns them from now on."""
+        core = self._core()
+        state = core.final()
+        items: list[Item] = []
+        for tile in tiles:
+            for name, array in state[tile].items():
+                maker = self.notes.maker(core.unroller.latest(name), tile)
+                items.append((("task", maker), {(name, tile, (0, 0, 0)): array}))
+        return Parcel(items)
 
     def work(self) -> dict[int, dict[str, Array]]:
         """Run to the end on this many threads; returns the final state of own tiles.
@@ -177,7 +216,7 @@ class Host:
         self.heard = time.monotonic()
         with self.lock:
             saved, self._saved = self._saved, []
-            return Status(self.core.cycles_done if self.core is not None else 0, tuple(saved))
+            return Status(self.core.cycles_done if self.core is not None else 0, tuple(saved), dict(self.costs))
 
     # ---- threads ---------------------------------------------------------------------------------
 
@@ -242,8 +281,10 @@ class Host:
             if self.stopped:
                 return
             core.measured(task, end - start)
+            spent = sum(interval.cpu for interval in output.intervals if interval.what == "kernel")
+            self.costs[task.tile] = self.costs.get(task.tile, 0) + spent
             before = core.ready_count
-            instructions = core.finish(task, output.fields, output.partials, new=not output.skipped)
+            instructions = core.finish(task, output.fields, output.partials)
             self._wake(core, before)
         self._obey(instructions, rims)
 
@@ -294,7 +335,7 @@ class Host:
     async def _send(self, worker: int, number: int, parcel: Parcel) -> None:
         told = self.told
         answer = await adapter.send(self.dask, told.addresses[worker], told.run, told.worker, number, parcel)
-        if answer == "gone":
+        if answer not in ANSWERS:
             raise ClusterError(f"worker {worker} at {told.addresses[worker]} has dropped the run", lost=True)
 
     def _unreachable(self, worker: int, error: Exception) -> None:

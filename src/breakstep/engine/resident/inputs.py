@@ -9,7 +9,8 @@ from typing import Any
 import numpy as np
 
 from breakstep.engine.execute import Inputs, Site
-from breakstep.engine.resident.core import Core, SendRims, TaskState
+from breakstep.engine.resident.core import Core
+from breakstep.engine.resident.states import SendRims, TaskState
 from breakstep.mesh.halo import cut
 from breakstep.mesh.mesh import Triple
 from breakstep.steps.step import Array

@@ -13,7 +13,8 @@ from typing import TYPE_CHECKING
 
 from breakstep.engine.execute import Interval, Output
 from breakstep.engine.recording import Recorder, TaskRow
-from breakstep.engine.resident.core import TaskState
+from breakstep.engine.resident.cycles import cycles_kept, longest_lag
+from breakstep.engine.resident.states import TaskState
 from breakstep.engine.resident.wire import Key, Parcel, size_of
 from breakstep.graph.numbering import Numbering
 from breakstep.graph.unroll import INITIAL, Phase
@@ -21,38 +22,41 @@ from breakstep.graph.unroll import INITIAL, Phase
 if TYPE_CHECKING:
     from breakstep.engine.resident.host import Assignment
 
-KEPT_PHASES = 256  # numbers of older phases are dropped: nothing under way can refer to them any more
-
 
 class Notebook:
     """Rows of one worker, in the numbering of the whole run."""
 
-    def __init__(self, told: Assignment) -> None:
+    def __init__(self, told: Assignment, earlier: Notebook | None = None) -> None:
         program = told.program
         barriers = program.template.stages_with_barrier(told.options.barriers)
         self.on = told.options.record
         self.trace = told.options.trace
         self.recorder = Recorder(told.worker, told.zero)
         self.numbering = Numbering(len(program.tiling), len(told.addresses), barriers)
+        self.left_behind: dict[int, int] = {}  # first numbers of phases, once a later run has taken over
+        if earlier is not None:
+            self.numbering = earlier.numbering
+            earlier.left_behind = {number: first.steps for number, first in self.numbering.phases.items()}
+            self.numbering.go_on(max(earlier.left_behind, default=INITIAL))
+        self._kept = cycles_kept(told.options.window, longest_lag(program.problem.splitting.all_reductions()))
         self._lock = threading.Lock()
-        self._phases: dict[int, Phase] = {}
+        self._first: dict[int, int] = {}  # cycle -> its first phase
 
     def phase(self, phase: Phase) -> None:
-        """A phase has been emitted."""
+        """A phase has been emitted; numbers of cycles that are closed by then will not be asked for."""
         if not self.on:
             return
         with self._lock:
             self.numbering.add(phase)
-            self._phases[phase.number] = phase
-            if phase.number % KEPT_PHASES == 0:
-                old = phase.number - KEPT_PHASES
-                self.numbering.forget(min(old, *self._referred(old)))
-                self._phases = {n: p for n, p in self._phases.items() if n >= old}
+            if self._first.setdefault(phase.cycle, phase.number) != phase.number:
+                return
+            self._first = {c: first for c, first in self._first.items() if c > phase.cycle - self._kept}
+            self.numbering.forget(min(self._first.values()))
 
-    def _referred(self, before: int) -> list[int]:
-        """Phases that recent phases still refer to."""
-        recent = [phase for number, phase in self._phases.items() if number >= before]
-        return [source for phase in recent for source in phase.sources.values() if source != INITIAL] or [before]
+    def maker(self, phase: int, tile: int) -> int:
+        """Number of the task that made a tile's state, after another run has taken over; -1 if unknown."""
+        first = self.left_behind.get(phase, -1)
+        return first + tile if first >= 0 else -1
 
     def begin_thread(self, number: int) -> None:
         """The calling thread will work under this number."""
@@ -115,8 +119,10 @@ def producer_of(key: Key, sender: int, numbering: Numbering, first_phase: dict[i
         For each reduction instance, the phase that made it.
     """
     kind = key[0]
+    if kind == "task":
+        return int(key[1])
     if kind == "rims":
-        return -1 if key[3] == INITIAL else numbering.step(key[3], key[2])
+        return numbering.step(key[3], key[2])
     if kind == "part":
         _, instance, level, index = key
         if level == 0:

@@ -1,16 +1,18 @@
 """What never changes about a stage on one worker, worked out once: neighbours here and there, and rims to cut.
 
-Phases then only fill in which version of each field is read.
+Phases then only fill in which version of each field is read. Fields that one phase wrote are read together.
 """
 
 from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field
+from itertools import product
 
 from breakstep.engine.program import Program
 from breakstep.graph.stages import Stage
 from breakstep.graph.tasks import TREE_ARITY
+from breakstep.graph.unroll import Phase
 from breakstep.mesh.halo import Rim
 from breakstep.steps.step import Read
 
@@ -18,31 +20,22 @@ Cut = tuple[str, int, Rim]  # field, consumer tile, rim
 
 
 @dataclass(frozen=True)
-class HaloRead:
-    """One field that a stage reads beyond its tiles, as this worker sees it.
+class Reach:
+    """What a stage reads of some of its fields, all in one version, as this worker sees it.
 
     Attributes
     ----------
     here : dict of int to tuple of int
-        For each own tile, its neighbours on this worker.
+        For each own tile, the own tiles whose arrays it reads: itself, then neighbours.
     there : dict of int to tuple of int
         For each own tile, its neighbours on other workers.
     cuts : dict of int to dict of int to tuple of Cut
         For each own tile, for each other worker, the rims that it must be sent.
     """
 
-    read: Read
     here: dict[int, tuple[int, ...]]
     there: dict[int, tuple[int, ...]]
     cuts: dict[int, dict[int, tuple[Cut, ...]]]
-
-
-@dataclass(frozen=True)
-class StagePlan:
-    """One stage on one worker."""
-
-    stage: Stage
-    halos: tuple[HaloRead, ...]
 
 
 @dataclass
@@ -64,33 +57,40 @@ class WorkerPlan:
 
     def __post_init__(self) -> None:
         self.tiles = tuple(t for t, owner in enumerate(self.owners) if owner == self.worker)
-        self._stages: dict[int, StagePlan] = {}
+        self._reaches: dict[tuple[int, tuple[str, ...]], Reach] = {}
 
-    def stage(self, index: int) -> StagePlan:
-        """The plan of a stage."""
-        if index not in self._stages:
-            stage = self.program.template.stages[index]
-            halos = tuple(self._halo(read) for read in stage.reads if not read.is_local)
-            self._stages[index] = StagePlan(stage, halos)
-        return self._stages[index]
+    def reaches(self, phase: Phase) -> list[tuple[int, Reach]]:
+        """The versions that a phase reads, by the phases that made them, and how far each is read."""
+        names: dict[int, tuple[str, ...]] = {}
+        for name, source in phase.sources.items():
+            names[source] = (*names.get(source, ()), name)
+        return [(source, self.reach(phase.stage, of_source)) for source, of_source in names.items()]
 
-    def _halo(self, read: Read) -> HaloRead:
-        plans, owners = self.program.plans, self.owners
-        here, there = {}, {}
+    def reach(self, stage: Stage, names: tuple[str, ...]) -> Reach:
+        """How far a stage reads some fields."""
+        key = (stage.index, names)
+        if key not in self._reaches:
+            reads = [read for read in stage.reads if read.field in names and not read.is_local]
+            here, there = {}, {}
+            for tile in self.tiles:
+                plans = [self.program.plans.plan(tile, read) for read in reads]
+                around = dict.fromkeys(rim.neighbour for plan in plans for rim in plan.rims)
+                own = [other for other in around if self.owners[other] == self.worker]
+                here[tile] = tuple(dict.fromkeys((tile, *own)))
+                there[tile] = tuple(other for other in around if self.owners[other] != self.worker)
+            self._reaches[key] = Reach(here, there, self._cuts(reads))
+        return self._reaches[key]
+
+    def _cuts(self, reads: Sequence[Read]) -> dict[int, dict[int, tuple[Cut, ...]]]:
+        """Rims of own tiles that tiles elsewhere read."""
         cuts: dict[int, dict[int, list[Cut]]] = {}
-        for tile in range(len(owners)):
-            rims = plans.plan(tile, read).rims
-            if owners[tile] == self.worker:
-                neighbours = dict.fromkeys(rim.neighbour for rim in rims)
-                here[tile] = tuple(n for n in neighbours if owners[n] == self.worker and n != tile)
-                there[tile] = tuple(n for n in neighbours if owners[n] != self.worker)
-                continue
-            for rim in rims:
-                if owners[rim.neighbour] == self.worker:
+        elsewhere = [tile for tile, owner in enumerate(self.owners) if owner != self.worker]
+        for read, tile in product(reads, elsewhere):
+            for rim in self.program.plans.plan(tile, read).rims:
+                if self.owners[rim.neighbour] == self.worker:
                     of_tile = cuts.setdefault(rim.neighbour, {})
-                    of_tile.setdefault(owners[tile], []).append((read.field, tile, rim))
-        frozen = {t: {w: tuple(c) for w, c in to.items()} for t, to in cuts.items()}
-        return HaloRead(read, here, there, frozen)
+                    of_tile.setdefault(self.owners[tile], []).append((read.field, tile, rim))
+        return {t: {w: tuple(c) for w, c in to.items()} for t, to in cuts.items()}
 
 
 @dataclass(frozen=True)
@@ -124,11 +124,3 @@ class ReductionTree:
                 break
             count, level = parents, level + 1
         self.top = level
-
-    def place_in_order(self, level: int, index: int) -> int:
-        """Position of a node among all nodes, level by level: how tasks number them."""
-        before = sum(1 for other, _ in self.nodes if other < level)
-        return before + index
-
-    def __len__(self) -> int:
-        return len(self.nodes)

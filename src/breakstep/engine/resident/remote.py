@@ -36,6 +36,15 @@ def _receiver(address: str) -> adapter.Handler:
     return receive
 
 
+def _giver(address: str) -> adapter.Handler:
+    """What a worker does when another asks for tiles that change owner."""
+
+    async def give(run: str, tiles: list[int]) -> Any:
+        return adapter.parcelled(_HOSTS[address, run].hand_over(tiles))
+
+    return give
+
+
 def begin(assignment: Assignment, clients: Collection[str], dask_worker: Worker) -> None:
     """Tell a worker of a run; from now on it takes messages for it.
 
@@ -49,8 +58,10 @@ def begin(assignment: Assignment, clients: Collection[str], dask_worker: Worker)
             _drop(address, run, "its driver is gone")
     if not adapter.is_listening(dask_worker):
         adapter.listen(dask_worker, _receiver(dask_worker.address))
+        adapter.listen(dask_worker, _giver(dask_worker.address), adapter.TILES)
     key = (dask_worker.address, assignment.run)
-    _HOSTS[key] = Host(assignment, dask_worker)
+    earlier = None if assignment.previous is None else _HOSTS.get((dask_worker.address, assignment.previous))
+    _HOSTS[key] = Host(assignment, dask_worker, earlier)
     _WATCHES[key] = adapter.event_loop(dask_worker).create_task(_watch(*key))
 
 
