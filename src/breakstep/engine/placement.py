@@ -9,6 +9,7 @@ from breakstep.errors import DeclarationError
 from breakstep.graph.tasks import ANYWHERE
 from breakstep.mesh.mesh import Triple
 
+MOST_STARTS = 256  # of a run along the order that are tried: each costs a pass over all tiles
 PLACEMENTS = ("blocks", "curve", "cyclic", "balanced", "shared", "dask")
 
 
@@ -20,9 +21,9 @@ def owners(placement: str, program: Program, workers: int, costs: Sequence[float
     placement : str
         ``"blocks"``: contiguous runs of tiles by number; ``"curve"``: contiguous runs along a space-filling
         curve, so that each worker's tiles form a compact patch; ``"balanced"``: the same, cut where measured
-        costs are equal rather than numbers of tiles; ``"shared"``: begins like ``"curve"``, and tiles
-        change owner between windows of cycles (resident dispatch); ``"cyclic"``: dealt out one by one, so that neighbours are
-        on different workers (the worst case for bytes); ``"dask"``: anywhere.
+        costs are equal rather than numbers of tiles; ``"shared"``: begins like ``"curve"``, and
+        tiles change owner between windows of cycles (resident dispatch); ``"cyclic"``: dealt out one by one, so that
+        neighbours are on different workers (the worst case for bytes); ``"dask"``: anywhere.
     costs : sequence of float, optional
         Measured cost of each tile, for ``"balanced"``; equal if not given.
 
@@ -39,7 +40,11 @@ def owners(placement: str, program: Program, workers: int, costs: Sequence[float
         return [tile % workers for tile in range(tiles)]
     if placement in ("curve", "balanced", "shared"):
         order = curve_order([tile.place for tile in program.tiling.tiles])
-        return runs(order, costs if costs is not None and placement == "balanced" else equal, workers)
+        return (
+            balanced_runs(order, costs, workers)
+            if costs is not None and placement == "balanced"
+            else runs(order, equal, workers)
+        )
     if placement == "dask":
         return [ANYWHERE] * tiles
     raise DeclarationError(f"placement must be one of {', '.join(PLACEMENTS)}, not {placement!r}")
@@ -60,6 +65,25 @@ def runs(order: Sequence[int], costs: Sequence[float], workers: int) -> list[int
         owned[tile] = min(int(middle * workers / total), workers - 1)
         before += costs[tile]
     return owned
+
+
+def balanced_runs(order: Sequence[int], costs: Sequence[float], workers: int) -> list[int]:
+    """Contiguous runs whose busiest worker has least to do, over where along the order the first run begins.
+
+    A costly tile in the middle of the order could otherwise not be left alone with a worker.
+    """
+    tiles = len(order)
+    starts = range(0, tiles, -(-tiles // MOST_STARTS))
+    found = [runs([*order[start:], *order[:start]], costs, workers) for start in starts]
+    return min(found, key=lambda owned: busiest(owned, costs))
+
+
+def busiest(owned: Sequence[int], costs: Sequence[float]) -> float:
+    """The cost of the worker that has most to do."""
+    loads: dict[int, float] = {}
+    for cost, owner in zip(costs, owned, strict=True):
+        loads[owner] = loads.get(owner, 0.0) + cost
+    return max(loads.values())
 
 
 def curve_order(places: Sequence[Triple]) -> list[int]:

@@ -79,12 +79,19 @@ def _bytes(count: int) -> str:
 
 
 def _headline(figures: Figures) -> str:
-    native, resident, ratio = (
-        figures[name] for name in ("native_cpu_us_per_task", "resident_cpu_us_per_task", "ratio")
+    """The row that stands for all, with the middle half of its rounds."""
+    row = next(
+        row for row in figures["costs"] if row["native"]["cpu_us"]["median"] == figures["native_cpu_us_per_task"]
     )
+    native, resident = _middle(row["native"]["cpu_us"]), _middle(row["resident"]["cpu_us"])
     return (
-        f"256 tiles in blocks: {native:.0f} us of CPU time natively, {resident:.0f} resident, {ratio:.0f} times less."
+        f"{row['tiles']} tiles in {row['placement']}, {_bytes(row['rim_bytes'])}: {native} us of CPU time natively,"
+        f" {resident} resident: {figures['ratio']:.0f} times less."
     )
+
+
+def _middle(found: Figures) -> str:
+    return f"{found['median']:.0f} ({found['low']:.0f}-{found['high']:.0f})"
 
 
 # ---- the grain ---------------------------------------------------------------------------------------
@@ -122,10 +129,10 @@ def _pairs(figures: Figures) -> Iterator[str]:
     recording, null, balanced = (figures[name] for name in ("recording", "null_gain", "balanced_gain"))
     wrongly = "called a difference, WRONGLY" if null["significant"] else "no gain, as it must be"
     yield f"{null['pairs']} pairs of runs with {null['task_ms']:g} ms tasks, with 95 % intervals:"
-    noop = recording["noop_cpu_us"]["median"]
-    yield f"  recording: wall {_percent(recording)}; CPU {_percent(recording['cpu'])}, {noop:.0f} us a task"
+    yield f"  recording: wall {_percent(recording)}, CPU {_percent(recording['cpu'])}"
     yield f"  lockstep against itself: {_interval(null)}: {wrongly}"
     yield f"  balanced work, lockstep over tasked: {_interval(balanced)}"
+    yield f"Recording adds {_middle(recording['noop_cpu_us'])} us of CPU time to a task that does nothing."
 
 
 def _percent(found: Figures) -> str:

@@ -66,7 +66,8 @@ def invented_figures() -> dict[str, Any]:
         "native_cpu_us_per_task": 1500.0,
         "resident_cpu_us_per_task": 50.0,
         "idle_cores": {"client": 0.022, "workers": 0.031},
-        "costs": [{**case.facts(), **one, **costs(5432.1, 198.7)} for case in cost.ALL],
+        "costs": [{**case.facts(), **one, **costs(5432.1, 198.7)} for case in cost.ALL if case != cost.HEADLINE]
+        + [{**cost.HEADLINE.facts(), **one, **costs(1500.0, 50.0)}],
         "threads_cost": {**cost.HEADLINE.facts(), "workers": 1, "threads": 2, **costs(None, 49.0)},
         "grain": {
             "resident": grain(1.04, {0.2: 0.31, 1.0: 0.052, 5.0: 0.017}),
@@ -109,10 +110,11 @@ def test_text_gives_every_figure() -> None:
     text = text_of(invented_figures())
     assert "32 cyclic 5432 (2716) 199 (99) 27.3 5432 (2716) 199 (99) 27.3" in text
     assert "256 blocks 2-D 5432 (2716) 199 (99) 27.3 256 2 threads 49 (24)" in text
-    assert "1500 us of CPU time natively, 50 resident, 30 times less" in text
+    assert "256 tiles in blocks, 8 B: 1500 (1350-1650) us of CPU time natively, 50 (45-55) resident: 30 times" in text
     assert "resident: core-seconds 31.0 5.2 1.7" in text
     assert "from 1.04 ms (0.94-1.14) resident, 61.0 ms (54.9-67.1, extrapolated) native" in text
-    assert "recording: wall +0.4 % (-1.2 to +12.3); CPU +0.4 % (-1.2 to +12.3), 14 us a task" in text
+    assert "recording: wall +0.4 % (-1.2 to +12.3), CPU +0.4 % (-1.2 to +12.3)" in text
+    assert "Recording adds 14 (13-15) us of CPU time to a task that does nothing." in text
     assert "balanced work, lockstep over tasked: 1.030 (1.010 to 1.050)" in text
     assert "1,024,000 tasks with 3,071,232 edges, recorded, in one go: 35 s, 71 us of CPU time a task" in text
     assert "Workers grew by 206 bytes a task, 142 of them the record; without recording 1." in text
@@ -177,6 +179,7 @@ def test_command_from_end_to_end(tmp_path: Path, monkeypatch: pytest.MonkeyPatch
     from breakstep.commands.selfcheck import selfcheck as command
 
     monkeypatch.setattr(selfcheck, "QUICK", TINY)
+    monkeypatch.setattr(cost, "LONG", {"native": 512, "resident": 2048})
     file = tmp_path / "selfcheck.json"
     result = CliRunner().invoke(command, ["--quick", "--json", str(file)], catch_exceptions=False)
     assert result.exit_code == 0, result.output

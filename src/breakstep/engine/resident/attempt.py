@@ -18,7 +18,7 @@ from distributed import Client, Future, KilledWorker, wait
 
 from breakstep.engine import checkpoint
 from breakstep.engine.clocks import ClockReading, drift, read_clocks
-from breakstep.engine.placement import owners
+from breakstep.engine.placement import busiest, owners
 from breakstep.engine.program import Program
 from breakstep.engine.resident import remote
 from breakstep.engine.resident.gather import gather_record
@@ -170,7 +170,7 @@ class Attempt:
             for tile, spent in status.costs.items():
                 costs[tile] = float(spent)
         better = owners("balanced", self.program, len(self.addresses), costs)
-        if _busiest(better, costs) * WORTH_MOVING < _busiest(self.owners, costs):
+        if busiest(better, costs) * WORTH_MOVING < busiest(self.owners, costs):
             self.moves += sum(old != new for old, new in zip(self.owners, better, strict=True))
             self.owners = better
             self.result.notes["owners"] = list(better)
@@ -314,14 +314,6 @@ class Attempt:
         both = [(before[a], after.get(a, before[a])) for a in self.addresses if a in before]
         self.result.notes["clock_residual_ns"] = [drift(b, a) for b, a in both]
         self.result.notes["worker_cpu_ns"] = [a.cpu - b.cpu for b, a in both]
-
-
-def _busiest(owned: Sequence[int], costs: Sequence[float]) -> float:
-    """The cost of the worker that has most to do."""
-    loads: dict[int, float] = {}
-    for cost, owner in zip(costs, owned, strict=True):
-        loads[owner] = loads.get(owner, 0.0) + cost
-    return max(loads.values())
 
 
 async def _some_done(futures: list[Future], seconds: float) -> None:
