@@ -133,21 +133,16 @@ class SimulatedCluster:
     def run(self) -> dict[str, list[Array]]:
         """Run to the end; returns the final state by field and tile."""
         while not all(core.finished for core in self.cores):
-            self._happen()
+            self.step()
         for message in self.moving:
             assert message.again, f"{message.key} is under way to {message.worker}, but the run is over"
         while self.moving:
-            self._happen()
+            self.step()
         assert not self.saves
         final: dict[int, dict[str, Array]] = {}
         for core in self.cores:
             final.update(core.final())
         return {name: [final[t][name] for t in sorted(final)] for name in self.program.state_fields}
-
-    def run_until(self, cycle: int) -> None:
-        """Run until all workers have done the cycles below this one."""
-        while any(core.cycles_done < cycle for core in self.cores):
-            self._happen()
 
     def values(self) -> dict[str, Array]:
         """Last result of each cycle-level reduction."""
@@ -156,7 +151,7 @@ class SimulatedCluster:
 
     # ---- the schedule ----------------------------------------------------------------------------
 
-    def _happen(self) -> None:
+    def step(self) -> None:
         """One of the things that can happen does; to find that nothing can is to find a deadlock."""
         choices = self._choices()
         while choices:

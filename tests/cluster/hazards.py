@@ -43,8 +43,10 @@ def lasting_program(toy: Toy = PLANE, seconds: float = 0.01) -> Program:
 
 
 def pids(client: Client) -> list[int]:
-    """Processes of a local cluster's workers, as the nannies know them: the workers need not answer."""
-    return [nanny.pid for nanny in client.cluster.workers.values() if nanny.pid]
+    """Processes of a local cluster's workers that have reported to its scheduler; the workers need not answer."""
+    cluster = client.cluster
+    known = list(cluster.scheduler.workers)
+    return [nanny.pid for nanny in list(cluster.workers.values()) if nanny.pid and nanny.worker_address in known]
 
 
 class Killer:
@@ -72,7 +74,9 @@ class Killer:
         self._thread.start()
         return self
 
-    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, frames: TracebackType | None) -> None:
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, frames: TracebackType | None
+    ) -> None:
         self._over.set()
         self._thread.join()
 

@@ -15,6 +15,8 @@ from typing import Any
 
 from distributed import Client, Worker
 
+from breakstep.engine.workers import run_on
+
 # Round trips over one connection to a worker. On one host of two busy cores: shortest of 12 0.16-0.25 ms, of 50
 # 0.15-0.17 ms, of 200 0.15-0.16 ms, whose middles were off by 0.001-0.03, 0.001 and 0.001 ms. 50 take 10-15 ms.
 EXCHANGES = 50
@@ -65,9 +67,15 @@ def align(exchanges: Iterable[tuple[int, int, int]]) -> tuple[int, int]:
 
 
 def read_clocks(client: Client, addresses: list[str]) -> list[ClockReading]:
-    """Clock readings of the workers at these addresses."""
+    """Clock readings of the workers at these addresses.
+
+    Raises
+    ------
+    ClusterError, OSError
+        One of them has gone.
+    """
     here = _boot()
-    answers = client.run(clock, workers=addresses)
+    answers = run_on(client, addresses, clock)
     readings = []
     for address in addresses:
         boot, cpu = answers[address]
@@ -85,14 +93,14 @@ def _exchanges(client: Client, address: str) -> list[tuple[int, Any, int]]:
     """Straight to the worker if it can be reached from here, or else through the scheduler."""
     from breakstep.engine.resident import adapter
 
-    client.run(_listen, workers=[address])
+    run_on(client, [address], _listen)
     try:
         found: list[tuple[int, Any, int]] = client.sync(adapter.exchange, client, address, OPERATION, EXCHANGES, now)
     except OSError:
         found = []
         for _ in range(FALLBACK_EXCHANGES):
             before = now()
-            there = client.run(now, workers=[address])[address]
+            there = run_on(client, [address], now)[address]
             found.append((before, there, now()))
     return found
 

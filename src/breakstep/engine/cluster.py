@@ -10,6 +10,8 @@ from pathlib import Path
 
 import dask
 from distributed import Client, LocalCluster
+from distributed.comm.addressing import parse_address, parse_host_port
+from distributed.gc import disable_gc_diagnosis
 
 from breakstep.engine.interrupts import children_deaf, interrupts_held
 from breakstep.errors import ClusterError
@@ -24,6 +26,11 @@ def local_cluster(workers: int, threads: int = 1) -> Iterator[Client]:
     Scheduler and workers listen on loopback alone. Each worker's BLAS runs one thread (Dask's own
     default for its worker processes), so that the tasks are the only parallelism. Ctrl-C does not reach the
     workers, which live on to hand over their records; while they start, it waits.
+
+    Raises
+    ------
+    ClusterError
+        They do not start.
     """
     quiet = {
         "distributed.worker.memory.terminate": False,
@@ -32,19 +39,27 @@ def local_cluster(workers: int, threads: int = 1) -> Iterator[Client]:
     with dask.config.set(quiet), contextlib.ExitStack() as stack:
         with interrupts_held(), children_deaf():
             client = stack.enter_context(Client(stack.enter_context(_start(workers, threads))))
+            # The scheduler times garbage collections of this process, in a callback: Ctrl-C that falls into it is
+            # lost (seen while numba compiled), and every later collection then complains of that with a traceback.
+            disable_gc_diagnosis()
         yield client
 
 
 def _start(workers: int, threads: int) -> LocalCluster:
     """Start one, its status page on whichever port is free, and without Dask's own log lines."""
-    return LocalCluster(
-        n_workers=workers,
-        threads_per_worker=threads,
-        processes=True,
-        host="127.0.0.1",
-        scheduler_kwargs={"dashboard": False, "dashboard_address": "127.0.0.1:0"},
-        silence_logs=logging.CRITICAL,
-    )
+    try:
+        return LocalCluster(
+            n_workers=workers,
+            threads_per_worker=threads,
+            processes=True,
+            host="127.0.0.1",
+            scheduler_kwargs={"dashboard": False, "dashboard_address": "127.0.0.1:0"},
+            silence_logs=logging.CRITICAL,
+        )
+    except (OSError, RuntimeError, TimeoutError) as error:
+        raise ClusterError(
+            f"this machine does not start {workers} worker processes ({error}); ask for fewer, or free memory"
+        ) from error
 
 
 @contextlib.contextmanager
@@ -66,6 +81,7 @@ def _connect(address: str | None, scheduler_file: Path | None) -> Client:
     else:
         where = f"at {address}"
     try:
+        _check_address(str(address))
         return Client(address, timeout=CONNECT_SECONDS)
     except ValueError as error:
         raise ClusterError(
@@ -76,6 +92,13 @@ def _connect(address: str | None, scheduler_file: Path | None) -> Client:
             f"no Dask scheduler answers {where} within {CONNECT_SECONDS} s ({type(error).__name__});"
             " check the address and that the scheduler runs"
         ) from error
+
+
+def _check_address(address: str) -> None:
+    """Raise ValueError for what Dask could not connect to, without starting to try."""
+    scheme, place = parse_address(address)
+    if scheme in ("tcp", "tls"):
+        parse_host_port(place)
 
 
 def _address_in(scheduler_file: Path) -> str:

@@ -27,7 +27,14 @@ def small_copy(program: Program) -> Program:
 def warm_up(program: Program) -> str:
     """Run the small copy; returns the error that ended it, or "".
 
-    An error is no reason to stop: the copy's state is not the problem's, and the real run will tell.
+    An error is no reason to stop: the copy's state is not the problem's, and the real run will tell. Ctrl-C is:
+    compiling takes a minute or two, and the run must not begin behind it.
+
+    Raises
+    ------
+    KeyboardInterrupt
     """
-    failure = SerialDispatch().run(small_copy(program), RunOptions(record=False)).failure
-    return "" if failure is None else str(failure)
+    result = SerialDispatch().run(small_copy(program), RunOptions(record=False))
+    if result.interrupted:
+        raise KeyboardInterrupt
+    return "" if result.failure is None else str(result.failure)

@@ -7,11 +7,16 @@ and its answer (seen on distributed 2026.8), and then all workers seem to be gon
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import asyncio
+from collections.abc import Awaitable, Callable, Sequence
+from functools import partial
+from typing import Any
 
 from distributed import Client, Scheduler
 
 from breakstep.errors import ClusterError
+
+PATIENCE_SECONDS = 0.25  # an answer that takes longer makes us look whether the worker is still there
 
 
 def _ask_workers(dask_scheduler: Scheduler) -> dict[str, tuple[str, int]]:
@@ -35,14 +40,51 @@ def present_clients(client: Client) -> set[str]:
 
 
 def require_present(client: Client, addresses: Sequence[str]) -> None:
-    """Raise ClusterError when a worker has gone.
+    """Raise ClusterError, with ``details["lost"]``, when a worker has gone.
 
     Tasks tied to a worker that is gone wait for ever; nothing but the list of workers tells.
     """
     present = present_workers(client)
     gone = [address for address in addresses if address not in present]
     if gone:
-        raise ClusterError(f"worker {', '.join(gone)} has gone and took its tiles with it; start the run again")
+        message = f"worker {', '.join(gone)} has gone and took its tiles with it; start the run again"
+        raise ClusterError(message, lost=True)
+
+
+def run_on(client: Client, addresses: Sequence[str], function: Callable[..., Any], *args: Any) -> dict[str, Any]:
+    """What a function returns on each of these workers, by address, as ``Client.run`` has it.
+
+    Raises
+    ------
+    ClusterError
+        A worker has gone meanwhile: Dask itself would try for half a minute to reach one that has just died.
+    """
+    call = partial(client.run, function, *args, workers=list(addresses))
+    under_way, done = client.sync(_begin, call)
+    try:
+        while not done:
+            require_present(client, addresses)
+            done = client.sync(_is_done, under_way)
+    finally:
+        if not done:
+            client.sync(_cancel, under_way)
+    answers: dict[str, Any] = under_way.result()
+    return answers
+
+
+async def _begin(call: Callable[[], Awaitable[Any]]) -> tuple[asyncio.Future[Any], bool]:
+    """On the client's loop, where its calls are coroutines."""
+    under_way = asyncio.ensure_future(call())
+    return under_way, await _is_done(under_way)
+
+
+async def _is_done(under_way: asyncio.Future[Any]) -> bool:
+    done, _ = await asyncio.wait([under_way], timeout=PATIENCE_SECONDS)
+    return bool(done)
+
+
+async def _cancel(under_way: asyncio.Future[Any]) -> None:
+    under_way.cancel()
 
 
 def known_workers(client: Client, wanted: int | None) -> tuple[list[str], int]:

@@ -143,6 +143,10 @@ class Metered:
 
     def run(self, program: Program, options: RunOptions, progress: Progress | None = None) -> RunResult:
         """Run a program; errors and interrupts end up in the result."""
+        with self.bench.client.as_current():  # waiting for futures goes through the current client
+            return self._run(program, options, progress)
+
+    def _run(self, program: Program, options: RunOptions, progress: Progress | None) -> RunResult:
         self.inner.prepare(program)
         before = self.bench.usage()
         result = self.inner.run(program, options, progress)

@@ -17,9 +17,8 @@ from breakstep.measure.noop import Ring
 from breakstep.measure.timing import Spread, in_turn
 
 RIM_NUMBERS = 2048  # 16 KB: two rows of 32 zones with 32 numbers each
-SHORT = {"native": 256, "resident": 1024}  # step tasks of the short run, by dispatch
-LONG = {"native": 1024, "resident": 9216}
-"""Of the long run: the window of cycles fills up, and the differences are 1 s and 0.4 s of CPU time."""
+Sizes = Mapping[str, tuple[int, int]]
+"""Step tasks of the short and of the long run, by dispatch."""
 
 
 @dataclass(frozen=True)
@@ -53,31 +52,33 @@ ALL = (
 )
 
 
-def cost_of_task(bench: Bench, dispatch: str, case: Case, record: bool = False) -> Usage:
+def cost_of_task(bench: Bench, dispatch: str, case: Case, sizes: Sizes, record: bool = False) -> Usage:
     """What one more task costs [s]."""
     options = RunOptions(placement=case.placement, record=record)
-    short, long = (case.ring(tasks[dispatch]) for tasks in (SHORT, LONG))
+    short, long = (case.ring(tasks) for tasks in sizes[dispatch])
     before, after = (bench.run(dispatch, ring, options) for ring in (short, long))
     return (after - before).scaled(1.0 / (long.tasks - short.tasks))
 
 
-def cost_row(bench: Bench, case: Case, rounds: int, dispatches: Sequence[str] = DISPATCHES) -> dict[str, Any]:
+def cost_row(
+    bench: Bench, case: Case, sizes: Sizes, rounds: int, dispatches: Sequence[str] = DISPATCHES
+) -> dict[str, Any]:
     """One case by the dispatches in turn, in plain figures."""
     samples: dict[str, list[Usage]] = {name: [] for name in dispatches}
     for number in range(rounds):
         for name in in_turn(dispatches, number):
-            samples[name].append(cost_of_task(bench, name, case))
+            samples[name].append(cost_of_task(bench, name, case, sizes))
     row = {**case.facts(), "workers": bench.workers, "threads": bench.threads}
     row |= {name: figures_of(found) for name, found in samples.items()}
     row["ratio"] = _ratio(samples)
     return row
 
 
-def recording_noop(bench: Bench, rounds: int) -> dict[str, float]:
+def recording_noop(bench: Bench, sizes: Sizes, rounds: int) -> dict[str, float]:
     """CPU time that recording adds to a resident task that does nothing [us], edges worked out included."""
     added = []
     for number in range(rounds):
-        costs = {record: cost_of_task(bench, "resident", HEADLINE, record) for record in _on_and_off(number)}
+        costs = {record: cost_of_task(bench, "resident", HEADLINE, sizes, record) for record in _on_and_off(number)}
         added.append(1e6 * (costs[True].cpu - costs[False].cpu))
     return spread(added)
 

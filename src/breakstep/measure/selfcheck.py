@@ -11,7 +11,7 @@ from typing import Any
 
 from breakstep.measure import cost
 from breakstep.measure.bench import Bench, Machine, open_bench
-from breakstep.measure.cost import Case, cost_row, recording_noop
+from breakstep.measure.cost import Case, Sizes, cost_row, recording_noop
 from breakstep.measure.grain import grain_figures
 from breakstep.measure.limits import cores
 from breakstep.measure.long_run import CYCLES, long_figures
@@ -34,6 +34,8 @@ class Extent:
         Turns of each contender.
     cases : tuple of Case
         Graphs on which the cost of a task is measured, the headline's among them.
+    sizes : mapping of str to (int, int)
+        Tasks of the short and the long run between which that cost is the difference, by dispatch.
     lengths : dict of str to tuple of float
         Lengths of kernels for the grain of each dispatch [ms].
     shared : tuple of float
@@ -50,6 +52,7 @@ class Extent:
 
     rounds: int
     cases: tuple[Case, ...]
+    sizes: Sizes
     lengths: dict[str, tuple[float, ...]]
     shared: tuple[float, ...]
     seconds: float
@@ -62,10 +65,11 @@ class Extent:
 FULL = Extent(
     rounds=3,
     cases=cost.ALL,
+    sizes={"native": (256, 768), "resident": (1024, 9216)},
     lengths={"resident": (0.2, 0.5, 1.0, 2.0, 5.0, 10.0), "native": (5.0, 10.0, 20.0, 50.0)},
     shared=(0.5, 2.0, 5.0),
-    seconds=0.5,
-    pairs=9,
+    seconds=0.4,
+    pairs=7,
     pair_cycles=5,
     long_cycles=CYCLES,
     idle_seconds=2.0,
@@ -73,9 +77,10 @@ FULL = Extent(
 QUICK = Extent(
     rounds=2,
     cases=(cost.HEADLINE, cost.WORST),
-    lengths={"resident": (0.5, 1.0, 2.0), "native": (10.0, 30.0)},
+    sizes={"native": (256, 768), "resident": (1024, 5120)},
+    lengths={"resident": (0.5, 1.0, 2.0), "native": (10.0, 25.0)},
     shared=(0.5, 5.0),
-    seconds=0.25,
+    seconds=0.2,
     pairs=5,
     pair_cycles=3,
     long_cycles=0,
@@ -134,7 +139,7 @@ def selfcheck_figures(
 
 def _on_processes(bench: Bench, extent: Extent, pace: Pace, progress: Report) -> dict[str, Any]:
     progress("the cost of a task")
-    costs = [cost_row(bench, case, extent.rounds) for case in extent.cases]
+    costs = [cost_row(bench, case, extent.sizes, extent.rounds) for case in extent.cases]
     progress("the grain")
     grains = {
         name: grain_figures(bench, name, lengths, pace, extent.rounds, extent.seconds)
@@ -142,7 +147,7 @@ def _on_processes(bench: Bench, extent: Extent, pace: Pace, progress: Report) ->
     }
     progress("recording, lockstep against itself, balanced work")
     recording = recording_figures(bench, pace, extent.pairs, extent.pair_cycles)
-    recording["noop_cpu_us"] = recording_noop(bench, extent.rounds)
+    recording["noop_cpu_us"] = recording_noop(bench, extent.sizes, extent.rounds)
     gains = lockstep_figures(bench, pace, extent.pairs, extent.pair_cycles)
     if extent.long_cycles:
         progress("a long run")
@@ -160,7 +165,7 @@ def _on_processes(bench: Bench, extent: Extent, pace: Pace, progress: Report) ->
 
 def _with_threads(processes: Bench, threads: Bench, extent: Extent, pace: Pace, progress: Report) -> dict[str, Any]:
     progress("threads against processes")
-    row = cost_row(threads, cost.HEADLINE, extent.rounds, ["resident"])
+    row = cost_row(threads, cost.HEADLINE, extent.sizes, extent.rounds, ["resident"])
     benches = {"threads": threads, "processes": processes}
     sharing = sharing_rows(benches, extent.shared, pace, extent.rounds, extent.seconds)
     return {"threads_cost": row, "sharing": sharing}

@@ -6,6 +6,7 @@ from pathlib import Path
 
 import pytest
 
+from breakstep.engine import cluster
 from tests.unit.commands.conftest import TINY, Shell, files, refused
 
 COMMANDS = ("run", "compare")
@@ -196,6 +197,17 @@ def test_a_scheduler_file_that_is_none(breakstep: Shell, tmp_path: Path, content
 @pytest.mark.parametrize("address", ["nonsense", "tcp://127.0.0.1", "tcp://127.0.0.1:port", ""])
 def test_an_address_that_is_none(breakstep: Shell, address: str) -> None:
     refused(breakstep("run", "shock_tube", "--address", address), "is no address of a Dask scheduler")
+    nothing_made()
+
+
+@pytest.mark.parametrize("error", [RuntimeError("Nanny failed to start."), OSError("no more processes")])
+def test_workers_that_do_not_start(breakstep: Shell, monkeypatch: pytest.MonkeyPatch, error: Exception) -> None:
+    def fails(**options: object) -> None:
+        raise error
+
+    monkeypatch.setattr(cluster, "LocalCluster", fails)
+    answer = breakstep("run", "shock_tube", "--workers", "64")
+    refused(answer, f"this machine does not start 64 worker processes ({error}); ask for fewer")
     nothing_made()
 
 

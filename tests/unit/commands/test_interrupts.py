@@ -144,3 +144,13 @@ def test_children_are_deaf_and_their_parent_is_not_for_long() -> None:
     assert told.stdout == "True\n"
     assert signal.pthread_sigmask(signal.SIG_BLOCK, ()) == before
     assert signal.SIGINT not in before
+
+
+def test_ctrl_c_while_kernels_compile_ends_the_run_before_it_began(
+    breakstep: Shell, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """The small copy that warms up has one tile; compiling may take a minute, and the run must not follow."""
+    substitute(monkeypatch, faulty_problem("interrupts", tile=0, cycle=0))
+    answer = breakstep("run", "shock_tube", *TINY, "--out", "mine")
+    assert (answer.code, answer.err.strip()) == (130, "breakstep: stopped")
+    assert not Path("mine").exists()

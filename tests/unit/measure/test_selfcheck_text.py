@@ -162,6 +162,7 @@ def test_what_could_not_be_measured_is_left_out_in_words() -> None:
 TINY = Extent(
     rounds=1,
     cases=(cost.HEADLINE,),
+    sizes={"native": (256, 512), "resident": (256, 2048)},
     lengths={"resident": (0.5,), "native": (5.0,)},
     shared=(0.5,),
     seconds=0.02,
@@ -179,7 +180,6 @@ def test_command_from_end_to_end(tmp_path: Path, monkeypatch: pytest.MonkeyPatch
     from breakstep.commands.selfcheck import selfcheck as command
 
     monkeypatch.setattr(selfcheck, "QUICK", TINY)
-    monkeypatch.setattr(cost, "LONG", {"native": 512, "resident": 2048})
     file = tmp_path / "selfcheck.json"
     result = CliRunner().invoke(command, ["--quick", "--json", str(file)], catch_exceptions=False)
     assert result.exit_code == 0, result.output

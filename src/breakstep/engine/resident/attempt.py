@@ -5,7 +5,6 @@ Knows nothing of starting again; says by ``details["lost"]`` of a ClusterError t
 
 from __future__ import annotations
 
-import asyncio
 import time
 import uuid
 from collections.abc import Callable, Mapping, Sequence
@@ -14,18 +13,17 @@ from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
-from distributed import Client, Future, KilledWorker, wait
+from distributed import Client, Future, KilledWorker
 
 from breakstep.engine import checkpoint
 from breakstep.engine.clocks import ClockReading, drift, read_clocks
 from breakstep.engine.placement import busiest, owners
 from breakstep.engine.program import Program
-from breakstep.engine.resident import remote
+from breakstep.engine.resident import adapter, remote
 from breakstep.engine.resident.gather import gather_record
 from breakstep.engine.resident.host import Assignment, Saved, Status
-from breakstep.engine.resident.wire import Parcel
 from breakstep.engine.run import Progress, RunOptions, RunResult
-from breakstep.engine.workers import present_clients, present_workers
+from breakstep.engine.workers import present_clients, present_workers, run_on
 from breakstep.errors import BreakstepError, ClusterError, DeclarationError
 from breakstep.graph.numbering import Numbering
 from breakstep.graph.tasks import ANYWHERE
@@ -98,6 +96,7 @@ class Attempt:
         self.peaks: list[int] = []
         barriers = program.template.stages_with_barrier(options.barriers)
         self.numbering = Numbering(len(self.owners), len(self.addresses), barriers)
+        self.newest: list[Status] = []
         self.reports: dict[int, _Reports] = {}
         self.clocks: list[ClockReading] = []
 
@@ -138,17 +137,14 @@ class Attempt:
         start = self.options.start
         while True:
             stop = min(start + self.options.window, end) if share else end
-            futures = self._segment(start, stop, zero)
+            self._segment(start, stop, zero)
             if stop >= end or self.result.cycles < stop:
                 break
             self._share_anew()
             start = stop
-        for parcel in self._fetch(futures):
-            for _, arrays in parcel.items:
-                for (name, tile, _), array in arrays.items():
-                    self.result.fields.setdefault(name, [array] * len(self.owners))[tile] = array
+        self._fetch()
 
-    def _segment(self, start: int, stop: int, zero: int) -> list[Future]:
+    def _segment(self, start: int, stop: int, zero: int) -> None:
         """Run some cycles; the segment before hands its state over, then its record."""
         earlier = self.segments[-1] if self.segments else None
         options = replace(self.options, start=start, stop=stop)
@@ -157,16 +153,13 @@ class Attempt:
         self._wait(self._submit(remote.prepare, "prepare"))
         if earlier is not None:
             self._bring_in(earlier, self.addresses)
-        futures = self._submit(remote.work, "work")
-        self._wait(futures)
-        self._look_in()
-        return futures
+        self._wait(self._submit(remote.work, "work"))
+        self.newest = self._look_in()
 
     def _share_anew(self) -> None:
         """Owners by the costs measured in the newest segment, if that promises enough."""
-        answers = self.client.run(remote.status, self.name, workers=self.addresses)
         costs = [0.0] * len(self.owners)
-        for status in answers.values():
+        for status in self.newest:
             for tile, spent in status.costs.items():
                 costs[tile] = float(spent)
         better = owners("balanced", self.program, len(self.addresses), costs)
@@ -199,7 +192,7 @@ class Attempt:
                 previous=None if earlier is None else earlier.name,
                 previous_owners=() if earlier is None else earlier.owners,
             )
-            self.client.run(remote.begin, told, clients, workers=[address])
+            run_on(self.client, [address], remote.begin, told, clients)
 
     def _submit(self, function: Callable[[str], Any], what: str) -> list[Future]:
         """One pinned Dask task a worker."""
@@ -215,45 +208,35 @@ class Attempt:
     def _wait(self, futures: list[Future]) -> None:
         """Until all are done; looks in on the workers meanwhile, and raises the most telling error."""
         while pending := [future for future in futures if not future.done()]:
-            self.client.sync(_some_done, pending, POLL_SECONDS)
+            self.client.sync(adapter.some_done, pending, POLL_SECONDS)
             _raise_failed(futures)
-            self._look_for_gone()
             self._look_in()
         _raise_failed(futures)
 
-    def _fetch(self, futures: list[Future]) -> list[Parcel]:
-        """The results of finished tasks; a worker that goes before its own is here is noticed."""
-        fetching: asyncio.Task[list[Parcel]] = self.client.sync(_begin_to_fetch, self.client, futures)
-        try:
-            while not self.client.sync(_is_fetched, fetching, POLL_SECONDS):
-                self._look_for_gone()
-                self._look_in()
-            return fetching.result()
-        finally:
-            self.client.sync(_cancel, fetching)
-
-    def _look_for_gone(self) -> None:
-        """A task that is tied to a worker that has gone waits for ever; nothing but the list of workers tells."""
-        present = present_workers(self.client)
-        gone = [address for address in self.addresses if address not in present]
-        if gone:
-            raise ClusterError(f"worker {', '.join(gone)} has gone and took its tiles with it", lost=True)
-
-    def _look_in(self) -> None:
-        answers: dict[str, Status | None] = self.client.run(
-            remote.status, self.name, workers=self.addresses, on_error="ignore"
-        )
+    def _look_in(self) -> list[Status]:
+        """Renew the lease, complete checkpoints, tell how far the run is; notices workers that have gone."""
+        answers: dict[str, Status | None] = run_on(self.client, self.addresses, remote.status, self.name)
         found = [status for status in answers.values() if status is not None]
         for status in found:
             for saved in status.saved:
                 self._report(saved)
-        if len(found) < len(self.addresses):  # the next look at the list of workers, or their tasks, will tell why
-            return
+        if len(found) < len(self.addresses):
+            raise ClusterError("a worker has restarted or has given the run up", lost=True)
         done = min(status.cycles for status in found)
         if done > self.result.cycles:
             self.result.cycles = done
             if self.progress is not None:
                 self.progress(done)
+        return found
+
+    def _fetch(self) -> None:
+        fields = self.result.fields
+        for parcel in run_on(self.client, self.addresses, remote.final, self.name).values():
+            if parcel is None:
+                raise ClusterError("a worker has given the run up before its results were fetched", lost=True)
+            for _, arrays in parcel.items:
+                for (name, tile, _), array in arrays.items():
+                    fields.setdefault(name, [array] * len(self.owners))[tile] = array
 
     def _report(self, saved: Saved) -> None:
         report = self.reports.setdefault(saved.cycle, _Reports())
@@ -271,27 +254,19 @@ class Attempt:
 
     def _collect(self) -> None:
         """Stop what still runs and bring in the workers' records; from a lost worker there is none."""
-        if self.client.status != "running":
-            return
-        try:
-            present = present_workers(self.client)
-            alive = [address for address in self.addresses if address in present]
-            open_segments = [segment for segment in self.segments if not segment.is_in]
-            for segment in open_segments:
-                self.client.run(remote.stop, segment.name, workers=alive, on_error="ignore")
-            for segment in open_segments:
-                self._bring_in(segment, alive)
-            self._note_clocks(alive)
-        except OSError:
-            return
+        open_segments = [segment for segment in self.segments if not segment.is_in]
+        alive = self._survivors(open_segments)
+        for segment in open_segments:
+            self._bring_in(segment, alive)
+        self._note_clocks(alive)
         if self.options.placement == "shared":
             self.result.notes["tiles_moved"] = self.moves
 
-    def _bring_in(self, segment: Segment, addresses: list[str]) -> None:
+    def _bring_in(self, segment: Segment, addresses: Sequence[str]) -> None:
         """A segment's record; its workers forget it."""
         segment.is_in = True
-        answers = self.client.run(remote.collect, segment.name, workers=addresses, on_error="ignore")
-        parts = [answers[address] for address in addresses if answers.get(address)]
+        answers = [self._ask(address, remote.collect, segment.name) for address in addresses]
+        parts = [part for part in answers if part]
         peaks = [int(part["peak"]) for part in parts]
         if len(self.peaks) == len(peaks):
             peaks = [max(pair) for pair in zip(self.peaks, peaks, strict=True)]
@@ -299,6 +274,27 @@ class Attempt:
         self.result.notes["worker_peak_bytes"] = peaks
         if parts:
             self._take_over(segment, parts)
+
+    def _survivors(self, segments: Sequence[Segment]) -> list[str]:
+        """Workers that are there, after all of them have been told to stop."""
+        if self.client.status != "running":
+            return []
+        try:
+            present = present_workers(self.client)
+            alive = [address for address in self.addresses if address in present]
+        except OSError:
+            return []
+        for segment in segments:
+            for address in alive:
+                self._ask(address, remote.stop, segment.name)
+        return alive
+
+    def _ask(self, address: str, function: Callable[..., Any], *args: Any) -> Any:
+        """One worker's answer; None if it goes meanwhile."""
+        try:
+            return run_on(self.client, [address], function, *args)[address]
+        except (ClusterError, OSError):
+            return None
 
     def _take_over(self, segment: Segment, parts: Sequence[dict[str, Any]]) -> None:
         result = self.result
@@ -308,33 +304,21 @@ class Attempt:
         if self.options.record:
             gather_record(result.record, parts, self.program, segment.options, segment.owners, self.numbering)
 
-    def _note_clocks(self, alive: list[str]) -> None:
-        before = dict(zip(self.addresses, self.clocks, strict=False))
-        after = dict(zip(alive, read_clocks(self.client, alive), strict=True))
-        both = [(before[a], after.get(a, before[a])) for a in self.addresses if a in before]
-        self.result.notes["clock_residual_ns"] = [drift(b, a) for b, a in both]
-        self.result.notes["worker_cpu_ns"] = [a.cpu - b.cpu for b, a in both]
+    def _note_clocks(self, alive: Sequence[str]) -> None:
+        """How well clocks were aligned throughout, and what each worker's process used; 0 of a lost one."""
+        residuals, used = [], []
+        for address, before in zip(self.addresses, self.clocks, strict=False):
+            after = self._clock(address) if address in alive else None
+            residuals.append(before.residual if after is None else drift(before, after))
+            used.append(0 if after is None else after.cpu - before.cpu)
+        self.result.notes["clock_residual_ns"] = residuals
+        self.result.notes["worker_cpu_ns"] = used
 
-
-async def _some_done(futures: list[Future], seconds: float) -> None:
-    """Until one of them is done or time is up; runs on the client's loop, whose frames hold nothing afterwards."""
-    try:
-        await wait(futures, timeout=seconds, return_when="FIRST_COMPLETED")
-    except TimeoutError:
-        return
-
-
-async def _begin_to_fetch(client: Client, futures: list[Future]) -> asyncio.Task[list[Parcel]]:
-    return asyncio.ensure_future(client.gather(futures))
-
-
-async def _is_fetched(fetching: asyncio.Task[list[Parcel]], seconds: float) -> bool:
-    done, _ = await asyncio.wait([fetching], timeout=seconds)
-    return bool(done)
-
-
-async def _cancel(fetching: asyncio.Task[list[Parcel]]) -> None:
-    fetching.cancel()
+    def _clock(self, address: str) -> ClockReading | None:
+        try:
+            return read_clocks(self.client, [address])[0]
+        except (ClusterError, OSError):
+            return None
 
 
 def _raise_failed(futures: list[Future]) -> None:

@@ -19,7 +19,7 @@ from breakstep.engine.resident.attempt import Attempt, Site
 from breakstep.engine.resident.host import LEASE_SECONDS
 from breakstep.engine.run import Progress, RunOptions, RunResult
 from breakstep.engine.warm import warm_up
-from breakstep.engine.workers import known_workers
+from breakstep.engine.workers import known_workers, run_on
 from breakstep.errors import ClusterError
 from breakstep.profile.record import RunRecord
 
@@ -84,9 +84,11 @@ class ResidentDispatch:
 
     def _load(self, program: Program, addresses: list[str]) -> None:
         try:
-            self.client.run(warm_up, program, workers=addresses)
+            run_on(self.client, addresses, warm_up, program)
         except OSError as error:
             raise ClusterError(f"a worker was lost before the run began ({error!r})", lost=True) from error
+        except ClusterError:
+            raise
         except Exception as error:  # pickling and importing raise anything
             raise ClusterError(
                 f"the workers cannot load the problem ({type(error).__name__}: {error}); what it holds must be"

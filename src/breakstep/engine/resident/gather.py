@@ -45,7 +45,8 @@ def gather_record(
     is_first = len(record.threads) == 0  # every segment has the same threads
     if numbering.phases:
         numbering.go_on(max(numbering.phases))
-    makers = _record_edges(record, program, options, owners, numbering, longest["answers"])
+    reached = max((max(part["tables"]["tasks"]["cycle"].to_pylist(), default=-1) for part in parts), default=-1)
+    makers = _record_edges(record, program, options, owners, numbering, longest["answers"], reached)
     zeros = {part["worker"]: part["zero"] for part in parts}
     for part in parts:
         record.add_tables({n: table for n, table in part["tables"].items() if n != "threads" or is_first})
@@ -72,8 +73,12 @@ def _record_edges(
     owners: Sequence[int],
     numbering: Numbering,
     answers: Sequence[list[Array]],
+    reached: int,
 ) -> dict[int, int]:
-    """Unroll the run again; returns for each reduction instance the phase that made it."""
+    """Unroll the run again, as far as the last cycle that a task ran in: a run that was stopped may have had far to go.
+
+    Returns for each reduction instance the phase that made it.
+    """
     edges = PhaseEdges(numbering, program.plans, owners, WORKER_ARITY)
     makers: dict[int, int] = {}
     producers, consumers, kinds = [], [], []
@@ -91,6 +96,8 @@ def _record_edges(
             if answer is None:
                 break
             continue
+        if event.cycle > reached:
+            break
         numbering.add(event)
         makers.update({making.instance: event.number for making in event.makes})
         for producer, consumer, kind in edges.into(event):

@@ -7,7 +7,6 @@ loop feeds in what arrives. Knows nothing of how the run was started, nor of who
 from __future__ import annotations
 
 import asyncio
-import asyncio
 import threading
 import time
 from collections.abc import Mapping, Sequence
@@ -158,6 +157,8 @@ class Host:
         for owner, wanted in by_owner.items():
             request = adapter.fetch(self.dask, self.told.addresses[owner], earlier.told.run, wanted)
             parcel = asyncio.run_coroutine_threadsafe(request, adapter.event_loop(self.dask)).result()
+            if parcel is None:
+                raise ClusterError(f"worker {owner} at {self.told.addresses[owner]} has dropped the run", lost=True)
             self.notes.arrivals(owner, parcel, time.perf_counter_ns())
             for _, arrays in parcel.items:
                 for (name, tile, _), array in arrays.items():
@@ -175,8 +176,8 @@ class Host:
                 items.append((("task", maker), {(name, tile, (0, 0, 0)): array}))
         return Parcel(items)
 
-    def work(self) -> dict[int, dict[str, Array]]:
-        """Run to the end on this many threads; returns the final state of own tiles.
+    def work(self) -> None:
+        """Run to the end on this many threads.
 
         Raises
         ------
@@ -194,7 +195,11 @@ class Host:
             raise self.error
         if self.stopped:
             raise ClusterError("the run was called off", lost=True)
-        return self._core().final()
+
+    def final(self) -> dict[int, dict[str, Array]]:
+        """State of own tiles after the run's end."""
+        with self.lock:
+            return self._core().final()
 
     def stop(self, reason: BaseException | None = None) -> None:
         """End the run here as soon as running kernels return; the first reason given stands."""
@@ -369,9 +374,7 @@ class Host:
                 if self.stopped:
                     return "stopped"
                 instructions = self._take_in(sender, parcel, arrived)
-        except (
-            Exception
-        ) as error:  # a reduction's own function, or no convergence: this worker's error, not the sender's
+        except Exception as error:  # a reduction's own function or no convergence: not the sender's affair
             self.stop(error)
             return "stopped"
         self._obey(instructions)

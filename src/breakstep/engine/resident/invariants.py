@@ -232,8 +232,8 @@ def cycles_go_in_order(view: View) -> Faults:
         left = cycles.open.get(end)
         if end < limit and (left is None or not (left.tasks if name == "done" else left.controls)):
             yield f"cycle {end} is {name}, and nobody has noticed"
-    if cycles.emitted - cycles.closed >= cycles._kept:
-        yield f"cycle {cycles.emitted} is emitted, too far ahead of {cycles.closed}"
+    if cycles.emitted - cycles.done >= core.options.window or cycles.emitted - cycles.closed >= cycles._kept:
+        yield f"cycle {cycles.emitted} is emitted, too far ahead of {cycles.done}, or of {cycles.closed}, which is open"
 
 
 def results_are_kept_while_needed(view: View) -> Faults:

@@ -1,7 +1,7 @@
 """Ready tasks in order of urgency; with a second order, by phase, for when only the oldest phase may run.
 
 A task stands in both orders. Taken from one, it is left in the other as a leftover, which is skipped when it
-comes up; leftovers never outnumber the tasks that are ready.
+comes up. Among all phases, leftovers never outnumber the tasks that are ready; those of a phase go with its last task.
 """
 
 from __future__ import annotations
@@ -47,6 +47,7 @@ class ReadyQueue:
             task = heapq.heappop(self._heap)[2]
             if task.state is READY:
                 task.move(RUNNING)
+                self._sweep()
                 return task
             self._leftovers -= 1
         return None
@@ -57,12 +58,13 @@ class ReadyQueue:
             task = heapq.heappop(phase.ready)[2]
             if task.state is READY:
                 task.move(RUNNING)
-                self._leave()
+                self._leftovers += 1
+                self._sweep()
                 return task
         return None
 
-    def _leave(self) -> None:
-        self._leftovers += 1
+    def _sweep(self) -> None:
+        """Drop leftovers when they are more than half of all: this costs each task a constant on average."""
         if 2 * self._leftovers > len(self._heap):
             self._heap = [entry for entry in self._heap if entry[2].state is READY]
             heapq.heapify(self._heap)

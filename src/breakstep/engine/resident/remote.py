@@ -40,7 +40,8 @@ def _giver(address: str) -> adapter.Handler:
     """What a worker does when another asks for tiles that change owner."""
 
     async def give(run: str, tiles: list[int]) -> Any:
-        return adapter.parcelled(_HOSTS[address, run].hand_over(tiles))
+        host = _HOSTS.get((address, run))
+        return None if host is None else adapter.parcelled(host.hand_over(tiles))
 
     return give
 
@@ -88,15 +89,28 @@ def _drop(address: str, run: str, why: str) -> None:
 
 def prepare(run: str) -> None:
     """Make the worker's share of the initial state."""
-    _host(run).prepare()
-
-
-def work(run: str) -> Parcel:
-    """Run to the end; the final state of own tiles, as items ("final", tile)."""
     host = _host(run)
-    secede()  # or two runs at once could each hold the threads that the other's remaining workers wait for
-    final = host.work()
-    return Parcel([(("final", tile), _as_rims(tile, fields)) for tile, fields in final.items()])
+    secede()
+    host.prepare()
+
+
+def work(run: str) -> None:
+    """Run to the end.
+
+    Like :func:`prepare` it leaves Dask's pool of threads: two runs at once could otherwise each hold the threads that
+    the other's remaining workers wait for, and a run that hangs on a lost worker would hold up the next.
+    """
+    host = _host(run)
+    secede()
+    host.work()
+
+
+def final(run: str, dask_worker: Worker) -> Parcel | None:
+    """The final state of own tiles, as items ("final", tile); None when the run is not known here."""
+    host = _HOSTS.get((dask_worker.address, run))
+    if host is None:
+        return None
+    return Parcel([(("final", tile), _as_rims(tile, fields)) for tile, fields in host.final().items()])
 
 
 def _as_rims(tile: int, fields: dict[str, Array]) -> dict[Any, Array]:
