@@ -65,7 +65,7 @@ class Extent:
 FULL = Extent(
     rounds=3,
     cases=cost.ALL,
-    sizes={"native": (256, 768), "resident": (1024, 9216)},
+    sizes=cost.SIZES,
     lengths={"resident": (0.2, 0.5, 1.0, 2.0, 5.0, 10.0), "native": (5.0, 10.0, 20.0, 50.0)},
     shared=(0.5, 2.0, 5.0),
     seconds=0.4,
@@ -77,7 +77,7 @@ FULL = Extent(
 QUICK = Extent(
     rounds=2,
     cases=(cost.HEADLINE, cost.WORST),
-    sizes={"native": (256, 768), "resident": (1024, 5120)},
+    sizes=cost.SIZES,
     lengths={"resident": (0.5, 1.0, 2.0), "native": (10.0, 25.0)},
     shared=(0.5, 5.0),
     seconds=0.2,

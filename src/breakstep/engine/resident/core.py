@@ -257,6 +257,8 @@ class Core:
             self._barriers.count(key[1], key[2])
         elif kind == "release":
             self._barriers.release(key[1])
+        else:
+            raise AssertionError(f"{key} is no item that workers send each other")
         return self._close_event()
 
     def saved(self, cycle: int) -> list[Instruction]:

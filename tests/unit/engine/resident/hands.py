@@ -33,10 +33,11 @@ def line(
     cycles: int = 3,
     reductions: Sequence[Reduction] = (),
     edge: Edge = Edge.OUTFLOW,
+    fuse: bool = False,
 ) -> Program:
     """A program on tiles of two zones in a row."""
     splitting = Splitting((tuple(items),), tuple(reductions))
-    return Program(mixture(splitting, (2 * tiles,), (edge,), cycles), (2,), fuse=False)
+    return Program(mixture(splitting, (2 * tiles,), (edge,), cycles), (2,), fuse)
 
 
 def machine(
