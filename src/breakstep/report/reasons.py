@@ -15,6 +15,7 @@ from breakstep.report.wording import in_mode, listed, unevenness
 
 NOTABLE_SHARE = 0.02  # a cause below 2 % of the core-seconds is not worth a line
 UNEVEN = 1.1  # busiest over mean below which work counts as even: barriers then stretch it by 10 % at most
+MUCH_STOLEN = 0.08  # on a quiet machine kernels lose 1 to 4 % to the system and to Dask's own threads
 MUCH_ENGINE = 0.1  # above this the dispatch hides what the comparison is about
 
 Reason = tuple[float, str]
@@ -25,6 +26,7 @@ def reasons(lockstep: Profile, tasked: Profile) -> list[str]:
     if lockstep.ledger.threads == 1:
         return ["On one thread nothing can wait for anything: use more workers to see what barriers cost."]
     others = [
+        *_stolen_reason(lockstep, tasked),
         *_reduction_reason(tasked),
         *_neighbour_reason(tasked),
         *_placement_reason(tasked),
@@ -88,6 +90,18 @@ def _unevenness_of(lockstep: Profile, step: str) -> str:
         return ""
     tile = f", the busiest tile {unevenness(tiles)} times the mean tile's" if math.isfinite(tiles) else ""
     return f" (the busiest worker of a phase has {unevenness(phases)} times the mean work{tile})"
+
+
+def _stolen_reason(lockstep: Profile, tasked: Profile) -> Iterator[Reason]:
+    """Kernel time in which the processor was somebody else's: what is measured then is the machine's other work."""
+    wall, cpu = (sum(int(p.work[column].sum()) for p in (lockstep, tasked)) for column in ("compute_ns", "cpu_ns"))
+    stolen = 1.0 - cpu / wall if wall else 0.0
+    if stolen >= MUCH_STOLEN:
+        yield (
+            1.0,
+            f"Kernels had no processor for {_percent(stolen)} of their time: other programs run here. Repeat on a"
+            " quiet machine before drawing conclusions.",
+        )
 
 
 def _reduction_reason(tasked: Profile) -> Iterator[Reason]:

@@ -47,5 +47,5 @@ def inputs_of(core: Core, task: TaskState) -> Inputs:
 
 
 def cut_rims(order: SendRims, arrays: Mapping[str, Array]) -> dict[Any, Array]:
-    """The arrays of a rims item, contiguous and no longer tied to the tile's own."""
-    return {(name, tile, rim.offset): np.ascontiguousarray(cut(rim, arrays[name])) for name, tile, rim in order.cuts}
+    """The arrays of a rims item: copies always, for a contiguous view would keep the whole tile alive."""
+    return {(name, tile, rim.offset): np.array(cut(rim, arrays[name]), order="C") for name, tile, rim in order.cuts}

@@ -59,6 +59,7 @@ class Results:
 
     def put(self, instance: int, vector: Array) -> tuple[list[Waiter], int | None]:
         """A result has come: who waited for it, and the cycle that expected it."""
+        vector.flags.writeable = False  # steps are handed a view of it, here as at the root
         self.known[instance] = vector
         return self.waiting.pop(instance, []), self.expected.pop(instance, None)
 

@@ -56,7 +56,7 @@ def _place(key: Key, payload: Any, frames: list[Any]) -> list[Any]:
     if isinstance(payload, dict):
         shapes = []
         for (name, tile, offset), array in payload.items():
-            frames.append(array.reshape(-1).view(np.uint8).data)
+            frames.append(np.ascontiguousarray(array).reshape(-1).view(np.uint8).data)
             shapes.append([name, tile, list(offset), list(array.shape)])
         return [list(key), FRAME, shapes]
     return [list(key), payload.tolist()]
