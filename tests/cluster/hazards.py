@@ -43,10 +43,12 @@ def lasting_program(toy: Toy = PLANE, seconds: float = 0.01) -> Program:
 
 
 def pids(client: Client) -> list[int]:
-    """Processes of a local cluster's workers that have reported to its scheduler; the workers need not answer."""
-    cluster = client.cluster
-    known = list(cluster.scheduler.workers)
-    return [nanny.pid for nanny in list(cluster.workers.values()) if nanny.pid and nanny.worker_address in known]
+    """Processes of a local cluster's workers that are up, as the nannies know them: the workers need not answer.
+
+    Dask does not replace a worker that dies while it starts.
+    """
+    nannies = list(client.cluster.workers.values())
+    return [nanny.pid for nanny in nannies if nanny.pid and nanny.status.name == nanny.process.status.name == "running"]
 
 
 class Killer:

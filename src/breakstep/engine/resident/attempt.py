@@ -122,6 +122,8 @@ class Attempt:
         self._collect()
         if result.failure is not None:
             _drop_frames(result.failure)
+        if result.failure is not None or result.interrupted:
+            result.fields, result.values = {}, {}
         return result
 
     def _check(self) -> None:
@@ -143,6 +145,7 @@ class Attempt:
             self._share_anew()
             start = stop
         self._fetch()
+        self._bring_in(self.segments[-1], self.addresses)
 
     def _segment(self, start: int, stop: int, zero: int) -> None:
         """Run some cycles; the segment before hands its state over, then its record."""
@@ -274,6 +277,8 @@ class Attempt:
         self.result.notes["worker_peak_bytes"] = peaks
         if parts:
             self._take_over(segment, parts)
+        if len(parts) < len(self.addresses) and self.result.failure is None and not self.result.interrupted:
+            raise ClusterError("a worker has gone before its record was here", lost=True)
 
     def _survivors(self, segments: Sequence[Segment]) -> list[str]:
         """Workers that are there, after all of them have been told to stop."""
@@ -299,8 +304,7 @@ class Attempt:
     def _take_over(self, segment: Segment, parts: Sequence[dict[str, Any]]) -> None:
         result = self.result
         result.cycles = min(part["cycles"] for part in parts)
-        if result.failure is None and not result.interrupted:
-            result.values = parts[0]["values"]
+        result.values = parts[0]["values"]
         if self.options.record:
             gather_record(result.record, parts, self.program, segment.options, segment.owners, self.numbering)
 
