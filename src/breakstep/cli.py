@@ -43,7 +43,7 @@ def cli() -> None:
 def main() -> None:
     """Entry point of the ``breakstep`` command."""
     try:
-        code = cli.main(standalone_mode=False)
+        code = cli.main(prog_name="breakstep", standalone_mode=False)
     except BreakstepError as error:
         _tell(error)
         sys.exit(2)

@@ -64,9 +64,7 @@ def test_reverse_rates_obey_detailed_balance(temperature: float) -> None:
             masses = mass[target] * mass["He4"] / mass[product]
             balance = 9.8685e9 * (t9 * masses) ** 1.5 * np.exp(-11.604518 * reaction.q_value / t9)
             # REACLIB's reverse fits obey it to 1e-4, the figures' own rounding
-            assert rates[f"{product} -> He4 + {target}"] / rates[str(reaction)] == pytest.approx(
-                balance, rel=5e-4
-            )
+            assert rates[f"{product} -> He4 + {target}"] / rates[str(reaction)] == pytest.approx(balance, rel=5e-4)
             pairs += 1
     assert pairs == 11
 
@@ -137,9 +135,7 @@ def test_zone_kernel_and_radau_end_at_the_same_composition_and_energy() -> None:
     new_gas, _, status = burn(gas, duration, STELLAR, ALPHA.arrays, 1e-6, 1e-12, 10_000, CUTOFF)
     assert status[0] == 0
     x = molar(**fractions) * ALPHA.mass_numbers
-    end = ZoneProblem(ALPHA, STELLAR, density, temperature, x, duration).solve_with_scipy(
-        "Radau", 1e-9, 1e-15
-    )[0]
+    end = ZoneProblem(ALPHA, STELLAR, density, temperature, x, duration).solve_with_scipy("Radau", 1e-9, 1e-15)[0]
     np.testing.assert_allclose(new_gas[5:, 0, 0, 0] / density, end[:-1] * ALPHA.mass_numbers, atol=1e-6)
     released = density * float((end[:-1] - molar(**fractions)) @ ALPHA.arrays.binding)
     assert (new_gas[4] - gas[4]).item() == pytest.approx(released, rel=1e-5)

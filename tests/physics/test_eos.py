@@ -99,9 +99,7 @@ def test_constants_agree_with_each_other() -> None:
 
 
 @pytest.mark.parametrize(("point", "values"), PACZYNSKI.items())
-def test_electron_pressure_is_paczynskis(
-    point: tuple[float, float, float], values: tuple[float, ...]
-) -> None:
+def test_electron_pressure_is_paczynskis(point: tuple[float, float, float], values: tuple[float, ...]) -> None:
     density, temperature, mu_e = point
     ours = eos.electron_pressures(density, temperature, 1.0 / mu_e)
     assert ours == pytest.approx(values[:4], rel=1e-9)  # the same formula; 1e-9 allows for other constants
@@ -109,16 +107,12 @@ def test_electron_pressure_is_paczynskis(
 
 
 @pytest.mark.parametrize(("point", "values"), PACZYNSKI.items())
-def test_derivatives_of_the_electron_pressure(
-    point: tuple[float, float, float], values: tuple[float, ...]
-) -> None:
+def test_derivatives_of_the_electron_pressure(point: tuple[float, float, float], values: tuple[float, ...]) -> None:
     density, temperature, mu_e = point
     pressure = values[2]
     along_density = derivative(lambda x: eos.electron_pressures(x, temperature, 1.0 / mu_e)[2], density)
     along_temperature = derivative(lambda x: eos.electron_pressures(density, x, 1.0 / mu_e)[2], temperature)
-    assert along_density / pressure == pytest.approx(
-        values[4], rel=1e-8
-    )  # round-off 1e-16 over a step of 1e-4
+    assert along_density / pressure == pytest.approx(values[4], rel=1e-8)  # round-off 1e-16 over a step of 1e-4
     assert along_temperature / pressure == pytest.approx(values[5], rel=1e-8)
 
 
@@ -160,9 +154,7 @@ def test_compressing_cold_matter_costs_its_pressure(density: float) -> None:
 
 
 @pytest.mark.parametrize(("density", "temperature"), PLANE)
-def test_maxwell_relation_holds_within_an_eighth_of_the_electron_pressure(
-    density: float, temperature: float
-) -> None:
+def test_maxwell_relation_holds_within_an_eighth_of_the_electron_pressure(density: float, temperature: float) -> None:
     """P - rho^2 de/drho - T dP/dT, the inconsistency that the module admits, is what it says."""
 
     def state(rho: float, t: float) -> Array:

@@ -43,9 +43,7 @@ def test_vortex_formula() -> None:
         along = np.interp(r, x[zones // 2 :], rho[zones // 2 :, zones // 2, 0])
         # y is 0.025 off the axis and interpolation is linear over 0.05: errors of order 1e-3.
         assert along == pytest.approx(density, rel=1e-3)
-        assert np.interp(r, x[zones // 2 :], p[zones // 2 :, zones // 2, 0]) == pytest.approx(
-            pressure, rel=1e-3
-        )
+        assert np.interp(r, x[zones // 2 :], p[zones // 2 :, zones // 2, 0]) == pytest.approx(pressure, rel=1e-3)
 
 
 @pytest.mark.slow

@@ -58,9 +58,7 @@ def arrival(source: DrawnTask, task: DrawnTask) -> int:
 @st.composite
 def runs(draw: st.DrawFn, skewed: bool = False) -> DrawnRun:
     """A valid schedule of a random graph; if skewed, as seen on clocks that disagree."""
-    threads = draw(
-        st.lists(st.tuples(st.integers(0, 2), st.integers(0, 1)), min_size=1, max_size=5, unique=True)
-    )
+    threads = draw(st.lists(st.tuples(st.integers(0, 2), st.integers(0, 1)), min_size=1, max_size=5, unique=True))
     count = draw(st.integers(0, 14))
     numbers = draw(st.permutations([3 * i + 1 for i in range(count)]))
     free = dict.fromkeys(threads, 0)
@@ -114,9 +112,7 @@ def record_of(run: DrawnRun) -> RunRecord:
         record.intervals.append((t.number, what, "s", t.start, t.start + halo, halo))
         record.intervals.append((t.number, "kernel", "s", t.start + halo, t.start + halo + kernel, kernel))
         record.edges.extend((source.number, t.number, kind) for source, kind in t.inputs)
-        record.transfers.extend(
-            (t.number, "f", t.worker, w, 8, 0, 0, t.end, at) for w, at in t.arrivals.items()
-        )
+        record.transfers.extend((t.number, "f", t.worker, w, 8, 0, 0, t.end, at) for w, at in t.arrivals.items())
     workers = len({worker for worker, _ in run.threads})
     record.manifest = manifest(workers, len(run.threads), tiles=1)
     return record

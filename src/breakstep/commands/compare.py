@@ -51,10 +51,10 @@ def compare(
     except Stopped as stopped:
         click.echo(f"breakstep: stopped; the profile so far is in {stopped.folder}", err=True)
         return 130
+    write_json(json_file, comparison.as_json())
     for line in comparison_lines(comparison):
         click.echo(line)
     click.echo(f"Profiles: {folder}")
-    write_json(json_file, comparison.as_json())
     return 0 if comparison.identical else 1
 
 

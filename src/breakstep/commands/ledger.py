@@ -21,6 +21,6 @@ def ledger(profile: Path, json_file: Path | None) -> None:
     check_json(json_file)
     with reading(profile, ProfileError):
         recorded = read_profile(profile)
+    write_json(json_file, {"scenario": recorded.manifest["scenario"].get("name", ""), **run_figures(recorded)})
     for line in ledger_lines(recorded):
         click.echo(line)
-    write_json(json_file, {"scenario": recorded.manifest["scenario"].get("name", ""), **run_figures(recorded)})

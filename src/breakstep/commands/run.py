@@ -56,6 +56,8 @@ def run(
     session.options = session.saving_every(checkpoint_every)
     check_json(json_file)
     place = choose_place(session.scenario.run, dispatch, workers, threads, address, scheduler_file)
+    if memory_limit and place.dispatch != "resident":
+        raise ScenarioError("a memory limit needs the resident dispatch; leave --memory-limit or --dispatch out")
     if (checkpoint_every or resume) and place.dispatch != "resident":
         raise ScenarioError("checkpoints need the resident dispatch; leave --dispatch out")
     folder = output_folder(out, session.scenario.name)
@@ -77,10 +79,10 @@ def run(
             if checkpoints(folder / CHECKPOINTS):
                 error.details["remedy"] = go_on(folder)
             raise
+    write_json(json_file, {"scenario": session.scenario.name, **run_figures(profile)})
     for line in ledger_lines(profile):
         click.echo(line)
     click.echo(f"Profile: {folder}")
-    write_json(json_file, {"scenario": session.scenario.name, **run_figures(profile)})
     return 0
 
 
@@ -107,6 +109,11 @@ def _begin(
         return None, session, choice
     if scenario is not None:
         raise ScenarioError("--resume takes its scenario from the checkpoint; leave SCENARIO out")
+    for override in overrides:
+        if not override.startswith("run."):
+            raise ScenarioError(
+                f"--set {override}: a run that goes on keeps its physics; only keys below run. may change"
+            )
     with reading(resume, CheckpointError):
         folder = last_checkpoint(resume / CHECKPOINTS if (resume / CHECKPOINTS).is_dir() else resume)
         manifest = read_manifest(folder)

@@ -9,6 +9,7 @@ checked against its digest.
 
 from __future__ import annotations
 
+import hashlib
 import json
 import shutil
 import uuid
@@ -61,7 +62,7 @@ def save_tiles(
     except OSError as error:
         raise OutputError(
             f"the checkpoint of cycle {cycle} cannot be written to {root} ({error.strerror or error});"
-            " the run stops, and the checkpoint before it can be resumed"
+            " the run stops, and the last complete checkpoint, if there is one, can be resumed"
         ) from error
     return digests
 
@@ -121,6 +122,7 @@ def complete(
         "values": {name: np.asarray(rows).tolist() for name, rows in values.items()},
         **facts,
     }
+    manifest["digest"] = _digest_of(manifest)
     try:
         (partial / MANIFEST).write_text(json.dumps(manifest, indent=1), encoding="utf-8")
         if final.exists():
@@ -185,10 +187,18 @@ def read_manifest(folder: Path) -> dict[str, Any]:
         raise CheckpointError(f"{path}: not a readable checkpoint ({error}); resume from another") from error
     if not isinstance(manifest, dict) or manifest.get("version") != VERSION:
         raise CheckpointError(f"{path}: expected a checkpoint of version {VERSION}; resume from another")
-    missing = {"cycle", "mesh", "tile", "fields", "values", "scenario"} - manifest.keys()
+    missing = {"cycle", "mesh", "tile", "fields", "values", "scenario", "digest"} - manifest.keys()
     if missing:
         raise CheckpointError(f"{path}: {', '.join(sorted(missing))} missing; resume from another checkpoint")
+    if manifest["digest"] != _digest_of(manifest):
+        raise CheckpointError(f"{path}: it does not say what was written; resume from another checkpoint")
     return manifest
+
+
+def _digest_of(manifest: Mapping[str, Any]) -> str:
+    """SHA-256 of all that a manifest says beside its own digest."""
+    said = {key: value for key, value in manifest.items() if key != "digest"}
+    return hashlib.sha256(json.dumps(said, sort_keys=True).encode()).hexdigest()
 
 
 def load_tiles(folder: Path, program: Program, tiles: Sequence[int]) -> dict[int, dict[str, Array]]:

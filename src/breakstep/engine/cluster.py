@@ -35,6 +35,9 @@ def local_cluster(workers: int, threads: int = 1) -> Iterator[Client]:
     quiet = {
         "distributed.worker.memory.terminate": False,
         "distributed.admin.large-graph-warning-threshold": "100MB",
+        # Dask starts a worker that has died anew. But if the new one is gone, too, when this time is over, it
+        # starts no more: with the default of 15 s a second death at the wrong moment halves the cluster for good.
+        "distributed.deploy.lost-worker-timeout": "1 day",
     }
     with dask.config.set(quiet), contextlib.ExitStack() as stack:
         with interrupts_held(), children_deaf():
@@ -83,9 +86,9 @@ def _connect(address: str | None, scheduler_file: Path | None) -> Client:
     try:
         _check_address(str(address))
         return Client(address, timeout=CONNECT_SECONDS)
-    except ValueError as error:
+    except (ValueError, TypeError) as error:  # TypeError: a scheme that lacks its library or its certificates
         raise ClusterError(
-            f"{address} is no address of a Dask scheduler ({error}); expected one such as tcp://10.0.0.1:8786"
+            f"{address} is no address of a Dask scheduler ({error}); expected one such as tcp://10.0.0.1:8786, or tls:// with Dask's TLS configuration in place"
         ) from error
     except (OSError, TimeoutError) as error:
         raise ClusterError(

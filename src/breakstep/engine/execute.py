@@ -211,9 +211,17 @@ def check_arrays(
         if bad >= 0:
             component, *zone = (int(i) for i in np.unravel_index(bad, shape))
             raise not_finite(fields[name], component, _global(zone, tile), float(flat[bad]), where)
-        whole.flags.writeable = False
+        _protect(whole)
         checked[name] = whole
     return checked
+
+
+def _protect(array: Array) -> None:
+    """Write-protect an array and what it is a view of: a kernel that fills one buffer again and again must fail."""
+    owner: object = array
+    while isinstance(owner, np.ndarray):
+        owner.flags.writeable = False
+        owner = owner.base
 
 
 def not_finite(field: Field, component: int, zone: Triple, value: float, where: str) -> KernelError:

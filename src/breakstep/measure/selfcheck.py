@@ -40,8 +40,9 @@ class Extent:
         Lengths of kernels for the grain of each dispatch [ms].
     shared : tuple of float
         Lengths of kernels for threads against processes [ms].
-    seconds : float
-        How long a run of such kernels should keep each thread busy; in 0.2 s, the way in and out still showed.
+    seconds, shared_seconds : float
+        How long a run for the grain, and one of the latter kind, should keep each thread busy. In 0.2 s, the
+        run's beginning and end still showed in the grain.
     pairs, pair_cycles : int
         Runs side by side, and cycles of each; 80 ms a cycle on two cores.
     long_cycles : int
@@ -56,6 +57,7 @@ class Extent:
     lengths: dict[str, tuple[float, ...]]
     shared: tuple[float, ...]
     seconds: float
+    shared_seconds: float
     pairs: int
     pair_cycles: int
     long_cycles: int
@@ -69,6 +71,7 @@ FULL = Extent(
     lengths={"resident": (0.2, 0.5, 1.0, 2.0, 5.0, 10.0), "native": (5.0, 10.0, 20.0, 50.0)},
     shared=(0.5, 2.0, 5.0),
     seconds=0.5,
+    shared_seconds=0.5,
     pairs=7,
     pair_cycles=5,
     long_cycles=CYCLES,
@@ -81,6 +84,7 @@ QUICK = Extent(
     lengths={"resident": (0.5, 2.0), "native": (10.0, 25.0)},
     shared=(0.5, 5.0),
     seconds=0.5,
+    shared_seconds=0.25,
     pairs=5,
     pair_cycles=3,
     long_cycles=0,
@@ -167,7 +171,7 @@ def _with_threads(processes: Bench, threads: Bench, extent: Extent, pace: Pace, 
     progress("threads against processes")
     row = cost_row(threads, cost.HEADLINE, extent.sizes, extent.rounds, ["resident"])
     benches = {"threads": threads, "processes": processes}
-    sharing = sharing_rows(benches, extent.shared, pace, extent.rounds, extent.seconds)
+    sharing = sharing_rows(benches, extent.shared, pace, extent.rounds, extent.shared_seconds)
     return {"threads_cost": row, "sharing": sharing}
 
 

@@ -8,7 +8,8 @@ A gap ends with the start of a task. At any moment ``t`` of the gap, the cause i
 3. Otherwise go to the input that arrived last: the wait is a reduction's over a reduction edge. Over a data
    edge it is a neighbour's, unless the way here already led over a reduction or a barrier.
 
-At the input's task: after its end the bytes were under way to another worker (transfer). While it ran, a step
+At the input's task: after its end the input was under way to another worker. Over a data edge that is transfer; a
+reduction's or a barrier's message is part of what the reduction or the barrier costs. While it ran, a step
 makes the wait what it is; packing is transfer, and the bookkeeping of reductions and barriers is engine.
 Before its start, ask again from 1 for that task. So dispatch that is slow at the far end of a wait is booked
 as engine, and not on the neighbour.
@@ -151,11 +152,13 @@ def _at_task(run: Timeline, task: int, low: int, high: int, why: int, parts: Int
 
 
 @compiled_loop
-def _through(run: Timeline, source: int, low: int, high: int, why: int, parts: Integers, count: int) -> int:
+def _through(
+    run: Timeline, source: int, low: int, high: int, why: int, moving: int, parts: Integers, count: int
+) -> int:
     """Book an interval of waiting for an input, as far as the input's task had begun."""
     made = max(low, run.end[source])
     if made < high:  # on another worker only: on its own, an input arrives at its task's end
-        count = _put(parts, count, MOVED, UNDER_WAY, source, made, high, high - made)
+        count = _put(parts, count, moving, UNDER_WAY, source, made, high, high - made)
     begun, until = max(low, run.start[source]), min(high, run.end[source])
     if begun < until:
         account = DISPATCH
@@ -195,7 +198,7 @@ def _walk(run: Timeline, task: int, low: int, high: int, parts: Integers) -> int
         if barrier_at > data_at:
             begin, end, source = max(low, data_at), min(high, barrier_at), inputs.barrier_from[task]
             if begin < end:
-                count = _through(run, source, begin, end, HELD, parts, count)
+                count = _through(run, source, begin, end, HELD, HELD, parts, count)
             if begin < min(end, run.start[source]):
                 stack[size, 0], stack[size, 1] = source, begin
                 stack[size, 2], stack[size, 3] = min(end, run.start[source]), HELD
@@ -206,7 +209,8 @@ def _walk(run: Timeline, task: int, low: int, high: int, parts: Integers) -> int
                 why = REDUCED
             elif why == _UNDECIDED:
                 why = NEIGHBOUR
-            count = _through(run, source, low, end, why, parts, count)
+            moving = REDUCED if inputs.data_kind[task] == REDUCTION else MOVED
+            count = _through(run, source, low, end, why, moving, parts, count)
             if low < min(end, run.start[source]):
                 stack[size, 0], stack[size, 1] = source, low
                 stack[size, 2], stack[size, 3] = min(end, run.start[source]), why

@@ -32,7 +32,9 @@ def work_by_step(frames: Frames) -> pd.DataFrame:
 
 
 def imbalance_by_step(frames: Frames, tiles: int) -> pd.DataFrame:
-    """How unevenly each step's kernel time is spread: largest over mean, 1 when even.
+    """How unevenly each step's processor time is spread: largest over mean, 1 when even.
+
+    Processor time, not wall time: a core that other programs slow down does not make the work uneven.
 
     Parameters
     ----------
@@ -92,13 +94,13 @@ def _kernels(frames: Frames) -> pd.DataFrame:
 
 
 def _largest_over_mean(kernels: pd.DataFrame, by: str, members: int) -> pd.Series[float]:
-    sums = kernels.groupby(["step", by], observed=True)["compute_ns"].sum().groupby("step", observed=True)
+    sums = kernels.groupby(["step", by], observed=True)["cpu_ns"].sum().groupby("step", observed=True)
     total = sums.sum()
     return (sums.max() * members / total)[total > 0]
 
 
 def _phase_sums(kernels: pd.DataFrame, workers: int) -> tuple[pd.Series[float], pd.Series[float]]:
     """Largest and mean of the workers' sums, for each phase [ns]."""
-    sums = kernels.groupby([*_PHASE, "worker"], observed=True)["compute_ns"].sum()
+    sums = kernels.groupby([*_PHASE, "worker"], observed=True)["cpu_ns"].sum()
     phases = sums.groupby(_PHASE, observed=True)
     return phases.max().astype(float), phases.sum() / workers

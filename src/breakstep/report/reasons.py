@@ -25,15 +25,17 @@ def reasons(lockstep: Profile, tasked: Profile) -> list[str]:
     """Sentences about a pair of runs: first what the barriers cost, then the rest by weight."""
     if lockstep.ledger.threads == 1:
         return ["On one thread nothing can wait for anything: use more workers to see what barriers cost."]
+    prompt = 0 in tasked.manifest["notes"].get("lags", {}).values()
+    first = list(_reduction_reason(tasked)) if prompt else []  # barriers by another name come next to barriers
     others = [
         *_stolen_reason(lockstep, tasked),
-        *_reduction_reason(tasked),
+        *([] if prompt else _reduction_reason(tasked)),
         *_neighbour_reason(tasked),
         *_placement_reason(tasked),
         *_engine_reason(tasked),
     ]
     heaviest_first = [sentence for _, sentence in sorted(others, key=lambda reason: -reason[0])]
-    return [*_barrier_reason(lockstep), *heaviest_first]
+    return [*_barrier_reason(lockstep), *(sentence for _, sentence in first), *heaviest_first]
 
 
 def share(profile: Profile, account: str) -> float:
@@ -99,8 +101,8 @@ def _stolen_reason(lockstep: Profile, tasked: Profile) -> Iterator[Reason]:
     if stolen >= MUCH_STOLEN:
         yield (
             1.0,
-            f"Kernels had no processor for {_percent(stolen)} of their time: other programs run here. Repeat on a"
-            " quiet machine before drawing conclusions.",
+            f"Kernels had no processor for {_percent(stolen)} of their time: they shared it with other programs or"
+            " with more threads than there are cores, or they waited. Make sure before drawing conclusions.",
         )
 
 
@@ -157,4 +159,7 @@ def _engine_reason(tasked: Profile) -> Iterator[Reason]:
         return
     mean = float((steps["end_ns"] - steps["start_ns"]).mean()) / 1e6
     verdict = " Use larger tiles before drawing conclusions about barriers." if part > MUCH_ENGINE else ""
-    yield part, f"The dispatch itself takes {_percent(part)} of the time, at {mean:.2g} ms a step task.{verdict}"
+    yield (
+        part,
+        f"The dispatch itself takes {_percent(part)} of the time; a step task lasts {mean:.2g} ms on average.{verdict}",
+    )

@@ -91,7 +91,7 @@ def _headline(figures: Figures) -> str:
 
 
 def _middle(found: Figures) -> str:
-    return f"{found['median']:.0f} ({found['low']:.0f}-{found['high']:.0f})"
+    return f"{found['median']:.0f} ({found['low']:.0f} to {found['high']:.0f})"
 
 
 # ---- the grain ---------------------------------------------------------------------------------------

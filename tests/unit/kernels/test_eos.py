@@ -32,9 +32,7 @@ def test_gamma_law() -> None:
 
 
 @pytest.mark.parametrize("energy", [-1e15, 0.0, np.nan])
-@pytest.mark.parametrize(
-    "vector", [eos.GammaLaw(1.4).vector, eos.Stellar().vector], ids=["gamma law", "stellar"]
-)
+@pytest.mark.parametrize("vector", [eos.GammaLaw(1.4).vector, eos.Stellar().vector], ids=["gamma law", "stellar"])
 def test_no_temperature_without_energy(vector: np.ndarray, energy: float) -> None:
     assert np.isnan(eos.state_from_energy(vector, 1.0, energy, *CARBON)[0])
 

@@ -102,9 +102,7 @@ def test_rough_supersonic_zones_stay_positive_and_equal_the_oracle() -> None:
     np.testing.assert_array_equal(new, expected)
 
 
-def tiled_sweep(
-    gas: Array, axis: int, dt: float, vector: Array, cuts: list[list[int]], species: int
-) -> Array:
+def tiled_sweep(gas: Array, axis: int, dt: float, vector: Array, cuts: list[list[int]], species: int) -> Array:
     """One periodic sweep, tile by tile; ``cuts`` are the tile boundaries along x and y."""
     padded = periodic(gas, axis)
     new = np.empty_like(gas)

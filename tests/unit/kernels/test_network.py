@@ -115,9 +115,7 @@ def test_unknown_network_names_the_known_ones() -> None:
         load_network("alpha14")
 
 
-def test_network_is_read_from_a_file_of_the_same_layout(
-    tmp_path: Path, alpha: Network, alpha_file: dict
-) -> None:
+def test_network_is_read_from_a_file_of_the_same_layout(tmp_path: Path, alpha: Network, alpha_file: dict) -> None:
     path = tmp_path / "chain.json"
     path.write_text(json.dumps(alpha_file))
     network = read_network(path)

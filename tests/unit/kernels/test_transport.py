@@ -135,9 +135,7 @@ def test_energy_stays_positive() -> None:
     """Block Gauss-Seidel on an M-matrix with a non-negative right-hand side never leaves E >= 0."""
     mesh = MESHES["2-D"]
     material = random_material(mesh, 16, seed=5)
-    radiation = random_radiation(mesh, 16, seed=6) * (
-        np.random.default_rng(7).random((16, *mesh.shape)) > 0.7
-    )
+    radiation = random_radiation(mesh, 16, seed=6) * (np.random.default_rng(7).random((16, *mesh.shape)) > 0.7)
     assemblies = assemble(mesh, radiation, material, random_redistribution(16, 8), light_path=3.0)
     for calls in (1, 2, 50):
         assert solve(mesh, radiation, assemblies, passes=1, max_calls=calls).radiation.min() >= 0.0
@@ -204,13 +202,9 @@ def step(mesh: Mesh, passes: int, tolerance: float, max_calls: int = 5000) -> tu
     old, gas = hot_spot(mesh)
     assemblies = assemble_gas(mesh, old, gas)
     assert all(a.bad_zone == -1 for a in assemblies)
-    new = solve(
-        mesh, old, assemblies, passes=passes, omega=1.2, tolerance=tolerance, max_calls=max_calls
-    ).radiation
+    new = solve(mesh, old, assemblies, passes=passes, omega=1.2, tolerance=tolerance, max_calls=max_calls).radiation
     parts = []
-    for halo, before, assembly, piece in zip(
-        mesh.halos(new), mesh.cut(old), assemblies, mesh.cut(gas), strict=True
-    ):
+    for halo, before, assembly, piece in zip(mesh.halos(new), mesh.cut(old), assemblies, mesh.cut(gas), strict=True):
         part, bad = transport.exchange(halo, before, assembly.bands, piece, axes=mesh.axes)
         assert bad == -1
         parts.append(part)
@@ -381,9 +375,7 @@ def test_a_mesh_may_lie_along_any_axis() -> None:
         mesh = Mesh((shape[0], shape[1], shape[2]), (axis,))
         material = random_material(mesh, 6, seed=18)
         radiation = random_radiation(mesh, 6, seed=19)
-        assemblies = assemble(
-            mesh, radiation, material, random_redistribution(6, 20), light_path=C_LIGHT * 1e-10
-        )
+        assemblies = assemble(mesh, radiation, material, random_redistribution(6, 20), light_path=C_LIGHT * 1e-10)
         results.append(solve(mesh, radiation, assemblies).radiation.ravel())
     assert np.array_equal(results[0], results[1])
     assert np.array_equal(results[0], results[2])

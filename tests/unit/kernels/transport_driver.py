@@ -132,9 +132,7 @@ def solve(
     return Solution(radiation, len(history), history)
 
 
-def gain(
-    mesh: Mesh, new: Floats, old: Floats, assemblies: list[transport.Assembly], deposit: Floats
-) -> Floats:
+def gain(mesh: Mesh, new: Floats, old: Floats, assemblies: list[transport.Assembly], deposit: Floats) -> Floats:
     """The matter's gain over the whole mesh."""
     pieces = zip(mesh.halos(new), mesh.cut(old), assemblies, mesh.cut(deposit), strict=True)
     return mesh.join(

@@ -110,11 +110,14 @@ def test_text_gives_every_figure() -> None:
     text = text_of(invented_figures())
     assert "32 cyclic 5432 (2716) 199 (99) 27.3 5432 (2716) 199 (99) 27.3" in text
     assert "256 blocks 2-D 5432 (2716) 199 (99) 27.3 256 2 threads 49 (24)" in text
-    assert "256 tiles in blocks, 8 B: 1500 (1350-1650) us of CPU time natively, 50 (45-55) resident: 30 times" in text
+    assert (
+        "256 tiles in blocks, 8 B: 1500 (1350 to 1650) us of CPU time natively, 50 (45 to 55) resident: 30 times"
+        in text
+    )
     assert "resident: core-seconds 31.0 5.2 1.7" in text
     assert "from 1.04 ms (0.94-1.14) resident, 61.0 ms (54.9-67.1, extrapolated) native" in text
     assert "recording: wall +0.4 % (-1.2 to +12.3), CPU +0.4 % (-1.2 to +12.3)" in text
-    assert "Recording adds 14 (13-15) us of CPU time to a task that does nothing." in text
+    assert "Recording adds 14 (13 to 15) us of CPU time to a task that does nothing." in text
     assert "balanced work, lockstep over tasked: 1.030 (1.010 to 1.050)" in text
     assert "1,024,000 tasks with 3,071,232 edges, recorded, in one go: 35 s, 71 us of CPU time a task" in text
     assert "Workers grew by 206 bytes a task, 142 of them the record; without recording 1." in text
@@ -166,6 +169,7 @@ TINY = Extent(
     lengths={"resident": (0.5,), "native": (5.0,)},
     shared=(0.5,),
     seconds=0.02,
+    shared_seconds=0.02,
     pairs=2,
     pair_cycles=2,
     long_cycles=4,

@@ -120,11 +120,7 @@ def test_word_listed_twice_in_its_dictionary_is_refused() -> None:
 
 
 @settings(deadline=None)
-@given(
-    st.integers(1, 8).flatmap(
-        lambda n: st.tuples(st.just(n), st.lists(st.tuples(*[st.integers(0, n - 1)] * 2)))
-    )
-)
+@given(st.integers(1, 8).flatmap(lambda n: st.tuples(st.just(n), st.lists(st.tuples(*[st.integers(0, n - 1)] * 2)))))
 def test_cycles_are_found_like_networkx_finds_them(graph: tuple[int, list[tuple[int, int]]]) -> None:
     tasks, edges = graph
     ends = np.array(edges, dtype=np.int64).reshape(-1, 2)

@@ -71,9 +71,7 @@ def test_fault(path: str, value: Any, fault: str) -> None:
 def test_tile_outside_of_the_mesh(tile: Any) -> None:
     broken = copy.deepcopy(sound())
     broken["mesh"]["tiles"][1] = tile
-    assert str(first_fault(broken)).startswith(
-        "key mesh.tiles: tile 1 needs an origin and a shape of three zones"
-    )
+    assert str(first_fault(broken)).startswith("key mesh.tiles: tile 1 needs an origin and a shape of three zones")
 
 
 def test_long_values_are_shortened() -> None:

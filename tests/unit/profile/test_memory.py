@@ -51,9 +51,7 @@ def test_a_reader_that_seems_to_end_early_frees_nothing_before_it_is_made() -> N
     0.0 |AAAAAA|
     1.0 |BBB...|
     """
-    record = draw(
-        test_a_reader_that_seems_to_end_early_frees_nothing_before_it_is_made.__doc__, "A>B", output={"A": 8}
-    )
+    record = draw(test_a_reader_that_seems_to_end_early_frees_nothing_before_it_is_made.__doc__, "A>B", output={"A": 8})
     assert list(live_bytes(Profile.from_record(record).frames).total.items()) == [(6, 8), (6, 0)]
 
 

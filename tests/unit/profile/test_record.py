@@ -69,9 +69,7 @@ def test_records_of_workers_are_added_up() -> None:
 def test_wrong_rows_are_named() -> None:
     short = RowBuffer(THREADS)
     short.append((1,))
-    with pytest.raises(
-        ProfileError, match=r"table threads: expected rows of 2 values \(worker, thread\), not \(1,\)"
-    ):
+    with pytest.raises(ProfileError, match=r"table threads: expected rows of 2 values \(worker, thread\), not \(1,\)"):
         short.table()
     wrong = RowBuffer(THREADS)
     wrong.append((0, "first"))
@@ -103,9 +101,7 @@ def test_fields_that_do_not_fit_are_named() -> None:
     with pytest.raises(ProfileError, match=r"field gas: expected float64 values of shape \(2, 26, 1, 1\)"):
         Profile.from_record(record)
     record.fields["gas"] = FinalField(gas.values, gas.components, ("g", "K", "K"))
-    with pytest.raises(
-        ProfileError, match="field gas: expected one unit or one for each of 2 components, not 3"
-    ):
+    with pytest.raises(ProfileError, match="field gas: expected one unit or one for each of 2 components, not 3"):
         Profile.from_record(record)
 
 

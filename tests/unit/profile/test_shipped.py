@@ -22,7 +22,8 @@ def test_both_modes_are_complete_and_end_in_the_same_bits(profiles: tuple[Profil
     lockstep, tasked = profiles
     assert lockstep.manifest["status"] == tasked.manifest["status"] == "complete"
     assert lockstep.manifest["digest"] == tasked.manifest["digest"]
-    assert lockstep.manifest["barriers"] and not tasked.manifest["barriers"]
+    assert lockstep.manifest["barriers"]
+    assert not tasked.manifest["barriers"]
 
 
 def test_every_nanosecond_is_booked_once(profiles: tuple[Profile, Profile]) -> None:

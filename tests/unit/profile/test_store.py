@@ -137,9 +137,7 @@ def test_folder_that_cannot_be_made_is_an_output_error(tmp_path: Path) -> None:
 
 def test_contradictory_record_leaves_no_manifest(tmp_path: Path) -> None:
     record = draw("0.0 |AABB|", "A>B, B>C")
-    with pytest.raises(
-        ProfileError, match=r"edges\.parquet: column consumer, row 1: expected a number of the"
-    ):
+    with pytest.raises(ProfileError, match=r"edges\.parquet: column consumer, row 1: expected a number of the"):
         write_profile(record, tmp_path / "run")
     assert not (tmp_path / "run" / "manifest.json").exists()
     with pytest.raises(ProfileError, match=r"not a complete profile, manifest\.json is missing"):
@@ -326,9 +324,7 @@ def test_damage_is_named(copied: Path, damage: str) -> None:
 
 
 def test_missing_and_foreign_folders(tmp_path: Path) -> None:
-    with pytest.raises(
-        ProfileError, match="nowhere: expected a profile folder, there is none; check the path"
-    ):
+    with pytest.raises(ProfileError, match="nowhere: expected a profile folder, there is none; check the path"):
         read_profile(tmp_path / "nowhere")
     (tmp_path / "data.csv").write_text("1,2\n")
     with pytest.raises(ProfileError, match=r"not a complete profile, manifest\.json is missing"):
@@ -344,9 +340,7 @@ def test_one_wrong_bit_in_one_tile_is_found(copied: Path) -> None:
     manifest = json.loads((copied / "manifest.json").read_text())
     manifest["digests"]["radiation"][5] = "f" * 64
     (copied / "manifest.json").write_text(json.dumps(manifest))
-    with pytest.raises(
-        ProfileError, match=r"field radiation: the values on tile 5 \(1 of 26 tiles differ\)"
-    ) as caught:
+    with pytest.raises(ProfileError, match=r"field radiation: the values on tile 5 \(1 of 26 tiles differ\)") as caught:
         read_profile(copied)
     assert caught.value.details["tiles"] == [5]
 

@@ -126,14 +126,14 @@ def test_a_dispatch_that_takes_much_says_so() -> None:
     busy = Drawn("0.0 |aaAAbbBB|\n1.0 |ccCCddDD|", "A>B, C>D", {"stages": STAGES})
     sentence = about(told(BARRED, busy), "dispatch")
     assert sentence == (
-        "The dispatch itself takes 50 % of the time, at 4 ms a step task. Use larger tiles before drawing conclusions"
+        "The dispatch itself takes 50 % of the time; a step task lasts 4 ms on average. Use larger tiles before drawing conclusions"
         " about barriers."
     )
 
 
 def test_a_dispatch_that_takes_little_is_said_without_advice_or_not_at_all() -> None:
     sentence = about(told(BARRED, REDUCED), "dispatch")
-    assert sentence == "The dispatch itself takes 8 % of the time, at 4.5 ms a step task."
+    assert sentence == "The dispatch itself takes 8 % of the time; a step task lasts 4.5 ms on average."
     assert about(told(BARRED, FREE), "dispatch") == ""
 
 

@@ -89,7 +89,8 @@ class NativeDispatch:
         except (ClusterError, OSError) as error:
             failure = error if isinstance(error, ClusterError) else _lost(error)
             return RunResult({}, {}, RunRecord(), 0.0, 0, failure=_without_frames(failure))
-        return _NativeRun(self, program, options, progress).run(clocks)
+        with self.client.as_current():  # or waits would go to whichever client this process opened last
+            return _NativeRun(self, program, options, progress).run(clocks)
 
 
 class _NativeRun:

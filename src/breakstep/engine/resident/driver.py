@@ -129,7 +129,8 @@ class ResidentDispatch:
         except ClusterError as error:
             return RunResult({}, {}, RunRecord(), 0.0, 0, failure=error.with_traceback(None))
         site = Site(self.client, tuple(self.addresses), self.threads, self.lease, self.checkpoints, resume, self.facts)
-        return Attempt(site, program, options, progress).run()
+        with self.client.as_current():  # or waits would go to whichever client this process opened last
+            return Attempt(site, program, options, progress).run()
 
     def _replace_workers(self) -> None:
         """Wait a while for as many workers as before; go on with those there are."""

@@ -7,7 +7,7 @@ and compared. A fault is a sentence with the facts.
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from typing import TypeAlias
 
 from breakstep.engine.resident.checkpoints import Checkpoint
@@ -99,7 +99,7 @@ def _waits_for_previous(core: Core, node: Node) -> bool:
 
 def _registered(core: Core) -> Counter[int]:
     """How often each waiter stands in a list of those that wait."""
-    lists = [
+    lists: list[Sequence[Waiter]] = [
         *(waiters for state in core._phases.values() for waiters in state.waiting.values()),
         *core._bundle_waiting.values(),
         *core._results.waiting.values(),
