@@ -20,7 +20,7 @@ from breakstep.steps.splitting import Item, Splitting
 from breakstep.steps.step import Step
 from tests.toys import Delayed, Toy
 
-PLANE = Toy((12, 8), cycles=40, dt_lag=1, residual_lag=1)
+PLANE = Toy((12, 8), cycles=30, dt_lag=1, residual_lag=1)
 TILE = (3, 4)
 
 

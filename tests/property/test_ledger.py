@@ -139,7 +139,8 @@ def cause(run: DrawnRun, task: DrawnTask, moment: int) -> str:
             why = kind
         why = why or "neighbour"
         if moment >= source.end:
-            return "transfer" if source.worker != task.worker else "engine"
+            moving = "transfer" if kind == "data" else kind  # a message of a reduction or barrier is its own cost
+            return moving if source.worker != task.worker else "engine"
         if moment >= source.start:
             return {"step": why, "pack": "transfer"}.get(source.kind, "engine")
         task = source

@@ -9,6 +9,7 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
+import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
@@ -128,7 +129,7 @@ def beginning(program: Program, cycle: int, shares: Sequence[Save]) -> Beginning
 
 @settings(DRAWS, max_examples=30)
 @given(st.data(), programs(st.integers(2, 5)))
-def test_every_cycle_due_is_saved_once_by_every_worker(data: st.DataObject, program: Program) -> None:
+def test_each_checkpoint_due_is_saved_once_by_every_worker(data: st.DataObject, program: Program) -> None:
     way = data.draw(ways(program, st.integers(0, 3)))
     cluster = way.cluster(program)
     cluster.run()
@@ -240,6 +241,16 @@ def test_without_barriers_phases_and_cycles_overlap() -> None:
         overlaps["cycles"] += cycles != sorted(cycles)
     assert overlaps["phases"] == 10
     assert overlaps["cycles"] >= 5
+
+
+@pytest.mark.parametrize("seed", range(6))
+def test_everything_may_come_twice_at_any_time(seed: int) -> None:
+    """Also long after it was used and forgotten; the cluster checks that the second time changes nothing."""
+    program = chain(cycles=8)
+    names = program.template.barrier_names() if seed % 2 else ()
+    owners = [random.Random(seed).randrange(3) for _ in range(12)]
+    cluster = SimulatedCluster(program, owners, 4, barriers=names, seed=seed, repeats=1.0, after_each=check)
+    assert_same(cluster, cluster.run(), serial(program))
 
 
 def test_trees_of_three_levels_over_workers_and_tiles() -> None:

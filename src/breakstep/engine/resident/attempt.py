@@ -23,7 +23,7 @@ from breakstep.engine.resident import adapter, remote
 from breakstep.engine.resident.gather import gather_record
 from breakstep.engine.resident.host import Assignment, Saved, Status
 from breakstep.engine.run import Progress, RunOptions, RunResult
-from breakstep.engine.workers import present_clients, present_workers, run_on
+from breakstep.engine.workers import present_clients, present_workers, require_present, run_on
 from breakstep.errors import BreakstepError, ClusterError, DeclarationError
 from breakstep.graph.numbering import Numbering
 from breakstep.graph.tasks import ANYWHERE
@@ -114,7 +114,7 @@ class Attempt:
         except BreakstepError as error:
             result.failure = error
         except (KilledWorker, CancelledError, OSError) as error:
-            result.failure = _lost(error)
+            result.failure = self._lost(error)
         except BaseException:
             self._collect()  # a defect of ours must not leave the workers at work
             raise
@@ -253,6 +253,17 @@ class Attempt:
         assert root is not None
         checkpoint.complete(root, saved.cycle, self.program, report.digests, saved.values, facts, self.name)
 
+    def _lost(self, error: Exception) -> ClusterError:
+        """Dask cancels tasks also when what they ran on has gone."""
+        if isinstance(error, CancelledError) and self.client.status == "running":
+            try:
+                require_present(self.client, self.addresses)
+            except (ClusterError, OSError) as found:
+                error = found
+            else:
+                return ClusterError("the run's tasks on the Dask cluster were cancelled from outside; start it again")
+        return ClusterError(f"the Dask cluster lost part of the run ({error!r}); start the run again", lost=True)
+
     # ---- afterwards ------------------------------------------------------------------------------
 
     def _collect(self) -> None:
@@ -328,16 +339,10 @@ class Attempt:
 def _raise_failed(futures: list[Future]) -> None:
     """The most telling error: one of physics before one of the cluster."""
     failed = [future for future in futures if future.status in ("error", "cancelled", "lost")]
-    errors = [future.exception() if future.status == "error" else CancelledError(future.key) for future in failed]
+    errors = [future.exception() if future.status == "error" else CancelledError(future.status) for future in failed]
     errors.sort(key=lambda error: isinstance(error, ClusterError | CancelledError))
     if errors:
         raise errors[0]
-
-
-def _lost(error: Exception) -> ClusterError:
-    if isinstance(error, CancelledError):
-        return ClusterError("the run's tasks on the Dask cluster were cancelled from outside; start the run again")
-    return ClusterError(f"the Dask cluster lost part of the run ({error!r}); start the run again", lost=True)
 
 
 def _drop_frames(error: BaseException) -> None:
