@@ -87,7 +87,9 @@ def traces(client: Client, patience: float = 5.0) -> dict[str, int]:
         found = dict.fromkeys(CLEAN, 0)
         for worker in client.run(_traces).values():
             handlers = worker.pop("handlers")
-            assert handlers <= 3, "a handler for parcels, one for tiles that move and one for the clock are all there may be"
+            assert handlers <= 3, (
+                "a handler for parcels, one for tiles that move and one for the clock are all there may be"
+            )
             for what, count in worker.items():
                 found[what] += count
         found["futures"] = len(client.futures)
