@@ -122,7 +122,7 @@ def measured(name: str, field: str, kind: Combine = Combine.SUM, lag: int = 0) -
 def repeated(
     name: str, body: Sequence[Step], field: str, kind: Combine = Combine.MAX, lag: int = 0, steady: bool = False
 ) -> Repeat:
-    """A repeat of one to four iterations, as its first measurement decides, or always of three; its lag adds to them."""
+    """A repeat of one to four iterations, as its first measurement decides, or always of three; its lag adds on."""
     finish = steady_verdict if steady else verdict
     until = Reduction(f"{name}_verdict", Measure(field), (Read(field),), kind, finish, lag)
     return Repeat(name, tuple(body), until, is_enough, LONGEST + lag)

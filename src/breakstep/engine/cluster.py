@@ -88,7 +88,8 @@ def _connect(address: str | None, scheduler_file: Path | None) -> Client:
         return Client(address, timeout=CONNECT_SECONDS)
     except (ValueError, TypeError) as error:  # TypeError: a scheme that lacks its library or its certificates
         raise ClusterError(
-            f"{address} is no address of a Dask scheduler ({error}); expected one such as tcp://10.0.0.1:8786, or tls:// with Dask's TLS configuration in place"
+            f"{address} is no address of a Dask scheduler ({error}); expected one such as tcp://10.0.0.1:8786,"
+            " or tls:// with Dask's TLS configuration in place"
         ) from error
     except (OSError, TimeoutError) as error:
         raise ClusterError(

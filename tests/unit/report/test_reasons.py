@@ -126,7 +126,8 @@ def test_a_dispatch_that_takes_much_says_so() -> None:
     busy = Drawn("0.0 |aaAAbbBB|\n1.0 |ccCCddDD|", "A>B, C>D", {"stages": STAGES})
     sentence = about(told(BARRED, busy), "dispatch")
     assert sentence == (
-        "The dispatch itself takes 50 % of the time; a step task lasts 4 ms on average. Use larger tiles before drawing conclusions"
+        "The dispatch itself takes 50 % of the time; a step task lasts 4 ms on average. Use larger tiles before"
+        " drawing conclusions"
         " about barriers."
     )
 

@@ -2,9 +2,8 @@
 
 What is used, on ``distributed`` from 2026.1: ``Worker.handlers`` (a dictionary of message handlers), ``Worker.rpc``
 (a pool of connections to other workers, with the cluster's own encryption), ``Worker.loop.asyncio_loop``,
-``Client.security.get_connection_args`` and the form of a message to a handler, ``distributed.client._wait``. What is
-asked of the scheduler is in ``breakstep.engine.workers``. A test exercises each of them, so that a release that
-changes one is noticed.
+``Client.security.get_connection_args`` and the form of a message to a handler. What is asked of the scheduler is in
+``breakstep.engine.workers``. A test exercises each of them, so that a release that changes one is noticed.
 """
 
 from __future__ import annotations
@@ -13,8 +12,7 @@ import asyncio
 from collections.abc import Awaitable, Callable
 from typing import Any
 
-from distributed import Client, Future, Worker, connect
-from distributed.client import _wait
+from distributed import Client, Worker, connect
 from distributed.protocol import to_serialize
 
 ITEMS = "breakstep_items"
@@ -82,14 +80,3 @@ async def exchange(
         return found
     finally:
         await comm.close()
-
-
-async def some_done(futures: list[Future], seconds: float) -> None:
-    """Until one of them is done or time is up; to be run on their client's loop.
-
-    ``distributed.wait`` asks the client that was made last, which need not be theirs.
-    """
-    try:
-        await _wait(futures, seconds, "FIRST_COMPLETED")
-    except TimeoutError:
-        return

@@ -13,13 +13,13 @@ from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
-from distributed import Client, Future, KilledWorker
+from distributed import Client, Future, KilledWorker, wait
 
 from breakstep.engine import checkpoint
 from breakstep.engine.clocks import ClockReading, drift, read_clocks
 from breakstep.engine.placement import busiest, owners
 from breakstep.engine.program import Program
-from breakstep.engine.resident import adapter, remote
+from breakstep.engine.resident import remote
 from breakstep.engine.resident.gather import gather_record
 from breakstep.engine.resident.host import Assignment, Saved, Status
 from breakstep.engine.run import Progress, RunOptions, RunResult
@@ -211,7 +211,7 @@ class Attempt:
     def _wait(self, futures: list[Future]) -> None:
         """Until all are done; looks in on the workers meanwhile, and raises the most telling error."""
         while pending := [future for future in futures if not future.done()]:
-            self.client.sync(adapter.some_done, pending, POLL_SECONDS)
+            self.client.sync(_some_done, pending, POLL_SECONDS)
             _raise_failed(futures)
             self._look_in()
         _raise_failed(futures)
@@ -334,6 +334,14 @@ class Attempt:
             return read_clocks(self.client, [address])[0]
         except (ClusterError, OSError):
             return None
+
+
+async def _some_done(futures: list[Future], seconds: float) -> None:
+    """Until one of them is done or time is up; runs on the client's loop, whose frames hold nothing afterwards."""
+    try:
+        await wait(futures, timeout=seconds, return_when="FIRST_COMPLETED")
+    except TimeoutError:
+        return
 
 
 def _raise_failed(futures: list[Future]) -> None:
