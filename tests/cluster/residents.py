@@ -60,10 +60,12 @@ def serial(program: Program, root: Path, barriers: tuple[str, ...] = ()) -> Reco
 
 def _traces(dask_worker: Worker) -> dict[str, int]:
     """What of ours there is on a worker; runs in its event loop."""
+    import breakstep
     from breakstep.engine.native import worker as native
     from breakstep.engine.resident import remote
 
-    ours = [task for task in asyncio.all_tasks() if "breakstep" in task.get_coro().cr_code.co_filename]  # type: ignore[union-attr]
+    package = str(Path(breakstep.__file__).parent)  # not the name alone: a checkout's folder may be called so
+    ours = [task for task in asyncio.all_tasks() if task.get_coro().cr_code.co_filename.startswith(package)]  # type: ignore[union-attr]
     return {
         "hosts": len(remote._HOSTS) + len(remote._WATCHES) + len(native._RUNS),
         "coroutines": len(ours),
