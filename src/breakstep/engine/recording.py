@@ -31,6 +31,7 @@ class Recorder:
     record: RunRecord = field(default_factory=RunRecord)
     arrived: list[tuple[Any, ...]] = field(default_factory=list)
     _threads: dict[int, int] = field(default_factory=dict)
+    _listed: set[int] = field(default_factory=set)
     _lock: threading.Lock = field(default_factory=threading.Lock)
 
     def task(
@@ -73,6 +74,7 @@ class Recorder:
         with self._lock:
             if ident not in self._threads:
                 self._threads[ident] = len(self._threads)
+                self._listed.add(self._threads[ident])
                 self.record.threads.append((self.worker, self._threads[ident]))
             return self._threads[ident]
 
@@ -80,6 +82,7 @@ class Recorder:
         """Give the calling thread a number of the caller's choice."""
         with self._lock:
             self._threads[threading.get_ident()] = number
+            self._listed.add(number)
             self.record.threads.append((self.worker, number))
 
     def arrival(
@@ -93,7 +96,8 @@ class Recorder:
 
     def complete_threads(self, threads: int) -> None:
         """Add rows for threads that ran nothing."""
-        for thread in range(len(self._threads), threads):
+        for thread in set(range(threads)) - self._listed:  # not by idents: a thread may get that of one that has ended
+            self._listed.add(thread)
             self.record.threads.append((self.worker, thread))
 
 
