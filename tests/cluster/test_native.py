@@ -67,6 +67,7 @@ CASES = {
     ),
     "longer than the window": Case(replace(LINE, repeats=False, cycles=7), window=2),
     "many tiles": Case(Toy((60,), repeats=False, cycles=6, dt_lag=1), tile=(3,), workers=4, barriers="grow"),
+    "a barrier before the first cycle only": Case(Toy((60,), repeats=False, cycles=12), tile=(10,), barriers="dt"),
 }
 
 

@@ -172,6 +172,9 @@ class _NativeRun:
 
     def _emit(self, phase: Phase) -> None:
         tasks = self.graph.expand(phase, barrier_after=phase.stage.index in self.barriers)
+        for task in tasks:
+            if task.release not in self.keepers:  # released in a cycle long completed: nothing holds it any more
+                task.release = None
         self.batch += tasks
         self.last_steps[phase.cycle] = self.graph.step_tasks(phase.number)
         self.keepers.update({t.number: phase.cycle for t in tasks if t.kind is Kind.RELEASE})
