@@ -44,6 +44,7 @@ def compare(
     session.barriers(barriers)
     check_json(json_file)
     place = choose_place(session.scenario.run, dispatch, workers, threads, address, scheduler_file)
+    session.check_dispatch(place.dispatch)
     folder = output_folder(out, session.scenario.name)
     try:
         with open_dispatch(place) as engine:

@@ -56,8 +56,7 @@ def run(
     session.options = session.saving_every(checkpoint_every)
     check_json(json_file)
     place = choose_place(session.scenario.run, dispatch, workers, threads, address, scheduler_file)
-    if memory_limit and place.dispatch != "resident":
-        raise ScenarioError("a memory limit needs the resident dispatch; leave --memory-limit or --dispatch out")
+    session.check_dispatch(place.dispatch)
     if (checkpoint_every or resume) and place.dispatch != "resident":
         raise ScenarioError("checkpoints need the resident dispatch; leave --dispatch out")
     folder = output_folder(out, session.scenario.name)

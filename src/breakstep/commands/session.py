@@ -92,6 +92,22 @@ class Session:
         """The options with a checkpoint every so many cycles."""
         return replace(self.options, checkpoint_every=cycles or 0)
 
+    def check_dispatch(self, name: str) -> None:
+        """Refuse options that a dispatch would silently ignore, or could not follow.
+
+        Raises
+        ------
+        ScenarioError
+        """
+        if self.options.memory_limit and name != "resident":
+            raise ScenarioError("a memory limit needs the resident dispatch; leave --memory-limit or --dispatch out")
+        needed = {"shared": "resident", "dask": "native"}.get(self.options.placement, name)
+        if name not in ("serial", needed):
+            raise ScenarioError(
+                f"the placement {self.options.placement!r} needs the {needed} dispatch,"
+                f" not {name}; choose another of them"
+            )
+
     def barriers(self, choice: str) -> tuple[str, ...]:
         """Barrier names for ``lockstep``, ``tasked`` or a list."""
         return parse_barriers(self.program.template, choice)

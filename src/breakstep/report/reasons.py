@@ -15,7 +15,7 @@ from breakstep.report.wording import in_mode, listed, unevenness
 
 NOTABLE_SHARE = 0.02  # a cause below 2 % of the core-seconds is not worth a line
 UNEVEN = 1.1  # busiest over mean below which work counts as even: barriers then stretch it by 10 % at most
-MUCH_STOLEN = 0.08  # on a quiet machine kernels lose 1 to 4 % to the system and to Dask's own threads
+MUCH_STOLEN = 0.08  # chosen: what is stolen then outweighs a gain that three pairs could resolve
 MUCH_ENGINE = 0.1  # above this the dispatch hides what the comparison is about
 
 Reason = tuple[float, str]

@@ -126,6 +126,23 @@ def test_checkpoints_need_the_resident_dispatch(breakstep: Shell) -> None:
     nothing_made()
 
 
+@pytest.mark.parametrize("command", ["run", "compare"])
+@pytest.mark.parametrize(
+    ("options", "sentence"),
+    [
+        (("--dispatch", "native", "--memory-limit", "5"), "a memory limit needs the resident dispatch"),
+        (("--dispatch", "native", "--placement", "shared"), "the placement 'shared' needs the resident dispatch"),
+        (("--dispatch", "resident", "--placement", "dask"), "the placement 'dask' needs the native dispatch"),
+    ],
+)
+def test_options_that_a_dispatch_would_ignore(
+    breakstep: Shell, command: str, options: tuple[str, ...], sentence: str
+) -> None:
+    answer = breakstep(command, "shock_tube", *options)
+    assert answer.code == 2
+    assert sentence in answer.err
+
+
 def test_resuming_from_nothing(breakstep: Shell) -> None:
     refused(breakstep("run", "--resume", "gone"), "gone holds no complete checkpoint")
     refused(breakstep("run", "shock_tube", "--resume", "gone"), "leave SCENARIO out")
