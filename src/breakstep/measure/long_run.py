@@ -110,4 +110,4 @@ def record_bytes(profile: Profile) -> float:
 
 def row_bytes(table: str) -> float:
     """Width of a row [bytes]; words count as the numbers by which Arrow keeps them."""
-    return sum(column.type.bit_width for column in LAYOUTS[table].columns) / 8.0
+    return sum(int(column.type.bit_width) for column in LAYOUTS[table].columns) / 8.0

@@ -48,7 +48,7 @@ class RowBuffer:
         self._packing = threading.Lock()
 
     def __len__(self) -> int:
-        return len(self._rows) + sum(table.num_rows for table in self._packed)
+        return len(self._rows) + sum(int(table.num_rows) for table in self._packed)
 
     def append(self, row: tuple[Any, ...]) -> None:
         """Add one row: its values in the order of the layout's columns."""
