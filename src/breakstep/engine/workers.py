@@ -29,14 +29,24 @@ def _ask_clients(dask_scheduler: Scheduler) -> set[str]:
 
 def present_workers(client: Client) -> dict[str, tuple[str, int]]:
     """Name and number of threads of every worker, by address."""
-    found: dict[str, tuple[str, int]] = client.run_on_scheduler(_ask_workers)
+    found: dict[str, tuple[str, int]] = _ask_scheduler(client, _ask_workers)
     return found
 
 
 def present_clients(client: Client) -> set[str]:
     """Names of the clients that are connected to the scheduler, this one among them."""
-    found: set[str] = client.run_on_scheduler(_ask_clients)
+    found: set[str] = _ask_scheduler(client, _ask_clients)
     return found
+
+
+def _ask_scheduler(client: Client, function: Callable[..., Any]) -> Any:
+    try:
+        if client.status == "running":
+            return client.run_on_scheduler(function)
+    except (OSError, AttributeError):  # Dask's client forgets its scheduler when the connection is lost
+        if client.status == "running":
+            raise
+    raise ClusterError("the Dask scheduler has gone, and the run with it")
 
 
 def require_present(client: Client, addresses: Sequence[str]) -> None:

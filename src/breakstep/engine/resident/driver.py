@@ -136,7 +136,7 @@ class ResidentDispatch:
         """Wait a while for as many workers as before; go on with those there are."""
         wanted, deadline = self.workers, time.monotonic() + REPLACEMENT_SECONDS
         found: list[str] = []
-        while len(found) < wanted and time.monotonic() < deadline:
+        while len(found) < wanted and time.monotonic() < deadline and self.client.status == "running":
             try:
                 found, self.threads = known_workers(self.client, None)
             except (ClusterError, OSError):

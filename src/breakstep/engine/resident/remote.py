@@ -81,8 +81,9 @@ async def _watch(address: str, run: str) -> None:
 
 
 def _drop(address: str, run: str, why: str) -> None:
-    host = _HOSTS.pop((address, run))
-    del _WATCHES[address, run]
+    host, watch = _HOSTS.pop((address, run)), _WATCHES.pop((address, run))
+    if watch is not asyncio.current_task():
+        watch.cancel()
     host.stop(ClusterError(f"the run was given up: {why}", lost=True))
     host.close()
 
