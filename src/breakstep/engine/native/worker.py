@@ -10,6 +10,7 @@ import time
 from dataclasses import dataclass
 from typing import Any
 
+from breakstep.engine.allocator import keep_memory, release_memory
 from breakstep.engine.execute import Inputs, Interval, Site, execute
 from breakstep.engine.native import payload as wire
 from breakstep.engine.native.payload import Payload
@@ -82,11 +83,13 @@ class CombineSpec:
 
 def begin(run: str, program: Program, worker: int, zero: int, options: RunOptions) -> None:
     """Tell this worker of a run and of its clock's reading at the run's origin."""
+    keep_memory(run)
     _RUNS[run] = _Run(program, Recorder(worker, zero), options)
 
 
 def collect(run: str, threads: int) -> dict[str, Any]:
     """Give up the record of a run and forget the run."""
+    release_memory(run)
     state = _RUNS.pop(run, None)
     if state is None:
         return {"worker": -1, "tables": RunRecord().tables(), "arrivals": [], "zero": 0}

@@ -13,6 +13,7 @@ from typing import Any
 
 from distributed import Worker, get_worker, secede
 
+from breakstep.engine.allocator import keep_memory, release_memory
 from breakstep.engine.resident import adapter
 from breakstep.engine.resident.host import Assignment, Host, Status
 from breakstep.engine.resident.wire import Parcel
@@ -62,6 +63,7 @@ def begin(assignment: Assignment, clients: Collection[str], dask_worker: Worker)
         adapter.listen(dask_worker, _giver(dask_worker.address), adapter.TILES)
     key = (dask_worker.address, assignment.run)
     earlier = None if assignment.previous is None else _HOSTS.get((dask_worker.address, assignment.previous))
+    keep_memory("/".join(key))
     _HOSTS[key] = Host(assignment, dask_worker, earlier)
     _WATCHES[key] = adapter.event_loop(dask_worker).create_task(_watch(*key))
 
@@ -86,6 +88,7 @@ def _drop(address: str, run: str, why: str) -> None:
         watch.cancel()
     host.stop(ClusterError(f"the run was given up: {why}", lost=True))
     host.close()
+    release_memory(f"{address}/{run}")
 
 
 def prepare(run: str) -> None:
@@ -144,6 +147,7 @@ async def collect(run: str, dask_worker: Worker) -> dict[str, Any]:
     while host.working and time.monotonic() < deadline:
         await asyncio.sleep(0.01)
     host.close()
+    release_memory("/".join(key))
     return _record(host)
 
 
