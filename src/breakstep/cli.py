@@ -61,9 +61,11 @@ def main() -> None:
 
 
 def _tell(error: BreakstepError) -> None:
-    """The message, each of its lines a sentence of its own, and what is left of the run."""
+    """The message, each of its lines a sentence of its own; the lines of the user's code; what is left of the run."""
     for line in str(error).splitlines():
         click.echo(f"breakstep: {line}", err=True)
+    for line in str(error.details.get("traceback", "")).splitlines():
+        click.echo(f"    {line}", err=True)
     if "profile" in error.details:
         click.echo(f"breakstep: the profile so far is in {error.details['profile']}", err=True)
     if "remedy" in error.details:

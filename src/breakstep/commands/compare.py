@@ -48,7 +48,7 @@ def compare(
     folder = output_folder(out, session.scenario.name)
     try:
         with open_dispatch(place) as engine:
-            comparison = _compare(session, engine, barriers, folder, pairs)
+            comparison = compare_pairs(session, engine, barriers, folder, pairs)
     except Stopped as stopped:
         click.echo(f"breakstep: stopped; the profile so far is in {stopped.folder}", err=True)
         return 130
@@ -59,8 +59,14 @@ def compare(
     return 0 if comparison.identical else 1
 
 
-def _compare(session: Session, engine: Dispatch, barriers: str, folder: Path, pairs: int) -> Comparison:
-    """Pairs in alternating order, so that a machine that drifts favours neither side."""
+def compare_pairs(session: Session, engine: Dispatch, barriers: str, folder: Path, pairs: int) -> Comparison:
+    """Pairs in alternating order, so that a machine that drifts favours neither side.
+
+    Raises
+    ------
+    Stopped, BreakstepError
+        As :meth:`Session.execute`.
+    """
     left: list[Profile] = []
     right: list[Profile] = []
     for pair in range(1, pairs + 1):

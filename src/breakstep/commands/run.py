@@ -15,6 +15,7 @@ from breakstep.commands.shared import (
     output_folder,
     reading,
     run_options,
+    tell_remarks,
     write_json,
 )
 from breakstep.engine.checkpoint import checkpoints, last_checkpoint, read_manifest
@@ -54,6 +55,7 @@ def run(
     """Run SCENARIO once and print where its core-seconds went."""
     resumed, session, choice = _begin(scenario, overrides, resume, barriers, placement, memory_limit)
     session.options = session.saving_every(checkpoint_every)
+    tell_remarks(session.scenario.remarks)
     check_json(json_file)
     place = choose_place(session.scenario.run, dispatch, workers, threads, address, scheduler_file)
     session.check_dispatch(place.dispatch)

@@ -17,7 +17,7 @@ from breakstep.engine.warm import warm_up
 from breakstep.errors import BreakstepError, ScenarioError
 from breakstep.graph.stages import parse_barriers
 from breakstep.profile.run import Profile
-from breakstep.scenario.load import Scenario, load_scenario, scenario_from
+from breakstep.scenario.load import AnyScenario, any_scenario_from, load_scenario
 
 
 class Stopped(Exception):  # noqa: N818  (nothing went wrong)
@@ -34,7 +34,7 @@ class Session:
 
     Attributes
     ----------
-    scenario : Scenario
+    scenario : Scenario or CodeScenario
     program : Program
     options : RunOptions
         Without barriers; :meth:`execute` adds them.
@@ -42,7 +42,7 @@ class Session:
         Whether this process has its kernels.
     """
 
-    scenario: Scenario
+    scenario: AnyScenario
     program: Program
     options: RunOptions
     is_warm: bool = False
@@ -58,10 +58,11 @@ class Session:
         """
         with reading(name, ScenarioError):
             scenario = load_scenario(name, overrides)
-        return cls._of(scenario, placement, memory_limit)
+        return cls.of(scenario, placement, memory_limit)
 
     @classmethod
-    def _of(cls, scenario: Scenario, placement: str | None, memory_limit: int) -> Session:
+    def of(cls, scenario: AnyScenario, placement: str | None = None, memory_limit: int = 0) -> Session:
+        """A scenario that has been loaded already."""
         program = Program(scenario.problem(), tuple(scenario.tile), scenario.run.fuse)
         options = RunOptions(
             placement=placement or scenario.run.placement, window=scenario.run.window, memory_limit=memory_limit
@@ -85,8 +86,8 @@ class Session:
             All its faults together, overrides included.
         """
         tables = facts.get("resolved", {}) if isinstance(facts, Mapping) else {}
-        scenario = scenario_from(tables, source=str(source), overrides=overrides)
-        return cls._of(scenario, placement, memory_limit)
+        scenario = any_scenario_from(tables, source=str(source), overrides=overrides)
+        return cls.of(scenario, placement, memory_limit)
 
     def saving_every(self, cycles: int | None) -> RunOptions:
         """The options with a checkpoint every so many cycles."""

@@ -5,7 +5,7 @@ from __future__ import annotations
 import contextlib
 import json
 import time
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, TypeVar
@@ -22,7 +22,7 @@ from breakstep.engine.resident import ResidentDispatch
 from breakstep.engine.run import Dispatch
 from breakstep.engine.serial import SerialDispatch
 from breakstep.errors import BreakstepError, OutputError
-from breakstep.scenario.sections import RunSection
+from breakstep.scenario.sections import PlaceSection
 
 _F = TypeVar("_F", bound=Callable[..., Any])
 
@@ -66,9 +66,14 @@ class Place:
     resume: Path | None = None
     facts: Mapping[str, Any] = field(default_factory=dict)
 
+    @property
+    def is_local(self) -> bool:
+        """Whether workers are started on this machine, rather than found on a cluster of the user's."""
+        return self.address is None and self.scheduler_file is None
+
 
 def choose_place(
-    settings: RunSection,
+    settings: PlaceSection,
     dispatch: str | None,
     workers: int | None,
     threads: int | None,
@@ -108,7 +113,7 @@ def open_dispatch(place: Place) -> Iterator[Dispatch]:
     if place.dispatch == "serial":
         yield SerialDispatch()
         return
-    if place.address is not None or place.scheduler_file is not None:
+    if not place.is_local:
         cluster = existing_cluster(place.address, place.scheduler_file)
     else:
         assert place.workers is not None
@@ -139,6 +144,12 @@ def progress_bar(title: str, cycles: int) -> Iterator[Callable[[int], None]]:
     with Progress(*columns, console=console, transient=True) as progress:
         task = progress.add_task(title, total=cycles)
         yield lambda cycle: progress.update(task, completed=cycle)
+
+
+def tell_remarks(remarks: Iterable[str]) -> None:
+    """What the user should know before a run begins, on standard error."""
+    for remark in remarks:
+        click.echo(f"breakstep: {remark}", err=True)
 
 
 def output_folder(out: Path | None, name: str) -> Path:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 
@@ -13,6 +14,7 @@ from breakstep.mesh.halo import Rim
 from breakstep.mesh.mesh import Triple
 from breakstep.mesh.tiling import Tiling
 from breakstep.steps.calling import call_user
+from breakstep.steps.modules import Source
 from breakstep.steps.problem import Problem
 from breakstep.steps.reduction import Reduction, finish_rows
 from breakstep.steps.splitting import Repeat
@@ -50,8 +52,9 @@ class Program:
         self._rims: dict[tuple[int, Read, Triple], Rim] = {}
         self._stops = {repeat.name: repeat.stop for repeat in repeats}
 
-    def __reduce__(self) -> tuple[type[Program], tuple[Problem, tuple[int, ...], bool]]:
-        return Program, (self.problem, self.tile_shape, self.fuse)
+    def __reduce__(self) -> tuple[Any, tuple[Any, ...]]:
+        # The sources come first: what follows can be unpickled only where their modules are loaded.
+        return _unpickled, (self.problem.sources, self.problem, self.tile_shape, self.fuse)
 
     @property
     def state_fields(self) -> tuple[str, ...]:
@@ -109,3 +112,8 @@ class Program:
     def reduction(self, name: str) -> Reduction:
         """A reduction by name."""
         return self._reductions[name]
+
+
+def _unpickled(sources: tuple[Source, ...], problem: Problem, tile_shape: tuple[int, ...], fuse: bool) -> Program:
+    del sources
+    return Program(problem, tile_shape, fuse)

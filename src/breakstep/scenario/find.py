@@ -50,7 +50,11 @@ def find(name_or_path: str) -> Path:
     if name_or_path in known:
         return known[name_or_path]
     hint = did_you_mean(name_or_path, known)
-    raise refusal(f"no scenario is named {name_or_path!r}{hint} (a file is given by a path that ends in {SUFFIX})")
+    if Path(f"{name_or_path}.py").is_file():
+        hint = f"; did you mean {name_or_path}.py?"
+    raise refusal(
+        f"no scenario is named {name_or_path!r}{hint} (a file is given by a path that ends in {SUFFIX} or .py)"
+    )
 
 
 def refusal(*faults: str) -> ScenarioError:

@@ -7,12 +7,13 @@ from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
-from typing import Any
+from typing import Any, TypeAlias
 
 from pydantic import ValidationError
 
 from breakstep.errors import DeclarationError, ScenarioError, TilingError
 from breakstep.scenario.build import build_problem
+from breakstep.scenario.code import CodeScenario, code_scenario, code_target
 from breakstep.scenario.faults import Fault, expected
 from breakstep.scenario.find import find, parse, refusal
 from breakstep.scenario.model import ScenarioFile
@@ -75,14 +76,23 @@ class Scenario:
         """Every key with its value, defaults filled in, as JSON can hold it; loads as the same scenario."""
         return self.file.model_dump(mode="json")
 
+    @property
+    def remarks(self) -> tuple[str, ...]:
+        """What the user should know before a run begins."""
+        return ()
 
-def load_scenario(name_or_path: str | Path, overrides: Sequence[str] = ()) -> Scenario:
+
+AnyScenario: TypeAlias = Scenario | CodeScenario
+
+
+def load_scenario(name_or_path: str | Path, overrides: Sequence[str] = ()) -> AnyScenario:
     """Load a scenario.
 
     Parameters
     ----------
     name_or_path : str or Path
-        The name of a scenario that comes with the package, or the path of a file.
+        The name of a scenario that comes with the package, the path of a TOML file, or Python code of the user's:
+        ``file.py``, ``file.py:name``, ``package.module`` or ``package.module:name``.
     overrides : sequence of str
         ``key.path=value``, applied before anything is checked.
 
@@ -91,12 +101,30 @@ def load_scenario(name_or_path: str | Path, overrides: Sequence[str] = ()) -> Sc
     ScenarioError
         With every fault found, one sentence each, in ``details["faults"]``.
     """
+    code = code_target(str(name_or_path))
+    if code is not None:
+        return code_scenario({"code": code}, source=str(name_or_path), overrides=overrides)
     path = find(str(name_or_path))
-    return scenario_from(parse(path), source=path.name, overrides=overrides)
+    return any_scenario_from(parse(path), source=path.name, overrides=overrides, folder=path.parent)
+
+
+def any_scenario_from(
+    tables: Mapping[str, Any], *, source: str, overrides: Sequence[str] = (), folder: Path | None = None
+) -> AnyScenario:
+    """A scenario, made by code or not, from tables that are already parsed; raises as :func:`load_scenario`.
+
+    Parameters
+    ----------
+    folder : Path, optional
+        From where paths in the tables count; the current one by default.
+    """
+    if "code" in tables:
+        return code_scenario(tables, source=source, overrides=overrides, folder=folder)
+    return scenario_from(tables, source=source, overrides=overrides)
 
 
 def scenario_from(tables: Mapping[str, Any], *, source: str, overrides: Sequence[str] = ()) -> Scenario:
-    """A scenario from tables that are already parsed; raises as :func:`load_scenario`."""
+    """A scenario without code from tables that are already parsed; raises as :func:`load_scenario`."""
     changed = copy.deepcopy(dict(tables))
     apply_switches(changed)
     faults, paths = apply_overrides(changed, overrides)
@@ -138,4 +166,4 @@ def _check_problem(scenario: Scenario) -> None:
         raise refusal(f"{scenario.source}: {error.message}") from error
 
 
-__all__ = ["Scenario", "ScenarioError", "check", "load_scenario", "scenario_from"]
+__all__ = ["AnyScenario", "Scenario", "ScenarioError", "any_scenario_from", "check", "load_scenario", "scenario_from"]

@@ -25,7 +25,9 @@ class _OverrideError(Exception):
         self.fault = Fault(key, text)
 
 
-def apply_overrides(tables: dict[str, Any], overrides: Sequence[str]) -> tuple[list[Fault], set[str]]:
+def apply_overrides(
+    tables: dict[str, Any], overrides: Sequence[str], model: Model = ScenarioFile
+) -> tuple[list[Fault], set[str]]:
     """Change tables in place.
 
     Parameters
@@ -33,6 +35,8 @@ def apply_overrides(tables: dict[str, Any], overrides: Sequence[str]) -> tuple[l
     overrides : sequence of str
         ``key.path=value``; the value as TOML, where a bare word stands for text, and a number in the path
         for an entry of a list.
+    model : type of Section
+        What the tables as a whole may hold.
 
     Returns
     -------
@@ -49,7 +53,7 @@ def apply_overrides(tables: dict[str, Any], overrides: Sequence[str]) -> tuple[l
         try:
             if not equals or not path:
                 raise _OverrideError(override, "expected key.path=value, such as run.cycles=10")
-            _check([ScenarioFile], tables, path.split("."), "")
+            _check([model], tables, path.split("."), "")
             _put(tables, path, _value(text.strip(), path))
         except _OverrideError as error:
             faults.append(error.fault)

@@ -73,8 +73,8 @@ class MeshSection(Section):
     edges: EdgesSection = Field(default=EdgesSection(), description="what lies beyond each edge")
 
 
-class RunSection(Section):
-    """``[run]``: how long, in which order of steps, and on what."""
+class CourseSection(Section):
+    """The part of ``[run]`` that says how long, and in which order of steps."""
 
     cycles: Count = Field(description="most cycles to run")
     end_time: Positive | None = Field(default=None, description="time at which the run ends, if earlier [s]")
@@ -82,6 +82,11 @@ class RunSection(Section):
         default="alternating",
         description="order of the steps: always forward, there and back, or forward and back in turn",
     )
+
+
+class PlaceSection(Section):
+    """The part of ``[run]`` that says on what a scenario runs; the answer does not depend on it."""
+
     workers: Annotated[int, Field(ge=1, le=4096)] = Field(default=2, description="worker processes")
     threads: Annotated[int, Field(ge=1, le=256)] = Field(default=1, description="threads of each worker")
     placement: Literal["blocks", "curve", "cyclic", "balanced", "shared", "dask"] = Field(
@@ -92,6 +97,10 @@ class RunSection(Section):
     dispatch: Literal["resident", "native", "serial"] = Field(
         default="resident", description="what carries out the tasks"
     )
+
+
+class RunSection(PlaceSection, CourseSection):
+    """``[run]``: how long, in which order of steps, and on what."""
 
 
 class TimeStepSection(Section):

@@ -41,8 +41,9 @@ def _failed(error: Exception, where: str) -> KernelError:
     frames = traceback.extract_tb(below)
     place = f" ({frames[0].filename}, line {frames[0].lineno}, in {frames[0].name})" if frames else ""
     text = "".join(traceback.format_exception(type(error), error, below))
+    said = (str(error).splitlines() or [""])[0]  # a compiler's may have hundreds; the traceback has them all
     return KernelError(
-        f"{where}: the user's function raised {type(error).__name__}: {error}{place}; {_advice(error)}",
+        f"{where}: the user's function raised {type(error).__name__}: {said}{place}; {_advice(error)}",
         traceback=text,
     )
 

@@ -10,6 +10,7 @@ from breakstep.errors import DeclarationError
 from breakstep.mesh.fields import Field
 from breakstep.mesh.mesh import AXIS_NAMES, Edge, Mesh
 from breakstep.mesh.tiling import Tile, Tiling
+from breakstep.steps.modules import Source
 from breakstep.steps.splitting import Splitting
 from breakstep.steps.step import Array
 
@@ -33,6 +34,8 @@ class Problem:
         Most cycles to run.
     ended : callable, optional
         ``ended(first reduction's value) -> bool``: stop before the cycle that would use that value.
+    sources : tuple of Source
+        Files that its functions were loaded from, so that workers can load them too; the command line adds them.
 
     Raises
     ------
@@ -48,6 +51,7 @@ class Problem:
     initial: Initial
     cycles: int
     ended: Callable[[Array], bool] | None = None
+    sources: tuple[Source, ...] = ()
 
     def __post_init__(self) -> None:
         names = [field.name for field in self.fields]
