@@ -13,7 +13,7 @@ import click
 
 from breakstep.errors import BreakstepError
 
-COMMANDS = ("compare", "run", "ledger", "kernels", "selfcheck")
+COMMANDS = ("compare", "run", "ledger", "why", "kernels", "selfcheck")
 
 
 class Commands(click.Group):

@@ -68,3 +68,7 @@ class ProfileError(BreakstepError):
 
 class PairsError(BreakstepError):
     """Repeated runs cannot be compared pair by pair."""
+
+
+class ChoiceError(BreakstepError):
+    """Something was asked about that a recorded run does not have."""

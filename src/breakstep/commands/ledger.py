@@ -9,8 +9,8 @@ import click
 from breakstep.commands.shared import check_json, reading, write_json
 from breakstep.errors import ProfileError
 from breakstep.profile.store import read_profile
+from breakstep.report.account import ledger_lines
 from breakstep.report.comparison import run_figures
-from breakstep.report.terminal import ledger_lines
 
 
 @click.command()

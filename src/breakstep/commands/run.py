@@ -20,8 +20,8 @@ from breakstep.commands.shared import (
 )
 from breakstep.engine.checkpoint import checkpoints, last_checkpoint, read_manifest
 from breakstep.errors import BreakstepError, CheckpointError, ScenarioError
+from breakstep.report.account import ledger_lines
 from breakstep.report.comparison import run_figures
-from breakstep.report.terminal import ledger_lines
 
 CHECKPOINTS = "checkpoints"  # folder below a run's output folder
 

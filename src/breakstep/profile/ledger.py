@@ -2,8 +2,9 @@
 
 From the first task's start to the last task's end, each thread's time is cut up in whole nanoseconds:
 
-- inside a task: ``compute`` in kernels; ``transfer`` while ghost zones are put together and rims are cut;
-  ``engine`` for the rest, and for all of a task that only serves a reduction or a barrier;
+- inside a task: in kernels ``compute`` while the thread had a processor, ``stolen`` while it had none; ``transfer``
+  while ghost zones are put together and rims are cut; ``engine`` for the rest, and for all of a task that only serves
+  a reduction or a barrier;
 - between tasks: what :mod:`breakstep.profile.causes` finds;
 - after the thread's last task, or without any: ``unemployed``.
 
@@ -14,7 +15,9 @@ tasks overlap on one thread, or intervals overlap or reach out of their task: th
 
 from __future__ import annotations
 
+from collections.abc import Collection
 from dataclasses import dataclass, field
+from functools import cached_property
 from typing import Final
 
 import numpy as np
@@ -29,20 +32,21 @@ from breakstep.profile.causes import (
     explain_all,
     explain_one,
 )
+from breakstep.profile.chain import Chain, chain_of
 from breakstep.profile.compiling import compiled_loop
+from breakstep.profile.factors import Factors, factors_of
 from breakstep.profile.frames import (
     Frames,
     Integers,
-    codes_of,
     integers,
     positions,
     sums_by,
     thread_keys,
 )
-from breakstep.profile.schema import INTERVAL_KINDS
+from breakstep.profile.inside import Inside, inside_tasks
 from breakstep.profile.timeline import timeline_of
 
-ACCOUNTS: Final = ("compute", "neighbour", "reduction", "barrier", "transfer", "engine", "unemployed")
+ACCOUNTS: Final = ("compute", "stolen", "neighbour", "reduction", "barrier", "transfer", "engine", "unemployed")
 
 
 @dataclass(frozen=True)
@@ -72,6 +76,8 @@ class Ledger:
     waits_by_stage: pd.DataFrame
     _run: Timeline = field(repr=False)
     _numbers: Integers = field(repr=False)
+    _frames: Frames = field(repr=False)
+    _inside: Inside = field(repr=False)
 
     @property
     def span_ns(self) -> int:
@@ -98,6 +104,16 @@ class Ledger:
         """How far the accounts miss threads times span, as a fraction of it."""
         missed = abs(sum(self.accounts_ns.values()) - self.available_ns)
         return missed / self.available_ns if self.available_ns else 0.0
+
+    @cached_property
+    def chain(self) -> Chain:
+        """The realised critical chain: what the run's span was spent on."""
+        return chain_of(self._frames, self._run, self._inside)
+
+    @cached_property
+    def factors(self) -> Factors:
+        """Published efficiency factors, to be read beside the accounts."""
+        return factors_of(self._frames, self._run, self._inside)
 
     def explain(self, task: int) -> pd.DataFrame:
         """Why the thread was idle before it took up a task.
@@ -126,16 +142,23 @@ class Ledger:
         return frame.sort_values("end_ns", ascending=False, kind="stable", ignore_index=True)
 
 
-def ledger_of(frames: Frames) -> Ledger:
-    """Make the accounts of a run whose tables are sound."""
-    run = timeline_of(frames)
+def ledger_of(frames: Frames, timed: Collection[str] = ()) -> Ledger:
+    """Make the accounts of a run whose tables are sound.
+
+    Parameters
+    ----------
+    timed : collection of str
+        Steps that wait for a set time instead of computing; they have no use for a processor, so none of their
+        time is stolen.
+    """
+    run, inside = timeline_of(frames), inside_tasks(frames, timed)
     first, last = (int(run.start.min()), int(run.end.max())) if len(run.start) else (0, 0)
     by_thread = _empty_accounts(frames)
-    _book_tasks(by_thread, frames, run)
+    _book_tasks(by_thread, inside, run)
     gaps, waits = _book_gaps(by_thread, frames, run, first)
     by_thread["unemployed"] = _unemployed(run.blocks, len(by_thread), first, last)
     numbers = integers(frames["tasks"], "task")
-    return Ledger(first, last, len(by_thread), by_thread, gaps, waits, run, numbers)
+    return Ledger(first, last, len(by_thread), by_thread, gaps, waits, run, numbers, frames, inside)
 
 
 def _empty_accounts(frames: Frames) -> pd.DataFrame:
@@ -144,19 +167,16 @@ def _empty_accounts(frames: Frames) -> pd.DataFrame:
     return pd.DataFrame(0, index=index, columns=list(ACCOUNTS), dtype="int64")
 
 
-def _book_tasks(by_thread: pd.DataFrame, frames: Frames, run: Timeline) -> None:
+def _book_tasks(by_thread: pd.DataFrame, inside: Inside, run: Timeline) -> None:
     """Book what lies inside tasks."""
-    intervals = frames["intervals"]
-    task = positions(integers(frames["tasks"], "task"), integers(intervals, "task"))
-    start, end = integers(intervals, "start_ns"), integers(intervals, "end_ns")
-    kernel = codes_of(intervals, "what", INTERVAL_KINDS) == INTERVAL_KINDS.index("kernel")
-    thread, threads = run.thread[task], len(by_thread)
-    by_thread["compute"] += sums_by(thread[kernel], (end - start)[kernel], threads)
-    by_thread["transfer"] += sums_by(thread[~kernel], (end - start)[~kernel], threads)
+    thread, threads, kernel = run.thread[inside.task], len(by_thread), inside.kernel
+    length = inside.end - inside.start
+    by_thread["compute"] += sums_by(thread[kernel], (length - inside.stolen)[kernel], threads)
+    by_thread["stolen"] += sums_by(thread, inside.stolen, threads)
+    by_thread["transfer"] += sums_by(thread[~kernel], length[~kernel], threads)
     # Booked as the part of each task that no interval covers. Intervals that overlap or reach out of their
     # task therefore book more than the task lasted, which the closure shows.
-    order = np.lexsort((start, task))
-    covered = _covered(task[order], start[order], end[order], run.start, run.end)
+    covered = _covered(inside.task, inside.start, inside.end, run.start, run.end)
     by_thread["engine"] += sums_by(run.thread, run.end - run.start - covered, threads)
 
 

@@ -5,9 +5,10 @@ Accounts are made when they are first asked for, and kept.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from functools import cached_property
 from pathlib import Path
-from typing import cast
+from typing import Any, cast
 
 import pandas as pd
 import xarray as xr
@@ -22,6 +23,7 @@ from breakstep.profile.memory import LiveBytes, live_bytes
 from breakstep.profile.record import RunRecord
 from breakstep.profile.settle import settled
 from breakstep.profile.traffic import Traffic, traffic_of
+from breakstep.profile.why import Why, why
 from breakstep.profile.work import counters_by_step, imbalance_by_step, work_by_step
 
 
@@ -99,10 +101,38 @@ class Profile:
         """Tiles of the mesh."""
         return len(self.manifest["mesh"]["tiles"])
 
+    @property
+    def timed_steps(self) -> tuple[str, ...]:
+        """Steps that waited for a set time instead of computing, as the manifest names them."""
+        return tuple(cast(dict[str, Any], self.manifest).get("timed_steps", ()))
+
     @cached_property
     def ledger(self) -> Ledger:
         """Every core-second in one account."""
-        return ledger_of(self.frames)
+        return ledger_of(self.frames, self.timed_steps)
+
+    def why(self, tile: int | Sequence[int] | None = None, cycle: int | None = None, step: str | None = None) -> Why:
+        """Why a thread stood idle: the longest wait, or the longest before the tasks named.
+
+        Parameters
+        ----------
+        tile : int or sequence of int, optional
+            Its number, or its place in the grid of tiles, counted from 0.
+        cycle : int, optional
+        step : str, optional
+
+        Raises
+        ------
+        ChoiceError
+            The run has no such tile, cycle, step or task.
+        """
+        tiles = self.manifest["mesh"]["tiles"]
+        return why(self.ledger, self.frames, tiles, self.title, tile=tile, cycle=cycle, step=step)
+
+    @property
+    def title(self) -> str:
+        """Name of the scenario, and mode."""
+        return f"{self.manifest['scenario'].get('name', '?')}, {self.manifest['mode']}"
 
     @cached_property
     def work(self) -> pd.DataFrame:

@@ -15,7 +15,7 @@ from typing import Any
 
 import pandas as pd
 
-from breakstep.profile.ledger import ACCOUNTS
+from breakstep.profile.ledger import ACCOUNTS, Ledger
 from breakstep.profile.run import Profile
 from breakstep.profile.statistics import Gain, gain_of_pairs
 
@@ -99,10 +99,14 @@ def run_figures(profile: Profile) -> dict[str, Any]:
         "cycles": profile.manifest["cycles"],
         "core_seconds": {account: ledger.accounts_seconds[account] for account in ACCOUNTS},
         "closure_error": ledger.closure_error,
+        "efficiency": _efficiency(ledger),
+        "critical_chain": _chain(ledger),
+        "clock": profile.manifest["clock"],
         "bytes_moved": profile.traffic.total_bytes,
         "bytes_by_stage": profile.traffic.by_stage,
         "bytes_by_workers": {f"{a}->{b}": n for (a, b), n in profile.traffic.by_workers.items()},
         "peak_bytes": profile.live.peak_bytes,
+        "peak_bytes_by_kind": profile.live.peak_by_kind,
         "compute_by_step": profile.work["compute_seconds"].to_dict(),
         "imbalance_by_step": imbalance.to_dict(orient="index"),
         "counters": {
@@ -116,6 +120,19 @@ def run_figures(profile: Profile) -> dict[str, Any]:
         "message": profile.manifest["message"],
     }
     return {key: _without_nan(value) for key, value in figures.items()}
+
+
+def _efficiency(ledger: Ledger) -> dict[str, float]:
+    """The published factors, and the whole numbers that they are made of."""
+    names = ("load_balance", "serialisation", "transfer", "communication", "parallel")
+    return {**vars(ledger.factors), **{name: getattr(ledger.factors, name) for name in names}}
+
+
+def _chain(ledger: Ledger) -> dict[str, Any]:
+    """The critical chain's sums [s]; together they are the run's time."""
+    accounts = {account: ns * 1e-9 for account, ns in ledger.chain.accounts_ns.items()}
+    by_step = (ledger.chain.by_step * 1e-9).to_dict(orient="index")
+    return {"tasks": len(ledger.chain.tasks), "core_seconds": accounts, "by_step": by_step}
 
 
 def _without_nan(value: Any) -> Any:

@@ -3,10 +3,15 @@
 from __future__ import annotations
 
 import math
+import re
+import textwrap
 from collections.abc import Sequence
 
+from breakstep.profile.ledger import Ledger
 from breakstep.profile.run import Profile
 
+WIDTH = 80
+UNIT = re.compile(r"(\d) (?=(?:%|[kMGT]?B|m?s|times)(?:\W|$))")
 FULL_CHOICES = ("lockstep", "tasked")
 
 
@@ -62,3 +67,16 @@ def in_mode(profile: Profile) -> str:
     """The run's choice of barriers as an adverb."""
     mode = profile.manifest["mode"]
     return {"lockstep": "in lockstep", "tasked": "tasked"}.get(mode) or f"with {barriers_of(profile)}"
+
+
+def digits_of(*ledgers: Ledger) -> int:
+    """Decimals that leave the largest number of core-seconds with about four digits."""
+    largest = max(ledger.available_ns for ledger in ledgers) / 1e9
+    return 2 if largest >= 10.0 else 3 if largest >= 1.0 else 4
+
+
+def wrapped(text: str, bullet: bool = False) -> list[str]:
+    """Lines of at most WIDTH; a number stays with its unit."""
+    joined = UNIT.sub("\\1\u00a0", text)
+    lines = textwrap.wrap(joined, WIDTH, subsequent_indent="  " if bullet else "", break_on_hyphens=False)
+    return [line.replace("\u00a0", " ") for line in lines]

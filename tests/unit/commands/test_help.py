@@ -19,6 +19,7 @@ OPTIONS = {
     "run": (*SHARED, "--barriers", "--checkpoint-every", "--resume"),
     "compare": (*SHARED, "--pairs", "--barriers"),
     "ledger": ("--json",),
+    "why": ("--tile", "--cycle", "--step", "--json"),
     "kernels": ("--json", "--quick"),
 }
 

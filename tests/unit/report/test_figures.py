@@ -34,7 +34,10 @@ DOCUMENTED_OF_A_RUN = {
     "imbalance_by_step",
     "digest",
 }
-BESIDE_OF_A_RUN = {"bytes_by_stage", "bytes_by_workers", "counters", "barriers", "status", "message"}
+BESIDE_OF_A_RUN = {
+    *("bytes_by_stage", "bytes_by_workers", "counters", "barriers", "status", "message"),
+    *("efficiency", "critical_chain", "clock", "peak_bytes_by_kind"),
+}
 
 
 def through_json(figures: Any) -> Any:

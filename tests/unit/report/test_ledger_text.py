@@ -5,7 +5,8 @@ from __future__ import annotations
 import re
 
 from breakstep.profile.run import Profile
-from breakstep.report.terminal import TOP_LINKS, WAITING, ledger_lines
+from breakstep.profile.words import LABELS
+from breakstep.report.account import TOP_LINKS, ledger_lines
 from tests.unit.profile.sketch import draw, manifest
 from tests.unit.report.made import BARRED, FREE
 
@@ -14,10 +15,10 @@ def test_one_run() -> None:
     lines = ledger_lines(FREE.profile())
     assert lines[0] == "drawn, tasked: 12 ms on 2 workers with 2 threads, 1 cycle, 4 tasks, drawn"
     assert lines[1] == "dispatch, complete"
-    shares = {line[:24].strip(): line.split()[-2] for line in lines[4:11]}
-    assert shares == dict.fromkeys(["compute", *WAITING.values()], "0.0") | {"compute": "75.0", "out of work": "25.0"}
-    assert "= threads x time" in lines[11]
-    assert "off by 0.0000 %" in lines[11]
+    shares = {line[:24].strip(): line.split()[-2] for line in lines[4:12]}
+    assert shares == dict.fromkeys(LABELS.values(), "0.0") | {"compute": "75.0", "out of work": "25.0"}
+    assert "= threads x time" in lines[12]
+    assert "off by 0.0000 %" in lines[12]
     assert max(map(len, lines)) <= 80
 
 
