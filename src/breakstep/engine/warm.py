@@ -1,17 +1,19 @@
 """Warming up: loading or compiling every kernel before the clock starts.
 
 Kernels compile once on a machine and then come from the cache, but several cold processes would each
-compile everything. So the driver warms itself up first, then each worker.
+compile everything. So the driver warms itself up first, then each process that holds workers.
 """
 
 from __future__ import annotations
 
+import uuid
 from dataclasses import replace
 
 from breakstep.engine.program import Program
 from breakstep.engine.run import RunOptions
 from breakstep.engine.serial import SerialDispatch
 
+PROCESS = uuid.uuid4().hex  # of this process alone; ids of processes repeat between containers
 SMALL = 4  # zones along each axis of the copy, unless a halo is wider
 
 
@@ -38,3 +40,8 @@ def warm_up(program: Program) -> str:
     if result.interrupted:
         raise KeyboardInterrupt
     return "" if result.failure is None else str(result.failure)
+
+
+def process() -> str:
+    """Which process this is: workers that share one share its kernels."""
+    return PROCESS

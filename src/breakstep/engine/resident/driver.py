@@ -18,7 +18,7 @@ from breakstep.engine.program import Program
 from breakstep.engine.resident.attempt import Attempt, Site
 from breakstep.engine.resident.host import LEASE_SECONDS
 from breakstep.engine.run import Progress, RunOptions, RunResult
-from breakstep.engine.warm import warm_up
+from breakstep.engine.warm import process, warm_up
 from breakstep.engine.workers import known_workers, run_on
 from breakstep.errors import ClusterError
 from breakstep.profile.record import RunRecord
@@ -66,7 +66,7 @@ class ResidentDispatch:
         self._program: Program | None = None
 
     def prepare(self, program: Program) -> None:
-        """Compile kernels once here, then load them on every worker that has not yet.
+        """Compile kernels once here, then load them in every process of workers that has not yet.
 
         Raises
         ------
@@ -84,7 +84,8 @@ class ResidentDispatch:
 
     def _load(self, program: Program, addresses: list[str]) -> None:
         try:
-            run_on(self.client, addresses, warm_up, program)
+            apart = {found: address for address, found in run_on(self.client, addresses, process).items()}
+            run_on(self.client, list(apart.values()), warm_up, program)
         except OSError as error:
             raise ClusterError(f"a worker was lost before the run began ({error!r})", lost=True) from error
         except ClusterError:
