@@ -279,9 +279,13 @@ class Unroller:
 def _not_converged(node: RepeatStages, cycle: int, value: Array) -> ConvergenceError:
     figures = ", ".join(f"{x:.3g}" for x in value[0])
     return ConvergenceError(
-        f"{node.repeat.name} did not converge in cycle {cycle}: after {node.repeat.at_most} iterations its"
+        f"{node.repeat.name} did not converge in cycle {cycle}: after {_iterations(node.repeat.at_most)} its"
         f" {node.repeat.until.name} is {figures}; allow more iterations, relax the tolerance or lower the time step",
         repeat=node.repeat.name,
         cycle=cycle,
         value=[float(x) for x in value[0]],
     )
+
+
+def _iterations(count: int) -> str:
+    return "1 iteration" if count == 1 else f"{count} iterations"

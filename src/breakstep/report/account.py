@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import textwrap
 from collections.abc import Iterator
 
 from breakstep.profile.chain import CHAIN_ACCOUNTS
@@ -12,6 +13,7 @@ from breakstep.profile.words import LABELS
 from breakstep.report.reasons import share
 from breakstep.report.wording import (
     FULL_CHOICES,
+    WIDTH,
     counted,
     digits_of,
     in_mode,
@@ -90,13 +92,20 @@ def _clock_lines(profile: Profile) -> list[str]:
     return wrapped(f"clocks: {clock.get('method', '?')}; off by {residual / 1e3:.3g} us at most", bullet=True)
 
 
+def _parts(name: str, width: int) -> list[str]:
+    """What stands in a column, and before it the lines for a name that the column does not hold."""
+    return [name] if len(name) < width else ["", *textwrap.wrap(name, WIDTH)]
+
+
 def _step_table(profile: Profile) -> Iterator[str]:
     digits, among = digits_of(profile.ledger) + 1, profile.imbalance
     yield f"{'step':<16}{'compute s':>11}{'CPU s':>11}{'workers':>10}{'phases':>9}{'tiles':>8}   busiest/mean"
     for step, row in profile.work.sort_values("compute_ns", ascending=False).iterrows():
         uneven = [unevenness(float(among[c].get(str(step), math.nan))) for c in ("workers", "phases_weighted", "tiles")]
+        name, *above = _parts(str(step), 16)
+        yield from above
         yield (
-            f"{step!s:<16}{row['compute_seconds']:>11.{digits}f}{row['cpu_seconds']:>11.{digits}f}"
+            f"{name:<16}{row['compute_seconds']:>11.{digits}f}{row['cpu_seconds']:>11.{digits}f}"
             f"{uneven[0]:>10}{uneven[1]:>9}{uneven[2]:>8}"
         )
 
@@ -111,8 +120,8 @@ def _traffic_lines(profile: Profile) -> Iterator[str]:
         rest = sum(count for _, count in links[TOP_LINKS:])
         yield f"  between {counted(len(links) - TOP_LINKS, 'other pair')}: {size(rest)}"
     for stage, count in sorted(traffic.by_stage.items(), key=lambda item: -item[1]):
-        yield f"  made by {stage}: {size(count)}"
+        yield from textwrap.wrap(f"  made by {stage}: {size(count)}", WIDTH, subsequent_indent="    ")
     yield f"most alive at once: {size(profile.live.peak_bytes)}"
     for row in profile.counters_by_step.itertuples():
         if not str(row.counter).startswith("checksum:"):
-            yield f"counted in {row.step}: {row.counter} {row.value}"
+            yield from wrapped(f"counted in {row.step}: {row.counter} {row.value}", bullet=True)

@@ -59,12 +59,11 @@ class BurnKernel:
         limits = (how.relative_tolerance, how.absolute_tolerance, how.sub_step_limit, how.cutoff_temperature)
         gas = arrays["gas"]
         new, counters, status = burning.burn(gas, call.dt, eos, network.arrays, *limits)
-        failed = burning.failure(status, gas, network.names)
+        failed = burning.failure(status, gas, network.names, call.origin)
         if failed is not None:
             zone = tuple(int(s) + o for s, o in zip(status[1:], call.origin, strict=True))
             raise KernelError(
-                f"{call.where()}: {failed} (zone {zone} of the mesh); lower the time step,"
-                " loosen the tolerance or raise the sub-step limit",
+                f"{call.where()}: {failed}; lower the time step, loosen the tolerance or raise the sub-step limit",
                 zone=zone,
             )
         for name, amount in zip(burning.COUNTERS, counters, strict=True):

@@ -8,7 +8,7 @@ from functools import cached_property
 
 import numpy as np
 
-from breakstep.errors import CourantError, KernelError
+from breakstep.errors import KernelError
 from breakstep.kernels.eos import GammaLaw, Stellar
 from breakstep.kernels.hydro import sweep as hydro
 from breakstep.kernels.hydro.rows import HALO
@@ -89,10 +89,10 @@ class SweepKernel:
         new, courant, bad = hydro.sweep(arrays["gas"], self.axis, call.dt, width, *self.gas.arrays)
         # A step that is too large may well spoil a zone too: then the cause is named, not the effect.
         if not courant <= COURANT_LIMIT:
-            raise CourantError(
-                f"{call.where()}: the time step {call.dt:.4g} s has a CFL number of {courant:.3g} in the state it is"
-                f" applied to, above the limit of {COURANT_LIMIT:g}; lower the CFL factor, the growth of the"
-                " time step or the lag of dt",
+            raise call.courant_error(
+                f"has a CFL number of {courant:.3g} in the state it is applied to, above the limit of"
+                f" {COURANT_LIMIT:g}",
+                limit=call.dt * COURANT_LIMIT / courant,
                 courant=courant,
             )
         if bad >= 0:

@@ -12,7 +12,7 @@ from typing import TypeAlias
 import numpy as np
 from numpy.typing import NDArray
 
-from breakstep.errors import DeclarationError
+from breakstep.errors import CourantError, DeclarationError
 from breakstep.mesh.mesh import Triple
 
 Array: TypeAlias = NDArray[np.float64]
@@ -79,6 +79,44 @@ class Call:
     def dt(self) -> float:
         """Time this call advances [s]: the first entry of reduction ``dt`` times ``fraction``."""
         return float(self.values["dt"][0]) * self.fraction
+
+    def require_time_step(self, limit: float, where: str = "") -> None:
+        """Refuse a time step that the state at hand does not allow; to be called by every step that has a limit.
+
+        With a lag, dt was measured on an earlier state than the one that it is applied to. The built-in sweeps check
+        theirs; nobody else can check yours.
+
+        Parameters
+        ----------
+        limit : float
+            The largest time this call may advance the state that it was given [s]; NaN allows none.
+        where : str
+            What sets the limit and where, in words, such as ``"conduction in zone (3, 0, 0)"``.
+
+        Raises
+        ------
+        CourantError
+            :attr:`dt` is larger.
+        """
+        if not self.dt <= limit:
+            cause = f" ({where})" if where else ""
+            raise self.courant_error(
+                f"is more than the {limit:.4g} s that the state it is applied to allows{cause}", limit
+            )
+
+    def courant_error(self, trouble: str, limit: float, **details: float) -> CourantError:
+        """The error for a time step that is too large: which call, what is wrong with it, and what to do."""
+        return CourantError(
+            f"{self.where()}: the time step {self.dt:.4g} s {trouble}; lower the CFL factor, the growth of the time"
+            " step or the lag of dt",
+            step=self.step,
+            tile=self.tile,
+            cycle=self.cycle,
+            iteration=self.iteration,
+            dt=self.dt,
+            limit=float(limit),
+            **details,
+        )
 
     def count(self, name: str, amount: int) -> None:
         """Add to a work counter, which the profile records."""

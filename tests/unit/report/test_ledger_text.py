@@ -51,6 +51,19 @@ def test_unevenness_of_nothing_is_a_dash() -> None:
     assert line.split()[-3:] == ["-", "-", "-"]
 
 
+def test_long_names_and_large_sums_stay_within_80_columns() -> None:
+    """A step named in 90 characters, and 2^53 ns of run, the most that a record may hold."""
+    name = "a_step_with_quite_a_name_" * 4
+    record = draw("0.0 |AAAA|\n0.1 |BBBB|")
+    record.intervals.append((0, "kernel", name, 0, 1, 0))
+    record.counters.append((0, name, "zones", 10**15))
+    record.tasks.append((2, "step", name, 0, 0, -1, 0, 0, 2**52, 2**53, 0, False))
+    record.transfers.append((0, name, 0, 0, 100, 1, 1, 4, 5))
+    lines = ledger_lines(Profile.from_record(record))
+    assert max(map(len, lines)) <= 80
+    assert name[:60] in "".join(lines)
+
+
 def test_many_workers_do_not_flood_the_terminal() -> None:
     """Every worker sends to every other: 30 pairs, of which the busiest are listed and the rest added up."""
     text = "\n".join(f"{worker}.0 |{'ABCDEF'[worker] * 4}|" for worker in range(6))

@@ -75,7 +75,9 @@ QUIET_CHANGE = 0.1
 N_HYDRO = 5  # components before the partial densities: density, three momenta, energy
 
 
-def failure(status: Status, gas: Floats, names: tuple[str, ...]) -> str | None:
+def failure(
+    status: Status, gas: Floats, names: tuple[str, ...], origin: tuple[int, int, int] = (0, 0, 0)
+) -> str | None:
     """One sentence about the zone that failed, with its state; None if none did.
 
     Parameters
@@ -86,6 +88,8 @@ def failure(status: Status, gas: Floats, names: tuple[str, ...]) -> str | None:
         The state that `burn` was given.
     names : tuple of str
         Species names, in network order.
+    origin : tuple of int
+        What to add to the zone's place in ``gas``, so that the sentence names it as the reader knows it.
     """
     if status[0] == DONE:
         return None
@@ -94,8 +98,9 @@ def failure(status: Status, gas: Floats, names: tuple[str, ...]) -> str | None:
     with np.errstate(all="ignore"):
         fractions = gas[N_HYDRO:, i, j, k] / density
     composition = ", ".join(f"{name} {x:.6g}" for name, x in zip(names, fractions, strict=True))
+    zone = (i + origin[0], j + origin[1], k + origin[2])
     return (
-        f"burning stopped at zone ({i}, {j}, {k}): {REASONS[int(status[0])]}; density {density:.9g} g/cm^3, "
+        f"burning stopped at zone {zone}: {REASONS[int(status[0])]}; density {density:.9g} g/cm^3, "
         f"energy density {energy:.9g} erg/cm^3, mass fractions {composition}"
     )
 
