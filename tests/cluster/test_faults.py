@@ -186,7 +186,7 @@ def resumed_after_kills(
         assert kill_later(process, folder, moments.uniform(0.0, longest)), process.communicate()
         number, source = number + 1, folder
     assert source is not None
-    finished(breakstep("run", "--resume", str(source), *cluster, "--workers", "1", "--out", str(root / "end")))
+    finished(breakstep("run", "--resume", str(source), *(cluster or ("--workers", "1")), "--out", str(root / "end")))
     return digest_in(root / "end")
 
 
@@ -209,7 +209,7 @@ def test_a_run_whose_driver_was_killed_is_resumed(tmp_path: Path, spark_digests:
 @pytest.mark.slow
 def test_ten_drivers_killed_at_random_moments(client: Client, tmp_path: Path, spark_digests: dict[int, str]) -> None:
     cluster = ["--address", client.scheduler.address]
-    found = resumed_after_kills(tmp_path, cycles=200, kills=10, longest=0.6, seed=4, cluster=cluster)
+    found = resumed_after_kills(tmp_path, cycles=200, kills=10, longest=0.4, seed=4, cluster=cluster)
     assert found == spark_digests[200]
     assert traces(client) == CLEAN
 

@@ -13,7 +13,7 @@ from typing import Any
 
 import numpy as np
 
-from breakstep.engine.interrupts import interrupts_held
+from breakstep.engine.interrupts import interrupts_counted
 from breakstep.engine.placement import owners
 from breakstep.engine.program import Program
 from breakstep.engine.run import Dispatch, Progress, RunOptions, RunResult, whole_field
@@ -55,20 +55,24 @@ def run_and_record(
 
     Raises
     ------
+    KeyboardInterrupt
+        The run was complete when the user stopped it; or pressed Ctrl-C three times, and there is no profile.
     OutputError, ProfileError
         The folder cannot be written. After a failed run the failure is raised instead.
     """
     check_folder(folder)
     started = datetime.now(UTC).isoformat(timespec="seconds")
-    result = dispatch.run(program, options, progress)
-    try:
-        with interrupts_held():
+    with interrupts_counted() as presses:
+        result = dispatch.run(program, options, progress)
+        presses.held = True
+        try:
             _complete(result, dispatch, program, options, mode=mode, scenario=dict(scenario), started=started)
-            return result, write_profile(result.record, folder)
-    except (OutputError, ProfileError) as error:
-        if result.failure is not None:
-            raise result.failure from error
-        raise
+            profile = write_profile(result.record, folder)
+        except (OutputError, ProfileError) as error:
+            if result.failure is not None:
+                raise result.failure from error
+            raise
+    return result, profile
 
 
 def _complete(result: RunResult, dispatch: Dispatch, program: Program, options: RunOptions, **facts: Any) -> None:

@@ -10,6 +10,7 @@ from breakstep.profile.chain import CHAIN_ACCOUNTS
 from breakstep.profile.ledger import ACCOUNTS
 from breakstep.profile.run import Profile
 from breakstep.profile.words import LABELS
+from breakstep.report.comparison import attempts_of, resumed_from
 from breakstep.report.reasons import share
 from breakstep.report.wording import (
     FULL_CHOICES,
@@ -18,6 +19,7 @@ from breakstep.report.wording import (
     digits_of,
     in_mode,
     seconds,
+    shortened,
     size,
     unevenness,
     wrapped,
@@ -37,10 +39,22 @@ def ledger_lines(profile: Profile) -> list[str]:
         f" {counted(manifest['cycles'], 'cycle')}, {counted(len(profile.tasks), 'task')},"
         f" {manifest['dispatch']} dispatch, {manifest['status']}"
     )
+    lines += wrapped(_coverage(profile))
     if manifest["message"]:
         lines += wrapped(manifest["message"])
     lines += ["", *_account_table(profile), "", *_factor_lines(profile), "", *_chain_table(profile)]
     return [*lines, "", *_step_table(profile), "", *_traffic_lines(profile), *_clock_lines(profile)]
+
+
+def _coverage(profile: Profile) -> str:
+    """What of a run that was started more than once the record covers; nothing to say of others."""
+    attempts, cycle = attempts_of(profile), resumed_from(profile)
+    which = f"this is the last of {attempts} starts" if attempts > 1 else "This run"
+    lost = "Workers were lost: " if attempts > 1 else ""
+    if cycle is not None:
+        went = ", which went on" if attempts > 1 else " went on"
+        return f"{lost}{which}{went} from the checkpoint before cycle {cycle}; all figures are of the cycles since."
+    return f"{lost}{which}, which began anew; all figures are of it alone." if attempts > 1 else ""
 
 
 def _account_table(profile: Profile) -> Iterator[str]:
@@ -82,7 +96,7 @@ def _chain_table(profile: Profile) -> Iterator[str]:
         rows[TOP_CHAIN:] = [(f"{len(rest)} others", [sum(column) for column in zip(*rest, strict=True)])]
     total = [chain.accounts_ns[account] for account in CHAIN_ACCOUNTS]
     for name, spent in [*rows, (f"= time, {counted(len(chain.tasks), 'task')}", total)]:
-        yield f"{name:<25}" + "".join(f"{ns / 1e9:>11.{digits}f}" for ns in [*spent, sum(spent)])
+        yield f"{shortened(name, 24):<25}" + "".join(f"{ns / 1e9:>11.{digits}f}" for ns in [*spent, sum(spent)])
 
 
 def _clock_lines(profile: Profile) -> list[str]:

@@ -116,6 +116,8 @@ def run_figures(profile: Profile) -> dict[str, Any]:
         },
         "digest": profile.manifest["digest"],
         "barriers": profile.manifest["barriers"],
+        "attempts": attempts_of(profile),
+        "resumed_from_cycle": resumed_from(profile),
         "status": profile.manifest["status"],
         "message": profile.manifest["message"],
     }
@@ -133,6 +135,17 @@ def _chain(ledger: Ledger) -> dict[str, Any]:
     accounts = {account: ns * 1e-9 for account, ns in ledger.chain.accounts_ns.items()}
     by_step = (ledger.chain.by_step * 1e-9).to_dict(orient="index")
     return {"tasks": len(ledger.chain.tasks), "core_seconds": accounts, "by_step": by_step}
+
+
+def attempts_of(profile: Profile) -> int:
+    """How many times the run was started; the record is of the last one."""
+    return int(profile.manifest["notes"].get("attempts", 1))
+
+
+def resumed_from(profile: Profile) -> int | None:
+    """First cycle of the record, where that is not the run's first: it went on from the checkpoint before."""
+    cycle = profile.manifest["notes"].get("resumed_from_cycle")
+    return None if cycle is None else int(cycle)
 
 
 def _without_nan(value: Any) -> Any:

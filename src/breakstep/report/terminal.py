@@ -18,6 +18,7 @@ from breakstep.report.wording import (
     in_mode,
     ratio,
     seconds,
+    shortened,
     size,
     wrapped,
 )
@@ -144,7 +145,7 @@ def _steps(comparison: Comparison) -> Iterator[str]:
     notable = NOTABLE_SHARE * float(left.sum())
     for step in left[left >= notable].sort_values(ascending=False).index[:TOP_STEPS]:
         a, b = float(left[step]), float(right.get(step, 0.0))
-        yield f"  {_shortened(str(step), 21):<22}{a:>10.{digits}f}{'':>7}{b:>11.{digits}f}{'':>7}{a - b:>15.{digits}f}"
+        yield f"  {shortened(str(step), 21):<22}{a:>10.{digits}f}{'':>7}{b:>11.{digits}f}{'':>7}{a - b:>15.{digits}f}"
 
 
 def _bytes_sentence(left: Profile, right: Profile) -> str:
@@ -154,9 +155,3 @@ def _bytes_sentence(left: Profile, right: Profile) -> str:
     by_stage = right.traffic.by_stage
     most = f" (most: {max(by_stage, key=lambda s: by_stage[s])})" if by_stage else ""
     return f"Moved between workers: {', '.join(moved)}{most}; most alive at once: {live[0]}, {live[1]}."
-
-
-def _shortened(name: str, width: int) -> str:
-    """The two ends of a name that a column does not hold."""
-    half = (width - 2) // 2
-    return name if len(name) <= width else f"{name[:half]}..{name[-half:]}"

@@ -80,3 +80,9 @@ def wrapped(text: str, bullet: bool = False) -> list[str]:
     joined = UNIT.sub("\\1\u00a0", text)
     lines = textwrap.wrap(joined, WIDTH, subsequent_indent="  " if bullet else "", break_on_hyphens=False)
     return [line.replace("\u00a0", " ") for line in lines]
+
+
+def shortened(name: str, width: int) -> str:
+    """The two ends of a name that a column does not hold."""
+    half = (width - 2) // 2
+    return name if len(name) <= width else f"{name[:half]}..{name[-half:]}"

@@ -7,7 +7,8 @@ import signal
 import subprocess
 import sys
 import threading
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -15,9 +16,12 @@ import pytest
 
 from breakstep.commands import ledger
 from breakstep.engine import recorded
-from breakstep.engine.interrupts import children_deaf, interrupts_held
+from breakstep.engine.interrupts import children_deaf, interrupts_counted, interrupts_held
 from breakstep.engine.serial import SerialDispatch
 from breakstep.profile.store import read_profile
+from breakstep.steps.problem import Problem
+from breakstep.steps.splitting import lie
+from breakstep.steps.step import Array, Call, Read, Step
 from tests.toys import Toy, faulty_problem
 from tests.unit.commands.conftest import TINY, Shell
 from tests.unit.commands.test_runs import substitute
@@ -34,6 +38,19 @@ def handler() -> Iterator[None]:
     before = signal.signal(signal.SIGINT, signal.default_int_handler)
     yield
     assert signal.signal(signal.SIGINT, before) is signal.default_int_handler
+
+
+def press_in_cycle_2(arrays: Mapping[str, Array], call: Call) -> dict[str, Array]:
+    """A kernel during which the user presses Ctrl-C, as a signal."""
+    if call.cycle == 2 and call.tile == 1:
+        press()
+    return {"u": arrays["u"]}
+
+
+def interrupting_problem() -> Problem:
+    """It stops in its third cycle."""
+    step = Step("pressing", press_in_cycle_2, (Read("u"),), ("u",))
+    return replace(Toy((12,), cycles=5).problem(), splitting=lie([step]))
 
 
 def test_ctrl_c_leaves_a_readable_profile(breakstep: Shell, monkeypatch: pytest.MonkeyPatch) -> None:
@@ -71,6 +88,38 @@ def test_ctrl_c_while_the_profile_is_written_waits(breakstep: Shell, monkeypatch
     assert answer.code == 130
     assert answer.err.strip() == "breakstep: stopped"
     assert read_profile(Path("mine")).manifest["status"] == "complete"
+
+
+@pytest.mark.parametrize(("more", "there"), [(1, True), (2, False)])
+def test_ctrl_c_again_while_an_interrupted_run_is_written(
+    breakstep: Shell, monkeypatch: pytest.MonkeyPatch, more: int, there: bool
+) -> None:
+    """The second press loses nothing; the third is meant."""
+    write = recorded.write_profile
+
+    def write_slowly(*arguments: Any) -> Any:
+        for _ in range(more):
+            press()
+        return write(*arguments)
+
+    monkeypatch.setattr(recorded, "write_profile", write_slowly)
+    substitute(monkeypatch, interrupting_problem())
+    answer = breakstep("run", "shock_tube", *TINY, "--out", "mine")
+    assert answer.code == 130
+    assert Path("mine", "manifest.json").exists() is there
+    if there:
+        assert answer.err == "breakstep: stopped; the profile so far is in mine\n"
+        assert read_profile(Path("mine")).manifest["status"] == "interrupted"
+    else:
+        assert answer.err.strip() == "breakstep: stopped"
+
+
+def test_where_ctrl_c_is_not_heard_it_stays_unheard() -> None:
+    """As in a run put into the background with nohup."""
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    with interrupts_counted():
+        press()
+    assert signal.signal(signal.SIGINT, signal.default_int_handler) is signal.SIG_IGN
 
 
 @pytest.mark.parametrize(("error", "sentence"), [(MemoryError(), "suffice;"), (MemoryError("9 TB"), "(9 TB);")])

@@ -4,9 +4,12 @@ from __future__ import annotations
 
 import re
 
+import pytest
+
 from breakstep.profile.run import Profile
 from breakstep.profile.words import LABELS
 from breakstep.report.account import TOP_LINKS, ledger_lines
+from breakstep.report.comparison import run_figures
 from tests.unit.profile.sketch import draw, manifest
 from tests.unit.report.made import BARRED, FREE
 
@@ -31,6 +34,35 @@ def test_why_a_run_ended_early_is_told() -> None:
     lines = ledger_lines(FREE.saying(status="failed", message="step burn, tile 1: no convergence").profile())
     assert lines[1] == "dispatch, failed"
     assert lines[2] == "step burn, tile 1: no convergence"
+
+
+@pytest.mark.parametrize(
+    ("notes", "sentence"),
+    [
+        ({}, ""),
+        ({"attempts": 1}, ""),
+        (
+            {"attempts": 1, "resumed_from_cycle": 12},
+            "This run went on from the checkpoint before cycle 12; all figures are of the cycles since.",
+        ),
+        (
+            {"attempts": 3, "resumed_from_cycle": 12},
+            "Workers were lost: this is the last of 3 starts, which went on from the checkpoint before cycle 12;"
+            " all figures are of the cycles since.",
+        ),
+        (
+            {"attempts": 2},
+            "Workers were lost: this is the last of 2 starts, which began anew; all figures are of it alone.",
+        ),
+    ],
+)
+def test_what_of_a_run_is_covered_is_told(notes: dict[str, int], sentence: str) -> None:
+    profile = FREE.saying(notes=notes).profile()
+    lines = ledger_lines(profile)
+    assert " ".join(lines[2 : lines.index("")]) == sentence
+    figures = run_figures(profile)
+    assert figures["attempts"] == notes.get("attempts", 1)
+    assert figures["resumed_from_cycle"] == notes.get("resumed_from_cycle")
 
 
 def test_a_run_that_did_nothing() -> None:

@@ -132,6 +132,7 @@ class Attempt:
         if self.site.resume is not None:
             start = int(checkpoint.read_manifest(self.site.resume)["cycle"]) + 1
             self.options = self.options.starting_at(start)
+            self.result.notes["resumed_from_cycle"] = start
 
     def _work(self, zero: int) -> None:
         """One segment; with shared placement, one for each window of cycles."""

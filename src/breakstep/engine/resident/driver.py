@@ -100,14 +100,15 @@ class ResidentDispatch:
         """Run a program; errors and interrupts end up in the result.
 
         With checkpoints, a run that loses a worker goes on from the last one, on the workers there are. The
-        record then begins there.
+        record then begins there, and the notes say so: ``attempts``, and ``resumed_from_cycle``, the first cycle
+        that is recorded.
         """
         resume, starts, fruitless = self.resume, 1, 0
         if self.checkpoints is not None:
             checkpoint.discard_partial(self.checkpoints)
         while True:
             result = self._attempt(program, options, progress, resume)
-            result.notes["restarts"] = starts - 1
+            result.notes |= {"restarts": starts - 1, "attempts": starts}
             if not (_is_loss(result) and options.checkpoint_every and self.checkpoints is not None):
                 return result
             newest = _newest(self.checkpoints, self.resume)
