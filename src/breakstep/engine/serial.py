@@ -95,6 +95,8 @@ class _SerialRun:
     def _let_go(self) -> None:
         """Drop the arrays that nothing will read again."""
         live = self.unroller.live_phases(self.program.state_fields)
+        roots = self.graph.forget_control(self.unroller.live_instances(), self.unroller.barred)
+        self.vectors = {root: self.vectors[root] for root in roots}
         if not self.graph.forget(live):
             return
         wanted = {number for phase in live if phase != INITIAL for number in self.graph.step_tasks(phase)}

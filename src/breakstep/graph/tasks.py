@@ -167,6 +167,20 @@ class TaskGraph:
             del self._step_tasks[number]
         return dead
 
+    def forget_control(self, instances: frozenset[int], barred: int | None) -> list[int]:
+        """Drop roots and releases that no later phase names; returns the numbers of the roots that are left.
+
+        Parameters
+        ----------
+        instances : frozenset of int
+            Results that may still be named.
+        barred : int or None
+            The one phase whose barrier may still be waited for.
+        """
+        self._roots = {instance: root for instance, root in self._roots.items() if instance in instances}
+        self._releases = {phase: task for phase, task in self._releases.items() if phase == barred}
+        return list(self._roots.values())
+
     def _next(self) -> int:
         self._count += 1
         return self._count - 1

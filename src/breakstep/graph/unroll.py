@@ -14,6 +14,7 @@ without waiting; one that turns out to be superfluous passes its fields through.
 
 from __future__ import annotations
 
+from collections import deque
 from collections.abc import Callable, Generator, Iterable, Sequence
 from dataclasses import dataclass, field
 from typing import TypeAlias
@@ -85,6 +86,30 @@ class Need:
 Unrolling: TypeAlias = Generator[Phase | Need, list[Array] | None, None]
 
 
+class CycleResults:
+    """Instances of one cycle-level reduction, counted from the first; only as many are kept as its lag reaches back.
+
+    A cycle uses the result made ``lag`` cycles before it, and by its last phase its own is made: that is ``lag`` + 2.
+    """
+
+    def __init__(self, lag: int) -> None:
+        self.kept: deque[int] = deque(maxlen=lag + 2)
+        self.count = 0
+
+    def append(self, instance: int) -> None:
+        """One more has been announced."""
+        self.kept.append(instance)
+        self.count += 1
+
+    def newest(self) -> int | None:
+        """The last one, if there is any."""
+        return self.kept[-1] if self.kept else None
+
+    def __getitem__(self, index: int) -> int:
+        """One of those that are kept, by its place among all."""
+        return self.kept[index - (self.count - len(self.kept))]
+
+
 @dataclass
 class Unroller:
     """Generates the phases of a run.
@@ -119,7 +144,8 @@ class Unroller:
         self._written_in: dict[str, int] = {}  # field -> cycle of its newest version
         self._last_phase: Phase | None = None
         self._barred: int | None = None  # newest phase behind which a barrier stands
-        self._cycle_results: dict[str, list[int]] = {r.name: [] for r in self.template.splitting.reductions}
+        self._cycle_results = {r.name: CycleResults(r.lag) for r in self.template.splitting.reductions}
+        self._verdicts: list[int] = []  # instances of the repeat under way, by iteration
         self._iterations: dict[str, int] = {}
 
     def live_phases(self, state: Iterable[str]) -> frozenset[int]:
@@ -134,6 +160,15 @@ class Unroller:
         passing = {name for name, cycle in self._written_in.items() if cycle == now}
         return frozenset(self.latest(name) for name in {*state, *self.template.carried, *passing})
 
+    def live_instances(self) -> frozenset[int]:
+        """Results that a phase or a need still to come may name, and the last ones made."""
+        return frozenset(self._verdicts).union(*(made.kept for made in self._cycle_results.values()))
+
+    @property
+    def barred(self) -> int | None:
+        """Newest phase behind which a barrier stands: what comes waits for it alone."""
+        return self._barred
+
     def latest(self, name: str) -> int:
         """The phase that wrote a field last."""
         return self._latest.get(name, INITIAL)
@@ -144,7 +179,8 @@ class Unroller:
 
     def last_values(self) -> dict[str, int]:
         """For each cycle-level reduction, the newest result's instance."""
-        return {name: made[-1] for name, made in self._cycle_results.items() if made}
+        newest = {name: made.newest() for name, made in self._cycle_results.items()}
+        return {name: instance for name, instance in newest.items() if instance is not None}
 
     def next_values(self) -> dict[str, list[ValueRef]]:
         """For each cycle-level reduction, the results for the next cycle and its lag.
@@ -156,7 +192,7 @@ class Unroller:
             reduction.name: [
                 self._cycle_value(reduction, upcoming + k)
                 for k in range(reduction.lag + 1)
-                if max(upcoming + k - self.start - reduction.lag, 0) < len(self._cycle_results[reduction.name])
+                if max(upcoming + k - self.start - reduction.lag, 0) < self._cycle_results[reduction.name].count
             ]
             for reduction in self.template.splitting.reductions
         }
@@ -192,7 +228,7 @@ class Unroller:
             making = Making(
                 reduction,
                 self._next_instance(),
-                made[-1] if made else None,
+                made.newest(),
                 1 + reduction.lag if first else 1,
             )
             made.append(making.instance)
@@ -207,7 +243,7 @@ class Unroller:
     def _repeat(self, node: RepeatStages, cycle: int) -> Unrolling:
         repeat, lag = node.repeat, node.repeat.until.lag
         foreseen = min(repeat.at_most, self._iterations.get(repeat.name, 1 + lag))
-        verdicts: list[int] = []  # instance of each emitted iteration's verdict
+        verdicts = self._verdicts = []
         known: int = 0
         stopped_at: int | None = None
         last: Array | None = None
@@ -231,6 +267,7 @@ class Unroller:
                     stopped_at = known
                 known += 1
         self._iterations[repeat.name] = min(stopped_at + lag + 1, repeat.at_most)
+        self._verdicts = []
 
     def _iteration(
         self, node: RepeatStages, cycle: int, iteration: int, verdicts: list[int], gate: ValueRef | None

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections import Counter
 
+import numpy as np
 import pytest
 
 from breakstep.graph.stages import build_template
@@ -144,3 +145,34 @@ def test_bernstein_conditions() -> None:
     smooth, drift, grow = found[1], found[2], found[3]
     assert conflicts(smooth, grow) == {"flow": {"u"}, "anti": {"u"}, "output": {"u"}}
     assert conflicts(smooth, drift) == {"flow": set(), "anti": set(), "output": set()}
+
+
+@pytest.mark.parametrize("lags", [(0, 0), (2, 1)])
+@pytest.mark.parametrize("barriers", [(), ("smooth", "solve")])
+def test_what_is_kept_does_not_grow_with_the_run(lags: tuple[int, int], barriers: tuple[str, ...]) -> None:
+    """After 10 cycles and after 100: as many phases, roots, releases and results; and all that is named is there."""
+    toy = Toy((12,), dt_lag=lags[0], residual_lag=lags[1])
+    template = build_template(toy.splitting())
+    unroller, graph, sizes = Unroller(template, 101, barriers), TaskGraph(line_of_tiles(4), [0, 0, 1, 1]), {}
+    behind, generator = template.stages_with_barrier(barriers), unroller.run()
+    event, cycle = next(generator), -1
+    while cycle < 100:
+        if isinstance(event, Phase):
+            if event.cycle > cycle:
+                sizes[event.cycle] = kept(graph, unroller)
+                cycle = event.cycle
+            graph.expand(event, barrier_after=event.stage.index in behind)
+            graph.forget(unroller.live_phases(("u", "w", "v")))
+            graph.forget_control(unroller.live_instances(), unroller.barred)
+            event = next(generator)
+        else:
+            assert all(graph.root(instance) >= 0 for instance in event.instances)
+            event = generator.send([np.array([[1.0 if k % 5 else 0.0]]) for k in event.instances])
+    assert sum(sizes[100]) > 0
+    assert max(sum(sizes[c]) for c in range(90, 101)) <= max(sum(sizes[c]) for c in range(10, 21))
+
+
+def kept(graph: TaskGraph, unroller: Unroller) -> tuple[int, int, int]:
+    """How much is remembered of phases, of roots and releases, and of results."""
+    results = sum(len(made.kept) for made in unroller._cycle_results.values())
+    return len(graph._step_tasks), len(graph._roots) + len(graph._releases), results

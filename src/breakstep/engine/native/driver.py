@@ -224,6 +224,7 @@ class _NativeRun:
         self.keepers = {number: cycle for number, cycle in self.keepers.items() if cycle >= oldest}
         wanted |= self.keepers.keys()
         self.graph.forget(live)
+        self.graph.forget_control(self.unroller.live_instances(), self.unroller.barred)
         self.translate.forget(wanted)
         wanted |= self._unfinished(wanted)
         self.futures = {number: future for number, future in self.futures.items() if number in wanted}
