@@ -7,6 +7,7 @@ import contextlib
 import json
 import os
 import random
+import resource
 import signal
 import subprocess
 import sys
@@ -233,6 +234,37 @@ def members(session: int) -> list[int]:
             if int(fields[3]) == session and fields[0] != "Z":
                 found.append(int(folder.name))
     return found
+
+
+# ---- a disk that is full ------------------------------------------------------------------------------
+
+
+def fill_the_disk(session: int) -> None:
+    """From now on no file of these processes grows beyond 1 kB: as on a full disk, but for the error's number."""
+    for pid in members(session):
+        with contextlib.suppress(ProcessLookupError):
+            _, hard = resource.prlimit(pid, resource.RLIMIT_FSIZE)
+            resource.prlimit(pid, resource.RLIMIT_FSIZE, (1000, hard))
+
+
+def test_a_disk_that_fills_up_in_the_course_of_a_run(tmp_path: Path, spark_digests: dict[int, str]) -> None:
+    """Neither another checkpoint nor the profile can be written: one sentence, and the run can be gone on with."""
+    out = tmp_path / "run"
+    sizes = [*SPARK, "--set", "run.cycles=30"]
+    process = breakstep("run", "single_spark", *sizes, "--checkpoint-every", "2", "--out", str(out))
+    while not checkpoints(out / "checkpoints"):
+        assert process.poll() is None, process.communicate()
+        time.sleep(0.01)
+    fill_the_disk(process.pid)
+    told, complaints = process.communicate(timeout=60)
+    assert (process.returncode, told) == (2, ""), complaints
+    first, second = complaints.splitlines()
+    assert first.startswith("breakstep: the checkpoint of cycle ")
+    assert f"{out / 'checkpoints'} (File too large)" in first
+    assert second == f"breakstep: to go on from its last checkpoint: breakstep run --resume {out}"
+    assert not (out / "manifest.json").exists()
+    finished(breakstep("run", "--resume", str(out), "--workers", "1", "--out", str(tmp_path / "end")))
+    assert digest_in(tmp_path / "end") == spark_digests[30]
 
 
 # ---- a driver that leaves its workers alone -----------------------------------------------------------
