@@ -20,6 +20,7 @@ if TYPE_CHECKING:
     from breakstep.report.comparison import Comparison
     from breakstep.scenario.load import load_scenario
     from breakstep.scenario.setup import Setup
+    from breakstep.steps.foreign import InPlace, Library, Routine
     from breakstep.steps.problem import Problem
     from breakstep.steps.reduction import Combine, Reduction
     from breakstep.steps.splitting import Repeat, Splitting, alternating, lie, strang
@@ -33,12 +34,15 @@ _HOMES = {
     "Comparison": "report.comparison",
     "Edge": "mesh.mesh",
     "Field": "mesh.fields",
+    "InPlace": "steps.foreign",
+    "Library": "steps.foreign",
     "Mesh": "mesh.mesh",
     "Problem": "steps.problem",
     "Profile": "profile.run",
     "Read": "steps.step",
     "Reduction": "steps.reduction",
     "Repeat": "steps.splitting",
+    "Routine": "steps.foreign",
     "Setup": "scenario.setup",
     "Splitting": "steps.splitting",
     "Step": "steps.step",
@@ -60,12 +64,15 @@ __all__ = [
     "Comparison",
     "Edge",
     "Field",
+    "InPlace",
+    "Library",
     "Mesh",
     "Problem",
     "Profile",
     "Read",
     "Reduction",
     "Repeat",
+    "Routine",
     "Setup",
     "Splitting",
     "Step",

@@ -93,7 +93,7 @@ def test_pairs_alternate_in_order(tmp_path: Path) -> None:
     """Lockstep first, tasked first, lockstep first: a host that drifts favours neither."""
     session = command.Session.load("shock_tube", ("mesh.zones=[12]", "mesh.tile=[3]", "run.cycles=1"))
     engine = Listening()
-    compared = command._compare(session, engine, "lockstep", tmp_path, 3)
+    compared = command.compare_pairs(session, engine, "lockstep", tmp_path, 3)
     assert engine.heard == [True, False, False, True, True, False]
     assert [bool(profile.manifest["barriers"]) for profile in compared.lockstep] == [True] * 3
     assert [bool(profile.manifest["barriers"]) for profile in compared.tasked] == [False] * 3
@@ -155,7 +155,7 @@ def test_a_difference_that_does_not_come_back_is_told_by_field_and_tile(
     """The traced runs agree with each other; what is known of the first ones is still said."""
     session = command.Session.load("shock_tube", ("mesh.zones=[12]", "mesh.tile=[3]", "run.cycles=1"))
     engine: Dispatch = SerialDispatch()
-    compared = command._compare(session, engine, "lockstep", tmp_path, 1)
+    compared = command.compare_pairs(session, engine, "lockstep", tmp_path, 1)
     changed = compared.tasked[0]
     changed.manifest["digests"]["gas"][2] = "0" * 64
     found = command._difference(session, engine, "lockstep", tmp_path, compared.lockstep, [changed])  # type: ignore[arg-type]
