@@ -38,6 +38,7 @@ def run(
     placement: Placement | None = None,
     dispatch: DispatchName | None = None,
     memory_limit: int = 0,
+    task_timeout: float | None = None,
     client: Client | None = None,
     address: str | None = None,
     scheduler_file: Path | None = None,
@@ -59,6 +60,8 @@ def run(
         Who owns which tile, and what carries out the tasks; the scenario's by default.
     memory_limit : int
         Live bytes a worker above which run-ahead waits; 0 for no limit.
+    task_timeout : float, optional
+        Seconds after which a kernel that has not returned ends the run.
     client : distributed.Client, optional
         A cluster of yours. Without one, and without ``address`` and ``scheduler_file``, worker processes are started
         on this machine for this run alone; a program that does so must stand under ``if __name__ == "__main__":``.
@@ -79,6 +82,7 @@ def run(
         The user stopped it, and the profile so far has been written.
     """
     session = _session(what, overrides, placement, memory_limit)
+    session.allow(task_timeout)
     session.barriers(barriers)
     folder = output_folder(_path(out), session.scenario.name)
     with (
@@ -99,6 +103,7 @@ def compare(
     placement: Placement | None = None,
     dispatch: DispatchName | None = None,
     memory_limit: int = 0,
+    task_timeout: float | None = None,
     client: Client | None = None,
     address: str | None = None,
     scheduler_file: Path | None = None,
@@ -112,7 +117,8 @@ def compare(
         How often to run both ways.
     barriers : str
         What tasked is compared with.
-    what, overrides, workers, threads, placement, dispatch, memory_limit, client, address, scheduler_file, out
+    what, overrides, workers, threads, placement, dispatch, memory_limit, task_timeout, client, address,
+    scheduler_file, out
         As for :func:`run`; ``out`` takes a folder a run.
 
     Returns
@@ -129,6 +135,7 @@ def compare(
     if pairs < 1:
         raise ScenarioError(f"a comparison needs at least one pair of runs, not {pairs}")
     session = _session(what, overrides, placement, memory_limit)
+    session.allow(task_timeout)
     session.barriers(barriers)
     folder = output_folder(_path(out), session.scenario.name)
     with (

@@ -46,6 +46,10 @@ class CourantError(KernelError):
     """The time step in use is larger than the state it is applied to allows."""
 
 
+class OverdueError(BreakstepError):
+    """A kernel does not return within the time that the user allows."""
+
+
 class ConvergenceError(BreakstepError):
     """A repeated step did not satisfy its residual within the iterations allowed."""
 

@@ -7,7 +7,15 @@ from pathlib import Path
 import click
 
 from breakstep.commands.session import Session, Stopped
-from breakstep.commands.shared import check_json, choose_place, open_dispatch, output_folder, run_options, write_json
+from breakstep.commands.shared import (
+    check_json,
+    choose_place,
+    open_dispatch,
+    output_folder,
+    run_options,
+    timeout_option,
+    write_json,
+)
 from breakstep.engine.run import Dispatch
 from breakstep.errors import ScenarioError
 from breakstep.profile.run import Profile
@@ -17,6 +25,7 @@ from breakstep.report.terminal import comparison_lines
 
 @click.command()
 @run_options
+@timeout_option
 @click.option("--pairs", type=click.IntRange(1), default=3, show_default=True, help="How often to run both modes.")
 @click.option(
     "--barriers", default="lockstep", show_default=True,
@@ -36,11 +45,13 @@ def compare(
     json_file: Path | None,
     pairs: int,
     barriers: str,
+    task_timeout: float | None,
 ) -> int:
     """Run SCENARIO with barriers and without, and say what leaving them out gives back."""
     if scenario is None:
         raise ScenarioError("name a scenario to compare")
     session = Session.load(scenario, overrides, placement, memory_limit or 0)
+    session.allow(task_timeout)
     session.barriers(barriers)
     check_json(json_file)
     place = choose_place(session.scenario.run, dispatch, workers, threads, address, scheduler_file)

@@ -16,6 +16,7 @@ from breakstep.commands.shared import (
     reading,
     run_options,
     tell_remarks,
+    timeout_option,
     write_json,
 )
 from breakstep.engine.checkpoint import checkpoints, last_checkpoint, read_manifest
@@ -28,6 +29,7 @@ CHECKPOINTS = "checkpoints"  # folder below a run's output folder
 
 @click.command()
 @run_options
+@timeout_option
 @click.option("--barriers", help="lockstep, tasked (the default), or names joined by commas.")
 @click.option("--checkpoint-every", type=click.IntRange(1), metavar="N", help="Save the state every N cycles.")
 @click.option(
@@ -51,10 +53,12 @@ def run(
     barriers: str | None,
     checkpoint_every: int | None,
     resume: Path | None,
+    task_timeout: float | None,
 ) -> int:
     """Run SCENARIO once and print where its core-seconds went."""
     resumed, session, choice = _begin(scenario, overrides, resume, barriers, placement, memory_limit)
     session.options = session.saving_every(checkpoint_every)
+    session.allow(task_timeout)
     tell_remarks(session.scenario.remarks)
     check_json(json_file)
     place = choose_place(session.scenario.run, dispatch, workers, threads, address, scheduler_file)

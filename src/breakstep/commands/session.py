@@ -93,6 +93,10 @@ class Session:
         """The options with a checkpoint every so many cycles."""
         return replace(self.options, checkpoint_every=cycles or 0)
 
+    def allow(self, task_timeout: float | None) -> None:
+        """Limit how long a kernel may take [s]."""
+        self.options = replace(self.options, task_timeout=task_timeout or 0.0)
+
     def check_dispatch(self, name: str) -> None:
         """Refuse options that a dispatch would silently ignore, or could not follow.
 
@@ -153,5 +157,5 @@ class Session:
     def _warm_up(self, dispatch: Dispatch) -> None:
         """Load or compile the kernels before the clock starts; on a cluster the dispatch does so itself."""
         if isinstance(dispatch, SerialDispatch) and not self.is_warm:
-            warm_up(self.program)
+            warm_up(self.program, self.options.task_timeout)
             self.is_warm = True

@@ -21,7 +21,7 @@ from breakstep.engine.recorded import check_folder
 from breakstep.engine.resident import ResidentDispatch
 from breakstep.engine.run import Dispatch
 from breakstep.engine.serial import SerialDispatch
-from breakstep.errors import BreakstepError, OutputError
+from breakstep.errors import BreakstepError, OutputError, OverdueError
 from breakstep.scenario.sections import PlaceSection
 
 _F = TypeVar("_F", bound=Callable[..., Any])
@@ -45,6 +45,14 @@ def run_options(function: _F) -> _F:
     for option in reversed(options):
         function = option(function)
     return function
+
+
+def timeout_option(function: _F) -> _F:
+    """A limit on how long a kernel may take."""
+    told = "End the run when a kernel has not returned for so long (default: no limit)."
+    kind = click.FloatRange(0.0, min_open=True)
+    option = click.option("--task-timeout", type=kind, metavar="SECONDS", help=told)
+    return option(function)
 
 
 @dataclass(frozen=True)
@@ -118,13 +126,26 @@ def open_dispatch(place: Place) -> Iterator[Dispatch]:
     else:
         assert place.workers is not None
         cluster = local_cluster(place.workers, place.threads)
-    with cluster as client:
+    with cluster as client, _left_behind(place):
         if place.dispatch == "native":
             yield NativeDispatch(client, place.workers)
         else:
             yield ResidentDispatch(
                 client, place.workers, checkpoints=place.checkpoints, resume=place.resume, facts=place.facts
             )
+
+
+@contextlib.contextmanager
+def _left_behind(place: Place) -> Iterator[None]:
+    """Workers that were started here end with the run, whatever they are at; those of the user's are named."""
+    try:
+        yield
+    except OverdueError as error:
+        if not place.is_local and "address" in error.details:
+            said = error.details.get("remedy")
+            left = f"the kernel still runs on the worker at {error.details['address']}; restart that worker"
+            error.details["remedy"] = f"{said}; {left}" if said else left
+        raise
 
 
 @contextlib.contextmanager

@@ -7,13 +7,14 @@ write-protected: a kernel that changes what it was given fails at once.
 from __future__ import annotations
 
 import time
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 
 from breakstep.engine.program import Program
+from breakstep.engine.underway import CALLS
 from breakstep.errors import KernelError
 from breakstep.kernels.finite import first_not_finite
 from breakstep.mesh.fields import Field
@@ -131,7 +132,7 @@ def _execute(program: Program, site: Site, inputs: Inputs) -> Output:
         call = _call(program, site, step.name, values, step.fraction)
         given = _gather(program, site.tile, step, arrays, inputs, watch)
         began = watch.start()
-        made = call_user(step.kernel, given, call, where=call.where())
+        made = _called(step.kernel, given, call)
         watch.stop("kernel", step.name, began)
         arrays |= check_arrays(made, step.writes, program.fields, program.tiling.tiles[site.tile], call.where())
         output.counters += [(step.name, name, amount) for name, amount in call.counters.items()]
@@ -139,11 +140,19 @@ def _execute(program: Program, site: Site, inputs: Inputs) -> Output:
         call = _call(program, site, reduction.name, {}, 1.0)
         given = {read.field: arrays[read.field] for read in reduction.reads}
         began = watch.start()
-        vector = call_user(reduction.kernel, given, call, where=call.where())
+        vector = _called(reduction.kernel, given, call)
         watch.stop("kernel", reduction.name, began)
         output.partials[reduction.name] = _check_vector(vector, call)
     output.fields = {name: arrays[name] for name in stage.writes}
     return output
+
+
+def _called(kernel: Callable[..., Any], given: Mapping[str, Array], call: Call) -> Any:
+    """What a kernel returns, and a note of it while it runs if somebody wants one."""
+    if not CALLS.on:
+        return call_user(kernel, given, call, where=call.where())
+    with CALLS.under_way(call):
+        return call_user(kernel, given, call, where=call.where())
 
 
 def _call(program: Program, site: Site, step: str, values: Mapping[str, Array], fraction: float) -> Call:

@@ -34,6 +34,8 @@ class RunOptions:
         Live bytes a worker above which run-ahead is held back; 0 for no limit. Resident dispatch only.
     checkpoint_every : int
         Cycles between checkpoints; 0 for none. Resident dispatch only.
+    task_timeout : float
+        Seconds after which a kernel that has not returned ends the run; 0 for no limit.
     trace : bool
         Whether to record a checksum of every array that a task makes; slow, for finding differences.
     start : int
@@ -49,6 +51,7 @@ class RunOptions:
     record: bool = True
     memory_limit: int = 0
     checkpoint_every: int = 0
+    task_timeout: float = 0.0
     trace: bool = False
     start: int = 0
     stop: int | None = None

@@ -2,20 +2,28 @@
 
 from __future__ import annotations
 
+import contextlib
+import faulthandler
+import threading
 import time
 from dataclasses import dataclass, field
 
 from breakstep.engine.execute import Inputs, Output, Site, execute
+from breakstep.engine.overdue import SILENCE_SECONDS, overdue
 from breakstep.engine.program import Program
 from breakstep.engine.recording import Recorder, record_edges, task_row
 from breakstep.engine.run import Progress, RunOptions, RunResult, unroller_for
-from breakstep.errors import BreakstepError
+from breakstep.engine.underway import CALLS
+from breakstep.errors import BreakstepError, OverdueError
 from breakstep.graph.tasks import Kind, Task, TaskGraph
 from breakstep.graph.unroll import INITIAL, Need, Phase, Unroller
 from breakstep.mesh.halo import cut
 from breakstep.mesh.mesh import Triple
 from breakstep.steps.reduction import combine
 from breakstep.steps.step import Array
+
+LOOK_SECONDS = 0.05
+LEAVE_SECONDS = 2.0  # most that a kernel may go on when the user stops the run
 
 
 class SerialDispatch:
@@ -26,8 +34,42 @@ class SerialDispatch:
     threads = 1
 
     def run(self, program: Program, options: RunOptions, progress: Progress | None = None) -> RunResult:
-        """Run a program; errors and interrupts end up in the result."""
-        return _SerialRun(program, options, progress).run()
+        """Run a program; errors and interrupts end up in the result.
+
+        With a limit on how long a kernel may take, another thread runs it and this one looks. A kernel that holds
+        the interpreter's lock silences this one, too: then the process ends some seconds later with the traceback
+        and exit code 1.
+        """
+        run = _SerialRun(program, options, progress)
+        return overseen(run, options.task_timeout) if options.task_timeout else run.run()
+
+
+def overseen(run: _SerialRun, limit: float) -> RunResult:
+    """What a run in a thread of its own leaves, or what there is of it when a kernel does not return."""
+    results: list[RunResult] = []
+    thread = threading.Thread(target=lambda: results.append(run.run()), name="breakstep-serial", daemon=True)
+    CALLS.keep()
+    _arm(limit)
+    thread.start()
+    try:
+        while not results and thread.is_alive():
+            thread.join(LOOK_SECONDS)
+            overdue(CALLS.now(), limit)
+            _arm(limit)
+    except (OverdueError, KeyboardInterrupt) as error:
+        run.is_over = True
+        thread.join(LEAVE_SECONDS if isinstance(error, KeyboardInterrupt) else 0.0)
+        return run.result(0.0, isinstance(error, KeyboardInterrupt), error if isinstance(error, OverdueError) else None)
+    finally:
+        CALLS.forget()
+        faulthandler.cancel_dump_traceback_later()
+    return results[0]
+
+
+def _arm(limit: float) -> None:
+    """End this process should this thread not come by again, because a kernel holds the interpreter's lock."""
+    with contextlib.suppress(OSError):  # no standard error to write to
+        faulthandler.dump_traceback_later(limit + SILENCE_SECONDS, exit=True, file=2)
 
 
 @dataclass
@@ -41,6 +83,7 @@ class _SerialRun:
     vectors: dict[int, Array | None] = field(default_factory=dict)
     cycles: int = 0
     newest: int = -1  # cycle of the last phase that ran
+    is_over: bool = False  # somebody else has taken the result; what is still made comes too late
 
     def run(self) -> RunResult:
         program = self.program
@@ -58,7 +101,10 @@ class _SerialRun:
             interrupted = True
         except BreakstepError as error:
             failure = error
-        seconds = (time.perf_counter_ns() - began) / 1e9
+        return self.result((time.perf_counter_ns() - began) / 1e9, interrupted, failure)
+
+    def result(self, seconds: float, interrupted: bool, failure: BreakstepError | None) -> RunResult:
+        """What there is; fields and values only of a run that ended well."""
         self.recorder.complete_threads(1)
         fields = {} if interrupted or failure else self._final(self.unroller)
         values = {} if interrupted or failure else self._values(self.unroller)
@@ -110,13 +156,19 @@ class _SerialRun:
     def _task(self, task: Task) -> None:
         start = time.perf_counter_ns()
         output = Output({}, {})
+        self._heed()
         if task.kind is Kind.STEP:
             site = Site(task.phase.stage.index, task.tile, task.phase.cycle, task.phase.iteration)
             output = self.outputs[task.number] = execute(self.program, site, self._inputs(task))
         elif task.kind is Kind.COMBINE:
             self._combine(task)
+        self._heed()
         if self.options.record:
             self._note(task, start, output)
+
+    def _heed(self) -> None:
+        if self.is_over:
+            raise KeyboardInterrupt
 
     def _note(self, task: Task, start: int, output: Output) -> None:
         recorder, number = self.recorder, task.number

@@ -12,6 +12,7 @@ from dataclasses import replace
 from breakstep.engine.program import Program
 from breakstep.engine.run import RunOptions
 from breakstep.engine.serial import SerialDispatch
+from breakstep.errors import OverdueError
 
 PROCESS = uuid.uuid4().hex  # of this process alone; ids of processes repeat between containers
 SMALL = 4  # zones along each axis of the copy, unless a halo is wider
@@ -26,8 +27,13 @@ def small_copy(program: Program) -> Program:
     return Program(small, mesh.shape, program.fuse)
 
 
-def warm_up(program: Program) -> str:
+def warm_up(program: Program, task_timeout: float = 0.0) -> str:
     """Run the small copy; returns the error that ended it, or "".
+
+    Parameters
+    ----------
+    task_timeout : float
+        Seconds that a kernel may take; 0 for no limit.
 
     An error is no reason to stop: the copy's state is not the problem's, and the real run will tell. Ctrl-C is:
     compiling takes a minute or two, and the run must not begin behind it.
@@ -35,8 +41,11 @@ def warm_up(program: Program) -> str:
     Raises
     ------
     KeyboardInterrupt
+    OverdueError
     """
-    result = SerialDispatch().run(small_copy(program), RunOptions(record=False))
+    result = SerialDispatch().run(small_copy(program), RunOptions(record=False, task_timeout=task_timeout))
+    if isinstance(result.failure, OverdueError):
+        raise result.failure
     if result.interrupted:
         raise KeyboardInterrupt
     return "" if result.failure is None else str(result.failure)

@@ -61,8 +61,19 @@ def require_present(client: Client, addresses: Sequence[str]) -> None:
         raise ClusterError(message, lost=True)
 
 
-def run_on(client: Client, addresses: Sequence[str], function: Callable[..., Any], *args: Any) -> dict[str, Any]:
+def run_on(
+    client: Client,
+    addresses: Sequence[str],
+    function: Callable[..., Any],
+    *args: Any,
+    meanwhile: Callable[[], None] | None = None,
+) -> dict[str, Any]:
     """What a function returns on each of these workers, by address, as ``Client.run`` has it.
+
+    Parameters
+    ----------
+    meanwhile : callable, optional
+        Called again and again while answers are awaited; what it raises ends the waiting.
 
     Raises
     ------
@@ -74,6 +85,8 @@ def run_on(client: Client, addresses: Sequence[str], function: Callable[..., Any
     try:
         while not done:
             require_present(client, addresses)
+            if meanwhile is not None:
+                meanwhile()
             done = client.sync(_is_done, under_way)
     finally:
         if not done:

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import time
 import uuid
+from collections.abc import Callable
 from concurrent.futures import CancelledError
 from dataclasses import dataclass
 from typing import Any
@@ -22,13 +23,14 @@ from breakstep.engine.native import payload as wire
 from breakstep.engine.native import worker as remote
 from breakstep.engine.native.payload import Arrival, Payload
 from breakstep.engine.native.translate import Translation
+from breakstep.engine.overdue import Overseer, now
 from breakstep.engine.placement import owners
 from breakstep.engine.program import Program
 from breakstep.engine.recording import record_edges
 from breakstep.engine.run import Progress, RunOptions, RunResult, unroller_for
 from breakstep.engine.warm import warm_up
-from breakstep.engine.workers import known_workers, present_workers, require_present
-from breakstep.errors import BreakstepError, ClusterError
+from breakstep.engine.workers import known_workers, present_workers, require_present, run_on
+from breakstep.errors import BreakstepError, ClusterError, OverdueError
 from breakstep.graph.tasks import ANYWHERE, Kind, Task, TaskGraph
 from breakstep.graph.unroll import INITIAL, Need, Phase
 from breakstep.profile.record import RunRecord
@@ -56,24 +58,30 @@ class NativeDispatch:
         self.workers = len(self.addresses)
         self._warm: set[int] = set()
 
-    def prepare(self, program: Program) -> None:
+    def prepare(self, program: Program, overseer: Overseer | None = None) -> None:
         """Compile kernels once here, then load them on every worker.
 
         Raises
         ------
         ClusterError
             A worker has gone, or cannot load the program.
+        OverdueError
+            A kernel has not returned within the overseer's limit.
         """
         require_present(self.client, self.addresses)
         if id(program) not in self._warm:
-            warm_up(program)
-            self._load(program)
+            if overseer is None or not overseer.limit:
+                warm_up(program)
+                self._load(program, self.addresses)
+            else:  # here nothing could end a kernel that does not return; so the first worker compiles
+                self._load(program, self.addresses[:1], overseer.look_at_files)
+                self._load(program, self.addresses, overseer.look_at_files)
             self._warm.add(id(program))
 
-    def _load(self, program: Program) -> None:
+    def _load(self, program: Program, addresses: list[str], meanwhile: Callable[[], None] | None = None) -> None:
         try:
-            self.client.run(warm_up, program, workers=self.addresses)
-        except OSError:
+            run_on(self.client, addresses, warm_up, program, meanwhile=meanwhile)
+        except (OSError, ClusterError, OverdueError):
             raise
         except Exception as error:  # pickling and importing raise anything
             raise ClusterError(
@@ -84,13 +92,14 @@ class NativeDispatch:
     def run(self, program: Program, options: RunOptions, progress: Progress | None = None) -> RunResult:
         """Run a program; errors and interrupts end up in the result."""
         try:
-            self.prepare(program)
-            clocks = read_clocks(self.client, self.addresses)
-        except (ClusterError, OSError) as error:
-            failure = error if isinstance(error, ClusterError) else _lost(error)
+            with Overseer(self.client, self.addresses, options.task_timeout) as overseer:
+                self.prepare(program, overseer)
+                clocks = read_clocks(self.client, self.addresses)
+                with self.client.as_current():  # or waits would go to whichever client this process opened last
+                    return _NativeRun(self, program, options, progress, overseer).run(clocks)
+        except (ClusterError, OverdueError, OSError) as error:
+            failure = _lost(error) if isinstance(error, OSError) else error
             return RunResult({}, {}, RunRecord(), 0.0, 0, failure=_without_frames(failure))
-        with self.client.as_current():  # or waits would go to whichever client this process opened last
-            return _NativeRun(self, program, options, progress).run(clocks)
 
 
 class _NativeRun:
@@ -101,8 +110,14 @@ class _NativeRun:
     """
 
     def __init__(
-        self, dispatch: NativeDispatch, program: Program, options: RunOptions, progress: Progress | None
+        self,
+        dispatch: NativeDispatch,
+        program: Program,
+        options: RunOptions,
+        progress: Progress | None,
+        overseer: Overseer,
     ) -> None:
+        self.overseer = overseer
         self.dispatch, self.program, self.options, self.progress = dispatch, program, options, progress
         self.client = dispatch.client
         self.name = uuid.uuid4().hex[:8]
@@ -274,18 +289,31 @@ class _NativeRun:
 
     def _wait(self, futures: list[Future]) -> None:
         """Wait for all; raise the first error among them, or ClusterError when a worker has gone."""
-        while not self.client.sync(_done_within, futures, POLL_SECONDS):
+        limit = self.overseer.limit
+        while not self.client.sync(_done_within, futures, min(POLL_SECONDS, limit or POLL_SECONDS)):
             require_present(self.client, self.dispatch.addresses)
+            self.overseer.look()
         for future in futures:
             if future.status != "finished":
                 future.result()
+
+    def _answers(self, address: str) -> bool:
+        """Whether a worker can still be asked, now that a kernel may be stuck there."""
+        farewell = self.overseer.farewell(address)
+        if farewell is None:
+            return True
+        try:
+            run_on(self.client, [address], now, meanwhile=farewell)
+        except OSError:
+            return False
+        return True
 
     def _collect(self, clocks: list[ClockReading]) -> None:
         """Bring in the workers' records; a cluster that is gone leaves what the client has."""
         wire.ARRIVALS.clear()  # results gathered here are not transfers between workers
         record = self.result.record
         present = present_workers(self.client) if self.client.status == "running" else {}
-        addresses = [address for address in self.dispatch.addresses if address in present]
+        addresses = [address for address in self.dispatch.addresses if address in present and self._answers(address)]
         after = read_clocks(self.client, addresses)
         cpu = {a: r.cpu for a, r in zip(addresses, after, strict=True)}
         self.result.notes = {

@@ -17,6 +17,7 @@ from distributed import Client, Future, KilledWorker, wait
 
 from breakstep.engine import checkpoint
 from breakstep.engine.clocks import ClockReading, drift, read_clocks
+from breakstep.engine.overdue import Overseer
 from breakstep.engine.placement import busiest, owners
 from breakstep.engine.program import Program
 from breakstep.engine.resident import remote
@@ -52,6 +53,8 @@ class Site:
         Checkpoint to go on from.
     facts : mapping
         What a checkpoint's manifest says was run.
+    overseer : Overseer
+        Looks whether kernels return.
     """
 
     client: Client
@@ -61,6 +64,7 @@ class Site:
     checkpoints: Path | None
     resume: Path | None
     facts: Mapping[str, Any]
+    overseer: Overseer
 
 
 @dataclass
@@ -215,11 +219,12 @@ class Attempt:
             self.client.sync(_some_done, pending, POLL_SECONDS)
             _raise_failed(futures)
             self._look_in()
+            self.site.overseer.look()
         _raise_failed(futures)
 
     def _look_in(self) -> list[Status]:
         """Renew the lease, complete checkpoints, tell how far the run is; notices workers that have gone."""
-        answers: dict[str, Status | None] = run_on(self.client, self.addresses, remote.status, self.name)
+        answers: dict[str, Status | None] = self._ask_all(remote.status)
         found = [status for status in answers.values() if status is not None]
         for status in found:
             for saved in status.saved:
@@ -232,6 +237,10 @@ class Attempt:
             if self.progress is not None:
                 self.progress(done)
         return found
+
+    def _ask_all(self, function: Callable[..., Any]) -> dict[str, Any]:
+        patience = self.site.overseer.patience()
+        return run_on(self.client, self.addresses, function, self.name, meanwhile=patience)
 
     def _fetch(self) -> None:
         fields = self.result.fields
@@ -304,12 +313,13 @@ class Attempt:
         for segment in segments:
             for address in alive:
                 self._ask(address, remote.stop, segment.name)
-        return alive
+        return [address for address in alive if address not in self.site.overseer.silent]
 
     def _ask(self, address: str, function: Callable[..., Any], *args: Any) -> Any:
         """One worker's answer; None if it goes meanwhile."""
         try:
-            return run_on(self.client, [address], function, *args)[address]
+            farewell = self.site.overseer.farewell(address)
+            return run_on(self.client, [address], function, *args, meanwhile=farewell)[address]
         except (ClusterError, OSError):
             return None
 

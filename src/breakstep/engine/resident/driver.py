@@ -14,13 +14,14 @@ from typing import Any
 from distributed import Client
 
 from breakstep.engine import checkpoint
+from breakstep.engine.overdue import Overseer
 from breakstep.engine.program import Program
 from breakstep.engine.resident.attempt import Attempt, Site
 from breakstep.engine.resident.host import LEASE_SECONDS
 from breakstep.engine.run import Progress, RunOptions, RunResult
 from breakstep.engine.warm import process, warm_up
 from breakstep.engine.workers import known_workers, run_on
-from breakstep.errors import ClusterError
+from breakstep.errors import ClusterError, OverdueError
 from breakstep.profile.record import RunRecord
 
 REPLACEMENT_SECONDS = 15.0  # how long to wait for a lost worker's replacement
@@ -65,30 +66,36 @@ class ResidentDispatch:
         self._warm: set[str] = set()
         self._program: Program | None = None
 
-    def prepare(self, program: Program) -> None:
+    def prepare(self, program: Program, overseer: Overseer | None = None) -> None:
         """Compile kernels once here, then load them in every process of workers that has not yet.
 
         Raises
         ------
         ClusterError
             A worker has gone (``details["lost"]``), or cannot load the program.
+        OverdueError
+            A kernel has not returned within the overseer's limit.
         """
         if program is not self._program:
-            warm_up(program)
+            if overseer is None or not overseer.limit:
+                warm_up(program)  # not with a limit: here nothing could end a kernel that does not return
             self._warm.clear()
             self._program = program
         cold = [address for address in self.addresses if address not in self._warm]
         if cold:
-            self._load(program, cold)
+            if overseer is not None and overseer.limit:
+                self._load(program, cold[:1], overseer)
+            self._load(program, cold, overseer)
             self._warm.update(cold)
 
-    def _load(self, program: Program, addresses: list[str]) -> None:
+    def _load(self, program: Program, addresses: list[str], overseer: Overseer | None) -> None:
+        meanwhile = overseer.look_at_files if overseer is not None else None
         try:
             apart = {found: address for address, found in run_on(self.client, addresses, process).items()}
-            run_on(self.client, list(apart.values()), warm_up, program)
+            run_on(self.client, list(apart.values()), warm_up, program, meanwhile=meanwhile)
         except OSError as error:
             raise ClusterError(f"a worker was lost before the run began ({error!r})", lost=True) from error
-        except ClusterError:
+        except (ClusterError, OverdueError):
             raise
         except Exception as error:  # pickling and importing raise anything
             raise ClusterError(
@@ -127,12 +134,14 @@ class ResidentDispatch:
         self, program: Program, options: RunOptions, progress: Progress | None, resume: Path | None
     ) -> RunResult:
         try:
-            self.prepare(program)
-        except ClusterError as error:
+            with Overseer(self.client, self.addresses, options.task_timeout) as overseer:
+                self.prepare(program, overseer)
+                told = (self.threads, self.lease, self.checkpoints, resume, self.facts)
+                site = Site(self.client, tuple(self.addresses), *told, overseer)
+                with self.client.as_current():  # or waits would go to whichever client this process opened last
+                    return Attempt(site, program, options, progress).run()
+        except (ClusterError, OverdueError) as error:
             return RunResult({}, {}, RunRecord(), 0.0, 0, failure=error.with_traceback(None))
-        site = Site(self.client, tuple(self.addresses), self.threads, self.lease, self.checkpoints, resume, self.facts)
-        with self.client.as_current():  # or waits would go to whichever client this process opened last
-            return Attempt(site, program, options, progress).run()
 
     def _replace_workers(self) -> None:
         """Wait a while for as many workers as before; go on with those there are."""
