@@ -13,7 +13,7 @@ import click
 
 from breakstep.errors import BreakstepError
 
-COMMANDS = ("compare", "run", "ledger", "why", "kernels", "selfcheck")
+COMMANDS = ("compare", "run", "ledger", "why", "kernels", "selfcheck", "new")
 
 
 class Commands(click.Group):
