@@ -5,11 +5,13 @@ It knows geometry only. Absent axes have one zone and no halo, so that kernels s
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field
 from enum import StrEnum
 from typing import TypeAlias
 
 from breakstep.errors import TilingError
+from breakstep.mesh.shown import columns
 
 Triple: TypeAlias = tuple[int, int, int]
 AXIS_NAMES = ("x", "y", "z")
@@ -95,3 +97,14 @@ class Mesh:
     def edge(self, axis: int, side: int) -> Edge:
         """Condition at the low (0) or high (1) side of an axis."""
         return self.edges[axis][side]
+
+    def _repr_html_(self) -> str:
+        """One row an axis, for notebooks."""
+        rows = [
+            (name, zones, f"{width:g}", f"{low:g}", f"{low + zones * width:g}", f"{sides[0]}, {sides[1]}")
+            for name, zones, width, low, sides in zip(
+                AXIS_NAMES, self.shape, self.spacing, self.origin, self.edges, strict=False
+            )
+        ]
+        heads = ("axis", "zones", "zone width [cm]", "from [cm]", "to [cm]", "edges")
+        return columns(f"Mesh of {math.prod(self.shape)} zones", heads, rows)

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from typing import Literal
 
 from breakstep.errors import DeclarationError
+from breakstep.mesh.shown import facts
 from breakstep.steps.problem import Problem
 
 Placement = Literal["blocks", "curve", "cyclic", "balanced", "shared", "dask"]
@@ -60,3 +61,8 @@ class Setup:
             )
         object.__setattr__(self, "tile", tuple(sizes))
         self.problem.cut(self.tile)
+
+    def _repr_html_(self) -> str:
+        """The problem, and on what it runs, for notebooks."""
+        names = ("tile", "workers", "threads", "placement", "window", "fuse", "dispatch")
+        return self.problem._repr_html_() + facts("Run", [(name, getattr(self, name)) for name in names])

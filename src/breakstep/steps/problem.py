@@ -9,6 +9,7 @@ from typing import TypeAlias
 from breakstep.errors import DeclarationError
 from breakstep.mesh.fields import Field
 from breakstep.mesh.mesh import AXIS_NAMES, Edge, Mesh
+from breakstep.mesh.shown import columns, facts, listed
 from breakstep.mesh.tiling import Tile, Tiling
 from breakstep.steps.modules import Source
 from breakstep.steps.splitting import Splitting
@@ -68,6 +69,16 @@ class Problem:
     def by_name(self) -> dict[str, Field]:
         """Fields by name."""
         return {field.name: field for field in self.fields}
+
+    def _repr_html_(self) -> str:
+        """Mesh, fields and splitting, for notebooks."""
+        rows = [
+            (f.name, listed(f.components), listed(dict.fromkeys(f.units)), "within a cycle" if f.scratch else "state")
+            for f in self.fields
+        ]
+        fields = columns("Fields", ("name", "components", "units", "lives"), rows)
+        title = facts(self.title or self.name, [("name", self.name), ("cycles at most", self.cycles)])
+        return title + self.mesh._repr_html_() + fields + self.splitting._repr_html_()
 
     def _check_tile_values(self) -> None:
         fields = self.by_name()

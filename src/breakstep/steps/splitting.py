@@ -12,6 +12,7 @@ from typing import TypeAlias
 
 from breakstep.errors import DeclarationError
 from breakstep.mesh.fields import Field
+from breakstep.mesh.shown import columns, listed
 from breakstep.steps.reduction import Reduction
 from breakstep.steps.step import Array, Read, Step, check_name
 
@@ -125,6 +126,18 @@ class Splitting:
                 seen.add(item.until.name)
                 yield item.until
 
+    def _repr_html_(self) -> str:
+        """Each order's items and what they declare, then the reductions, for notebooks."""
+        rows: list[tuple[object, ...]] = []
+        for number, order in enumerate(self.orders):
+            cycles = "every cycle" if len(self.orders) == 1 else f"cycle {number} of {len(self.orders)}"
+            rows += [(cycles, *_described(item)) for item in order]
+        rows += [
+            ("end of each cycle", f"reduction {r.name} ({r.combine}, lag {r.lag})", listed(r.reads), "", "")
+            for r in self.reductions
+        ]
+        return columns("Splitting", ("when", "what", "reads", "writes", "uses"), rows)
+
     def check_fields(self, fields: Mapping[str, Field]) -> None:
         """Raise DeclarationError when a step or reduction names a field that does not exist."""
         for owner, names in self._field_names():
@@ -144,6 +157,20 @@ class Splitting:
             for read in step.reads:
                 if not read.is_local:
                     yield step.name, read
+
+
+def _described(item: Item) -> tuple[str, str, str, str]:
+    if isinstance(item, Repeat):
+        steps, until = listed(step.name for step in item.body), item.until
+        what = (
+            f"repeat {item.name}: {steps}; at most {item.at_most} times, until {until.name} says stop (lag {until.lag})"
+        )
+        reads = dict.fromkeys(str(read) for step in item.body for read in step.reads)
+        writes = dict.fromkeys(name for step in item.body for name in step.writes)
+        uses = dict.fromkeys(name for step in item.body for name in step.uses)
+        return what, listed(reads), listed(writes), listed(uses)
+    share = "" if item.fraction == 1.0 else f", {item.fraction:g} of dt"
+    return f"{item.name}{share}", listed(item.reads), listed(item.writes), listed(item.uses)
 
 
 def _same(first: object, second: object) -> bool:

@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from breakstep.errors import CourantError, DeclarationError
 from breakstep.mesh.mesh import Triple
+from breakstep.mesh.shown import facts, listed
 
 Array: TypeAlias = NDArray[np.float64]
 
@@ -40,6 +41,10 @@ class Read:
     def is_local(self) -> bool:
         """Whether the step reads its own zones only."""
         return not any(self.halo)
+
+    def __str__(self) -> str:
+        halo = "" if self.is_local else f" with halo {self.halo}{' and corners' if self.corners else ''}"
+        return f"{self.field}{halo}"
 
 
 @dataclass
@@ -170,6 +175,17 @@ class Step:
     def is_local(self) -> bool:
         """Whether it reads no ghost zones at all."""
         return all(read.is_local for read in self.reads)
+
+    def _repr_html_(self) -> str:
+        """What it declares, for notebooks."""
+        rows = [
+            ("kernel", getattr(self.kernel, "__qualname__", type(self.kernel).__name__)),
+            ("reads", listed(self.reads)),
+            ("writes", listed(self.writes)),
+            ("uses", listed(self.uses)),
+            ("share of dt", f"{self.fraction:g}"),
+        ]
+        return facts(f"Step {self.name}", rows)
 
 
 def check_name(what: str, name: str) -> None:
