@@ -97,9 +97,9 @@ class Stopwatch:
         """Begin; hand the result to :meth:`stop`."""
         return time.perf_counter_ns(), time.thread_time_ns()
 
-    def stop(self, what: str, step: str, began: tuple[int, int]) -> None:
-        """End an interval."""
-        cpu = time.thread_time_ns() - began[1]
+    def stop(self, what: str, step: str, began: tuple[int, int], stands_for: int = -1) -> None:
+        """End an interval; a wait that stands for processor time is noted as having used it."""
+        cpu = stands_for if stands_for >= 0 else time.thread_time_ns() - began[1]
         self.intervals.append(Interval(what, step, began[0], time.perf_counter_ns(), cpu))
 
 
@@ -133,7 +133,7 @@ def _execute(program: Program, site: Site, inputs: Inputs) -> Output:
         given = _gather(program, site.tile, step, arrays, inputs, watch)
         began = watch.start()
         made = _called(step.kernel, given, call)
-        watch.stop("kernel", step.name, began)
+        watch.stop("kernel", step.name, began, call.stands_for)
         arrays |= check_arrays(made, step.writes, program.fields, program.tiling.tiles[site.tile], call.where())
         output.counters += [(step.name, name, amount) for name, amount in call.counters.items()]
     for reduction in stage.partials:

@@ -23,6 +23,7 @@ from breakstep.graph.tasks import ANYWHERE
 from breakstep.profile.record import FinalField, RunRecord
 from breakstep.profile.run import Profile
 from breakstep.profile.store import write_profile
+from breakstep.steps.timed import timed_kernel
 
 SOFTWARE = ("numpy", "numba", "dask", "distributed", "scipy", "pyarrow", "zarr", "xarray")
 
@@ -145,6 +146,7 @@ def _manifest(dispatch: Dispatch, program: Program, options: RunOptions, result:
         "message": str(result.failure or ("stopped by the user" if result.interrupted else "")),
         "clock": {"method": "shared clock or shortest of several round trips", "residual_ns": residual},
         "wall_seconds": result.seconds,
+        **_waits(program),
         "notes": {
             **notes,
             "placement": options.placement,
@@ -155,6 +157,14 @@ def _manifest(dispatch: Dispatch, program: Program, options: RunOptions, result:
             "values": {name: value[-1].tolist() for name, value in result.values.items()},
         },
     }
+
+
+def _waits(program: Program) -> dict[str, Any]:
+    """Which steps only waited, by records of times, and by which factor their waits were stretched."""
+    kernels = {step.name: kernel for step in program.problem.splitting.steps() if (kernel := timed_kernel(step))}
+    if not kernels:
+        return {}
+    return {"timed_steps": sorted(kernels), "dilate": next(iter(kernels.values())).dilate}
 
 
 def _placement(

@@ -13,6 +13,7 @@ from breakstep.engine.program import Program
 from breakstep.engine.run import RunOptions
 from breakstep.engine.serial import SerialDispatch
 from breakstep.errors import OverdueError
+from breakstep.steps.timed import without_waits
 
 PROCESS = uuid.uuid4().hex  # of this process alone; ids of processes repeat between containers
 SMALL = 4  # zones along each axis of the copy, unless a halo is wider
@@ -43,7 +44,8 @@ def warm_up(program: Program, task_timeout: float = 0.0) -> str:
     KeyboardInterrupt
     OverdueError
     """
-    result = SerialDispatch().run(small_copy(program), RunOptions(record=False, task_timeout=task_timeout))
+    with without_waits():
+        result = SerialDispatch().run(small_copy(program), RunOptions(record=False, task_timeout=task_timeout))
     if isinstance(result.failure, OverdueError):
         raise result.failure
     if result.interrupted:

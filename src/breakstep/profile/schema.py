@@ -84,7 +84,7 @@ INTERVALS = TableLayout(
         Column("step", _WORD, "the kernel's step"),
         Column("start_ns", _INT64, "begin [ns]"),
         Column("end_ns", _INT64, "end [ns]"),
-        Column("cpu_ns", _INT64, "processor time of the thread within it [ns]"),
+        Column("cpu_ns", _INT64, "processor time of the thread within it; of a step by timer, the wait asked for [ns]"),
     ),
     {"what": INTERVAL_KINDS},
 )

@@ -23,6 +23,7 @@ from breakstep.mesh.mesh import AXIS_NAMES, Edge, Mesh
 from breakstep.scenario.initial import InitialState, gas_values, radiation_values, temperature_at
 from breakstep.scenario.layouts import Blast, Layout, RadiationSlab, Riemann, Spot, Spots, State, Uniform
 from breakstep.scenario.model import ScenarioFile
+from breakstep.scenario.rehearsed import is_timed_alone, timed_fields, timed_items, timed_problem
 from breakstep.scenario.states import edge_key, edges
 from breakstep.steps.burning import Burning, burn
 from breakstep.steps.hydro import Gas, gas_field, sweep
@@ -44,6 +45,8 @@ def build_problem(file: ScenarioFile) -> Problem:
     DeclarationError, TilingError
         Its parts do not fit together.
     """
+    if is_timed_alone(file):
+        return timed_problem(file, build_mesh(file.mesh), build_time_step(file, build_gas(file)))
     gas = build_gas(file)
     transport = None if file.transport is None else build_transport(file.transport)
     dt = build_time_step(file, gas)
@@ -143,23 +146,29 @@ def _fields(file: ScenarioFile, gas: Gas, transport: Transport | None) -> tuple[
     if transport is not None:
         beyond = {edge: radiation_values(transport.groups, state) for edge, state in states.items()}
         fields.extend(transport_fields(transport, len(file.mesh.zones), beyond))
+    fields.extend(timed_fields(file, build_mesh(file.mesh)))
     return tuple(fields)
 
 
 def _local_steps(file: ScenarioFile, gas: Gas) -> list[Item]:
-    """Sweeps axis by axis, then burning."""
+    """Sweeps axis by axis, then burning; steps by timer behind those that they follow."""
     steps: list[Item] = []
+    timed = timed_items(file, build_mesh(file.mesh), "local", ("dt",))
     if file.hydro is not None:
         steps.extend(sweep(gas, axis) for axis in range(len(file.mesh.zones)))
+    steps.extend(timed.get("hydro", ()))
     if file.burning is not None:
         table = file.burning
         limits = (table.relative_tolerance, table.absolute_tolerance, table.sub_step_limit)
         steps.append(burn(gas, Burning(table.network, *limits, table.cutoff_temperature)))
-    return steps
+    return [*steps, *timed.get("burning", ())]
 
 
 def _transport_items(file: ScenarioFile, gas: Gas, transport: Transport | None) -> list[Item]:
-    return [] if transport is None else transport_items(gas, transport, len(file.mesh.zones))
+    if transport is None:
+        return []
+    timed = timed_items(file, build_mesh(file.mesh), "radiation", ("dt",))
+    return [*transport_items(gas, transport, len(file.mesh.zones)), *timed.get("transport", ())]
 
 
 def _splitting(

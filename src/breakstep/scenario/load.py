@@ -19,6 +19,7 @@ from breakstep.scenario.find import find, parse, refusal
 from breakstep.scenario.model import ScenarioFile
 from breakstep.scenario.overrides import apply_overrides, apply_switches
 from breakstep.scenario.reading import Reader
+from breakstep.scenario.rehearsed import beside, complete
 from breakstep.scenario.rules import find_faults
 from breakstep.scenario.sections import RunSection
 from breakstep.steps.problem import Problem
@@ -105,7 +106,7 @@ def load_scenario(name_or_path: str | Path, overrides: Sequence[str] = ()) -> An
     if code is not None:
         return code_scenario({"code": code}, source=str(name_or_path), overrides=overrides)
     path = find(str(name_or_path))
-    return any_scenario_from(parse(path), source=path.name, overrides=overrides, folder=path.parent)
+    return any_scenario_from(beside(path.parent, parse(path)), source=path.name, overrides=overrides, folder=path.parent)
 
 
 def any_scenario_from(
@@ -128,6 +129,7 @@ def scenario_from(tables: Mapping[str, Any], *, source: str, overrides: Sequence
     changed = copy.deepcopy(dict(tables))
     apply_switches(changed)
     faults, paths = apply_overrides(changed, overrides)
+    complete(changed)
     sentences = [fault.sentence("--set") for fault in faults]
     sentences += [fault.sentence(_blame(fault.key, source, paths)) for fault in check(changed)]
     if sentences:

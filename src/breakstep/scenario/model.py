@@ -15,6 +15,7 @@ from breakstep.scenario.physics import (
 )
 from breakstep.scenario.sections import MeshSection, RunSection, Section, TimeStepSection, Word
 from breakstep.scenario.states import FixedSection, InitialSection
+from breakstep.scenario.timer_tables import TimersSection
 
 SWITCHES = ("hydro", "transport", "burning")
 """Tables whose presence makes a step take part; ``true`` stands for an empty table, ``false`` for none."""
@@ -34,5 +35,6 @@ class ScenarioFile(Section):
     hydro: HydroSection | None = Field(default=None, description="hydrodynamics sweeps")
     transport: TransportSection | None = Field(default=None, description="implicit radiation transport")
     burning: BurningSection | None = Field(default=None, description="nuclear burning")
+    timers: TimersSection | None = Field(default=None, description="steps by timer")
     initial: Annotated[InitialSection, Field(discriminator="kind")] = Field(description="the initial state")
     fixed: FixedSection = Field(default=FixedSection(), description="states beyond fixed edges")

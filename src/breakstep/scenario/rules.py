@@ -18,6 +18,7 @@ from breakstep.mesh.tiling import Tiling
 from breakstep.scenario.build import build_mesh
 from breakstep.scenario.faults import Fault
 from breakstep.scenario.reading import Rule, apply_rules
+from breakstep.scenario.rehearsed import TIMER_RULES
 from breakstep.scenario.state_rules import STATE_RULES
 from breakstep.steps.timestep import LAGGED_CFL_LIMIT
 
@@ -79,8 +80,8 @@ def _halos_fit(file: Any) -> Iterator[Fault]:
 
 
 def _something_happens(file: Any) -> Iterator[Fault]:
-    if file.hydro is None and file.transport is None and file.burning is None:
-        yield Fault("", "no step takes part; add one of the tables [hydro], [transport], [burning]")
+    if file.hydro is None and file.transport is None and file.burning is None and file.timers is None:
+        yield Fault("", "no step takes part; add one of the tables [hydro], [transport], [burning], [timers]")
 
 
 def _lagged_cfl(file: Any) -> Iterator[Fault]:
@@ -175,6 +176,7 @@ RULES: tuple[Rule, ...] = (
     _species_once,
     _species_lists,
     *STATE_RULES,
+    *TIMER_RULES,
 )
 
 

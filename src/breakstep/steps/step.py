@@ -66,6 +66,8 @@ class Call:
         Results of the reductions that the step declared in ``uses``.
     fraction : float
         Share of the cycle's time step that this call advances (1/2 for the halves of a Strang splitting).
+    stands_for : int
+        Set by a kernel that only waits: the processor time for which its wait stands [ns]; -1 for a real kernel.
     """
 
     step: str
@@ -78,6 +80,7 @@ class Call:
     active: tuple[bool, bool, bool]
     values: Mapping[str, Array]
     fraction: float = 1.0
+    stands_for: int = -1
     counters: dict[str, int] = field(default_factory=dict)
 
     @property
