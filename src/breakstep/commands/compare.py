@@ -10,6 +10,7 @@ from breakstep.commands.session import Session, Stopped
 from breakstep.commands.shared import (
     check_json,
     choose_place,
+    crowded,
     open_dispatch,
     output_folder,
     run_options,
@@ -36,6 +37,7 @@ def compare(
     overrides: tuple[str, ...],
     workers: int | None,
     threads: int | None,
+    dilate: float | None,
     placement: str | None,
     dispatch: str | None,
     memory_limit: int | None,
@@ -50,12 +52,13 @@ def compare(
     """Run SCENARIO with barriers and without, and say what leaving them out gives back."""
     if scenario is None:
         raise ScenarioError("name a scenario to compare")
-    session = Session.load(scenario, overrides, placement, memory_limit or 0)
+    session = Session.load(scenario, overrides, placement, memory_limit or 0, dilate)
     session.allow(task_timeout)
     session.barriers(barriers)
     check_json(json_file)
     place = choose_place(session.scenario.run, dispatch, workers, threads, address, scheduler_file)
     session.check_dispatch(place.dispatch)
+    place = crowded(place, session.program)
     folder = output_folder(out, session.scenario.name)
     try:
         with open_dispatch(place) as engine:

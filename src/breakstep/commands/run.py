@@ -11,6 +11,7 @@ from breakstep.commands.session import Session, Stopped
 from breakstep.commands.shared import (
     check_json,
     choose_place,
+    crowded,
     open_dispatch,
     output_folder,
     reading,
@@ -43,6 +44,7 @@ def run(
     overrides: tuple[str, ...],
     workers: int | None,
     threads: int | None,
+    dilate: float | None,
     placement: str | None,
     dispatch: str | None,
     memory_limit: int | None,
@@ -56,7 +58,7 @@ def run(
     task_timeout: float | None,
 ) -> int:
     """Run SCENARIO once and print where its core-seconds went."""
-    resumed, session, choice = _begin(scenario, overrides, resume, barriers, placement, memory_limit)
+    resumed, session, choice = _begin(scenario, overrides, resume, barriers, placement, memory_limit, dilate)
     session.options = session.saving_every(checkpoint_every)
     session.allow(task_timeout)
     tell_remarks(session.scenario.remarks)
@@ -67,7 +69,7 @@ def run(
         raise ScenarioError("checkpoints need the resident dispatch; leave --dispatch out")
     folder = output_folder(out, session.scenario.name)
     place = replace(
-        place,
+        crowded(place, session.program),
         checkpoints=(folder / CHECKPOINTS).absolute() if checkpoint_every else None,
         resume=resumed,
         facts={"scenario": session.facts(), "barriers": choice, "checkpoint_every": checkpoint_every or 0},
@@ -103,12 +105,13 @@ def _begin(
     barriers: str | None,
     placement: str | None,
     memory_limit: int | None,
+    dilate: float | None,
 ) -> tuple[Path | None, Session, str]:
     """The checkpoint to go on from, if any, the session, and the choice of barriers."""
     if resume is None:
         if scenario is None:
             raise ScenarioError("name a scenario to run, or --resume the folder of an earlier run")
-        session = Session.load(scenario, overrides, placement, memory_limit or 0)
+        session = Session.load(scenario, overrides, placement, memory_limit or 0, dilate)
         choice = barriers or "tasked"
         session.barriers(choice)
         return None, session, choice
@@ -122,7 +125,7 @@ def _begin(
     with reading(resume, CheckpointError):
         folder = last_checkpoint(resume / CHECKPOINTS if (resume / CHECKPOINTS).is_dir() else resume)
         manifest = read_manifest(folder)
-    session = Session.from_tables(manifest["scenario"], folder, overrides, placement, memory_limit or 0)
+    session = Session.from_tables(manifest["scenario"], folder, overrides, placement, memory_limit or 0, dilate)
     if list(session.program.tile_shape) != manifest["tile"]:
         raise CheckpointError(
             f"{folder}: tiles of {manifest['tile']} zones cannot be resumed with others; leave mesh.tile"

@@ -28,6 +28,15 @@ class Stopped(Exception):  # noqa: N818  (nothing went wrong)
         self.folder = folder
 
 
+def _stretched(scenario: AnyScenario, dilate: float | None) -> AnyScenario:
+    """The scenario with waits of steps by timer stretched by a factor given on the command line."""
+    if dilate is None:
+        return scenario
+    if getattr(scenario.file, "timers", None) is None:
+        raise ScenarioError("--dilate stretches the waits of steps by timer, and the scenario has none; leave it out")
+    return any_scenario_from(scenario.resolved(), source=scenario.source, overrides=[f"timers.dilate={dilate}"])
+
+
 @dataclass
 class Session:
     """One scenario with everything resolved.
@@ -48,7 +57,14 @@ class Session:
     is_warm: bool = False
 
     @classmethod
-    def load(cls, name: str, overrides: Sequence[str], placement: str | None = None, memory_limit: int = 0) -> Session:
+    def load(
+        cls,
+        name: str,
+        overrides: Sequence[str],
+        placement: str | None = None,
+        memory_limit: int = 0,
+        dilate: float | None = None,
+    ) -> Session:
         """Read and check a scenario.
 
         Raises
@@ -57,7 +73,7 @@ class Session:
             All its faults together.
         """
         with reading(name, ScenarioError):
-            scenario = load_scenario(name, overrides)
+            scenario = _stretched(load_scenario(name, overrides), dilate)
         return cls.of(scenario, placement, memory_limit)
 
     @classmethod
@@ -77,6 +93,7 @@ class Session:
         overrides: Sequence[str],
         placement: str | None,
         memory_limit: int,
+        dilate: float | None = None,
     ) -> Session:
         """The scenario that a checkpoint's manifest holds.
 
@@ -86,7 +103,7 @@ class Session:
             All its faults together, overrides included.
         """
         tables = facts.get("resolved", {}) if isinstance(facts, Mapping) else {}
-        scenario = any_scenario_from(tables, source=str(source), overrides=overrides)
+        scenario = _stretched(any_scenario_from(tables, source=str(source), overrides=overrides), dilate)
         return cls.of(scenario, placement, memory_limit)
 
     def saving_every(self, cycles: int | None) -> RunOptions:

@@ -6,7 +6,7 @@ import contextlib
 import json
 import time
 from collections.abc import Callable, Iterable, Iterator, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -17,12 +17,14 @@ from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, T
 from breakstep.engine.cluster import existing_cluster, local_cluster
 from breakstep.engine.native import NativeDispatch
 from breakstep.engine.placement import PLACEMENTS
-from breakstep.engine.recorded import check_folder
+from breakstep.engine.program import Program
+from breakstep.engine.recorded import available_processors, check_folder
 from breakstep.engine.resident import ResidentDispatch
 from breakstep.engine.run import Dispatch
 from breakstep.engine.serial import SerialDispatch
 from breakstep.errors import BreakstepError, OutputError, OverdueError
 from breakstep.scenario.sections import PlaceSection
+from breakstep.steps.timed import timed_kernel
 
 _F = TypeVar("_F", bound=Callable[..., Any])
 
@@ -34,6 +36,7 @@ def run_options(function: _F) -> _F:
         click.option("--set", "overrides", multiple=True, metavar="KEY.PATH=VALUE", help="Override a scenario value."),
         click.option("--workers", type=click.IntRange(1), help="Workers (default: the scenario's; all of a cluster)."),
         click.option("--threads", type=click.IntRange(1), help="Threads a worker (default: the scenario's)."),
+        click.option("--dilate", type=click.FloatRange(0.0, min_open=True), help="Stretch waits of steps by timer so."),
         click.option("--placement", type=click.Choice(PLACEMENTS), help="Who owns which tile."),
         click.option("--dispatch", type=click.Choice(["resident", "native", "serial"]), help="Who runs the tasks."),
         click.option("--memory-limit", type=click.IntRange(0), help="Live bytes a worker above which run-ahead waits."),
@@ -63,6 +66,8 @@ class Place:
     ----------
     workers : int or None
         None for all workers of the user's own cluster.
+    processes : int or None
+        How many processes the workers share; None for one each.
     """
 
     dispatch: str
@@ -73,6 +78,7 @@ class Place:
     checkpoints: Path | None = None
     resume: Path | None = None
     facts: Mapping[str, Any] = field(default_factory=dict)
+    processes: int | None = None
 
     @property
     def is_local(self) -> bool:
@@ -115,6 +121,23 @@ def choose_place(
     )
 
 
+def crowded(place: Place, program: Program) -> Place:
+    """The place, with few processes where more workers than processors would only wait; says so.
+
+    Workers that wait need no processor, and a process each would cost them a second to start and 200 MB.
+    """
+    processors = available_processors()
+    waits = all(timed_kernel(step) for step in program.problem.splitting.steps())
+    if not waits or not place.is_local or place.dispatch == "serial" or (place.workers or 1) <= processors:
+        return place
+    click.echo(
+        f"breakstep: all steps are by timer, so {place.workers} workers share"
+        f" {processors} {'process' if processors == 1 else 'processes'}",
+        err=True,
+    )
+    return replace(place, processes=processors)
+
+
 @contextlib.contextmanager
 def open_dispatch(place: Place) -> Iterator[Dispatch]:
     """The dispatch to run with, and its cluster for as long as the context lasts."""
@@ -125,7 +148,7 @@ def open_dispatch(place: Place) -> Iterator[Dispatch]:
         cluster = existing_cluster(place.address, place.scheduler_file)
     else:
         assert place.workers is not None
-        cluster = local_cluster(place.workers, place.threads)
+        cluster = local_cluster(place.workers, place.threads, place.processes)
     with cluster as client, _left_behind(place):
         if place.dispatch == "native":
             yield NativeDispatch(client, place.workers)

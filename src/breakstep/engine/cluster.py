@@ -13,6 +13,7 @@ from distributed import Client, LocalCluster
 from distributed.comm.addressing import parse_address, parse_host_port
 from distributed.gc import disable_gc_diagnosis
 
+from breakstep.engine.crowd import CROWDED, crowd_in
 from breakstep.engine.interrupts import children_deaf, interrupts_held
 from breakstep.errors import ClusterError
 
@@ -20,8 +21,10 @@ CONNECT_SECONDS = 5  # Dask tries again and again until then, in case the schedu
 
 
 @contextlib.contextmanager
-def local_cluster(workers: int, threads: int = 1) -> Iterator[Client]:
+def local_cluster(workers: int, threads: int = 1, processes: int | None = None) -> Iterator[Client]:
     """A cluster of worker processes on this machine, gone when the context ends.
+
+    With fewer processes than workers, several workers share a process: for workers that mostly wait.
 
     Scheduler and workers listen on loopback alone. Each worker's BLAS runs one thread (Dask's own
     default for its worker processes), so that the tasks are the only parallelism. Ctrl-C does not reach the
@@ -39,12 +42,15 @@ def local_cluster(workers: int, threads: int = 1) -> Iterator[Client]:
         # starts no more: with the default of 15 s a second death at the wrong moment halves the cluster for good.
         "distributed.deploy.lost-worker-timeout": "1 day",
     }
-    with dask.config.set(quiet), contextlib.ExitStack() as stack:
+    apart = min(processes or workers, workers)
+    with dask.config.set(quiet | (CROWDED if apart < workers else {})), contextlib.ExitStack() as stack:
         with interrupts_held(), children_deaf():
-            client = stack.enter_context(Client(stack.enter_context(_start(workers, threads))))
+            client = stack.enter_context(Client(stack.enter_context(_start(apart, threads))))
             # The scheduler times garbage collections of this process, in a callback: Ctrl-C that falls into it is
             # lost (seen while numba compiled), and every later collection then complains of that with a traceback.
             disable_gc_diagnosis()
+            if apart < workers:
+                stack.enter_context(crowd_in(client, workers, threads))
         yield client
 
 

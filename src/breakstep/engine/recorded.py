@@ -195,10 +195,15 @@ def _software() -> dict[str, str]:
 def machine() -> dict[str, Any]:
     """What this process runs on."""
     return {
-        "cpus": len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1,
+        "cpus": available_processors(),
         "model": _processor(),
         "system": f"{platform.system()} {platform.machine()}",
     }
+
+
+def available_processors() -> int:
+    """Processors that this process may use."""
+    return len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
 
 
 def _processor() -> str:

@@ -12,6 +12,7 @@ from breakstep.profile.run import Profile
 from breakstep.profile.words import LABELS
 from breakstep.report.comparison import attempts_of, resumed_from
 from breakstep.report.reasons import share
+from breakstep.report.trust import trust_sentences
 from breakstep.report.wording import (
     FULL_CHOICES,
     WIDTH,
@@ -43,7 +44,8 @@ def ledger_lines(profile: Profile) -> list[str]:
     if manifest["message"]:
         lines += wrapped(manifest["message"])
     lines += ["", *_account_table(profile), "", *_factor_lines(profile), "", *_chain_table(profile)]
-    return [*lines, "", *_step_table(profile), "", *_traffic_lines(profile), *_clock_lines(profile)]
+    trusted = [line for sentence in trust_sentences([profile]) for line in wrapped(sentence)]
+    return [*lines, "", *_step_table(profile), "", *_traffic_lines(profile), *_clock_lines(profile), *trusted]
 
 
 def _coverage(profile: Profile) -> str:

@@ -18,6 +18,7 @@ import pandas as pd
 from breakstep.profile.ledger import ACCOUNTS, Ledger
 from breakstep.profile.run import Profile
 from breakstep.profile.statistics import Gain, gain_of_pairs
+from breakstep.report.trust import trust_of
 
 
 @dataclass(frozen=True)
@@ -114,6 +115,7 @@ def run_figures(profile: Profile) -> dict[str, Any]:
             for row in profile.counters_by_step.itertuples()
             if not str(row.counter).startswith("checksum:")
         },
+        "rehearsal": None if (trust := trust_of(profile)) is None else trust.as_json(),
         "digest": profile.manifest["digest"],
         "barriers": profile.manifest["barriers"],
         "attempts": attempts_of(profile),

@@ -32,7 +32,7 @@ def reasons(lockstep: Profile, tasked: Profile) -> list[str]:
         *([] if prompt else _reduction_reason(tasked)),
         *_neighbour_reason(tasked),
         *_placement_reason(tasked),
-        *_engine_reason(tasked),
+        *([] if tasked.timed_steps else _engine_reason(tasked)),  # of a rehearsal more is said elsewhere
     ]
     heaviest_first = [sentence for _, sentence in sorted(others, key=lambda reason: -reason[0])]
     return [*_barrier_reason(lockstep), *(sentence for _, sentence in first), *heaviest_first]
@@ -94,10 +94,16 @@ def _unevenness_of(lockstep: Profile, step: str) -> str:
     return f" (the busiest worker of a phase has {unevenness(phases)} times the mean work{tile})"
 
 
+def _without_processor(profile: Profile) -> int:
+    """Kernel time of real steps beyond their processor time [ns]; steps by timer need no processor."""
+    work = profile.work.drop(index=list(profile.timed_steps), errors="ignore")
+    return int((work["compute_ns"] - work["cpu_ns"]).sum())
+
+
 def _stolen_reason(lockstep: Profile, tasked: Profile) -> Iterator[Reason]:
     """Kernel time in which the processor was somebody else's: what is measured then is the machine's other work."""
-    wall, cpu = (sum(int(p.work[column].sum()) for p in (lockstep, tasked)) for column in ("compute_ns", "cpu_ns"))
-    stolen = 1.0 - cpu / wall if wall else 0.0
+    wall = sum(int(p.work["compute_ns"].sum()) for p in (lockstep, tasked))
+    stolen = sum(_without_processor(p) for p in (lockstep, tasked)) / wall if wall else 0.0
     if stolen >= MUCH_STOLEN:
         yield (
             1.0,

@@ -9,6 +9,7 @@ from breakstep.profile.run import Profile
 from breakstep.profile.words import LABELS
 from breakstep.report.comparison import Comparison
 from breakstep.report.reasons import NOTABLE_SHARE, reasons
+from breakstep.report.trust import trust_sentences
 from breakstep.report.wording import (
     FULL_CHOICES,
     barriers_of,
@@ -23,7 +24,7 @@ from breakstep.report.wording import (
     wrapped,
 )
 
-LINES = 25  # of a whole comparison, so that it fits a terminal of the usual height
+LINES = 25  # of a whole comparison, so that it fits a terminal of the usual height; a rehearsal's account comes on top
 TOP_STEPS = 4
 WIDE = 1.1  # high over low end from which an interval leaves a gain of some percent undecided
 
@@ -32,12 +33,13 @@ def comparison_lines(comparison: Comparison) -> list[str]:
     """The whole text of ``compare``."""
     first = [*wrapped(headline(comparison)), *wrapped(_subline(comparison)), ""]
     table, steps = _accounts(comparison), list(_steps(comparison))
+    trusted = [line for sentence in trust_sentences(comparison.shown) for line in wrapped(sentence, bullet=True)]
     last = wrapped(_bytes_sentence(*comparison.shown), bullet=True)
     why = [wrapped(sentence, bullet=True) for sentence in reasons(*comparison.shown)]
     room = LINES - len(first) - len(table) - len(last) - 1
     shown = min(len(steps), max(1, room - sum(map(len, why))))
     at = 2  # below the heading and the account of compute
-    return [*first, *table[:at], *steps[:shown], *table[at:], "", *_fitting(why, room - shown), *last]
+    return [*first, *table[:at], *steps[:shown], *table[at:], "", *_fitting(why, room - shown), *trusted, *last]
 
 
 def _fitting(sentences: Iterable[list[str]], room: int) -> Iterator[str]:

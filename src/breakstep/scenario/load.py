@@ -106,7 +106,8 @@ def load_scenario(name_or_path: str | Path, overrides: Sequence[str] = ()) -> An
     if code is not None:
         return code_scenario({"code": code}, source=str(name_or_path), overrides=overrides)
     path = find(str(name_or_path))
-    return any_scenario_from(beside(path.parent, parse(path)), source=path.name, overrides=overrides, folder=path.parent)
+    tables = beside(path.parent, parse(path))
+    return any_scenario_from(tables, source=path.name, overrides=overrides, folder=path.parent)
 
 
 def any_scenario_from(
