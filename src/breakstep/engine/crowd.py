@@ -1,6 +1,7 @@
 """Several Dask workers in one process, for workers that wait more than they compute.
 
-The first worker of each process is Dask's own; the others are started beside it, in its event loop.
+The first worker of each process is Dask's own; the others are started beside it, in its event loop. Messages between
+workers of a crowd need no socket: they are copied, so that as many bytes move, and handed over.
 """
 
 from __future__ import annotations
@@ -28,6 +29,12 @@ CROWDED = {
 SWITCH_SECONDS = 0.0005
 
 _COMPANY: list[Worker] = []
+_MEMBERS: set[str] = set()
+
+
+def is_beside(address: str, other: str) -> bool:
+    """Whether two workers belong to the crowd of this process."""
+    return address in _MEMBERS and other in _MEMBERS
 
 
 @contextlib.contextmanager
@@ -73,8 +80,10 @@ async def _join(names: Sequence[str], threads: int, dask_worker: Worker) -> None
     ]
     await asyncio.gather(*more)
     _COMPANY.extend(more)
+    _MEMBERS.update(worker.address for worker in (dask_worker, *more))
 
 
 async def _leave(dask_worker: Worker) -> None:
     await asyncio.gather(*(worker.close(nanny=False) for worker in _COMPANY), return_exceptions=True)
     _COMPANY.clear()
+    _MEMBERS.clear()

@@ -73,7 +73,7 @@ def trust_of(profile: Profile) -> Trust | None:
     waits = _waits(profile)
     if waits is None or not len(waits):
         return None
-    late = np.maximum(waits["end_ns"] - waits["start_ns"] - waits["cpu_ns"], 0).to_numpy()
+    late = (waits["end_ns"] - waits["start_ns"] - waits["cpu_ns"]).clip(lower=0).to_numpy()
     available = max(profile.ledger.available_ns, 1)
     accounts = profile.ledger.accounts_ns
     manifest: Any = profile.manifest

@@ -132,11 +132,13 @@ def write(frame: pd.DataFrame, path: Path) -> None:
     OutputError
         It cannot be written, or ends in neither .parquet nor .csv.
     """
-    writers = {".parquet": frame.to_parquet, ".csv": frame.to_csv}
-    if path.suffix not in writers:
+    if path.suffix not in (".parquet", ".csv"):
         raise OutputError(f"{path}: expected a name that ends in .parquet or .csv")
     try:
-        writers[path.suffix](path, index=False)
+        if path.suffix == ".csv":
+            frame.to_csv(path, index=False)
+        else:
+            frame.to_parquet(path, index=False)
     except OSError as error:
         raise OutputError(f"{path} cannot be written ({error.strerror or error}); choose another path") from error
 

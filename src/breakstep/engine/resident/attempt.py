@@ -32,6 +32,7 @@ from breakstep.profile.record import RunRecord
 
 WORTH_MOVING = 1.05  # tiles change owner when the busiest worker would have 5 % less to do
 POLL_SECONDS = 0.25  # between looks at the workers; each costs them about 1 ms
+POLL_WORKER_SECONDS = 0.02  # the same for each worker, where there are many: looking costs 1 ms each here as well
 
 
 @dataclass(frozen=True)
@@ -216,7 +217,7 @@ class Attempt:
     def _wait(self, futures: list[Future]) -> None:
         """Until all are done; looks in on the workers meanwhile, and raises the most telling error."""
         while pending := [future for future in futures if not future.done()]:
-            self.client.sync(_some_done, pending, POLL_SECONDS)
+            self.client.sync(_some_done, pending, max(POLL_SECONDS, POLL_WORKER_SECONDS * len(self.addresses)))
             _raise_failed(futures)
             self._look_in()
             self.site.overseer.look()

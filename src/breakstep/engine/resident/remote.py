@@ -9,11 +9,14 @@ from __future__ import annotations
 import asyncio
 import time
 from collections.abc import Collection
+from dataclasses import replace
+from functools import partial
 from typing import Any
 
 from distributed import Worker, get_worker, secede
 
 from breakstep.engine.allocator import keep_memory, release_memory
+from breakstep.engine.crowd import is_beside
 from breakstep.engine.resident import adapter
 from breakstep.engine.resident.host import Assignment, Host, Status
 from breakstep.engine.resident.wire import Parcel
@@ -64,8 +67,20 @@ def begin(assignment: Assignment, clients: Collection[str], dask_worker: Worker)
     key = (dask_worker.address, assignment.run)
     earlier = None if assignment.previous is None else _HOSTS.get((dask_worker.address, assignment.previous))
     keep_memory("/".join(key))
-    _HOSTS[key] = Host(assignment, dask_worker, earlier)
+    host = _HOSTS[key] = Host(_sharing_program(assignment), dask_worker, earlier)
+    host.beside = partial(_beside, *key)
     _WATCHES[key] = adapter.event_loop(dask_worker).create_task(_watch(*key))
+
+
+def _sharing_program(assignment: Assignment) -> Assignment:
+    """The same with the program of a worker beside this one, so that its plans are worked out once a process."""
+    others = (host.told.program for (_, run), host in list(_HOSTS.items()) if run == assignment.run)
+    return replace(assignment, program=next(others, assignment.program))
+
+
+def _beside(address: str, run: str, other: str) -> Host | None:
+    """The part of another worker in the same run, if it lives in this process's crowd."""
+    return _HOSTS.get((other, run)) if is_beside(address, other) else None
 
 
 async def _watch(address: str, run: str) -> None:
