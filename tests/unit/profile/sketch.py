@@ -62,6 +62,7 @@ def draw(
     halo: Mapping[str, int] | None = None,
     stages: Mapping[str, str] | None = None,
     output: Mapping[str, int] | None = None,
+    cpu: Mapping[str, int] | None = None,
 ) -> RunRecord:
     """The record of a drawn run.
 
@@ -77,6 +78,8 @@ def draw(
         When the bytes of a task's output could be used on a worker [ns].
     halo : dict of letter to int
         How much of a task's first upper-case time is halo assembly [ns].
+    cpu : dict of letter to int
+        Processor time of kernels that did not have a processor all the time [ns].
     """
     lines = [(int(worker), int(thread), text) for worker, thread, text in _LINE.findall(drawing or "")]
     record = RunRecord()
@@ -90,7 +93,7 @@ def draw(
             start, end = text.upper().index(letter), text.upper().rindex(letter) + 1
             head = (number(letter), kind, stage, number(letter), 0, -1, worker, thread)
             record.tasks.append((*head, start, end, (output or {}).get(letter, 0), False))
-            _draw_inside(record, letter, text, kind, stage, (halo or {}).get(letter, 0))
+            _draw_inside(record, letter, text, kind, stage, (halo or {}).get(letter, 0), (cpu or {}).get(letter))
     for edge in filter(None, (part.strip() for part in edges.split(","))):
         ends, _, edge_kind = edge.partition(" ")
         record.edges.append((number(ends[0]), number(ends[2]), edge_kind or "data"))
@@ -100,14 +103,17 @@ def draw(
     return record
 
 
-def _draw_inside(record: RunRecord, letter: str, text: str, kind: str, step: str, halo: int) -> None:
+def _draw_inside(
+    record: RunRecord, letter: str, text: str, kind: str, step: str, halo: int, cpu: int | None = None
+) -> None:
     what = {"step": "kernel", "pack": "pack"}.get(kind)
     if what is None or letter not in text:
         return
     task, start, end = number(letter), text.index(letter), text.rindex(letter) + 1
     if halo:
         record.intervals.append((task, "halo", step, start, start + halo, halo))
-    record.intervals.append((task, what, step, start + halo, end, end - start - halo))
+    spent = end - start - halo if cpu is None else cpu
+    record.intervals.append((task, what, step, start + halo, end, spent))
 
 
 def accounts(record: RunRecord) -> dict[str, int]:
