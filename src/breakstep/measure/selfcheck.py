@@ -11,14 +11,17 @@ from typing import Any
 
 from breakstep.measure import cost
 from breakstep.measure.bench import Bench, Machine, open_bench
-from breakstep.measure.cost import Case, Sizes, cost_row, recording_noop
+from breakstep.measure.cost import Case, Sizes, cost_row, recording_noop, share_of_task
 from breakstep.measure.grain import grain_figures
 from breakstep.measure.limits import cores
 from breakstep.measure.long_run import CYCLES, long_figures
 from breakstep.measure.noop import Pace
 from breakstep.measure.pairs import lockstep_figures, recording_figures
+from breakstep.measure.recording import calls_us
 from breakstep.measure.sharing import sharing_rows
 
+RECORDING_LIMIT = 0.01  # of a task of 5 ms: more would show in the accounts that recording is there for
+CALL_ROUNDS = 9  # 0.2 s each
 BUSY = 0.1  # cores: more than a machine at rest takes for itself
 
 Report = Callable[[str], None]
@@ -152,6 +155,9 @@ def _on_processes(bench: Bench, extent: Extent, pace: Pace, progress: Report) ->
     progress("recording, lockstep against itself, balanced work")
     recording = recording_figures(bench, pace, extent.pairs, extent.pair_cycles)
     recording["noop_cpu_us"] = recording_noop(bench, extent.sizes, extent.rounds)
+    recording["calls_cpu_us"] = calls_us(CALL_ROUNDS)
+    recording["share"] = share_of_task(recording["calls_cpu_us"], recording["task_ms"])
+    recording["limit"] = RECORDING_LIMIT
     gains = lockstep_figures(bench, pace, extent.pairs, extent.pair_cycles)
     if extent.long_cycles:
         progress("a long run")

@@ -132,7 +132,19 @@ def _pairs(figures: Figures) -> Iterator[str]:
     yield f"  recording: wall {_percent(recording)}, CPU {_percent(recording['cpu'])}"
     yield f"  lockstep against itself: {_interval(null)}: {wrongly}"
     yield f"  balanced work, lockstep over tasked: {_interval(balanced)}"
-    yield f"Recording adds {_middle(recording['noop_cpu_us'])} us of CPU time to a task that does nothing."
+    yield from _wrap(_recording(recording))
+
+
+def _recording(found: Figures) -> str:
+    """What recording costs a task, against what it may cost."""
+    share, limit = found["share"], 100 * found["limit"]
+    median, low, high = (100 * share[name] for name in ("median", "low", "high"))
+    verdict = f"below the {limit:.0f} % allowed" if median < limit else f"ABOVE the {limit:.0f} % allowed"
+    return (
+        f"Recording takes {_short(found['calls_cpu_us']['median'])} us of CPU time a task, {median:.2f} % ({low:.2f} to"
+        f" {high:.2f}) of {found['task_ms']:g} ms, {verdict}; a task that does nothing takes"
+        f" {_middle(found['noop_cpu_us'])} us more."
+    )
 
 
 def _percent(found: Figures) -> str:

@@ -73,7 +73,14 @@ def invented_figures() -> dict[str, Any]:
             "resident": grain(1.04, {0.2: 0.31, 1.0: 0.052, 5.0: 0.017}),
             "native": grain(61.0, {5.0: 0.22, 50.0: 0.061}, extrapolated=True),
         },
-        "recording": {**recording, "cpu": recording, "noop_cpu_us": middle(14.0)},
+        "recording": {
+            **recording,
+            "cpu": recording,
+            "noop_cpu_us": middle(14.0),
+            "calls_cpu_us": middle(14.2),
+            "share": middle(0.0028),
+            "limit": 0.01,
+        },
         "null_gain": gain(1.002, 0.011),
         "balanced_gain": gain(1.03, 0.02),
         "long_run": {
@@ -100,6 +107,17 @@ def text_of(figures: dict[str, Any]) -> str:
     return " ".join(" ".join(selfcheck_lines(figures)).split())
 
 
+def test_recording_that_costs_too_much_is_called_out() -> None:
+    figures = invented_figures()
+    figures["recording"]["share"] = middle(0.011)
+    assert "1.10 % (0.99 to 1.21) of 5 ms, ABOVE the 1 % allowed;" in text_of(figures)
+
+
+def test_a_cost_becomes_a_share_of_a_task() -> None:
+    """50 us are a hundredth of 5 ms."""
+    assert cost.share_of_task({"median": 50.0}, 5.0) == pytest.approx({"median": 0.01}, rel=1e-15)
+
+
 def test_text_fits_a_terminal() -> None:
     lines = selfcheck_lines(invented_figures())
     assert max(len(line) for line in lines) <= WIDTH
@@ -117,9 +135,8 @@ def test_text_gives_every_figure() -> None:
     assert "resident: core-seconds 31.0 5.2 1.7" in text
     assert "from 1.04 ms (0.94-1.14) resident, 61.0 ms (54.9-67.1, extrapolated) native" in text
     assert "recording: wall +0.4 % (-1.2 to +12.3), CPU +0.4 % (-1.2 to +12.3)" in text
-    assert "Recording adds 14 (13 to 15) us of CPU time to a task that does nothing." in text
-    assert "balanced work, lockstep over tasked: 1.030 (1.010 to 1.050)" in text
-    assert "1,024,000 tasks with 3,071,232 edges, recorded, in one go: 35 s, 71 us of CPU time a task" in text
+    assert "Recording takes 14.2 us of CPU time a task, 0.28 % (0.25 to 0.31) of 5 ms, below the 1 % allowed;" in text
+    assert "a task that does nothing takes 14 (13 to 15) us more." in text
     assert "Workers grew by 206 bytes a task, 142 of them the record; without recording 1." in text
     assert "of which other programs kept 0.0 busy" in text
     assert text.endswith("Warning: other programs kept 1.2 cores busy")
