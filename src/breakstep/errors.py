@@ -76,3 +76,7 @@ class PairsError(BreakstepError):
 
 class ChoiceError(BreakstepError):
     """Something was asked about that a recorded run does not have."""
+
+
+class ForecastError(BreakstepError):
+    """A graph, machine or question cannot be played; ``details["faults"]`` lists what is wrong."""
