@@ -16,11 +16,13 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
 
 from breakstep.errors import ForecastError
+from breakstep.profile.compiling import compiled_loop
 
 STEP, REDUCTION, BARRIER = 0, 1, 2
 DATA = 0  # the edge kind of tile data
@@ -30,6 +32,16 @@ ALL_KINDS = (1 << MAX_EDGE_KINDS) - 1
 Int8s = NDArray[np.int8]
 Int32s = NDArray[np.int32]
 Int64s = NDArray[np.int64]
+
+
+@dataclass(frozen=True)
+class Outgoing:
+    """Edges by producer: those out of task t are ``first[t]`` to ``first[t + 1]``, in the order of consumers."""
+
+    first: Int64s
+    consumer: Int32s
+    edge_bytes: Int32s
+    edge_kind: Int8s
 
 
 @dataclass(frozen=True)
@@ -89,6 +101,16 @@ class ReplayGraph:
     def consumer(self) -> Int32s:
         """The task that each edge goes into, shape (edges,)."""
         return np.repeat(np.arange(self.tasks, dtype=np.int32), np.diff(self.first))
+
+    @cached_property
+    def outgoing(self) -> Outgoing:
+        """The same edges sorted by producer; made once, when first asked for."""
+        return Outgoing(*_turned(self.tasks, self.first, self.producer, self.edge_bytes, self.edge_kind))
+
+    @property
+    def on_worker(self) -> NDArray[np.bool_]:
+        """Which tasks are steps, shape (tasks,)."""
+        return self.kind == STEP
 
     def kinds_of(self, prefix: str) -> list[int]:
         """Edge kinds whose names begin with ``prefix``, for example ``"barrier:"``."""
@@ -192,3 +214,26 @@ def _check(
         faults.append("an edge has a kind without a name")
     if faults:
         raise ForecastError("A task graph cannot be replayed: " + "; ".join(faults) + ".", faults=faults)
+
+
+@compiled_loop
+def _turned(
+    tasks: int, first: Int64s, producer: Int32s, edge_bytes: Int32s, edge_kind: Int8s
+) -> tuple[Int64s, Int32s, Int32s, Int8s]:
+    out_first = np.zeros(tasks + 1, dtype=np.int64)
+    for edge in range(len(producer)):
+        out_first[producer[edge] + 1] += 1
+    for task in range(tasks):
+        out_first[task + 1] += out_first[task]
+    place = out_first[:-1].copy()
+    consumer = np.empty_like(producer)
+    out_bytes = np.empty_like(edge_bytes)
+    out_kind = np.empty_like(edge_kind)
+    for task in range(tasks):
+        for edge in range(first[task], first[task + 1]):
+            spot = place[producer[edge]]
+            place[producer[edge]] += 1
+            consumer[spot] = task
+            out_bytes[spot] = edge_bytes[edge]
+            out_kind[spot] = edge_kind[edge]
+    return out_first, consumer, out_bytes, out_kind

@@ -6,7 +6,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from breakstep.forecast.graph import STEP, Int32s, Int64s, ReplayGraph
+from breakstep.errors import ForecastError
+from breakstep.forecast.graph import Int32s, Int64s, ReplayGraph
 from breakstep.forecast.model import MachineModel
 
 
@@ -46,24 +47,45 @@ class Replay:
     messages: int
 
 
-def accounted(
+@dataclass(frozen=True)
+class Counts:
+    """What the engines count while they play, per worker; arrays of int64 that they add to."""
+
+    busy_ns: Int64s
+    started: Int64s
+    received_bytes: Int64s
+    messages: Int64s
+
+    @classmethod
+    def none(cls, workers: int) -> Counts:
+        """All zero."""
+        return cls(*(np.zeros(workers, dtype=np.int64) for _ in range(4)))
+
+
+def replay_of(
     graph: ReplayGraph,
     machine: MachineModel,
     times: tuple[Int64s, Int64s],
     slot: Int32s,
     order: Int32s,
-    traffic: tuple[Int64s, int],
+    counts: Counts,
 ) -> Replay:
     """Add up where the time went.
 
-    Idle time is what is left: the engines never run two tasks on one thread at once, which tests check.
+    Idle time is what is left of the threads' time: the engines run one task at a time on a thread.
+
+    Raises
+    ------
+    ForecastError
+        Some tasks could not run, because they wait for each other.
     """
     start, finish = times
-    steps = graph.kind == STEP
-    worker = slot[steps] // machine.threads
-    makespan = int(finish[steps].max(initial=0))
-    busy = np.zeros(machine.workers, dtype=np.int64)
-    np.add.at(busy, worker, graph.duration_ns[steps])
-    overhead = np.bincount(worker, minlength=machine.workers).astype(np.int64) * machine.overhead_ns
-    idle = machine.threads * makespan - busy - overhead
-    return Replay(makespan, start, finish, slot, order, busy, overhead, idle, traffic[0], traffic[1])
+    if len(order) < graph.tasks:
+        raise ForecastError(
+            f"{graph.tasks - len(order)} of {graph.tasks} tasks wait for each other, so the schedule cannot be played."
+        )
+    makespan = int(finish[graph.on_worker].max(initial=0))
+    overhead = counts.started * machine.overhead_ns
+    idle = machine.threads * makespan - counts.busy_ns - overhead
+    received, messages = counts.received_bytes, int(counts.messages.sum())
+    return Replay(makespan, start, finish, slot, order, counts.busy_ns, overhead, idle, received, messages)
