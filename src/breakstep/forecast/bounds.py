@@ -7,7 +7,6 @@ C-22 (1973) 745.
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -114,7 +113,7 @@ def interval_bound(graph: ReplayGraph, slots: int, kinds: int = ALL_KINDS, point
 
 def greedy_ns(work_ns: int, span_ns: int, slots: int) -> int:
     """What a greedy schedule with free placement and free transfers never exceeds (Graham, Brent) [ns]."""
-    return span_ns + math.ceil((work_ns - span_ns) / slots) if slots > 1 else work_ns
+    return span_ns + -(-(work_ns - span_ns) // slots)
 
 
 def list_change_factor(slots_before: int, slots_after: int) -> float:
