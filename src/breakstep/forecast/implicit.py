@@ -96,7 +96,10 @@ def task_costs(splitting: TiledSplitting) -> Int64s:
 
 
 def stored_graph(splitting: TiledSplitting) -> ReplayGraph:
-    """A small splitting as a stored graph: task number is phase x (tiles + 1) + tile, gates are barriers behind."""
+    """A small splitting as a stored graph: task number is phase x (tiles + 1) + tile.
+
+    The last task of each phase is a barrier node, whose edges have the kind ``barrier:stage S``.
+    """
     tiles, stages = splitting.tiles, len(splitting.stages)
     table, directions = splitting.neighbours()
     costs = np.zeros((splitting.phases, tiles + 1), dtype=np.int64)
@@ -107,11 +110,11 @@ def stored_graph(splitting: TiledSplitting) -> ReplayGraph:
     for phase in range(splitting.phases):
         here, cycle, stage = phase * (tiles + 1), phase // stages, phase % stages
         if any(origin == stage for origin, _, _ in gated):
-            edges.append((here + at, np.full(tiles, here + tiles), 0, 1))
+            edges.append((here + at, np.full(tiles, here + tiles), 0, 1 + stage))
         for origin, number, back in gated:
             if number == stage and cycle >= back:
                 gate = ((cycle - back) * stages + origin) * (tiles + 1) + tiles
-                edges.append((np.full(tiles, gate), here + at, 0, 1))
+                edges.append((np.full(tiles, gate), here + at, 0, 1 + origin))
         if phase == 0:
             continue
         edges.append((here - tiles - 1 + at, here + at, 0, 0))
@@ -132,7 +135,9 @@ def stored_graph(splitting: TiledSplitting) -> ReplayGraph:
         cycle=np.repeat(np.arange(splitting.phases) // stages, tiles + 1).astype(np.int32),
         edge_bytes=np.concatenate([np.full(len(edge[0]), edge[2]) for edge in edges]) if edges else [],
         edge_kind=np.concatenate([np.full(len(edge[0]), edge[3], dtype=np.int8) for edge in edges]) if edges else [],
-        edge_kinds=("data", "barrier:gate"),
+        name=np.repeat(np.arange(splitting.phases) % stages, tiles + 1).astype(np.int32),
+        names=tuple(f"stage {stage}" for stage in range(stages)),
+        edge_kinds=("data", *(f"barrier:stage {stage}" for stage in range(stages))),
     )
 
 

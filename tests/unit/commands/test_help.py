@@ -21,6 +21,7 @@ OPTIONS = {
     "ledger": ("--json",),
     "why": ("--tile", "--cycle", "--step", "--json"),
     "kernels": ("--json", "--quick"),
+    "simulator": ("--json", "--quick"),
 }
 
 
