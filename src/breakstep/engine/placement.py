@@ -7,7 +7,7 @@ from collections.abc import Sequence
 from breakstep.engine.program import Program
 from breakstep.errors import DeclarationError
 from breakstep.graph.tasks import ANYWHERE
-from breakstep.mesh.mesh import Triple
+from breakstep.profile.curve import curve_order
 
 MOST_STARTS = 256  # of a run along the order that are tried: each costs a pass over all tiles
 PLACEMENTS = ("blocks", "curve", "cyclic", "balanced", "shared", "dask")
@@ -84,42 +84,3 @@ def busiest(owned: Sequence[int], costs: Sequence[float]) -> float:
     for cost, owner in zip(costs, owned, strict=True):
         loads[owner] = loads.get(owner, 0.0) + cost
     return max(loads.values())
-
-
-def curve_order(places: Sequence[Triple]) -> list[int]:
-    """Tiles in the order of a Hilbert curve through their places in the grid.
-
-    Source: J. Skilling, Programming the Hilbert curve, AIP Conf. Proc. 707 (2004) 381: transposed index from
-    coordinates by undoing excess work bit by bit.
-    """
-    axes = [axis for axis in range(3) if any(place[axis] for place in places)] or [0]
-    bits = max(1, max(max(place) for place in places).bit_length())
-    return sorted(range(len(places)), key=lambda t: hilbert_index([places[t][axis] for axis in axes], bits))
-
-
-def hilbert_index(coordinates: Sequence[int], bits: int) -> int:
-    """Position along the Hilbert curve that fills a cube of 2**bits places along each axis."""
-    x, n = list(coordinates), len(coordinates)
-    q = 1 << (bits - 1)
-    while q > 1:
-        for i in range(n):
-            if x[i] & q:
-                x[0] ^= q - 1
-            else:
-                swapped = (x[0] ^ x[i]) & (q - 1)
-                x[0] ^= swapped
-                x[i] ^= swapped
-        q >>= 1
-    for i in range(1, n):
-        x[i] ^= x[i - 1]
-    flip, q = 0, 1 << (bits - 1)
-    while q > 1:
-        if x[n - 1] & q:
-            flip ^= q - 1
-        q >>= 1
-    x = [value ^ flip for value in x]
-    index = 0
-    for bit in range(bits - 1, -1, -1):
-        for value in x:
-            index = (index << 1) | ((value >> bit) & 1)
-    return index

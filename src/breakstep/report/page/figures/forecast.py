@@ -1,0 +1,146 @@
+"""Forecasts: run time against workers, barriers in the order of their value, run time against tile size."""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+from bokeh.models import ColumnDataSource, FixedTicker
+from bokeh.plotting import figure
+
+from breakstep.report.page.figures.style import hover, new_figure, words
+from breakstep.report.page.palette import LIGHT
+from breakstep.report.wording import seconds
+
+_SIDES = ("lockstep", "tasked")
+
+
+def scaling_figure(panel: dict[str, Any]) -> figure:
+    """Forecast run time over workers, both axes logarithmic, with what no schedule can beat."""
+    rows = panel["rows"]
+    workers = [row["workers"] for row in rows]
+    times = [row[f"{side}_{end}_s"] for row in rows for side in _SIDES for end in ("low", "high")]
+    bound = [max(row["area_bound_s"], row["path_bound_s"]) for row in rows]
+    low, high = min(*times, *bound) * 0.8, max(times) * 1.25
+    plot = new_figure(
+        340, (workers[0] * 0.85, workers[-1] * 1.18), (low, high), x_axis_type="log", y_axis_type="log", name="scaling",
+    )  # fmt: skip
+    plot.xaxis.axis_label, plot.yaxis.axis_label = "workers of the machine", "forecast run time, s"
+    plot.xaxis.ticker = FixedTicker(ticks=workers)
+    plot.xaxis.major_label_overrides = {count: str(count) for count in workers}
+    plot.yaxis.ticker = FixedTicker(ticks=_round_values(low, high))
+    plot.yaxis.major_label_overrides = {value: f"{value:g}" for value in _round_values(low, high)}
+    plot.varea(x=workers, y1=[low] * len(rows), y2=bound, fill_color=LIGHT["raised"])
+    plot.line(workers, bound, line_color=LIGHT["axis"], line_width=1.2)
+    words(plot, x=[workers[0]], y=[low * 1.12], text=[" out of reach on any schedule"], text_color=LIGHT["soft"],
+          text_font_style="italic")  # fmt: skip
+    drawn = [_scaling_line(plot, rows, workers, side) for side in _SIDES]
+    hover(plot, drawn, [("", "side"), ("workers", "workers"), ("forecast", "shown"), ("between", "range")])
+    return plot
+
+
+def _scaling_line(plot: figure, rows: list[dict[str, Any]], workers: list[int], side: str) -> Any:
+    times = [row[f"{side}_s"] for row in rows]
+    lows, highs = ([row[f"{side}_{end}_s"] for row in rows] for end in ("low", "high"))
+    plot.varea(x=workers, y1=lows, y2=highs, fill_color=LIGHT[f"shade_{side}"], fill_alpha=0.6)
+    source = ColumnDataSource(
+        {
+            "workers": workers, "time": times, "side": [side] * len(rows), "shown": [seconds(t) for t in times],
+            "range": [f"{seconds(a)} and {seconds(b)}" for a, b in zip(lows, highs, strict=True)],
+        }
+    )  # fmt: skip
+    dash, marker = ("dashed", "square") if side == "lockstep" else ("solid", "circle")
+    plot.line("workers", "time", source=source, line_color=LIGHT[side], line_width=2.4, line_dash=dash)
+    last = times[-1]
+    words(plot, x=[workers[-1]], y=[last], text=[f"{side} {seconds(last)}"], text_color=LIGHT[side], text_align="right",
+          text_font_style="bold", y_offset=-16 if side == "lockstep" else 18)  # fmt: skip
+    return plot.scatter("workers", "time", source=source, marker=marker, size=8, fill_color=LIGHT[side],
+                        line_color=LIGHT["paper"], name=f"scaling-{side}")  # fmt: skip
+
+
+def _round_values(low: float, high: float) -> list[float]:
+    decades = range(math.floor(math.log10(low)), math.ceil(math.log10(high)) + 1)
+    values = [digit * 10.0**power for power in decades for digit in (1, 2, 5)]
+    return [float(f"{value:.3g}") for value in values if low <= value <= high]
+
+
+def barriers_figure(panel: dict[str, Any]) -> figure:
+    """Seconds handed back as barriers go one after another, best next one first; rings: each alone."""
+    ranking = panel["ranking"]
+    count = len(ranking)
+    right = max([row["in_order_s"] for row in ranking] + [row["alone_s"] for row in ranking] + [1e-9])
+    begins = [0.0, *(row["in_order_s"] for row in ranking)][:count]
+    left = min(0.0, *(row["alone_s"] for row in ranking), *(row["in_order_s"] for row in ranking))
+    plot = new_figure(70 + 46 * count, (left - 0.02 * right, 1.3 * right), (-count + 0.4, 0.75), name="barriers")
+    plot.xaxis.axis_label = "seconds handed back of the lockstep run"
+    plot.yaxis.visible = False
+    plot.ygrid.grid_line_color = None
+    source = ColumnDataSource(
+        {
+            "y": [-place for place in range(count)], "left": begins, "right": [row["in_order_s"] for row in ranking],
+            "what": [row["what"] for row in ranking], "alone": [row["alone_s"] for row in ranking],
+            "step": [seconds(abs(row["in_order_s"] - b)) for row, b in zip(ranking, begins, strict=True)],
+            "alone_shown": [f"{row['alone_s']:.4g}" for row in ranking],
+            "order_shown": [f"{row['in_order_s']:.4g}" for row in ranking],
+        }
+    )  # fmt: skip
+    bars = plot.hbar(y="y", left="left", right="right", height=0.22, source=source, fill_color=LIGHT["tasked"],
+                     line_color=None, name="barrier-bars")  # fmt: skip
+    plot.scatter("right", "y", source=source, size=11, fill_color=LIGHT["tasked"], line_color=LIGHT["paper"])
+    rings = plot.scatter("alone", "y", source=source, size=9, marker="diamond", fill_color=LIGHT["paper"],
+                         line_color=LIGHT["ink"], line_width=1.5)  # fmt: skip
+    names = [f"{place + 1}. {row['what']}" for place, row in enumerate(ranking)]
+    words(plot, x=[max(left, 0.0)] * count, y=[0.36 - place for place in range(count)], text=names)
+    words(plot, x=[row["in_order_s"] for row in ranking], y=[-place for place in range(count)],
+          text=[f"  {row['in_order_s'] - b:+.3g} s" for row, b in zip(ranking, begins, strict=True)],
+          text_color=LIGHT["tasked"], text_font_style="bold", x_offset=6)  # fmt: skip
+    hover(plot, [bars, rings], [("", "what"), ("up to here, s", "order_shown"), ("alone, s", "alone_shown")])
+    return plot
+
+
+def grain_figure(panel: dict[str, Any], side: str) -> figure:
+    """Run time over tile size; the lowest point is marked."""
+    rows = sorted(panel["rows"], key=lambda row: row["tile"] if isinstance(row["tile"], int | float) else -row["tasks"])
+    names = [_tile_name(row["tile"]) for row in rows]
+    times = [row[f"{side}_s"] for row in rows]
+    top = 1.25 * max(max(row[f"{s}_s"] for s in _SIDES) for row in rows)
+    plot = new_figure(260, (-0.4, len(rows) - 0.6), (0, top), name=f"grain-{side}")
+    plot.xaxis.ticker = FixedTicker(ticks=list(range(len(rows))))
+    plot.xaxis.major_label_overrides = dict(enumerate(names))
+    plot.xaxis.axis_label, plot.yaxis.axis_label = "zones of a tile", "run time, s"
+    plot.title.text, plot.title.text_color = side, LIGHT[side]
+    places = list(range(len(rows)))
+    source = ColumnDataSource(
+        {"x": places, "y": times, "tile": names, "shown": [seconds(t) for t in times],
+         "tasks": [str(row["tasks"]) for row in rows]}
+    )  # fmt: skip
+    if all(_adds_up(row, side) for row in rows):
+        _layers(plot, rows, places)
+    plot.line("x", "y", source=source, line_color=LIGHT[side], line_width=2.4)
+    dots = plot.scatter("x", "y", source=source, size=9, fill_color=LIGHT[side], line_color=LIGHT["paper"],
+                        name=f"grain-dots-{side}")  # fmt: skip
+    best = times.index(min(times))
+    words(plot, x=[best], y=[times[best]], text=[f"best: {names[best]}, {seconds(times[best])}"], y_offset=-18,
+          text_align="center", text_color=LIGHT[side], text_font_style="bold")  # fmt: skip
+    hover(plot, [dots], [("tile", "tile"), ("tasks", "tasks"), ("run time", "shown")])
+    return plot
+
+
+def _adds_up(row: dict[str, Any], side: str) -> bool:
+    """Whether a row's parts are those of this side's run time, to 2 %: they are given for one side only."""
+    parts = [row.get(key) for key in ("compute_s", "engine_s", "wait_s")]
+    whole = row[f"{side}_s"]
+    return all(part is not None for part in parts) and abs(sum(parts) - whole) <= 0.02 * whole
+
+
+def _layers(plot: figure, rows: list[dict[str, Any]], places: list[int]) -> None:
+    """What the run time is made of: physics, dispatch, waits."""
+    base = [0.0] * len(rows)
+    for key, token in (("compute_s", "wait"), ("engine_s", "machine"), ("wait_s", "shade_tasked")):
+        top = [b + row[key] for b, row in zip(base, rows, strict=True)]
+        plot.varea(x=places, y1=base, y2=top, fill_color=LIGHT[token], fill_alpha=0.8)
+        base = top
+
+
+def _tile_name(tile: Any) -> str:
+    return " x ".join(str(n) for n in tile if n != 1) or "1" if isinstance(tile, list | tuple) else str(tile)

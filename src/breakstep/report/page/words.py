@@ -1,0 +1,193 @@
+"""The page in words: five questions in the order in which people ask them, each answered from the numbers shown.
+
+A reader who stops after these knows which physics makes cores stand idle, how much leaving lockstep hands back,
+and what still ties the tiles together.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from breakstep.profile.run import Profile
+from breakstep.report.page.runs import Runs
+from breakstep.report.page.spots import HotSpot, hot_spot
+from breakstep.report.page.waits import IDLE_ACCOUNTS, WORDS, blame, idle_share
+from breakstep.report.reasons import MUCH_ENGINE, NOTABLE_SHARE, UNEVEN, share
+from breakstep.report.wording import in_mode, listed, ratio, seconds
+
+#: Steps named as the ones at fault: so many of the largest as make up this part of the waits, two at most.
+MOST_OF_IT = 0.7
+
+
+def answers(runs: Runs, data: dict[str, Any]) -> list[dict[str, str]]:
+    """Question and answer, in order; questions that the runs cannot answer are left out."""
+    found = [
+        ("What would leaving lockstep buy?", _bought(runs, data)),
+        ("Why do cores stand idle in lockstep?", _why(runs.lockstep) if runs.lockstep else ""),
+        ("Where?", _where(runs)),
+        ("What still ties the tiles together without barriers?", _ties(runs.tasked) if runs.tasked else ""),
+        ("What to do first?", _first(runs, data)),
+    ]
+    return [{"question": question, "answer": answer} for question, answer in found if answer]
+
+
+def percent(part: float) -> str:
+    """A part of all core-seconds: whole percents, and tenths below ten."""
+    return f"{100 * part:.0f} %" if part >= 0.095 else f"{100 * part:.1f} %"
+
+
+def core_seconds(ns: float) -> str:
+    """Core-seconds with three digits."""
+    return f"{seconds(ns / 1e9).removesuffix(' s')} core-seconds" if ns >= 1e9 else f"{seconds(ns / 1e9)} of a core"
+
+
+def _bought(runs: Runs, data: dict[str, Any]) -> str:
+    if runs.comparison is None or runs.lockstep is None or runs.tasked is None:
+        return "Only one way of running was recorded; a run of the other way would tell."
+    left, right = runs.lockstep.ledger, runs.tasked.ledger
+    gain = runs.comparison.gain
+    spans = f"{seconds(left.span_ns / 1e9)} {in_mode(runs.lockstep)}, {seconds(right.span_ns / 1e9)} tasked"
+    handed = left.available_ns - right.available_ns
+    change = (
+        f"{core_seconds(abs(handed))} {'handed back' if handed >= 0 else 'more'} of {core_seconds(left.available_ns)}"
+    )
+    return (
+        f"{spans} on {left.threads} threads: {change}. {_evidence(gain.median, gain.low, gain.high, len(gain.ratios))}"
+    )
+
+
+def _evidence(median: float, low: float | None, high: float | None, pairs: int) -> str:
+    if low is None or high is None:
+        return f"The gain of this one pair is {ratio(median)}; one pair has no interval, so it may be chance."
+    verdict = (
+        "The interval excludes 1, so it is more than noise."
+        if low > 1.0 or high < 1.0
+        else "The interval includes 1: these pairs cannot tell it from none."
+    )
+    return f"Gain {ratio(median)}, the median of {pairs} pairs, 95 % interval {ratio(low)} to {ratio(high)}. {verdict}"
+
+
+def _culprits(profile: Profile, account: str) -> str:
+    """The steps that most of an account's waits are for, with their parts of it."""
+    waits = blame(profile, account)
+    total = sum(waits.values())
+    if not total:
+        return ""
+    named, covered = [], 0
+    for step, ns in list(waits.items())[:2]:
+        if covered >= MOST_OF_IT * total or ns < 0.1 * total:
+            break
+        covered += ns
+        named.append(f"{step} ({100 * ns / total:.0f} % of it)")
+    return listed(named)
+
+
+def _why(lockstep: Profile) -> str:
+    if lockstep.ledger.threads == 1:
+        return "One thread waits for nobody; more workers would show what barriers cost."
+    parts = [f"For {percent(idle_share(lockstep))} of their time {in_mode(lockstep)} cores have nothing to run."]
+    for account in sorted(IDLE_ACCOUNTS, key=lambda a: -share(lockstep, a)):
+        if share(lockstep, account) >= NOTABLE_SHARE:
+            culprits = _culprits(lockstep, account)
+            until = f", until {culprits} is done" if culprits else ""
+            parts.append(f"{percent(share(lockstep, account))} is {WORDS[account]}{until}.")
+    parts += _unevenness(lockstep)
+    return " ".join(parts)
+
+
+def _unevenness(lockstep: Profile) -> list[str]:
+    """How uneven the step is that most waiting at barriers is for."""
+    steps = list(blame(lockstep, "barrier"))
+    if not steps or steps[0] not in lockstep.imbalance.index or share(lockstep, "barrier") < NOTABLE_SHARE:
+        return []
+    uneven = lockstep.imbalance.loc[steps[0]]
+    workers, tiles = float(uneven["phases_weighted"]), float(uneven["tiles"])
+    if not np.isfinite(workers) or not np.isfinite(tiles):
+        return []
+    if workers < UNEVEN:
+        return [f"Between barriers {steps[0]} is even to {100 * (workers - 1):.0f} %: small differences, often."]
+    return [
+        f"Between two barriers the busiest worker has {ratio(workers)} times the mean worker's {steps[0]}, since the"
+        f" busiest tile has {ratio(tiles)} times the mean tile's."
+    ]
+
+
+def _where(runs: Runs) -> str:
+    spot = hot_spot(runs.either)
+    return "" if spot is None else _spot_words(spot)
+
+
+def _spot_words(spot: HotSpot) -> str:
+    if spot.tiles_for_half > 0.35 * spot.tiles:
+        return f"Nowhere in particular: {spot.step}, the most uneven step, is spread over most tiles."
+    tiles = "tile" if len(spot.named) == 1 else "tiles"
+    text = (
+        f"{spot.step} is concentrated: {spot.tiles_for_half} of {spot.tiles} tiles make half of its cost, first of all"
+        f" {tiles} {listed(spot.named)}."
+    )
+    if spot.stays >= 0.8:
+        return text + " They stay the costliest throughout, so placement or smaller tiles would help, not only tasks."
+    return text + f" The costliest tile changes: it is the same in {100 * spot.stays:.0f} % of the cycles."
+
+
+def _ties(tasked: Profile) -> str:
+    if tasked.ledger.threads == 1:
+        return "Nothing: there is one thread."
+    idle = idle_share(tasked)
+    parts = [f"Tasked, cores still have nothing to run for {percent(idle)} of their time."]
+    causes = {
+        "neighbour": "neighbour tiles that are not done yet",
+        "reduction": "reductions, values made from all tiles",
+    }
+    for account in sorted(causes, key=lambda a: -share(tasked, a)):
+        part = share(tasked, account)
+        if part >= NOTABLE_SHARE / 4:
+            culprits = _culprits(tasked, account)
+            parts.append(f"{percent(part)} waits for {causes[account]}{f', mostly {culprits}' if culprits else ''}.")
+    if share(tasked, "transfer") >= NOTABLE_SHARE:
+        parts.append(
+            f"A further {percent(share(tasked, 'transfer'))} goes to moving bytes and putting ghost zones together."
+        )
+    return " ".join([*parts, *_lags(tasked)])
+
+
+def _lags(tasked: Profile) -> list[str]:
+    lags: dict[str, int] = tasked.manifest["notes"].get("lags", {})
+    prompt = [name for name, lag in lags.items() if lag == 0]
+    late = [f"{name} (lag {lag})" for name, lag in lags.items() if lag > 0]
+    found = []
+    if prompt:
+        found.append(
+            f"{listed(prompt)} {'is' if len(prompt) == 1 else 'are'} used at once (lag 0), so every tile waits for the slowest:"
+            " a barrier by another name."
+        )
+    if late:
+        found.append(
+            f"{listed(late)} may be used late, so {'it is' if len(late) == 1 else 'they are'} no barrier in disguise."
+        )
+    return found
+
+
+def _first(runs: Runs, data: dict[str, Any]) -> str:
+    """The forecast's first advice, or what the accounts alone suggest."""
+    advice = data["forecast"].get("advice") or []
+    if advice:
+        return f"{advice[0]['do']}: the forecast hands back {seconds(float(advice[0]['gain_s']))}. See the list below."
+    profile = runs.tasked or runs.lockstep
+    assert profile is not None
+    if share(profile, "stolen") > 0.08 if "stolen" in profile.ledger.accounts_ns else False:
+        return "Measure again on a quiet machine: other programs took much of the processor time."
+    if share(profile, "engine") > MUCH_ENGINE:
+        mean = _mean_ms(profile)
+        return f"Use larger tiles: the dispatch takes {percent(share(profile, 'engine'))} of the time, with tasks of {mean:.2g} ms."
+    if runs.lockstep is not None and share(runs.lockstep, "barrier") >= NOTABLE_SHARE:
+        step = next(iter(blame(runs.lockstep, "barrier")), "")
+        return f"Take out the barrier behind {step}: most of the waiting at barriers is there."
+    return "Leave the barriers as they are: little is lost at them."
+
+
+def _mean_ms(profile: Profile) -> float:
+    steps = profile.tasks[(profile.tasks["kind"] == "step").to_numpy()]
+    return float((steps["end_ns"] - steps["start_ns"]).mean()) / 1e6 if len(steps) else 0.0
