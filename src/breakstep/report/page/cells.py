@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from breakstep.profile.curve import curve_order
 from breakstep.profile.frames import Integers
 from breakstep.profile.manifest import Manifest
+from breakstep.profile.words import tile_names
 
 #: A phone shows a map 350 pixels wide: 20 cells of 17 pixels along a square's edge can still be pointed at.
 MOST_CELLS = 400
@@ -55,6 +56,10 @@ class Cells:
         """How many cells there are."""
         return len(self.places)
 
+    def cell_of(self, tile: int) -> int:
+        """The cell of a tile; -1 for what belongs to no tile."""
+        return int(self.of_tile[tile]) if tile >= 0 else NOBODY
+
     def as_json(self) -> dict[str, Any]:
         """What the page needs to draw maps."""
         return {
@@ -82,22 +87,18 @@ def cells_of(manifest: Manifest) -> Cells:
     corners = [unique[place] for place in order]
     places = [_place(corner, -(-extent // block)) for corner in corners]
     of_tile = rank[inverse]
+    names = tile_names(manifest["mesh"]["tiles"])
     return Cells(
         of_tile=of_tile,
         places=places,
-        labels=[_label(corner, block, extent) for corner in corners],
+        labels=[names[tile] for tile in np.argsort(of_tile)]
+        if block == 1
+        else [_label(corner, block, extent) for corner in corners],
         owners=_owners(of_tile, np.asarray(manifest["placement"], dtype=np.int64), len(order)),
         columns=max(column for column, _ in places) + 1,
         rows=max(row for _, row in places) + 1,
         block=block,
     )
-
-
-def tile_labels(manifest: Manifest) -> list[str]:
-    """The numbers of each tile along the mesh's axes, joined by commas."""
-    grid = _grid(manifest)
-    extent = grid.max(axis=0) + 1
-    return [_label(place, 1, extent) for place in grid]
 
 
 def _grid(manifest: Manifest) -> Integers:
@@ -126,6 +127,7 @@ def _place(corner: Integers, extent: Integers) -> tuple[int, int]:
 
 
 def _label(corner: Integers, block: int, extent: Integers) -> str:
+    """From where to where a block of tiles reaches along each axis."""
     axes = [axis for axis in range(3) if extent[axis] > 1] or [0]
     ends = [(int(corner[a]) * block, min((int(corner[a]) + 1) * block, int(extent[a])) - 1) for a in axes]
     return ",".join(str(low) if low == high else f"{low}-{high}" for low, high in ends)

@@ -5,6 +5,7 @@ Maps are SVG with cells ten units wide; the style sheet colours them.
 
 from __future__ import annotations
 
+import itertools
 import math
 from collections.abc import Mapping
 from typing import Any
@@ -69,7 +70,7 @@ def _balls(data: Mapping[str, Any], side: str) -> list[tuple[int, int]]:
     """Links with a number on the map, in order: place in the list and cell; each cell once in a row."""
     found: list[tuple[int, int]] = []
     for place, link in enumerate(data["chain"][side]["links"]):
-        small = link["ns"] < 0.01e9 * data["chain"][side]["wait_s"]
+        small = link["ns"] < 0.01 * data["chain"][side]["wait_ns"]
         if link["cell"] >= 0 and not small and (not found or found[-1][1] != link["cell"]):
             found.append((place, link["cell"]))
     return found
@@ -99,12 +100,13 @@ def chain_marks(data: Mapping[str, Any], side: str) -> Markup:
     if chain["cell"] >= 0:
         x, y = _centre(cells, chain["cell"])
         marks.append(f'<rect class="here" x="{x - 4.2}" y="{y - 4.2}" width="8.4" height="8.4"/>')
-    for (x, y, _), (u, v, _) in zip(spots, spots[1:], strict=False):
+    begin = [(*_centre(cells, chain["cell"]), -1)] if chain["cell"] >= 0 else []
+    for (x, y, _), (u, v, _) in itertools.pairwise([*begin, *spots]):
         marks.append(f'<path class="link" d="M{x:.2f} {y:.2f}L{u:.2f} {v:.2f}"/>')
     for x, y, place in spots:
         links = chain["links"]
         spent = sum(link["ns"] for at, link in enumerate(links) if link_number(data, side, at) == str(place + 1))
-        radius = 1.9 + 2.3 * math.sqrt(min(1.0, spent / (1e9 * chain["wait_s"])))
+        radius = 1.9 + 2.3 * math.sqrt(min(1.0, spent / (chain["wait_ns"])))
         marks.append(f'<circle class="ball" cx="{x:.2f}" cy="{y:.2f}" r="{radius:.2f}"/>')
         marks.append(f'<text class="in-ball" x="{x:.2f}" y="{y:.2f}">{place + 1}</text>')
     return Markup("".join(marks))

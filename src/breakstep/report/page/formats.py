@@ -6,6 +6,7 @@ from typing import Any
 
 from breakstep.report.wording import ratio, seconds, size
 
+_DASH, _MINUS = "\u2013", "\u2212"
 _THIN = "\u202f"  # a narrow space that does not break
 
 
@@ -29,13 +30,18 @@ def _power(value: float) -> int:
 def core(value: float | None) -> str:
     """Seconds in a table: three decimals below ten, two above; a dash where there is nothing."""
     if value is None:
-        return "–"
-    return f"{value:.2f}".replace("-", "−") if abs(value) >= 10 else f"{value:.3f}".replace("-", "−")
+        return _DASH
+    return f"{value:.2f}".replace("-", _MINUS) if abs(value) >= 10 else f"{value:.3f}".replace("-", _MINUS)
 
 
 def dash(value: float | None) -> str:
     """A ratio, or a dash."""
-    return "–" if value is None else f"{value:.2f}"
+    return _DASH if value is None else f"{value:.2f}"
+
+
+def three(value: float | None) -> str:
+    """A factor with three decimals, or a dash."""
+    return _DASH if value is None else f"{value:.3f}"
 
 
 def whole(value: int) -> str:
@@ -60,7 +66,7 @@ def closure(value: float) -> str:
 
 def signed_size(value: float) -> str:
     """A change of bytes."""
-    return "the same" if value == 0 else f"{'+' if value > 0 else '−'}{size(abs(value))}"
+    return "the same" if value == 0 else f"{'+' if value > 0 else _MINUS}{size(abs(value))}"
 
 
 FILTERS: dict[str, Any] = {
@@ -70,6 +76,7 @@ FILTERS: dict[str, Any] = {
     "digits": digits,
     "core": core,
     "dash": dash,
+    "three": three,
     "whole": whole,
     "one": one,
     "percent": percent,

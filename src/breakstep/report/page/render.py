@@ -62,7 +62,7 @@ def page_html(data: Mapping[str, Any]) -> str:
     )
     css = environment.get_template("page.css.j2").render(light=LIGHT, dark=DARK, hatches=_HATCH_PICTURES)
     script = environment.loader.get_source(environment, "page.js")[0]  # type: ignore[union-attr]
-    page = environment.get_template("page.html.j2").render(
+    return environment.get_template("page.html.j2").render(
         css=Markup(css),
         script=Markup(script),
         bokeh=Markup(_bokeh()),
@@ -70,7 +70,6 @@ def page_html(data: Mapping[str, Any]) -> str:
         figures=_embedded({name: json_item(figure) for name, figure in _figures(data, tokens).items()}),
         themes=_embedded({LIGHT[name]: DARK[name] for name in LIGHT}),
     )
-    return page
 
 
 def _environment() -> Environment:

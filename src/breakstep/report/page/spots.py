@@ -9,7 +9,7 @@ import pandas as pd
 
 from breakstep.profile.frames import integers, positions
 from breakstep.profile.run import Profile
-from breakstep.report.page.cells import tile_labels
+from breakstep.profile.words import tile_names
 
 NAMED = 3
 
@@ -46,7 +46,7 @@ def hot_spot(profile: Profile) -> HotSpot | None:
     half = int(np.searchsorted(by_tile.cumsum().to_numpy(), by_tile.sum() / 2)) + 1
     hottest = cost.groupby(["cycle", "tile"])["cpu_ns"].sum().reset_index()
     hottest = hottest.loc[hottest.groupby("cycle")["cpu_ns"].idxmax()]
-    labels = tile_labels(profile.manifest)
+    labels = tile_names(profile.manifest["mesh"]["tiles"])
     return HotSpot(
         step=step,
         tiles=profile.tile_count,

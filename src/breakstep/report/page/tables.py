@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 from typing import Any
 
+import numpy as np
+
 from breakstep.report.page.formats import core, digits, percent
 from breakstep.report.page.panels.traffic import by_stage_table
 from breakstep.report.wording import listed, seconds, size
@@ -15,6 +17,7 @@ def helpers(data: Mapping[str, Any]) -> dict[str, Callable[..., Any]]:
     return {
         "front_title": lambda side: _front_title(data, side),
         "front_alt": lambda side: _front_alt(data, side),
+        "first_moment": lambda: _first_moment(data["fronts"]),
         "front_rows": lambda: _front_rows(data),
         "columns_alt": lambda: _columns_alt(data),
         "costliest_bin": lambda: _costliest_bin(data),
@@ -22,6 +25,7 @@ def helpers(data: Mapping[str, Any]) -> dict[str, Callable[..., Any]]:
         "stage_rows": lambda: by_stage_table(data["traffic"]),
         "memory_words": lambda: _memory_words(data),
         "memory_alt": lambda: f"Lines of live bytes over wall time. {_memory_words(data)}",
+        "critical_steps": lambda: _critical_steps(data),
         "waited_steps": lambda: _waited_steps(data),
         "scaling_alt": lambda: _scaling_alt(data["forecast"]["scaling"]),
         "barriers_alt": lambda: _barriers_alt(data["forecast"]["barriers"]),
@@ -32,7 +36,7 @@ def helpers(data: Mapping[str, Any]) -> dict[str, Callable[..., Any]]:
 
 def tile_name(tile: Any) -> str:
     """A tile's extent, as a number or as numbers along axes."""
-    return " × ".join(str(n) for n in tile if n != 1) or "1" if isinstance(tile, list | tuple) else str(tile)
+    return " \u00d7 ".join(str(n) for n in tile if n != 1) or "1" if isinstance(tile, list | tuple) else str(tile)
 
 
 def _front_title(data: Mapping[str, Any], side: str) -> str:
@@ -54,6 +58,19 @@ def _front_alt(data: Mapping[str, Any], side: str) -> str:
     )
 
 
+def _first_moment(fronts: Mapping[str, Any], most: int = 1000) -> int:
+    """The slider's first place: where tiles are spread over most cycles, the later of equals left out."""
+    end = max(panel["span_s"] for panel in fronts.values())
+    panel = list(fronts.values())[-1]
+    moments = np.linspace(0.0, end, most + 1)
+    lines = np.asarray(panel["front_s"][1:-1])
+    if not len(lines):
+        return most // 3
+    under_way = ((lines.min(axis=1)[:, None] <= moments) & (moments < lines.max(axis=1)[:, None])).sum(axis=0)
+    ahead = np.abs((lines <= moments[:, None, None]).mean(axis=2) % 1.0 - 0.5).min(axis=1)
+    return int(np.lexsort((moments, ahead, -under_way))[0])
+
+
 def _front_rows(data: Mapping[str, Any]) -> list[list[str]]:
     sides = list(data["fronts"])
     cycles = sorted({cycle for side in sides for cycle in data["fronts"][side]["cycles"]})
@@ -68,7 +85,7 @@ def _front_rows(data: Mapping[str, Any]) -> list[list[str]]:
 
 def _front_cells(panel: Mapping[str, Any], cycle: int | str) -> list[str]:
     if cycle != "end" and cycle not in panel["cycles"]:
-        return ["–"] * 3
+        return ["\u2013"] * 3
     at = len(panel["cycles"]) if cycle == "end" else panel["cycles"].index(cycle)
     front, idle = panel["front_s"][at], panel["idle_s"][at]
     return [core(min(front)), core(max(front)), core(sum(idle) / len(idle))]
@@ -125,6 +142,15 @@ def _waited_steps(data: Mapping[str, Any]) -> list[str]:
     return [step for step in sorted(total, key=lambda name: -total[name]) if total[step]]
 
 
+def _critical_steps(data: Mapping[str, Any]) -> list[str]:
+    """Steps on the critical chains, those with most time first."""
+    total: dict[str, int] = {}
+    for run in data["accounts"].values():
+        for step, accounts in run["critical"]["by_step_ns"].items():
+            total[step] = total.get(step, 0) + sum(accounts.values())
+    return sorted(total, key=lambda name: -total[name])
+
+
 def _scaling_alt(panel: Mapping[str, Any]) -> str:
     first, last = panel["rows"][0], panel["rows"][-1]
     parts = [f"{side} {seconds(first[f'{side}_s'])} to {seconds(last[f'{side}_s'])}" for side in ("lockstep", "tasked")]
@@ -138,4 +164,5 @@ def _barriers_alt(panel: Mapping[str, Any]) -> str:
 
 def _grain_alt(panel: Mapping[str, Any], side: str) -> str:
     best = min(panel["rows"], key=lambda row: float(row[f"{side}_s"]))
-    return f"Forecast run time over tile size, {side}: least {seconds(best[f'{side}_s'])} with tiles of {tile_name(best['tile'])}."
+    least = seconds(best[f"{side}_s"])
+    return f"Forecast run time over tile size, {side}: least {least} with tiles of {tile_name(best['tile'])}."

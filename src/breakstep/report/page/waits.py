@@ -10,14 +10,12 @@ from breakstep.report.page.runs import Runs
 COMPUTE = "compute"
 #: Below the physics what the machine takes, then what tasks leave of waiting, then what barriers make of it.
 _ORDER = ("stolen", "engine", "transfer", "neighbour", "reduction", "unemployed", "barrier")
-WORDS = {
-    "stolen": "no processor: taken by other programs",
-    "engine": "dispatch of tasks",
-    "transfer": "bytes on the way, ghost zones",
+#: Idle time by account, as part of a sentence.
+PHRASES = {
     "neighbour": "waiting for a neighbour tile",
     "reduction": "waiting for a reduction",
     "barrier": "waiting at a barrier",
-    "unemployed": "out of work",
+    "unemployed": "after a thread's last task",
 }
 IDLE_ACCOUNTS = ("neighbour", "reduction", "barrier", "unemployed")
 
@@ -36,13 +34,14 @@ def idle_share(profile: Profile) -> float:
 
 
 def costliest(profile: Profile, stage: str) -> str:
-    """The step of a stage that computes longest."""
+    """The step of a stage that computes longest; what is said of a barrier is said of the stage before it."""
+    stage = stage.removeprefix("barrier:")
     cost = profile.work["compute_ns"]
     return max(stage.split("+"), key=lambda name: int(cost[name]) if name in cost.index else 0)
 
 
 def blame(profile: Profile, account: str) -> dict[str, int]:
-    """Nanoseconds of an account's waits by the step they are for, the largest first; a stage counts for its costliest."""
+    """Nanoseconds of an account's waits by the step they are for, the largest first."""
     by_step: dict[str, int] = {}
     if account not in WAITS:
         return by_step

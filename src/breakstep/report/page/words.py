@@ -11,10 +11,11 @@ from typing import Any
 import numpy as np
 
 from breakstep.profile.run import Profile
+from breakstep.report.page.formats import digits
 from breakstep.report.page.runs import Runs
 from breakstep.report.page.spots import HotSpot, hot_spot
-from breakstep.report.page.waits import IDLE_ACCOUNTS, WORDS, blame, idle_share
-from breakstep.report.reasons import MUCH_ENGINE, NOTABLE_SHARE, UNEVEN, share
+from breakstep.report.page.waits import IDLE_ACCOUNTS, PHRASES, blame, idle_share
+from breakstep.report.reasons import MUCH_ENGINE, MUCH_STOLEN, NOTABLE_SHARE, UNEVEN, share
 from breakstep.report.wording import in_mode, listed, ratio, seconds
 
 #: Steps named as the ones at fault: so many of the largest as make up this part of the waits, two at most.
@@ -38,20 +39,17 @@ def percent(part: float) -> str:
     return f"{100 * part:.0f} %" if part >= 0.095 else f"{100 * part:.1f} %"
 
 
-def core_seconds(ns: float) -> str:
-    """Core-seconds with three digits."""
-    return f"{seconds(ns / 1e9).removesuffix(' s')} core-seconds" if ns >= 1e9 else f"{seconds(ns / 1e9)} of a core"
-
-
 def _bought(runs: Runs, data: dict[str, Any]) -> str:
     if runs.comparison is None or runs.lockstep is None or runs.tasked is None:
         return "Only one way of running was recorded; a run of the other way would tell."
     left, right = runs.lockstep.ledger, runs.tasked.ledger
     gain = runs.comparison.gain
     spans = f"{seconds(left.span_ns / 1e9)} {in_mode(runs.lockstep)}, {seconds(right.span_ns / 1e9)} tasked"
-    handed = left.available_ns - right.available_ns
+    whole, handed = left.available_ns * 1e-9, (left.available_ns - right.available_ns) * 1e-9
     change = (
-        f"{core_seconds(abs(handed))} {'handed back' if handed >= 0 else 'more'} of {core_seconds(left.available_ns)}"
+        f"{digits(handed)} of {digits(whole)} core-seconds handed back"
+        if handed >= 0
+        else f"{digits(-handed)} core-seconds more than lockstep's {digits(whole)}"
     )
     return (
         f"{spans} on {left.threads} threads: {change}. {_evidence(gain.median, gain.low, gain.high, len(gain.ratios))}"
@@ -70,17 +68,16 @@ def _evidence(median: float, low: float | None, high: float | None, pairs: int) 
 
 
 def _culprits(profile: Profile, account: str) -> str:
-    """The steps that most of an account's waits are for, with their parts of it."""
+    """The steps that most of an account's waits are for: ``46 % of that for burn and 16 % for relax``."""
     waits = blame(profile, account)
     total = sum(waits.values())
-    if not total:
-        return ""
-    named, covered = [], 0
+    named: list[str] = []
+    covered = 0
     for step, ns in list(waits.items())[:2]:
         if covered >= MOST_OF_IT * total or ns < 0.1 * total:
             break
         covered += ns
-        named.append(f"{step} ({100 * ns / total:.0f} % of it)")
+        named.append(f"{100 * ns / total:.0f} %{'' if named else ' of that'} for {step}")
     return listed(named)
 
 
@@ -91,8 +88,8 @@ def _why(lockstep: Profile) -> str:
     for account in sorted(IDLE_ACCOUNTS, key=lambda a: -share(lockstep, a)):
         if share(lockstep, account) >= NOTABLE_SHARE:
             culprits = _culprits(lockstep, account)
-            until = f", until {culprits} is done" if culprits else ""
-            parts.append(f"{percent(share(lockstep, account))} is {WORDS[account]}{until}.")
+            part = percent(share(lockstep, account))
+            parts.append(f"{part} is {PHRASES[account]}{f', {culprits}' if culprits else ''}.")
     parts += _unevenness(lockstep)
     return " ".join(parts)
 
@@ -102,8 +99,7 @@ def _unevenness(lockstep: Profile) -> list[str]:
     steps = list(blame(lockstep, "barrier"))
     if not steps or steps[0] not in lockstep.imbalance.index or share(lockstep, "barrier") < NOTABLE_SHARE:
         return []
-    uneven = lockstep.imbalance.loc[steps[0]]
-    workers, tiles = float(uneven["phases_weighted"]), float(uneven["tiles"])
+    workers, tiles = (float(lockstep.imbalance[column][steps[0]]) for column in ("phases_weighted", "tiles"))
     if not np.isfinite(workers) or not np.isfinite(tiles):
         return []
     if workers < UNEVEN:
@@ -145,7 +141,7 @@ def _ties(tasked: Profile) -> str:
         part = share(tasked, account)
         if part >= NOTABLE_SHARE / 4:
             culprits = _culprits(tasked, account)
-            parts.append(f"{percent(part)} waits for {causes[account]}{f', mostly {culprits}' if culprits else ''}.")
+            parts.append(f"{percent(part)} waits for {causes[account]}{f', {culprits}' if culprits else ''}.")
     if share(tasked, "transfer") >= NOTABLE_SHARE:
         parts.append(
             f"A further {percent(share(tasked, 'transfer'))} goes to moving bytes and putting ghost zones together."
@@ -159,14 +155,14 @@ def _lags(tasked: Profile) -> list[str]:
     late = [f"{name} (lag {lag})" for name, lag in lags.items() if lag > 0]
     found = []
     if prompt:
+        verb = "is" if len(prompt) == 1 else "are"
         found.append(
-            f"{listed(prompt)} {'is' if len(prompt) == 1 else 'are'} used at once (lag 0), so every tile waits for the slowest:"
-            " a barrier by another name."
+            f"{listed(prompt)} {verb} used at once (lag 0), so every tile waits for the slowest: a barrier by another"
+            " name."
         )
     if late:
-        found.append(
-            f"{listed(late)} may be used late, so {'it is' if len(late) == 1 else 'they are'} no barrier in disguise."
-        )
+        verb = "it is" if len(late) == 1 else "they are"
+        found.append(f"The reductions {listed(late)} may be used late, so {verb} no barrier in disguise.")
     return found
 
 
@@ -175,16 +171,25 @@ def _first(runs: Runs, data: dict[str, Any]) -> str:
     advice = data["forecast"].get("advice") or []
     if advice:
         return f"{advice[0]['do']}: the forecast hands back {seconds(float(advice[0]['gain_s']))}. See the list below."
-    profile = runs.tasked or runs.lockstep
-    assert profile is not None
-    if share(profile, "stolen") > 0.08 if "stolen" in profile.ledger.accounts_ns else False:
-        return "Measure again on a quiet machine: other programs took much of the processor time."
-    if share(profile, "engine") > MUCH_ENGINE:
+    profile = runs.tasked or runs.either
+    caution = ""
+    if share(profile, "stolen") > MUCH_STOLEN:
+        caution = (
+            f"Measure again on a quiet machine: for {percent(share(profile, 'stolen'))} of the time kernels had no"
+            " processor, because other programs had it. If the figures stay: "
+        )
+    found = _remedy(runs, profile)
+    return caution + (found[0].lower() + found[1:] if caution else found)
+
+
+def _remedy(runs: Runs, profile: Profile) -> str:
+    engine = share(profile, "engine")
+    if engine > MUCH_ENGINE:
         mean = _mean_ms(profile)
-        return f"Use larger tiles: the dispatch takes {percent(share(profile, 'engine'))} of the time, with tasks of {mean:.2g} ms."
+        return f"Use larger tiles: the dispatch takes {percent(engine)} of the time, with tasks of {mean:.2g} ms."
     if runs.lockstep is not None and share(runs.lockstep, "barrier") >= NOTABLE_SHARE:
         step = next(iter(blame(runs.lockstep, "barrier")), "")
-        return f"Take out the barrier behind {step}: most of the waiting at barriers is there."
+        return f"Take out the barrier behind {step}: more waiting at barriers is for {step} than for any other step."
     return "Leave the barriers as they are: little is lost at them."
 
 

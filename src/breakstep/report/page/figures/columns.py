@@ -23,7 +23,7 @@ def columns_figure(panel: dict[str, Any]) -> figure:
     """Columns of the runs that are there."""
     sides = list(panel["total_core_s"])
     top = max(panel["total_core_s"].values())
-    plot = new_figure(HEIGHT, (-0.05, 3.05 if len(sides) == 2 else 1.6), (-0.01 * top, 1.1 * top), name="columns")
+    plot = new_figure(HEIGHT, (-0.05, 3.05 if len(sides) == 2 else 1.6), (-0.01 * top, 1.11 * top), name="columns")
     plot.axis.visible = False
     plot.grid.grid_line_color = None
     bottoms = {side: _bottoms(panel, side) for side in sides}
@@ -34,7 +34,7 @@ def columns_figure(panel: dict[str, Any]) -> figure:
     for side in sides:
         total = panel["total_core_s"][side]
         words(
-            plot, x=[_LEFT[side] + WIDTH / 2], y=[max(top, total) * 1.06], text=[side], text_align="center",
+            plot, x=[_LEFT[side] + WIDTH / 2], y=[max(top, total) * 1.075], text=[side], text_align="center",
             text_color=LIGHT[side], text_font_style="bold", text_font_size="15px",
         )  # fmt: skip
     if len(sides) == 2:
@@ -107,10 +107,11 @@ def _ribbons(plot: figure, panel: dict[str, Any], bottoms: dict[str, list[float]
 
 
 def _short(part: dict[str, Any]) -> str:
-    return {
+    names = {
         "neighbour": "neighbour", "reduction": "reduction", "barrier": "barrier", "transfer": "bytes",
         "unemployed": "out of work", "engine": "dispatch", "stolen": "no processor",
-    }.get(part["name"], part["name"])  # fmt: skip
+    }  # fmt: skip
+    return names.get(part["name"], str(part["name"]))
 
 
 def _smooth(t: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -130,8 +131,8 @@ def _handed_back(plot: figure, panel: dict[str, Any], top: float) -> None:
     )  # fmt: skip
     text = f"{abs(handed):.3g} core-s"
     tail = "handed back" if handed > 0 else "more when tasked"
-    roomy = abs(handed) > 2.2 * _ROOM * top
+    inside = abs(handed) > 2.2 * _ROOM * top
     words(
-        plot, x=[left + WIDTH / 2], y=[low + abs(handed) / 2 if abs(handed) > _ROOM * top else low + 0.022 * top],
-        text=[f"{text}\n{tail}" if roomy else f"{text} {tail}"], text_align="center", text_color=LIGHT["tasked"],
+        plot, x=[left + WIDTH / 2], y=[low + abs(handed) / 2 if inside else low + abs(handed) + 0.02 * top],
+        text=[f"{text}\n{tail}" if inside else f"{text} {tail}"], text_align="center", text_color=LIGHT["tasked"],
     )  # fmt: skip

@@ -128,9 +128,9 @@ def grain_figure(panel: dict[str, Any], side: str) -> figure:
 
 def _adds_up(row: dict[str, Any], side: str) -> bool:
     """Whether a row's parts are those of this side's run time, to 2 %: they are given for one side only."""
-    parts = [row.get(key) for key in ("compute_s", "engine_s", "wait_s")]
-    whole = row[f"{side}_s"]
-    return all(part is not None for part in parts) and abs(sum(parts) - whole) <= 0.02 * whole
+    parts = [float(row[key]) for key in ("compute_s", "engine_s", "wait_s") if row.get(key) is not None]
+    whole = float(row[f"{side}_s"])
+    return len(parts) == 3 and abs(sum(parts) - whole) <= 0.02 * whole
 
 
 def _layers(plot: figure, rows: list[dict[str, Any]], places: list[int]) -> None:

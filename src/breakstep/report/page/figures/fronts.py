@@ -14,7 +14,7 @@ from breakstep.report.page.palette import LIGHT
 from breakstep.report.wording import seconds
 
 HEIGHT = 300
-LABELS = 8  # curves with their cycle's number above them: a phone has room for no more
+LABELS = 8  # bold curves
 
 
 def fronts_figure(panel: dict[str, Any], side: str, end_s: float) -> figure:
@@ -68,15 +68,20 @@ def _lines(plot: figure, fronts: NDArray[np.float64], cycles: list[int], side: s
     for rows, width in ((thin, 0.9), ([*bold, len(cycles)], 2.0)):
         source = ColumnDataSource({"xs": [_rows(fronts[row]) for row in rows], "ys": [y for _ in rows]})
         plot.multi_line("xs", "ys", source=source, line_color=LIGHT["ink"], line_width=width)
-    texts = [f"cycle {cycles[row]}" if row == 0 else str(cycles[row]) for row in bold]
-    top = fronts.shape[1] * 1.045
-    words(plot, x=[float(fronts[row][-1]) for row in bold], y=[top] * len(bold), text=texts, text_align=_aligned(bold))
-    end = float(fronts[len(cycles)][-1])
-    words(plot, x=[end], y=[top], text=["end"], text_align="right", text_color=LIGHT[side])
+    _numbers(
+        plot, [(float(fronts[row][-1]), str(cycles[row])) for row in bold], float(fronts[-1][-1]), fronts.shape[1], side
+    )
 
 
-def _aligned(bold: list[int]) -> Any:
-    return "left" if bold else "center"
+def _numbers(plot: figure, found: list[tuple[float, str]], end: float, cells: int, side: str) -> None:
+    """Cycles above their lines, as far as they stand apart; a phone shows the axis 270 pixels wide."""
+    room, top = 0.065 * float(plot.x_range.end), 1.045 * cells
+    shown: list[tuple[float, str]] = []
+    for x, text in found:
+        if (not shown or x - shown[-1][0] > room) and end - x > 1.7 * room:
+            shown.append((x, text))
+    words(plot, x=[x for x, _ in shown], y=[top] * len(shown), text=[text for _, text in shown], text_align="center")
+    words(plot, x=[end], y=[top], text=["end"], text_align="right", text_color=LIGHT[side], text_font_style="bold")
 
 
 def _handed_back(plot: figure, begin: float, end: float, cells: int, side: str) -> None:

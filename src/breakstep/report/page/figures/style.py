@@ -24,8 +24,8 @@ def new_figure(height: int, x: tuple[float, float], y: tuple[float, float], **op
         toolbar_location=None,
         tools="",
         min_border=2,
-        background_fill_color=LIGHT["paper"],
-        border_fill_color=LIGHT["paper"],
+        background_fill_color=None,
+        border_fill_color=None,
         outline_line_color=None,
         **options,
     )

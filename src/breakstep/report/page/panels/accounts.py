@@ -2,14 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import fields, is_dataclass
 from typing import Any
 
 from breakstep.profile.ledger import ACCOUNTS
 from breakstep.profile.run import Profile
+from breakstep.profile.words import LABELS
 from breakstep.report.page.numbers import seconds, share, significant
 from breakstep.report.page.runs import Runs
-from breakstep.report.page.waits import WORDS, blame
+from breakstep.report.page.waits import blame
 
 
 def accounts_panel(runs: Runs) -> dict[str, Any]:
@@ -24,17 +24,14 @@ def _of(profile: Profile) -> dict[str, Any]:
         "threads": ledger.threads,
         "available_ns": ledger.available_ns,
         "accounts_ns": {account: ledger.accounts_ns[account] for account in ACCOUNTS},
-        "words": {account: WORDS.get(account, account) for account in ACCOUNTS},
+        "words": {account: LABELS.get(account, account) for account in ACCOUNTS},
         "share": {account: share(ledger.accounts_ns[account], ledger.available_ns) for account in ACCOUNTS},
         "closure_error": ledger.closure_error,
         "steps": _steps(profile),
         "waits_for": {account: blame(profile, account) for account in ("neighbour", "reduction", "barrier")},
         "factors": _factors(profile),
-        "counters": [
-            {"step": str(row.step), "counter": str(row.counter), "value": int(row.value)}
-            for row in profile.counters_by_step.itertuples()
-            if not str(row.counter).startswith("checksum:")
-        ],
+        "critical": _critical(profile),
+        "counters": _counters(profile),
     }
 
 
@@ -55,10 +52,35 @@ def _steps(profile: Profile) -> list[dict[str, Any]]:
     return rows
 
 
+def _counters(profile: Profile) -> list[dict[str, Any]]:
+    table = profile.counters_by_step
+    rows = zip(table["step"], table["counter"], table["value"], strict=True)
+    return [
+        {"step": str(step), "counter": str(counter), "value": int(value)}
+        for step, counter, value in rows
+        if not str(counter).startswith("checksum:")
+    ]
+
+
 def _factors(profile: Profile) -> dict[str, float | None]:
-    """The published efficiency factors, where the profile knows them."""
-    factors = getattr(profile, "factors", None)
-    if factors is None or not is_dataclass(factors):
-        return {}
-    numbers = {one.name: getattr(factors, one.name) for one in fields(factors)}
-    return {name: significant(value) for name, value in numbers.items() if isinstance(value, float)}
+    """The published efficiency factors; parallel efficiency is the product of the first three."""
+    factors = profile.ledger.factors
+    return {
+        "load balance": significant(factors.load_balance),
+        "serialisation": significant(factors.serialisation),
+        "transfer": significant(factors.transfer),
+        "parallel efficiency": significant(factors.parallel),
+    }
+
+
+def _critical(profile: Profile) -> dict[str, Any]:
+    """The chain of tasks that made the run as long as it was: its time by account, and by step [ns]."""
+    chain = profile.ledger.chain
+    by_step = chain.by_step[chain.by_step.sum(axis=1) > 0]
+    return {
+        "span_ns": chain.span_ns,
+        "accounts_ns": dict(chain.accounts_ns),
+        "by_step_ns": {
+            str(step): {str(account): int(ns) for account, ns in row.items()} for step, row in by_step.iterrows()
+        },
+    }

@@ -5,24 +5,24 @@ The first moments of a run, before every thread has had a task, are left out: th
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
 
+import numpy as np
 import pandas as pd
 
+from breakstep.profile.frames import integers, positions
 from breakstep.profile.run import Profile
-from breakstep.report.page.cells import Cells, tile_labels
+from breakstep.profile.why import Why
+from breakstep.profile.words import LABELS, task_name, tile_names
+from breakstep.report.page.cells import Cells
 from breakstep.report.page.numbers import seconds
 from breakstep.report.page.panels.idle import IDLE
 from breakstep.report.page.runs import Runs
 
-#: A map with more numbered links cannot be followed by eye; further ones are added up in one line.
-MOST_LINKS = 14
-_WHAT = {
-    "running": "{task} was running",
-    "queued": "{task} could have run; its thread was busy with other tasks",
-    "under way": "what {task} had made was under way",
-    "ready": "the dispatch had not started {task} yet",
-}
+#: Parts below this of the wait are added up in one line: they explain nothing and hide what does.
+SMALL = 0.01
+MOST_LINKS = 12  # a map with more numbered tiles cannot be followed by eye
 
 
 def chain_panel(runs: Runs, cells: Cells) -> dict[str, Any]:
@@ -32,79 +32,61 @@ def chain_panel(runs: Runs, cells: Cells) -> dict[str, Any]:
 
 
 def _of(profile: Profile, cells: Cells) -> dict[str, Any] | None:
-    gap = _longest(profile)
-    if gap is None:
+    waiting = _longest(profile)
+    if waiting is None:
         return None
-    origin, tasks = profile.ledger.first_ns, profile.tasks.set_index("task")
-    labels = tile_labels(profile.manifest)
-    links = _links(profile.ledger.explain(int(gap["task"])), tasks, labels, cells)
-    waiting = tasks.loc[int(gap["task"])]
+    names = tile_names(profile.manifest["mesh"]["tiles"])
+    stage, tile, cycle = str(waiting["stage"]), int(waiting["tile"]), int(waiting["cycle"])
+    wait = profile.why(tile if tile >= 0 else None, cycle, stage)
+    worker, thread = wait.thread
     return {
-        "wait_s": seconds(int(gap["end_ns"]) - int(gap["start_ns"])),
-        "from_s": seconds(int(gap["start_ns"]) - origin),
-        "until_s": seconds(int(gap["end_ns"]) - origin),
-        "worker": int(gap["worker"]),
-        "thread": int(gap["thread"]),
-        "task": _task(waiting, labels),
-        "cell": _cell(waiting, cells),
-        "links": _shortened(links),
-        "command": _command(waiting, labels),
+        "wait_ns": wait.wait_ns,
+        "wait_s": seconds(wait.wait_ns),
+        "from_s": seconds(wait.start_ns),
+        "until_s": seconds(wait.end_ns),
+        "worker": worker,
+        "thread": thread,
+        "task": task_name(wait.task, names),
+        "cell": _cell(wait.task, cells),
+        "links": _links(wait, cells),
+        "command": _command(stage, names[tile] if tile >= 0 else None, cycle),
     }
 
 
 def _longest(profile: Profile) -> pd.Series[Any] | None:
-    """The gap with the most waiting that is not the dispatch's."""
-    gaps = profile.ledger.gaps
-    later = gaps[gaps["start_ns"] > profile.ledger.first_ns]
-    gaps = later if len(later) else gaps
-    waited = gaps[list(IDLE)].sum(axis=1)
-    return gaps.loc[waited.idxmax()] if len(gaps) and waited.max() > 0 else None
+    """The task behind the most waiting that is not the dispatch's."""
+    gaps, tasks = profile.ledger.gaps, profile.tasks
+    at = positions(integers(tasks, "task"), integers(gaps, "task"))
+    later = (integers(gaps, "start_ns") > profile.ledger.first_ns) & (integers(tasks, "cycle")[at] >= 0)
+    waited = np.where(later, gaps[list(IDLE)].sum(axis=1).to_numpy(), 0)
+    return tasks.iloc[int(at[int(np.argmax(waited))])] if waited.any() else None
 
 
-def _links(parts: pd.DataFrame, tasks: pd.DataFrame, labels: list[str], cells: Cells) -> list[dict[str, Any]]:
-    """Parts with their tasks in words."""
-    links = []
-    for part in parts.itertuples():
-        task = tasks.loc[part.task]
-        links.append(
-            {
-                "ns": int(part.ns),
-                "s": seconds(int(part.ns)),
-                "account": str(part.account),
-                "what": _WHAT[str(part.reason)].format(task=_task(task, labels)),
-                "cell": _cell(task, cells),
-            }
-        )
-    return links
-
-
-def _shortened(links: list[dict[str, Any]]) -> list[dict[str, Any]]:
-    """All links, or the longest of them in their order and the sum of the rest."""
-    if len(links) <= MOST_LINKS:
-        return links
-    kept = sorted(sorted(range(len(links)), key=lambda place: -links[place]["ns"])[: MOST_LINKS - 1])
-    rest = [links[place] for place in range(len(links)) if place not in set(kept)]
-    total = sum(link["ns"] for link in rest)
-    what = f"{len(rest)} shorter links, added up"
-    return [
-        *(links[place] for place in kept),
-        {"ns": total, "s": seconds(total), "account": "", "what": what, "cell": -1},
+def _links(wait: Why, cells: Cells) -> list[dict[str, Any]]:
+    """The parts in words, those that explain little added up at the end."""
+    parts = wait.parts
+    links: list[dict[str, Any]] = [
+        {"ns": int(ns), "account": str(account), "what": words, "cell": cells.cell_of(int(tile))}
+        for ns, account, tile, words in zip(parts["ns"], parts["account"], parts["tile"], wait.sentences(), strict=True)
     ]
+    longest = sorted(range(len(links)), key=lambda place: -links[place]["ns"])[:MOST_LINKS]
+    kept = [place for place in sorted(longest) if links[place]["ns"] >= SMALL * wait.wait_ns]
+    chosen = [links[place] for place in kept]
+    rest = [links[place] for place in range(len(links)) if place not in set(kept)]
+    if rest:
+        chosen.append({"ns": sum(link["ns"] for link in rest), "account": "", "what": _rest(rest), "cell": -1})
+    return [{**link, "s": seconds(link["ns"])} for link in chosen]
 
 
-def _task(task: pd.Series[Any], labels: list[str]) -> str:
-    where = f" of tile {labels[int(task['tile'])]}" if int(task["tile"]) >= 0 else ""
-    when = f"cycle {int(task['cycle'])}" if int(task["cycle"]) >= 0 else "before the first cycle"
-    again = f", iteration {int(task['iteration'])}" if int(task["iteration"]) >= 0 else ""
-    kind = "" if str(task["kind"]) == "step" else f" ({task['kind']})"
-    return f"{task['stage']}{kind}{where}, {when}{again}, on worker {int(task['worker'])}"
+def _rest(links: list[dict[str, Any]]) -> str:
+    accounts = sorted({LABELS.get(link["account"], link["account"]) for link in links})
+    return f"{len(links)} smaller part{'s' if len(links) > 1 else ''}: {', '.join(accounts)}"
 
 
-def _cell(task: pd.Series[Any], cells: Cells) -> int:
-    return int(cells.of_tile[int(task["tile"])]) if int(task["tile"]) >= 0 else -1
+def _cell(task: Mapping[str, Any], cells: Cells) -> int:
+    return cells.cell_of(int(task["tile"]))
 
 
-def _command(task: pd.Series[Any], labels: list[str]) -> str:
+def _command(stage: str, tile: str | None, cycle: int) -> str:
     """How to ask for the same on the command line."""
-    tile = f" --tile {labels[int(task['tile'])]}" if int(task["tile"]) >= 0 else ""
-    return f"breakstep why PROFILE{tile} --cycle {int(task['cycle'])} --step {str(task['stage']).split('+')[0]}"
+    return f"breakstep why PROFILE{f' --tile {tile}' if tile else ''} --cycle {cycle} --step {stage}"

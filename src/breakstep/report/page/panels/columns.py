@@ -4,10 +4,15 @@ from __future__ import annotations
 
 from typing import Any
 
+import numpy as np
+
+from breakstep.profile.frames import sums_by
+from breakstep.profile.inside import inside_tasks
 from breakstep.profile.run import Profile
+from breakstep.profile.words import LABELS
 from breakstep.report.page.numbers import seconds, share
 from breakstep.report.page.runs import Runs
-from breakstep.report.page.waits import COMPUTE, WORDS, account_order
+from breakstep.report.page.waits import COMPUTE, account_order
 
 #: Steps with a part of their own: more would need more colours than can be told apart by everybody.
 MOST_STEPS = 6
@@ -30,7 +35,7 @@ def columns_panel(runs: Runs) -> dict[str, Any]:
     parts = [
         {
             "name": name,
-            "words": WORDS.get(name, name),
+            "words": LABELS.get(name, name),
             "kind": kind,
             "core_s": {side: seconds(found[name]) for side, found in amounts.items()},
             "share": {side: share(found[name], total[side]) for side, found in amounts.items()},
@@ -58,12 +63,18 @@ def _steps(runs: Runs) -> list[str]:
 
 
 def _amounts(profile: Profile, steps: list[str]) -> dict[str, int]:
-    """Nanoseconds of each part; a step gets its part of what is booked as compute."""
+    """Nanoseconds of each part; a step gets its time in kernels on a processor, which is what compute is made of."""
     accounts = dict(profile.ledger.accounts_ns)
-    compute = accounts.pop(COMPUTE)
-    column = "compute_ns" if "stolen" not in accounts else "cpu_ns"
-    work = {str(step): int(ns) for step, ns in profile.work[column].items()}
-    amounts = {step: work.get(step, 0) for step in steps if step != OTHER_STEPS}
+    compute, own = accounts.pop(COMPUTE), _on_processor(profile)
+    amounts = {step: own.get(step, 0) for step in steps if step != OTHER_STEPS}
     if OTHER_STEPS in steps:
         amounts[OTHER_STEPS] = compute - sum(amounts.values())
     return {**amounts, **accounts}
+
+
+def _on_processor(profile: Profile) -> dict[str, int]:
+    """Time in each step's kernels on a processor [ns]."""
+    inside = inside_tasks(profile.frames, profile.timed_steps)
+    own = np.where(inside.kernel, inside.end - inside.start - inside.stolen, 0)
+    sums = sums_by(inside.step, own, len(inside.steps))
+    return dict(zip(inside.steps, (int(ns) for ns in sums), strict=True))

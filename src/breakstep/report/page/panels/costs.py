@@ -67,7 +67,8 @@ def _kernels(profile: Profile) -> tuple[pd.DataFrame, list[str]]:
 def _sums(kernels: pd.DataFrame, place: NDArray[np.int64], shape: tuple[int, int, int]) -> NDArray[np.float64]:
     flat = np.ravel_multi_index((kernels["step"].to_numpy(), kernels["bin"].to_numpy(), place), shape)
     sums = np.bincount(flat, weights=kernels["cpu_ns"].to_numpy(dtype=np.float64), minlength=int(np.prod(shape)))
-    return sums.reshape(shape)
+    table: NDArray[np.float64] = sums.reshape(shape).astype(np.float64)
+    return table
 
 
 def _over_mean(row: NDArray[np.float64]) -> list[float | None]:

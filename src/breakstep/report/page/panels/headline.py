@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from typing import Any
 
 from breakstep.profile.run import Profile
@@ -12,6 +13,9 @@ from breakstep.report.page.waits import idle_share
 from breakstep.report.terminal import describe_difference, headline
 from breakstep.report.wording import in_mode
 from breakstep.report.wording import seconds as seconds_words
+
+#: What a headline on the terminal advises to type; the page says it elsewhere.
+_ADVICE = re.compile(r"; (more --pairs|use --pairs).*$")
 
 
 def headline_panel(runs: Runs) -> dict[str, Any]:
@@ -52,6 +56,7 @@ def _status(profile: Profile) -> dict[str, Any]:
 def _of_pairs(comparison: Comparison) -> dict[str, Any]:
     gain, (left, right) = comparison.gain, comparison.shown
     _, _, sentence = headline(comparison).partition(": ")
+    sentence = _ADVICE.sub(".", sentence)
     handed = 1.0 - 1.0 / gain.median
     return {
         "sentence": sentence[0].upper() + sentence[1:],

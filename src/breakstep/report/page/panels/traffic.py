@@ -66,6 +66,7 @@ def by_stage_table(panel: dict[str, Any]) -> list[dict[str, Any]]:
     """One row a stage: bytes of each run and the share of the first."""
     sides = list(panel)
     stages = list(dict.fromkeys(stage for side in sides for stage in panel[side]["by_stage"]))
+    stages = [stage for stage in stages if any(panel[side]["by_stage"].get(stage) for side in sides)]
     whole = panel[sides[0]]["total_bytes"]
     return [
         {
