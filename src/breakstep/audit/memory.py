@@ -1,0 +1,205 @@
+"""Memory under watch: arrays in poisoned surroundings, NumPy's and the system's allocations filled with a pattern.
+
+Everything goes through the C library and NumPy's own hook for allocators (NEP 49), so that compiled code is
+watched like Python code. Knows nothing of steps.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import ctypes
+import mmap
+from collections.abc import Iterator
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+Array = NDArray[np.float64]
+Bytes = NDArray[np.uint8]
+
+MARGIN = 8192  # bytes of poison on each side: a few rows of a small tile
+SURROUND = 256  # bytes of canary around each array that a kernel allocates
+CANARY = 0xA7  # unless a probe says otherwise
+_M_PERTURB = -6  # glibc: fill what malloc gives and free takes
+PROT_NONE, PROT_READ, PROT_WRITE = 0, 1, 2
+PAGE = mmap.PAGESIZE
+
+libc = ctypes.CDLL(None, use_errno=True)
+libc.malloc.restype = ctypes.c_void_p
+libc.malloc.argtypes = [ctypes.c_size_t]
+libc.free.argtypes = [ctypes.c_void_p]
+libc.free.restype = None
+libc.memcmp.argtypes = [ctypes.c_void_p, ctypes.c_char_p, ctypes.c_size_t]
+
+
+class Guarded:
+    """A copy of an array whose surroundings hold a number of our choice.
+
+    Parameters
+    ----------
+    array : ndarray of float64
+    poison : float
+        What every double around the array holds.
+    """
+
+    def __init__(self, array: Array, poison: float) -> None:
+        margin = MARGIN // 8
+        self.buffer: Array = np.full(array.size + 2 * margin, poison)
+        self.inner = slice(margin, margin + array.size)
+        self.buffer[self.inner] = array.reshape(-1)
+        self.array: Array = self.buffer[self.inner].reshape(array.shape)
+        self._before: Bytes = self.buffer.view(np.uint8).copy()
+
+    def protect(self) -> None:
+        """Make NumPy refuse to write; compiled code does not ask."""
+        self.buffer.flags.writeable = False
+        self.array.flags.writeable = False
+
+    def changed(self) -> NDArray[np.intp]:
+        """Places of doubles that are no longer what they were, counted from the array's first."""
+        now = self.buffer.view(np.uint8)
+        if np.array_equal(now, self._before):
+            return np.empty(0, np.intp)
+        places = np.unique(np.flatnonzero(now != self._before) // 8) - self.inner.start
+        return np.asarray(places, np.intp)
+
+
+class Paged:
+    """A copy of an array that ends, or begins, at a page that nobody may touch, and may itself be unwritable."""
+
+    def __init__(self, array: Array, *, at_end: bool, writable: bool) -> None:
+        pages = max(1, -(-array.nbytes // PAGE))
+        self._map = mmap.mmap(-1, (pages + 2) * PAGE)
+        base = ctypes.addressof(ctypes.c_char.from_buffer(self._map))
+        offset = PAGE + ((pages * PAGE - array.nbytes) // 16 * 16 if at_end else 0)
+        self.array: Array = np.frombuffer(self._map, np.float64, array.size, offset).reshape(array.shape)
+        self.array[...] = array
+        for start, length, allowed in (
+            (base, PAGE, PROT_NONE),
+            (base + (pages + 1) * PAGE, PAGE, PROT_NONE),
+            (base + PAGE, pages * PAGE, PROT_READ | (PROT_WRITE if writable else 0)),
+        ):
+            if libc.mprotect(ctypes.c_void_p(start), ctypes.c_size_t(length), allowed) != 0:
+                raise OSError(ctypes.get_errno(), "mprotect refused")
+
+
+def fill_heap(byte: int) -> None:
+    """Make the C library fill freed memory with ``byte`` and new memory with its complement; 0 ends it."""
+    if hasattr(libc, "mallopt"):
+        libc.mallopt(_M_PERTURB, byte)
+
+
+_MALLOC = ctypes.CFUNCTYPE(ctypes.c_void_p, ctypes.c_void_p, ctypes.c_size_t)
+_CALLOC = ctypes.CFUNCTYPE(ctypes.c_void_p, ctypes.c_void_p, ctypes.c_size_t, ctypes.c_size_t)
+_REALLOC = ctypes.CFUNCTYPE(ctypes.c_void_p, ctypes.c_void_p, ctypes.c_void_p, ctypes.c_size_t)
+_FREE = ctypes.CFUNCTYPE(None, ctypes.c_void_p, ctypes.c_void_p, ctypes.c_size_t)
+
+
+class _Allocator(ctypes.Structure):
+    _fields_ = [
+        ("ctx", ctypes.c_void_p), ("malloc", _MALLOC), ("calloc", _CALLOC), ("realloc", _REALLOC), ("free", _FREE),
+    ]  # fmt: skip
+
+
+class _Handler(ctypes.Structure):
+    _fields_ = [("name", ctypes.c_char * 127), ("version", ctypes.c_uint8), ("allocator", _Allocator)]
+
+
+class Watch:
+    """NumPy's allocations between canaries, filled with a pattern; install once a process.
+
+    Attributes
+    ----------
+    fill, canary : int
+        Bytes that new memory and its surroundings hold.
+    overrun : int
+        Bytes beyond an array that somebody wrote, the most seen since it was last set to 0.
+    """
+
+    def __init__(self) -> None:
+        self.fill = 0x00
+        self.canary = CANARY
+        self.overrun = 0
+        self._live: dict[int, tuple[int, int]] = {}  # address -> (size, canary)
+        functions = _MALLOC(self._malloc), _CALLOC(self._calloc), _REALLOC(self._realloc), _FREE(self._free)
+        self._handler = _Handler(b"watched", 1, _Allocator(None, *functions))
+        self._functions = functions
+        self._capsule = _capsule(self._handler)
+        self._set = _numpy_function(304)  # PyDataMem_SetHandler, see NumPy's list of C functions
+
+    @contextlib.contextmanager
+    def on(self) -> Iterator[None]:
+        """Watch what this thread allocates."""
+        before = self._set(self._capsule)
+        try:
+            yield
+        finally:
+            self._set(before)
+
+    def check(self) -> int:
+        """Look at the canaries of all live arrays; bytes overrun, 0 for none."""
+        for address, (size, canary) in list(self._live.items()):
+            self._look(address, size, canary)
+        return self.overrun
+
+    def _look(self, address: int, size: int, canary: int) -> None:
+        expected = bytes([canary]) * SURROUND
+        # Not string_at at first: it would raise, and so lose, an error that NumPy has set before it frees.
+        if not (libc.memcmp(address - SURROUND, expected, SURROUND) or libc.memcmp(address + size, expected, SURROUND)):
+            return
+        before = ctypes.string_at(address - SURROUND, SURROUND)
+        after = ctypes.string_at(address + size, SURROUND)
+        if before != expected or after != expected:
+            low = SURROUND - next((i for i, b in enumerate(before) if b != canary), SURROUND)
+            high = next((SURROUND - i for i, b in enumerate(reversed(after)) if b != canary), 0)
+            self.overrun = max(self.overrun, low, high)
+
+    def _malloc(self, _ctx: Any, size: int) -> int:
+        return self._allocate(size, self.fill)
+
+    def _allocate(self, size: int, fill: int) -> int:
+        start = libc.malloc(size + 2 * SURROUND)
+        if not start:
+            return 0
+        ctypes.memset(start, self.canary, SURROUND)
+        ctypes.memset(start + SURROUND, fill, size)
+        ctypes.memset(start + SURROUND + size, self.canary, SURROUND)
+        self._live[start + SURROUND] = size, self.canary
+        return int(start) + SURROUND
+
+    def _calloc(self, _ctx: Any, count: int, size: int) -> int:
+        return self._allocate(count * size, 0)
+
+    def _realloc(self, _ctx: Any, address: int | None, size: int) -> int:
+        new = self._allocate(size, self.fill)
+        if address and new:
+            ctypes.memmove(new, address, min(size, self._live.get(address, (0, 0))[0]))
+            self._free(None, address, 0)
+        return new
+
+    def _free(self, _ctx: Any, address: int | None, _size: int) -> None:
+        known = self._live.pop(address or 0, None)
+        if address is None or known is None:
+            return
+        self._look(address, *known)
+        libc.free(address - SURROUND)
+
+
+def _capsule(handler: _Handler) -> Any:
+    make = ctypes.pythonapi.PyCapsule_New
+    make.restype = ctypes.py_object
+    make.argtypes = [ctypes.c_void_p, ctypes.c_char_p, ctypes.c_void_p]
+    return make(ctypes.addressof(handler), b"mem_handler", None)
+
+
+def _numpy_function(index: int) -> Any:
+    """A function of NumPy's C table that takes and gives one object."""
+    from numpy._core import _multiarray_umath as core  # type: ignore[attr-defined]
+
+    get = ctypes.pythonapi.PyCapsule_GetPointer
+    get.restype = ctypes.c_void_p
+    get.argtypes = [ctypes.py_object, ctypes.c_char_p]
+    table = get(core._ARRAY_API, None)
+    address = ctypes.cast(table, ctypes.POINTER(ctypes.c_void_p))[index]
+    return ctypes.PYFUNCTYPE(ctypes.py_object, ctypes.py_object)(address)
