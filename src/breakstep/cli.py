@@ -13,7 +13,7 @@ import click
 
 from breakstep.errors import BreakstepError
 
-COMMANDS = ("compare", "run", "ledger", "why", "report", "new", "kernels", "selfcheck", "simulator")
+COMMANDS = ("compare", "run", "ledger", "why", "report", "audit", "new", "kernels", "selfcheck", "simulator")
 
 
 class Commands(click.Group):

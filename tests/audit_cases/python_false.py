@@ -7,7 +7,7 @@ import random
 import tempfile
 import time
 from dataclasses import dataclass, field
-from functools import lru_cache
+from functools import cache
 from pathlib import Path
 
 import numpy as np
@@ -148,7 +148,7 @@ def remembers_by_tile(arrays: Arrays, call: Call) -> dict[str, Array]:
     return {"of_remembers_by_tile": arrays["u"] * scale}
 
 
-@lru_cache(maxsize=None)
+@cache
 def _drawn(cycle: int) -> float:
     return random.random()
 

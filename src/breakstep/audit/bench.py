@@ -11,6 +11,7 @@ from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field, replace
 
 import numpy as np
+from numpy.typing import NDArray
 
 from breakstep.audit.calls import Outcome, Part, call_part
 from breakstep.audit.memory import MARGIN, Guarded, Watch, fill_heap
@@ -41,6 +42,8 @@ class Bench:
 
     Attributes
     ----------
+    private : frozenset of str
+        Fields whose order of numbers is the steps' own affair.
     incidents : dict of (kind, field) to str
         What calls did beside returning arrays, with the first evidence of each.
     reads : tuple of Read
@@ -52,6 +55,7 @@ class Bench:
     part: Part
     fields: Mapping[str, Field]
     samples: list[Sample]
+    private: frozenset[str] = frozenset()
     incidents: dict[tuple[str, str], str] = field(default_factory=dict)
     calls: int = 0
     writable: bool = False
@@ -175,7 +179,9 @@ class Bench:
                 )  # fmt: skip
             if inside.size < places.size:
                 outside = int(places[(places < 0) | (places >= one.array.size)][0])
-                side = f"{-outside} before the first" if outside < 0 else f"{outside - one.array.size + 1} past the last"
+                side = (
+                    f"{-outside} before the first" if outside < 0 else f"{outside - one.array.size + 1} past the last"
+                )
                 self.incident(
                     "outside memory", f"written:{name}",
                     f"it wrote outside of {name!r}: the double {side} of the array changed ({sample.where()})",
@@ -240,7 +246,7 @@ def _moved(call: Call, rng: np.random.Generator) -> Triple:
     return (moved[0], moved[1], moved[2])
 
 
-def corner_mask(shape: tuple[int, ...], halo: Triple) -> np.ndarray:
+def corner_mask(shape: tuple[int, ...], halo: Triple) -> NDArray[np.bool_]:
     """Ghost zones that lie outside along two axes or three; shape of the padded array without components."""
     outside = np.zeros(shape, np.int8)
     for axis, width in enumerate(halo):
@@ -250,7 +256,7 @@ def corner_mask(shape: tuple[int, ...], halo: Triple) -> np.ndarray:
     return outside > 1
 
 
-def layer_mask(shape: tuple[int, ...], halo: Triple, axis: int, side: int, distance: int) -> np.ndarray:
+def layer_mask(shape: tuple[int, ...], halo: Triple, axis: int, side: int, distance: int) -> NDArray[np.bool_]:
     """The ghost zones at a distance from the tile beyond one of its faces, corners left out."""
     mask = np.zeros(shape, bool)
     cuts = [slice(w, n - w) for w, n in zip(halo, shape, strict=True)]

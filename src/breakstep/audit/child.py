@@ -18,6 +18,7 @@ from typing import Any
 from breakstep.audit.bench import Bench
 from breakstep.audit.carry import load, save
 from breakstep.audit.findings import NOTE, Finding
+from breakstep.audit.memory import Watch
 from breakstep.audit.probe_memory import probe_pages, probe_protected, probe_surroundings, probe_uninitialised
 from breakstep.audit.probe_place import probe_cut, probe_influence, probe_numbers
 from breakstep.audit.probe_reads import probe_contract, probe_corners, probe_undeclared, probe_unused
@@ -53,7 +54,11 @@ PROBES: dict[str, Probe] = {
 }
 """In this order: what may end the process comes last."""
 
-OUTSIDE = {"subprocess.Popen": "starts a process", "socket.connect": "opens a connection", "os.system": "runs a command"}
+OUTSIDE = {
+    "subprocess.Popen": "starts a process",
+    "socket.connect": "opens a connection",
+    "os.system": "runs a command",
+}
 CACHES = ("__pycache__", ".nbi", ".nbc", ".pyc", "numba")
 
 
@@ -70,25 +75,29 @@ class Lines:
 
 def walk(folder: Path, lines: Lines, skip: frozenset[str], cycles: int) -> None:
     """Take samples of every part and leave a job file for each."""
-    from breakstep.audit.sample import Walk
+    from breakstep.audit.sample import Walk, private_fields
 
     program = load(folder / "program")
     walked = Walk(program, cycles, skip, lambda part: lines.say(begins=part))
     try:
-        walked.run()
+        with Watch().on():  # what writes a little past its arrays then spoils nothing, and the walk goes on
+            walked.run()
     except BreakstepError as error:
         lines.say(stopped=str(error))
-    for part in {p.name: p for p in (*program.problem.splitting.steps(), *program.problem.splitting.all_reductions())}.values():
+    splitting = program.problem.splitting
+    private = private_fields(program)
+    for part in {part.name: part for part in (*splitting.steps(), *splitting.all_reductions())}.values():
         samples = walked.samples.get(part.name, [])
         moved = sorted(walked.moved.get(part.name, ()))
-        save((part, program.fields, samples, moved), folder / f"job-{part.name}")
+        sources = getattr(program.problem, "sources", None)  # modules loaded from files come back first
+        save((sources, part, program.fields, private, samples, moved), folder / f"job-{part.name}")
         lines.say(part=part.name, samples=len(samples), failure=walked.failures.get(part.name, ""))
 
 
 def probe(folder: Path, lines: Lines, skip: frozenset[str], name: str) -> None:
     """Run every probe on one part."""
-    part, fields, samples, moved = load(folder / f"job-{name}")
-    bench = Bench(part, fields, samples[::-1])  # the last first: another order than in the walk
+    _, part, fields, private, samples, moved = load(folder / f"job-{name}")
+    bench = Bench(part, fields, samples[::-1], private)  # the last first: another order than in the walk
     outside = _watch_outside(bench)
     said: set[str] = set()
     for title, function in PROBES.items():
@@ -138,8 +147,8 @@ def _watch_outside(bench: Bench) -> dict[str, bool]:
 
 def plain_python(folder: Path, lines: Lines, name: str) -> None:
     """Run functions that Numba would compile as Python, which checks every index; the environment turned it off."""
-    part, fields, samples, _ = load(folder / f"job-{name}")
-    bench = Bench(part, fields, samples[::-1])
+    _, part, fields, private, samples, _ = load(folder / f"job-{name}")
+    bench = Bench(part, fields, samples[::-1], private)
     lines.say(begins="indices")
     for sample in bench.samples[:3]:
         outcome = bench.run(sample)

@@ -5,8 +5,8 @@ Knows words and figures only; it neither calls kernels nor reads memory.
 
 from __future__ import annotations
 
-import json
 import dataclasses
+import json
 from dataclasses import asdict, dataclass
 from typing import Any, Final
 

@@ -12,7 +12,7 @@ from breakstep.audit.findings import Finding
 from breakstep.audit.memory import CANARY, Paged
 
 POISONS = (np.nan, -1e30, 0.37)  # one that spoils sums, one that spoils comparisons, one that looks innocent
-FILLS = (0xFF, 0x41, 0xC3)  # as doubles: NaN, 2.3e6 or so, -2.7e18 or so
+FILLS = (0xFF, 0x41, 0xC3, 0xBE)  # as doubles NaN, 2e6, -3e18, -2e-6; the C library gives their complements
 
 
 def probe_surroundings(bench: Bench) -> Iterator[Finding]:

@@ -68,6 +68,8 @@ def probe_cut(bench: Bench) -> Iterator[Finding]:
     severity, why = FAULT, ""
     if repeat:
         severity, why = NOTE, f" Within the iteration {repeat!r} that is legitimate as long as its verdict decides."
+    elif any(read.field in bench.private for read in bench.reads):
+        severity, why = NOTE, " It reads scratch whose order of numbers may be its own, so that says little."
     elif gap <= ROUNDING:
         severity, why = NOTE, " That is rounding."
     yield Finding(bench.part.name, "tiling", f"Its bits depend on how the mesh is cut: {words}.{why}", severity)
@@ -143,16 +145,21 @@ def _origin(call: Call, axis: int, low: int) -> Triple:
 
 def _cropped(bench: Bench, whole: Outcome, axis: int, low: int, high: int) -> Outcome:
     arrays = whole.arrays or {}
-    return Outcome({name: _crop(arrays[name], axis, low, high) for name in bench.zone_fields() if name in arrays})
+    return Outcome({name: _crop(arrays[name], axis, low, high) for name in _comparable(bench) if name in arrays})
+
+
+def _comparable(bench: Bench) -> list[str]:
+    """Writes that hold a number of a zone where the zone lies."""
+    return [name for name in bench.zone_fields() if name not in bench.private]
 
 
 def probe_influence(bench: Bench) -> Iterator[Finding]:
     """Change one zone: which zones of the result change, and how far away are they?"""
-    if bench.samples[0].repeat or not bench.zone_fields():
+    if bench.samples[0].repeat or not _comparable(bench):
         return  # within an iteration zones of a tile may well see each other
     began = time.monotonic()
     for read in bench.reads:
-        if bench.fields[read.field].per_tile:
+        if bench.fields[read.field].per_tile or read.field in bench.private:
             continue
         farthest: list[int] = [0, 0, 0]
         diagonal, evidence = "", ["", "", ""]
@@ -207,7 +214,7 @@ def _zones(sample: Sample) -> list[Triple]:
 def _nudged(bench: Bench, sample: Sample, name: str, halo: Triple, zone: Triple) -> Iterator[tuple[Outcome, str]]:
     """Outcomes with one zone of a field changed a little and a lot."""
     given = bench.given(sample)
-    place = (slice(None), *(z + w for z, w in zip(zone, halo, strict=True)))
+    place = (slice(None), zone[0] + halo[0], zone[1] + halo[1], zone[2] + halo[2])
     size = float(np.nanmax(np.abs(given[name]), initial=0.0)) or 1.0
     for factor, shift, amount in ((1.01, 1e-4, "raised by 1 %"), (1.5, 0.1, "raised by half"), (-1.0, 1.0, "reversed")):
         changed = given[name].copy()
@@ -221,7 +228,7 @@ def _distances(
     bench: Bench, plain: Outcome, outcome: Outcome, zone: Triple, sample: Sample
 ) -> Iterator[tuple[Triple, str]]:
     """How far the changed zones lie from a zone: the farthest along each axis, and the most diagonal one."""
-    for name in bench.zone_fields():
+    for name in _comparable(bench):
         one, two = (plain.arrays or {}).get(name), (outcome.arrays or {}).get(name)
         if one is None or two is None or one.shape != two.shape:
             continue

@@ -1,14 +1,17 @@
-"""Probes of what is declared: reads, ghost zones, corners and reductions that are declared and not used, or the reverse."""
+"""Probes of what is declared: reads, ghost zones, corners and reductions declared and not used, or the reverse."""
 
 from __future__ import annotations
 
 import time
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
+from functools import partial
+from itertools import islice
 
 import numpy as np
+from numpy.typing import NDArray
 
-from breakstep.audit.bench import Bench, Given, corner_mask, layer_mask
+from breakstep.audit.bench import Base, Bench, Given, corner_mask, layer_mask
 from breakstep.audit.calls import Outcome, first_difference, name_writes
 from breakstep.audit.findings import NOTE, Finding
 from breakstep.audit.sample import Sample
@@ -66,7 +69,9 @@ def _failures(bench: Bench, failed: list[tuple[Sample, str]]) -> Iterator[Findin
     sample, reason = failed[0]
     cure = _cure(bench, sample) if bench.is_step else None
     if cure is None:
-        every = "in every call" if len(failed) == len(bench.samples) else f"in {len(failed)} of {len(bench.samples)} calls"
+        every = (
+            "in every call" if len(failed) == len(bench.samples) else f"in {len(failed)} of {len(bench.samples)} calls"
+        )
         yield Finding(bench.part.name, "raises", f"It fails {every}, first at {sample.where()}: {reason[:300]}.")
         return
     name, halo, corners = cure
@@ -77,7 +82,9 @@ def _failures(bench: Bench, failed: list[tuple[Sample, str]]) -> Iterator[Findin
         f"It fails with the declared halo {declared.halo} of {name!r} ({reason[:160]}) and works with {halo}.",
         field=name, change={"halo": list(halo), "corners": corners},
     )  # fmt: skip
-    bench.reads = tuple(replace(read, halo=halo, corners=corners) if read.field == name else read for read in bench.reads)
+    bench.reads = tuple(
+        replace(read, halo=halo, corners=corners) if read.field == name else read for read in bench.reads
+    )
 
 
 def _cure(bench: Bench, sample: Sample) -> tuple[str, Triple, bool] | None:
@@ -114,14 +121,14 @@ def probe_undeclared(bench: Bench) -> Iterator[Finding]:
             break
     for (kind, name), where in list(bench.incidents.items()):
         if kind == "undeclared field":
-            tried = _first_effect(bench, lambda b, n=name: _other_field(bench, b, n))
+            tried = _first_effect(bench, partial(_other_field, bench, name))
             verb = "and uses it" if tried.matters else "although it was not seen to matter"
             yield Finding(
                 bench.part.name, kind, f"It reads {name!r} {verb} ({where}{tried.evidence}).", field=name,
                 change={"halo": [0, 0, 0], "corners": False},
             )  # fmt: skip
         elif kind == "undeclared reduction":
-            tried = _first_effect(bench, lambda b, n=name: _other_value(bench, b, n))
+            tried = _first_effect(bench, partial(_other_value, bench, name))
             verb = "and uses it" if tried.matters else "although it was not seen to matter"
             yield Finding(
                 bench.part.name, kind, f"It asks for the reduction {name!r} {verb} ({where}{tried.evidence}).",
@@ -129,24 +136,20 @@ def probe_undeclared(bench: Bench) -> Iterator[Finding]:
             )  # fmt: skip
 
 
-def _other_field(bench: Bench, base: object, name: str) -> Iterator[Outcome]:
-    from breakstep.audit.bench import Base
-
-    assert isinstance(base, Base)
+def _other_field(bench: Bench, name: str, base: Base) -> Iterator[Outcome]:
     own = base.sample.fields.get(name)
     for changed in () if own is None else _replacements(own, np.ones(own.shape[1:], bool), 7):
         others = {**base.sample.fields, name: changed}
         yield bench.run(base.sample, base.given, call=base.call, values=base.values, others=others)
 
 
-def _other_value(bench: Bench, base: object, name: str) -> Iterator[Outcome]:
-    from breakstep.audit.bench import Base
-
-    assert isinstance(base, Base)
+def _other_value(bench: Bench, name: str, base: Base) -> Iterator[Outcome]:
     own = base.values.get(name)
-    for factor in () if own is None else (1.001, 0.5, 3.0, -1.0, 1e-6, 1e6, np.nan):
+    if own is None:
+        return
+    for factor in (1.001, 0.5, 3.0, -1.0, 1e-6, 1e6, np.nan):
         with np.errstate(all="ignore"):
-            changed = own * factor + (own == 0.0) * factor
+            changed = np.asarray(own * factor + (own == 0.0) * factor, np.float64)
         yield bench.run(base.sample, base.given, call=base.call, values={**base.values, name: changed})
 
 
@@ -159,7 +162,7 @@ class Tried:
     evidence: str = ""
 
 
-def _first_effect(bench: Bench, changes: Callable[..., Iterator[Outcome]]) -> Tried:
+def _first_effect(bench: Bench, changes: Callable[[Base], Iterator[Outcome]]) -> Tried:
     """Try changes on one state after the other until one shows in the bits."""
     began, calls = time.monotonic(), 0
     for base in bench.bases():
@@ -173,22 +176,18 @@ def _first_effect(bench: Bench, changes: Callable[..., Iterator[Outcome]]) -> Tr
     return Tried(False, calls)
 
 
-def region_matters(bench: Bench, name: str, mask_of: Callable[[Array], np.ndarray]) -> Tried:
+def region_matters(bench: Bench, name: str, mask_of: Callable[[Array], NDArray[np.bool_]]) -> Tried:
     """Whether the zones of a mask matter, on any of the bench's states and for any of several changes."""
 
-    def changes(base: object) -> Iterator[Outcome]:
-        from breakstep.audit.bench import Base
-
-        assert isinstance(base, Base)
+    def changes(base: Base) -> Iterator[Outcome]:
         array = base.given[name]
-        for seed, changed in enumerate(_replacements(array, mask_of(array), 11)):
-            del seed
+        for changed in _replacements(array, mask_of(array), 11):
             yield bench.run(base.sample, {**base.given, name: changed}, call=base.call, values=base.values)
 
     return _first_effect(bench, changes)
 
 
-def _replacements(array: Array, mask: np.ndarray, seed: int) -> Iterator[Array]:
+def _replacements(array: Array, mask: NDArray[np.bool_], seed: int) -> Iterator[Array]:
     """The array with the masked zones changed: a little, by factors, by jumps of any size, to NaN."""
     rng = np.random.default_rng(seed)
     old = array[:, mask]
@@ -220,7 +219,7 @@ def probe_corners(bench: Bench) -> Iterator[Finding]:
             if evidence is not None:
                 yield Finding(
                     bench.part.name, "undeclared corners",
-                    f"What stands in the diagonal ghost zones of {read.field!r} matters ({sample.where()}; {evidence}).",
+                    f"The diagonal ghost zones of {read.field!r} matter ({sample.where()}; {evidence}).",
                     field=read.field, change={"halo": list(read.halo), "corners": True},
                 )  # fmt: skip
                 break
@@ -254,7 +253,7 @@ def probe_unused(bench: Bench) -> Iterator[Finding]:
         elif not read.is_local:
             yield from _unused_halo(bench, read)
     for name in bench.part.uses if isinstance(bench.part, Step) else ():
-        tried = _first_effect(bench, lambda b, n=name: _other_value(bench, b, n))
+        tried = _first_effect(bench, partial(_other_value, bench, name))
         if not tried.matters and tried.calls:
             yield Finding(
                 bench.part.name, "unused reduction",
@@ -263,10 +262,12 @@ def probe_unused(bench: Bench) -> Iterator[Finding]:
             )  # fmt: skip
 
 
-def _few(bench: Bench) -> list[object]:
-    from itertools import islice
-
+def _few(bench: Bench) -> list[Base]:
     return list(islice(bench.bases(), len(bench.samples)))
+
+
+def _layer(halo: Triple, axis: int, side: int, distance: int, array: Array) -> NDArray[np.bool_]:
+    return layer_mask(array.shape[1:], halo, axis, side, distance)
 
 
 def _unused_halo(bench: Bench, read: Read) -> Iterator[Finding]:
@@ -276,9 +277,7 @@ def _unused_halo(bench: Bench, read: Read) -> Iterator[Finding]:
         sides = [0, 0]
         for side in (0, 1):
             for distance in range(width, 0, -1):
-                tried = region_matters(
-                    bench, read.field, lambda a, x=axis, s=side, d=distance: layer_mask(a.shape[1:], read.halo, x, s, d)
-                )
+                tried = region_matters(bench, read.field, partial(_layer, read.halo, axis, side, distance))
                 calls += 0 if tried.matters else tried.calls
                 if tried.matters:
                     sides[side] = distance
@@ -295,8 +294,9 @@ def _unused_halo(bench: Bench, read: Read) -> Iterator[Finding]:
         )  # fmt: skip
     if one_sided:
         yield Finding(
-            bench.part.name, "position", f"It reads {read.field!r} upwind along {', '.join(one_sided)}.", NOTE, read.field
-        )
+            bench.part.name, "position", f"It reads {read.field!r} upwind along {', '.join(one_sided)}.", NOTE,
+            read.field,
+        )  # fmt: skip
     if read.corners and sum(w > 0 for w in read.halo) > 1:
         tried = region_matters(bench, read.field, lambda array: corner_mask(array.shape[1:], read.halo))
         if not tried.matters:

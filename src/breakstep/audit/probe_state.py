@@ -18,12 +18,12 @@ from breakstep.audit.findings import NOTE, Finding
 from breakstep.audit.reach import GENERATORS, Reached, reached_state, static_memory
 from breakstep.audit.sample import digest
 
-THREAD_SECONDS = 0.5  # on concurrent calls; a race that shows less often than that is found by its memory
+THREAD_SECONDS = 0.15  # on concurrent calls; a race that shows less often than that is found by its memory
 
 
 def probe_repeats(bench: Bench) -> Iterator[Finding]:
     """The same input again: at once, after another one, and in another process."""
-    name, kernel = bench.part.name, bench.part.kernel
+    name = bench.part.name
     bases = _two(bench)
     first = bases[0]
     random.seed(20391)  # so that a kernel that seeds them leaves another state behind
@@ -31,7 +31,7 @@ def probe_repeats(bench: Bench) -> Iterator[Finding]:
     before = _everything(bench)
     once, again = _plain(bench, first), _plain(bench, first)
     after = _everything(bench)
-    other = _plain(bench, bases[-1])
+    _plain(bench, bases[-1])
     third = _plain(bench, first)
     last = _everything(bench)
     changed = before.differing(after) | after.differing(last)
@@ -49,12 +49,11 @@ def probe_repeats(bench: Bench) -> Iterator[Finding]:
         yield from _quiet_state(name, kept, after.arrays)
     for generator in sorted(changed & GENERATORS):
         yield Finding(name, "side effect", f"It draws from, or seeds, {generator}, which all threads share.")
-    del other, kernel
 
 
 def _quiet_state(name: str, kept: list[str], arrays: set[str]) -> Iterator[Finding]:
     """State that changes without being seen in the results so far."""
-    shared = [path for path in kept if path in arrays or path.startswith("static memory")]
+    shared = [path for path in kept if path in arrays or path.startswith("static ")]
     if shared:
         yield Finding(
             name, "hidden state",
@@ -69,8 +68,7 @@ def _quiet_state(name: str, kept: list[str], arrays: set[str]) -> Iterator[Findi
 def _everything(bench: Bench) -> Reached:
     """What the kernel reaches, static memory of libraries included."""
     found = reached_state(bench.part.kernel)
-    for file, data in static_memory(found.libraries).items():
-        title = f"static memory of {file.rsplit('/', 1)[-1]}"
+    for title, data in static_memory(found.libraries).items():
         found.digests[title] = str(hash(data))
         found.arrays.add(title)
     return found
@@ -104,7 +102,12 @@ def probe_processes(bench: Bench) -> Iterator[Finding]:
             )  # fmt: skip
             return
     for sample, one in zip(bench.samples, here, strict=True):
-        if sample.digest and bench.reads == bench.part.reads and one.arrays is not None and digest(one) != sample.digest:
+        if (
+            sample.digest
+            and bench.reads == bench.part.reads
+            and one.arrays is not None
+            and digest(one) != sample.digest
+        ):
             yield Finding(
                 bench.part.name, "call order",
                 f"The call at {sample.where()} gives other bits alone in a fresh process than it gave in a run, after"
@@ -123,7 +126,9 @@ def probe_shared_result(bench: Bench) -> Iterator[Finding]:
         shares = _overlap(kept, later)
         if not kept.same(copied) or shares:
             what = first_difference(copied, kept) if not kept.same(copied) else f"{shares!r} lies in the same memory"
-            yield Finding(bench.part.name, "shared result", f"A later call overwrites what an earlier one returned: {what}.")
+            yield Finding(
+                bench.part.name, "shared result", f"A later call overwrites what an earlier one returned: {what}."
+            )
             return
 
 
@@ -155,7 +160,7 @@ def _shifted_clock(kernel: Any) -> Iterator[None]:
         return lambda: type(original())(original() + by)
 
     replaced = {n: moved(f, shift * 1e9 if n.endswith("_ns") else shift) for n, f in originals.items()}
-    function = kernel if hasattr(kernel, "__globals__") else getattr(type(kernel), "__call__", None)
+    function = kernel if hasattr(kernel, "__globals__") else vars(type(kernel)).get("__call__")
     space = getattr(function, "__globals__", {})
     bound = {key: name for key, value in space.items() for name, f in originals.items() if value is f}
     try:

@@ -22,6 +22,8 @@ from typing import Any
 
 import numpy as np
 
+from breakstep.audit.elf import static_places
+
 DEPTH = 8
 LARGEST = 1 << 26  # bytes of an array beyond which it is not looked at
 GENERATORS = {"the generator of module random", "NumPy's global generator"}
@@ -51,7 +53,9 @@ class Reached:
 
     def differing(self, later: Reached) -> set[str]:
         """Paths that both have and that changed; what only one has is a cache that was filled."""
-        return {path for path in self.digests.keys() & later.digests.keys() if self.digests[path] != later.digests[path]}
+        return {
+            path for path in self.digests.keys() & later.digests.keys() if self.digests[path] != later.digests[path]
+        }
 
 
 def reached_state(kernel: Any) -> Reached:
@@ -206,25 +210,27 @@ def _hashed(data: bytes) -> str:
 
 
 def static_memory(named: set[str]) -> dict[str, bytes]:
-    """The writable memory of shared libraries that no package installed, and of those named, by file.
+    """The writable memory of shared libraries that no package installed, and of those named.
 
-    Linux only; empty elsewhere.
+    Returns
+    -------
+    dict
+        Contents by ``variable of library``, or by library where its table of symbols was stripped. Linux only;
+        empty elsewhere.
     """
     maps = Path("/proc/self/maps")
     if not maps.exists():
         return {}
     wanted = {str(Path(name).resolve()) for name in named}
-    found: dict[str, bytes] = {}
-    last, last_end = "", -1
+    bases: dict[str, int] = {}
     for line in maps.read_text(encoding="utf-8").splitlines():
         parts = line.split(maxsplit=5)
-        start, end = (int(x, 16) for x in parts[0].split("-"))
         file = parts[5] if len(parts) > 5 else ""
-        if ".so" in file:
-            last = file
-        elif file or start != last_end:  # the zeroed part of a library lies right behind its file
-            last = ""
-        last_end = end
-        if last and parts[1].startswith("rw") and (last in wanted or not _is_installed(Path(last))):
-            found[last] = found.get(last, b"") + ctypes.string_at(start, end - start)
+        if ".so" in file and int(parts[2], 16) == 0:
+            bases.setdefault(file, int(parts[0].split("-")[0], 16))
+    found: dict[str, bytes] = {}
+    for file, base in bases.items():
+        if file in wanted or not _is_installed(Path(file)):
+            for title, start, size in static_places(file):
+                found[title] = ctypes.string_at(base + start, size)
     return found

@@ -143,7 +143,12 @@ class Walk:
 
     def _calls(self, part: Part, cycle: int, iteration: int, repeat: str) -> Iterator[tuple[int, Outcome]]:
         """Call a part at every tile, the sampled ones first kept."""
-        if part.name in self.skip or any(read.field not in self.state for read in part.reads):
+        if any(read.field not in self.state for read in part.reads):
+            return
+        if part.name in self.skip:  # keep what it would be given
+            for tile in self._wanted(part, cycle, iteration):
+                call = self._call(part, tile, cycle, iteration)
+                self.samples.setdefault(part.name, []).append(self._sample(part, tile, call, repeat))
             return
         self.entering(part.name)
         wanted = self._wanted(part, cycle, iteration)
@@ -220,6 +225,12 @@ class Walk:
         variety = [sum(_variety(self.state[read.field][tile]) for read in part.reads) for tile in range(count)]
         liked = [int(np.argmax(variety)), count // 2 + count % 2, int(np.argmin(variety)), 0, count - 1]
         return set(list(dict.fromkeys(tile % count for tile in liked))[: MOST // 2 - have])
+
+
+def private_fields(program: Program) -> frozenset[str]:
+    """Scratch fields that no step reads beyond its tile: in what order they hold their numbers is the steps' affair."""
+    shared = {read.field for _, read in program.problem.splitting.halo_reads()}
+    return frozenset(name for name, kind in program.fields.items() if kind.scratch and name not in shared)
 
 
 class _Copies(dict[str, Array]):
