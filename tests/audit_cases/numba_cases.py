@@ -22,7 +22,7 @@ class Jit:
     second: str = ""
 
     def __call__(self, arrays: Arrays, call: Call) -> dict[str, Array]:
-        function = globals()[self.function_name]
+        function = FUNCTIONS[self.function_name]
         second = arrays[self.second] if self.second else arrays["u"]
         return {f"of_{self.name}": function(arrays["u"], second, call.tile, call.origin[0], *call.shape[:2])}
 
@@ -163,6 +163,29 @@ def of_place(u: Array, w: Array, tile: int, x: int, nx: int, ny: int) -> Array:
         for j in range(ny):
             made[0, i, j, 0] = u[0, i, j, 0] * (1.0 + 0.1 * (x + i))
     return made
+
+
+FUNCTIONS = {
+    function.__name__: function
+    for function in (
+        two_back,
+        one_beyond,
+        beyond_unused,
+        diagonal,
+        narrow,
+        local,
+        both,
+        overruns,
+        half,
+        by_tile,
+        by_local_place,
+        other_axis,
+        random_numbers,
+        doubles_in_place,
+        three,
+        of_place,
+    )
+}
 
 
 def _case(name: str, function: str, reads: tuple[Read, ...], *kinds: str, second: str = "") -> Case:

@@ -7,6 +7,7 @@ Every call gets fresh copies of its inputs in poisoned surroundings. What a call
 from __future__ import annotations
 
 import itertools
+import time
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field, replace
 
@@ -21,6 +22,7 @@ from breakstep.mesh.mesh import Triple
 from breakstep.steps.step import Array, Call, Read, Step
 
 FINITE = 1.0  # what surrounds inputs unless a probe says otherwise
+SECONDS = 20.0  # for one question to one kernel; only costly kernels come near it
 VARIATIONS = 18  # states made up beside the samples
 Given = dict[str, Array]
 
@@ -63,6 +65,7 @@ class Bench:
 
     def __post_init__(self) -> None:
         self.watch = Watch()
+        self._had_denormals = has_denormals()
         self.reads: tuple[Read, ...] = self.part.reads
         self._bases: list[Base] = []
 
@@ -148,6 +151,12 @@ class Bench:
         fill_heap(0)
         self.inside = False
         self.calls += 1
+        if self._had_denormals and not has_denormals():
+            self.incident(
+                "side effect", "denormals",
+                "it makes the processor take the smallest numbers for 0 (flags of the unit that computes, as the"
+                " compiler's -ffast-math sets them when a library is loaded), for whatever runs in the thread later",
+            )  # fmt: skip
         self._note(sample, outcome, guarded)
         if outcome.arrays is None and "read" in outcome.error and "only" in outcome.error and not self.writable:
             where = outcome.place or sample.where()
@@ -204,6 +213,18 @@ class Bench:
                 self._bases.append(base)
             yield self._bases[number]
 
+    def in_time(self) -> Iterator[Base]:
+        """The same states, as many of them as a few seconds allow."""
+        began = time.monotonic()
+        for base in self.bases():
+            yield base
+            if time.monotonic() - began > SECONDS:
+                return
+
+    def again(self, base: Base, *, poison: float = FINITE, fill: int = 0) -> Outcome:
+        """Call on a state once more."""
+        return self.run(base.sample, base.given, call=base.call, values=base.values, poison=poison, fill=fill)
+
     def _made_up(self, number: int) -> Base:
         count = len(self.samples)
         sample = self.samples[number % count]
@@ -221,6 +242,12 @@ class Bench:
         origin = call.origin if turn % 2 else _moved(call, rng)
         call = replace(call, cycle=call.cycle + turn, origin=origin)
         return Base(sample, given, call, values)
+
+
+def has_denormals() -> bool:
+    """Whether the processor computes with numbers below 2.2e-308 rather than taking them for 0."""
+    smallest = np.array([2.0**-1030, 1.0])
+    return float(smallest[0]) * float(smallest[1]) != 0.0
 
 
 def _varied(array: Array, kind: int, turn: int, rng: np.random.Generator) -> Array:

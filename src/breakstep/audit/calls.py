@@ -72,6 +72,10 @@ class Outcome:
             same_bits(array, other.arrays[name]) for name, array in self.arrays.items()
         )
 
+    def finite(self) -> bool:
+        """Whether there is a result and all of it is finite."""
+        return self.arrays is not None and all(np.isfinite(array).all() for array in self.arrays.values())
+
     def copied(self) -> Outcome:
         """The same with arrays of its own."""
         if self.arrays is None:

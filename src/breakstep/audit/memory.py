@@ -24,12 +24,18 @@ CANARY = 0xA7  # unless a probe says otherwise
 _M_PERTURB = -6  # glibc: fill what malloc gives and free takes
 PROT_NONE, PROT_READ, PROT_WRITE = 0, 1, 2
 PAGE = mmap.PAGESIZE
+GUARD = 64 * PAGE  # forbidden memory on each side of what a kernel allocates while pages are watched
+_PRIVATE_ANONYMOUS = mmap.MAP_PRIVATE | mmap.MAP_ANONYMOUS
 
 libc = ctypes.CDLL(None, use_errno=True)
 libc.malloc.restype = ctypes.c_void_p
 libc.malloc.argtypes = [ctypes.c_size_t]
 libc.free.argtypes = [ctypes.c_void_p]
 libc.free.restype = None
+libc.mmap.restype = ctypes.c_void_p
+libc.mmap.argtypes = [ctypes.c_void_p, ctypes.c_size_t, ctypes.c_int, ctypes.c_int, ctypes.c_int, ctypes.c_long]
+libc.munmap.argtypes = [ctypes.c_void_p, ctypes.c_size_t]
+libc.mprotect.argtypes = [ctypes.c_void_p, ctypes.c_size_t, ctypes.c_int]
 libc.memcmp.argtypes = [ctypes.c_void_p, ctypes.c_char_p, ctypes.c_size_t]
 
 
@@ -80,7 +86,7 @@ class Paged:
             (base + (pages + 1) * PAGE, PAGE, PROT_NONE),
             (base + PAGE, pages * PAGE, PROT_READ | (PROT_WRITE if writable else 0)),
         ):
-            if libc.mprotect(ctypes.c_void_p(start), ctypes.c_size_t(length), allowed) != 0:
+            if libc.mprotect(start, length, allowed) != 0:
                 raise OSError(ctypes.get_errno(), "mprotect refused")
 
 
@@ -113,6 +119,8 @@ class Watch:
     ----------
     fill, canary : int
         Bytes that new memory and its surroundings hold.
+    paged : bool
+        Whether new arrays end at memory that nobody may touch, instead of canaries.
     overrun : int
         Bytes beyond an array that somebody wrote, the most seen since it was last set to 0.
     """
@@ -120,8 +128,10 @@ class Watch:
     def __init__(self) -> None:
         self.fill = 0x00
         self.canary = CANARY
+        self.paged = False
         self.overrun = 0
         self._live: dict[int, tuple[int, int]] = {}  # address -> (size, canary)
+        self._mapped: dict[int, tuple[int, int]] = {}  # address -> (start and length of its pages)
         functions = _MALLOC(self._malloc), _CALLOC(self._calloc), _REALLOC(self._realloc), _FREE(self._free)
         self._handler = _Handler(b"watched", 1, _Allocator(None, *functions))
         self._functions = functions
@@ -159,6 +169,8 @@ class Watch:
         return self._allocate(size, self.fill)
 
     def _allocate(self, size: int, fill: int) -> int:
+        if self.paged:
+            return self._map(size, fill)
         start = libc.malloc(size + 2 * SURROUND)
         if not start:
             return 0
@@ -168,17 +180,33 @@ class Watch:
         self._live[start + SURROUND] = size, self.canary
         return int(start) + SURROUND
 
+    def _map(self, size: int, fill: int) -> int:
+        """New memory whose last byte, but for alignment, lies before a forbidden page."""
+        inside = max(1, -(-size // PAGE)) * PAGE
+        start = libc.mmap(None, inside + 2 * GUARD, PROT_NONE, _PRIVATE_ANONYMOUS, -1, 0)
+        if start in (None, ctypes.c_void_p(-1).value):
+            return 0
+        libc.mprotect(start + GUARD, inside, PROT_READ | PROT_WRITE)
+        address = int(start) + GUARD + (inside - size) // 16 * 16
+        ctypes.memset(address, fill, size)
+        self._mapped[address] = int(start), inside + 2 * GUARD
+        return address
+
     def _calloc(self, _ctx: Any, count: int, size: int) -> int:
         return self._allocate(count * size, 0)
 
     def _realloc(self, _ctx: Any, address: int | None, size: int) -> int:
         new = self._allocate(size, self.fill)
         if address and new:
-            ctypes.memmove(new, address, min(size, self._live.get(address, (0, 0))[0]))
+            known = self._live[address][0] if address in self._live else self._mapped[address][1] - 2 * GUARD
+            ctypes.memmove(new, address, min(size, known))
             self._free(None, address, 0)
         return new
 
     def _free(self, _ctx: Any, address: int | None, _size: int) -> None:
+        if address in self._mapped:
+            libc.munmap(*self._mapped.pop(address))
+            return
         known = self._live.pop(address or 0, None)
         if address is None or known is None:
             return

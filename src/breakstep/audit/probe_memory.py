@@ -17,18 +17,18 @@ FILLS = (0xFF, 0x41, 0xC3, 0xBE)  # as doubles NaN, 2e6, -3e18, -2e-6; the C lib
 
 def probe_surroundings(bench: Bench) -> Iterator[Finding]:
     """Different numbers around its arrays must not show in its results."""
-    for sample in bench.samples:
-        plain = bench.run(sample)
+    for base in bench.in_time():
         for poison, canary in zip(POISONS, (0xFF, 0x41, 0xC3), strict=True):
             bench.watch.canary = canary
-            outcome = bench.run(sample, poison=poison)
+            outcome = bench.again(base, poison=poison)
             bench.watch.canary = CANARY
-            if not outcome.same(plain) and bench.run(sample).same(plain):
+            plain = base.outcome
+            if plain is not None and not outcome.same(plain) and bench.again(base).same(plain):
                 yield Finding(
                     bench.part.name, "outside memory",
                     "It reads outside of its arrays: with"
-                    f" {FINITE:g} around them or with {poison:g} ({sample.where()}),"
-                    f" {first_difference(plain, outcome, sample.call.origin)}.",
+                    f" {FINITE:g} around them or with {poison:g} ({base.sample.where()}),"
+                    f" {first_difference(plain, outcome, base.call.origin)}.",
                 )  # fmt: skip
                 return
 
@@ -63,12 +63,14 @@ def probe_protected(bench: Bench) -> Iterator[Finding]:
 
 
 def _paged(bench: Bench, *, writable: bool) -> None:
-    for sample in bench.samples[:2]:
+    """Call on every state with inputs, and whatever the kernel allocates, beside forbidden pages."""
+    for base in bench.in_time():
         for at_end in (True, False):
-            kept = {n: Paged(a, at_end=at_end, writable=writable) for n, a in bench.given(sample).items()}
+            kept = {n: Paged(a, at_end=at_end, writable=writable) for n, a in base.given.items()}
             given = {name: one.array for name, one in kept.items()}
-            if not bench.writable:
-                for array in given.values():
-                    array.flags.writeable = False
-            with np.errstate(all="ignore"):
-                call_part(bench.part, given, sample.call, sample.fields, sample.call.values)
+            for array in given.values():
+                array.flags.writeable = bench.writable
+            bench.watch.paged, bench.watch.fill = True, 0
+            with bench.watch.on(), np.errstate(all="ignore"):
+                call_part(bench.part, given, base.call, base.sample.fields, base.values)
+            bench.watch.paged = False

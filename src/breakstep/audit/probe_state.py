@@ -15,7 +15,7 @@ import numpy as np
 from breakstep.audit.bench import Base, Bench
 from breakstep.audit.calls import Outcome, call_part, first_difference
 from breakstep.audit.findings import NOTE, Finding
-from breakstep.audit.reach import GENERATORS, Reached, reached_state, static_memory
+from breakstep.audit.reach import SHARED, Reached, reached_state, static_memory
 from breakstep.audit.sample import digest
 
 THREAD_SECONDS = 0.15  # on concurrent calls; a race that shows less often than that is found by its memory
@@ -35,7 +35,7 @@ def probe_repeats(bench: Bench) -> Iterator[Finding]:
     third = _plain(bench, first)
     last = _everything(bench)
     changed = before.differing(after) | after.differing(last)
-    kept = sorted(changed - GENERATORS)
+    kept = sorted(changed - SHARED.keys())
     where = f"; what changed: {', '.join(kept[:4])}" if kept else ""
     if not once.same(again):
         kind = "hidden state" if kept else "not repeatable"
@@ -47,8 +47,8 @@ def probe_repeats(bench: Bench) -> Iterator[Finding]:
         )  # fmt: skip
     elif kept:
         yield from _quiet_state(name, kept, after.arrays)
-    for generator in sorted(changed & GENERATORS):
-        yield Finding(name, "side effect", f"It draws from, or seeds, {generator}, which all threads share.")
+    for shared in sorted(changed & SHARED.keys()):
+        yield Finding(name, "side effect", f"A call changes {shared}, which the whole process shares.")
 
 
 def _quiet_state(name: str, kept: list[str], arrays: set[str]) -> Iterator[Finding]:
@@ -208,5 +208,7 @@ def probe_threads(bench: Bench) -> Iterator[Finding]:
 def _call(bench: Bench, base: Base) -> Outcome:
     """A call without the bench's instruments, which are not for two threads."""
     given = {name: array.copy() for name, array in base.given.items()}
+    for array in given.values():
+        array.flags.writeable = bench.writable  # as before: what Numba compiled is for these
     with np.errstate(all="ignore"):
         return call_part(bench.part, given, base.call, base.sample.fields, base.values).copied()

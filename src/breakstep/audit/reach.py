@@ -10,12 +10,14 @@ from __future__ import annotations
 import ctypes
 import functools
 import hashlib
+import os
 import random
 import site
 import sys
 import sysconfig
+import threading
 import types
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -26,7 +28,14 @@ from breakstep.audit.elf import static_places
 
 DEPTH = 8
 LARGEST = 1 << 26  # bytes of an array beyond which it is not looked at
-GENERATORS = {"the generator of module random", "NumPy's global generator"}
+SHARED: dict[str, Callable[[], str]] = {
+    "the generator of module random": lambda: repr(random.getstate()),
+    "NumPy's global generator": lambda: repr(np.random.get_state()),
+    "the working directory": os.getcwd,
+    "the environment": lambda: repr(sorted(os.environ.items())),
+    "the number of threads": lambda: repr(threading.active_count()),
+}
+"""What belongs to the whole process."""
 LEAVES = (bool, int, float, complex, str, bytes, type(None))
 
 
@@ -64,9 +73,7 @@ def reached_state(kernel: Any) -> Reached:
     seen: set[int] = set()
     for path, value in _walk(_title(kernel), kernel, seen, 0, found):
         found.digests[path] = value
-    python, numpy = sorted(GENERATORS, reverse=True)
-    found.digests[python] = _hashed(repr(random.getstate()).encode())
-    found.digests[numpy] = _hashed(repr(np.random.get_state()).encode())
+    found.digests |= {path: _hashed(of().encode()) for path, of in SHARED.items()}
     return found
 
 

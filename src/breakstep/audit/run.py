@@ -225,6 +225,8 @@ def spawn(what: str, folder: Path, skip: set[str], argument: str, timeout: float
     environment["GLIBC_TUNABLES"] = "glibc.malloc.tcache_count=0"
     if what == "python":
         environment["NUMBA_DISABLE_JIT"] = "1"
+        environment["NUMBA_BOUNDSCHECK"] = "1"  # for what was compiled before it was carried here
+        environment["NUMBA_CACHE_DIR"] = str(folder / "numba")
     command = [sys.executable, "-m", "breakstep.audit.child", what, str(folder), str(result), json.dumps(sorted(skip))]
     with log.open("wb") as output:
         process = subprocess.Popen([*command, argument], stdout=output, stderr=output, env=environment)

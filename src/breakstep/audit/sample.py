@@ -14,7 +14,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from breakstep.audit.calls import Outcome, Part, call_part, name_writes
-from breakstep.audit.reach import GENERATORS, Reached, reached_state
+from breakstep.audit.reach import SHARED, Reached, reached_state
 from breakstep.engine.program import Program
 from breakstep.mesh.halo import assemble, cut, plan_halo
 from breakstep.mesh.mesh import Triple
@@ -155,7 +155,7 @@ class Walk:
         before = reached_state(part.kernel)
         if part.name in self._seen:
             changed = self._seen[part.name].differing(before)
-            self.moved.setdefault(part.name, set()).update(changed - GENERATORS)
+            self.moved.setdefault(part.name, set()).update(changed - SHARED.keys())
         for tile in range(len(self.tiles)):
             call = self._call(part, tile, cycle, iteration)
             # Copies: what a kernel does to its inputs must not reach the others' samples.
