@@ -9,7 +9,6 @@ import heapq
 from dataclasses import dataclass, field
 
 from breakstep.forecast.graph import STEP, ReplayGraph
-from breakstep.forecast.model import MachineModel
 
 ARRIVE, FINISH = 0, 1
 

@@ -80,3 +80,7 @@ class ChoiceError(BreakstepError):
 
 class ForecastError(BreakstepError):
     """A graph, machine or question cannot be played; ``details["faults"]`` lists what is wrong."""
+
+
+class MachineError(BreakstepError):
+    """A described machine cannot be used; ``details["faults"]`` lists every fault found, one sentence each."""

@@ -55,7 +55,9 @@ def _earlier(graph: ReplayGraph, cycles: int, iterations: int) -> Int64s:
     """For each reduction node the node of the same name so much earlier, -1 for none; shape (tasks,)."""
     nodes = np.flatnonzero(graph.kind == REDUCTION)
     keys = zip(graph.name[nodes], graph.cycle[nodes], graph.iteration[nodes], strict=True)
-    number = {(int(name), int(cycle), int(turn)): int(node) for node, (name, cycle, turn) in zip(nodes, keys, strict=True)}
+    number = {
+        (int(name), int(cycle), int(turn)): int(node) for node, (name, cycle, turn) in zip(nodes, keys, strict=True)
+    }
     found = np.full(graph.tasks, -1, dtype=np.int64)
     for (name, cycle, turn), node in number.items():
         found[node] = number.get((name, cycle - cycles, turn - iterations), -1)

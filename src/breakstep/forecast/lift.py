@@ -115,6 +115,21 @@ class Lifted:
         """Cycles that could be in flight at once."""
         return int(self.profile.manifest["notes"].get("window", 4))
 
+    @property
+    def workers(self) -> int:
+        """Workers of the run."""
+        return int(self.profile.manifest["workers"])
+
+    @property
+    def threads(self) -> int:
+        """Threads of each worker."""
+        return max(int(self.profile.manifest["threads"]) // max(self.workers, 1), 1)
+
+    @property
+    def cores(self) -> int:
+        """Cores of the machine it ran on, as far as the driver saw it."""
+        return int(self.profile.manifest["machine"].get("cpus", 1) or 1)
+
     def same_program(self, other: Lifted) -> bool:
         """Whether another run executed the same phases on the same tiles."""
         return (
@@ -163,9 +178,22 @@ def lift(profile: Profile) -> Lifted:
     )
     used = np.unique(code[first])
     return Lifted(
-        profile, tuple(stages[c] for c in used), np.searchsorted(used, code[first]), cycle, iteration, grid("worker"), grid("thread"), start, end, skipped,
-        grid("output_bytes"), producer, consumer, reductions, _costs(profile, place, end - start),
-    )  # fmt: skip
+        profile=profile,
+        stages=tuple(stages[c] for c in used),
+        stage=np.searchsorted(used, code[first]).astype(np.int64),
+        cycle=cycle,
+        iteration=iteration,
+        worker=grid("worker"),
+        thread=grid("thread"),
+        start=start,
+        end=end,
+        skipped=skipped,
+        output=grid("output_bytes"),
+        producer=producer,
+        consumer=consumer,
+        reductions=reductions,
+        costs=_costs(profile, place, end - start),
+    )
 
 
 def _refuse_unfinished(profile: Profile) -> None:

@@ -86,10 +86,19 @@ class CostTables:
 
 @dataclass(frozen=True)
 class Tiles:
-    """Where the tiles lie. ``origin`` and ``shape``: ndarray of int64, shape (tiles, 3) [zones]."""
+    """Where the tiles lie.
+
+    Attributes
+    ----------
+    origin, shape : ndarray of int64, shape (tiles, 3)
+        [zones]
+    periodic : tuple of bool
+        Along each axis, whether the last tile's neighbour is the first.
+    """
 
     origin: Integers
     shape: Integers
+    periodic: tuple[bool, bool, bool] = (True, True, True)
 
     @property
     def zones(self) -> Integers:
@@ -189,15 +198,25 @@ def program_of(lifted: Lifted, costs: CostTables, rim_bytes: Mapping[str, float]
         Phase(names[p], int(lifted.cycle[p]), int(lifted.iteration[p]), bool(lifted.skipped[p]), reads[p], makes[p], p)
         for p in range(lifted.phases)
     )
-    mesh = lifted.profile.manifest["mesh"]["tiles"]
-    tiles = Tiles(
-        np.array([t["origin"] for t in mesh], dtype=np.int64), np.array([t["shape"] for t in mesh], dtype=np.int64)
-    )
+    tiles = _tiles(lifted)
     reductions = lifted.reductions
     return Program(
         phases, patterns, costs, tiles, _stage_uses(lifted, names), dict(reductions.lags),
         _verdict_stages(lifted, names), lifted.window, rim_bytes or {},
     )  # fmt: skip
+
+
+def _tiles(lifted: Lifted) -> Tiles:
+    """Tiles of the mesh; edges are periodic unless the scenario says otherwise."""
+    manifest = lifted.profile.manifest
+    mesh = manifest["mesh"]["tiles"]
+    edges = manifest["scenario"].get("resolved", {}).get("mesh", {}).get("edges", {})
+    x, y, z = ("periodic" in edges.get(axis, ["periodic"]) for axis in "xyz")
+    return Tiles(
+        np.array([tile["origin"] for tile in mesh], dtype=np.int64),
+        np.array([tile["shape"] for tile in mesh], dtype=np.int64),
+        (x, y, z),
+    )
 
 
 def _reads(lifted: Lifted) -> tuple[tuple[Pattern, ...], list[tuple[tuple[int, int], ...]]]:

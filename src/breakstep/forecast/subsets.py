@@ -22,9 +22,7 @@ from breakstep.forecast.model import MachineModel
 MOST_KINDS = 8  # 256 subsets
 
 
-def subset_makespans(
-    graph: ReplayGraph, machine: MachineModel, schedule: Schedule, kinds: Sequence[int]
-) -> Int64s:
+def subset_makespans(graph: ReplayGraph, machine: MachineModel, schedule: Schedule, kinds: Sequence[int]) -> Int64s:
     """Makespan without each subset of edge kinds [ns], shape (2 ** len(kinds),); every thread keeps its order.
 
     Monotone: removing more never makes it longer.

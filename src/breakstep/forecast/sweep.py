@@ -13,7 +13,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from breakstep.forecast.graph import Int32s, Int64s
+from breakstep.forecast.graph import Int64s
 from breakstep.forecast.laws import Floats
 from breakstep.forecast.model import MachineModel
 from breakstep.forecast.tiles import TiledSplitting, packed_costs

@@ -82,9 +82,7 @@ def reductions_of(
     return Reductions(names, known, repeated, name, made_by, pairs[0], pairs[1])
 
 
-def _making_phases(
-    kind: Integers, place: Integers, links: tuple[Integers, Integers, Integers], tiles: int
-) -> Integers:
+def _making_phases(kind: Integers, place: Integers, links: tuple[Integers, Integers, Integers], tiles: int) -> Integers:
     """For each recorded task, the newest phase that it has a contribution of; -1 for none.
 
     A root also reads the result before its own, which was made by an earlier phase.

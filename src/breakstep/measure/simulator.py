@@ -23,7 +23,7 @@ from breakstep.errors import ForecastError
 from breakstep.forecast.dynamic import replay_owner
 from breakstep.forecast.fixed import Schedule, Variant, fixed_makespans
 from breakstep.forecast.graph import Int32s, ReplayGraph
-from breakstep.forecast.implicit import replay_tiles, stored_graph
+from breakstep.forecast.implicit import stored_graph
 from breakstep.forecast.laws import Cost, Law
 from breakstep.forecast.model import MachineModel
 from breakstep.forecast.subsets import subset_makespans, subset_replays
@@ -198,7 +198,9 @@ def _sweep(sizes: Sizes, lockstep: bool) -> Speed:
     note = f"{step:.3f} mean tasks a step"
     if lockstep:
         note += f" (H of {side * side:,} = {harmonic(side * side):.3f})"
-    return Speed(f"{splitting.tasks:,} tasks, {side * side:,} workers, {mode}", splitting.tasks, seconds, 20.0, found=note)
+    return Speed(
+        f"{splitting.tasks:,} tasks, {side * side:,} workers, {mode}", splitting.tasks, seconds, 20.0, found=note
+    )
 
 
 def harmonic(count: int) -> float:

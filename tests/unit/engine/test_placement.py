@@ -9,12 +9,12 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from breakstep.engine.placement import PLACEMENTS, owners, runs
+from breakstep.engine.placement import PLACEMENTS, owners
 from breakstep.engine.program import Program
 from breakstep.errors import DeclarationError
 from breakstep.graph.tasks import ANYWHERE
 from breakstep.mesh.mesh import Edge, Mesh
-from breakstep.profile.curve import curve_order, hilbert_index
+from breakstep.partition import curve_order, hilbert_index, runs
 from tests.toys import Toy
 
 COSTS = st.lists(st.floats(0.01, 100.0), min_size=1, max_size=40)

@@ -18,7 +18,7 @@ from distributed import Client, Future, KilledWorker, wait
 from breakstep.engine import checkpoint
 from breakstep.engine.clocks import ClockReading, drift, read_clocks
 from breakstep.engine.overdue import Overseer
-from breakstep.engine.placement import busiest, owners
+from breakstep.engine.placement import owners
 from breakstep.engine.program import Program
 from breakstep.engine.resident import remote
 from breakstep.engine.resident.gather import gather_record
@@ -28,6 +28,7 @@ from breakstep.engine.workers import present_clients, present_workers, require_p
 from breakstep.errors import BreakstepError, ClusterError, DeclarationError
 from breakstep.graph.numbering import Numbering
 from breakstep.graph.tasks import ANYWHERE
+from breakstep.partition import busiest
 from breakstep.profile.record import RunRecord
 
 WORTH_MOVING = 1.05  # tiles change owner when the busiest worker would have 5 % less to do

@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from breakstep.profile.curve import curve_order
+from breakstep.partition import curve_order
 from breakstep.profile.frames import Integers
 from breakstep.profile.manifest import Manifest
 from breakstep.profile.words import tile_names

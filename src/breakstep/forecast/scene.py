@@ -1,0 +1,176 @@
+"""A scene: one program on one setting, played under any choice of barriers.
+
+How crowded a node is depends on how busy its threads are, which only a replay tells; so a replay is repeated
+with the crowding that the one before found. Three times are enough: crowding changes durations by some
+percent and is changed by them by some percent of that.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from functools import cached_property
+
+import numpy as np
+
+from breakstep.forecast.basis import Basis
+from breakstep.forecast.crowd import Load, kernel_stretch
+from breakstep.forecast.dynamic import replay_owner
+from breakstep.forecast.fixed import Schedule, replay_fixed
+from breakstep.forecast.graph import BARRIER, REDUCTION, STEP, Int32s, Int64s, ReplayGraph
+from breakstep.forecast.machines import Machine
+from breakstep.forecast.program import Floats, Program
+from breakstep.forecast.question import Question
+from breakstep.forecast.results import Replay
+from breakstep.forecast.setting import Setting, changed_program, owners_of, setting_of
+from breakstep.forecast.unfold import Unfolded, unfold
+from breakstep.forecast.urgency import ranks
+
+ROUNDS = 3
+
+
+@dataclass
+class Scene:
+    """One program on one setting.
+
+    Attributes
+    ----------
+    program : Program
+    setting : Setting
+    question : Question
+    tile_owner : ndarray of int32, shape (tiles,)
+    """
+
+    program: Program
+    setting: Setting
+    question: Question
+    tile_owner: Int32s
+    _stretch: dict[int, Floats] = field(default_factory=dict)
+
+    @classmethod
+    def of(cls, basis: Basis, machine: Machine, question: Question, workers: int) -> Scene:
+        """The scene that a question asks for.
+
+        Raises
+        ------
+        ForecastError
+            The question does not fit the program.
+        """
+        program = changed_program(basis.program, question)
+        setting = setting_of(basis, machine, question, workers)
+        return cls(program, setting, question, owners_of(basis, program, question, workers))
+
+    @cached_property
+    def unfolded(self) -> Unfolded:
+        """The program's graph; its durations are filled in for each replay."""
+        return unfold(self.program, np.zeros((len(self.program.phases), self.program.tile_count)))
+
+    @cached_property
+    def owner(self) -> Int32s:
+        """Worker of each node."""
+        return self.unfolded.graph.owners(self.tile_owner)
+
+    @cached_property
+    def rank(self) -> Int32s | None:
+        """Order of urgency of each node, by costs on an idle machine."""
+        if self.question.priority == "program":
+            return None
+        return ranks(self.unfolded, self.tile_owner, self._by_phase(self._calm))
+
+    def graph(self, kinds: int, noise: Floats | float = 1.0) -> ReplayGraph:
+        """The graph with the durations that it has under a choice of barriers.
+
+        Parameters
+        ----------
+        noise : float or ndarray of float64, shape (phases, tiles)
+            Factor on durations.
+        """
+        if kinds not in self._stretch:
+            self._stretch[kinds] = self._crowded(kinds)
+        return self._with(self._stretch[kinds], noise)
+
+    def play(self, kinds: int, noise: Floats | float = 1.0) -> Replay:
+        """Replay with the order that workers find while playing."""
+        return replay_owner(self.graph(kinds, noise), self.setting.model, self.owner, self.rank, kinds)
+
+    def play_fixed(self, kinds: int, schedule: Schedule) -> Replay:
+        """Replay with the order that a schedule keeps."""
+        return replay_fixed(self.graph(kinds), self.setting.model, schedule, kinds)
+
+    def stretch(self, kinds: int) -> Floats:
+        """How many times as long kernels take on each worker as on an idle machine."""
+        self.graph(kinds)
+        return self._stretch[kinds]
+
+    @property
+    def _calm(self) -> Floats:
+        return np.ones(self.setting.model.workers)
+
+    def _crowded(self, kinds: int) -> Floats:
+        setting, model = self.setting, self.setting.model
+        stretch, work = self._calm, float(self._by_phase(self._calm).sum())
+        for _ in range(ROUNDS):
+            replay = replay_owner(self._with(stretch, 1.0), model, self.owner, self.rank, kinds)
+            busy = replay.busy_ns / max(model.threads * replay.makespan_ns, 1)
+            load = Load(busy, model.threads, setting.cores, setting.nodes, work, self._messages(kinds))
+            stretch = kernel_stretch(load, setting.dispatch)
+        return stretch
+
+    def _with(self, stretch: Floats, noise: Floats | float) -> ReplayGraph:
+        durations = self.unfolded.durations(self._by_phase(stretch) * noise)
+        graph = self.unfolded.graph
+        durations[graph.kind == BARRIER] = self.setting.local_turn_ns
+        return graph.with_durations(durations)
+
+    def _by_phase(self, stretch: Floats) -> Floats:
+        setting, costs = self.setting, self.program.costs
+        crowded = stretch[self.tile_owner]
+        steps = {step: crowded * self.question.factors.get(step, 1.0) for step in costs.kernel}
+        rows = [phase.cost for phase in self.program.phases]
+        kernels = sum((costs.kernel[step] * factor for step, factor in steps.items()), np.zeros_like(costs.rest))
+        python = (costs.surface + setting.rest * costs.rest) * setting.python
+        return ((kernels + python) / setting.speed)[rows]
+
+    def _messages(self, kinds: int) -> float:
+        """Transfers that take processor time from tasks."""
+        if kinds == self.unfolded.lockstep:
+            return self.data_messages
+        return self.data_messages + self.control_messages
+
+    @cached_property
+    def data_messages(self) -> float:
+        """Transfers of tile data: what a task makes goes once to each other worker."""
+        pairs = crossing(self.unfolded.graph, self.owner)
+        return float(len(np.unique(pairs)))
+
+    @cached_property
+    def control_messages(self) -> float:
+        """Transfers of partial and whole results, without barriers."""
+        workers = self.setting.model.workers
+        made = int(np.sum(self.unfolded.graph.kind == REDUCTION))
+        return float(made * (tree_messages(self.tile_owner) + workers - 1))
+
+
+def crossing(graph: ReplayGraph, owner: Int32s) -> Int64s:
+    """For each data edge between workers, one number for its producer and receiver."""
+    consumer = graph.consumer
+    steps = (graph.kind[graph.producer] == STEP) & (graph.kind[consumer] == STEP)
+    producer, receiver = graph.producer[steps].astype(np.int64), owner[consumer[steps]].astype(np.int64)
+    crosses = owner[producer] != receiver
+    return producer[crosses] * (int(owner.max(initial=0)) + 1) + receiver[crosses]
+
+
+def tree_messages(tile_owner: Int32s, arity: int = 8) -> int:
+    """Parts of one result that cross workers on their way up the tree, whose nodes lie with their first child."""
+    level, found = np.asarray(tile_owner), 0
+    while len(level) > 1:
+        home = np.repeat(level[::arity], arity)[: len(level)]
+        found += int(np.sum(level != home))
+        level = level[::arity]
+    return found
+
+
+def by_stage(program: Program, pools: Mapping[str, Floats], draw: np.random.Generator) -> Floats:
+    """A factor for each step task drawn from its stage's pool, shape (phases, tiles)."""
+    tiles = program.tile_count
+    return np.stack([draw.choice(pools[phase.stage], size=tiles) for phase in program.phases])
