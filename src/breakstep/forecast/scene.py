@@ -14,11 +14,13 @@ from functools import cached_property
 import numpy as np
 
 from breakstep.forecast.basis import Basis
+from breakstep.forecast.bounds import Bounds, lower_bounds
 from breakstep.forecast.crowd import Load, kernel_stretch
 from breakstep.forecast.dynamic import replay_owner
 from breakstep.forecast.fixed import Schedule, replay_fixed
 from breakstep.forecast.graph import BARRIER, REDUCTION, STEP, Int32s, Int64s, ReplayGraph
 from breakstep.forecast.machines import Machine
+from breakstep.forecast.memory import high_water
 from breakstep.forecast.program import Floats, Program
 from breakstep.forecast.question import Question
 from breakstep.forecast.results import Replay
@@ -93,9 +95,28 @@ class Scene:
         """Replay with the order that workers find while playing."""
         return replay_owner(self.graph(kinds, noise), self.setting.model, self.owner, self.rank, kinds)
 
-    def play_fixed(self, kinds: int, schedule: Schedule) -> Replay:
-        """Replay with the order that a schedule keeps."""
-        return replay_fixed(self.graph(kinds), self.setting.model, schedule, kinds)
+    def play_kept(self, before: int, kinds: int) -> Replay:
+        """Replay with the order and the durations of another choice of barriers: taking some away then cannot
+        lengthen it."""
+        graph = self.graph(before)
+        schedule = Schedule.of(replay_owner(graph, self.setting.model, self.owner, self.rank, before))
+        return replay_fixed(graph, self.setting.model, schedule, kinds)
+
+    def bounds(self, kinds: int) -> Bounds:
+        """No schedule that keeps tiles with their owners is shorter."""
+        return lower_bounds(self.graph(kinds), self.setting.model, self.owner, kinds)
+
+    def memory(self, replay: Replay) -> int:
+        """Most bytes that one worker holds at once [bytes]."""
+        return int(high_water(self.unfolded.graph, self.setting.model, replay).max(initial=0))
+
+    @property
+    def work_ns(self) -> float:
+        """Time in kernels on an idle machine, all tasks together [ns]."""
+        costs, factors = self.program.costs, self.question.factors
+        rows = [phase.cost for phase in self.program.phases]
+        kernels = [values[rows].sum() * factors.get(step, 1.0) for step, values in costs.kernel.items()]
+        return float(sum(kernels)) / self.setting.speed
 
     def stretch(self, kinds: int) -> Floats:
         """How many times as long kernels take on each worker as on an idle machine."""
