@@ -45,7 +45,7 @@ def kinds_of(scene: Scene, mode: str) -> int:
 
 def span_of(scene: Scene, basis: Basis, kinds: int, draws: int = DRAWS) -> Span:
     """Play once as expected, and several times with costs drawn from what repeats showed."""
-    expected = scene.play(kinds).makespan_ns * 1e-9
+    expected = scene.expected_ns(kinds) * 1e-9
     spread = np.std(drawn(scene, basis, kinds, draws), ddof=1)
     half = SPREAD * float(spread)
     return Span(expected, max(expected - half, 0.0), expected + half)
@@ -84,9 +84,9 @@ def recorded_errors(basis: Basis, runs: Sequence[Lifted] | None = None) -> dict[
     scene = Scene.of(basis, machine, _as_recorded(basis, first), first.workers)
     found: dict[str, dict[str, Any]] = {}
     for mode in MODES:
-        spans = [run.span_ns * 1e-9 for run in here if mode_of(run) == mode]
+        spans = [run.span_ns * 1e-9 for run in here if run.mode == mode]
         if spans:
-            forecast = scene.play(kinds_of(scene, mode)).makespan_ns * 1e-9
+            forecast = scene.expected_ns(kinds_of(scene, mode)) * 1e-9
             measured = float(np.median(spans))
             found[mode] = {
                 "measured_s": measured,
@@ -105,11 +105,6 @@ def _as_recorded(basis: Basis, run: Lifted) -> Question:
     named = str(run.profile.manifest["notes"].get("placement", "blocks"))
     same = run.workers == basis.first.workers
     return Question(threads=run.threads, placement="" if same or named in ("shared", "dask") else named)
-
-
-def mode_of(run: Lifted) -> str:
-    """``lockstep``, ``tasked``, or ``partly`` where some barriers were on."""
-    return "lockstep" if run.is_lockstep else "partly" if run.profile.manifest["barriers"] else "tasked"
 
 
 def worst_error(recorded: dict[str, dict[str, Any]]) -> float | None:

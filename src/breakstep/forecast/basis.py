@@ -50,12 +50,15 @@ class Basis:
         With costs as on an idle machine.
     dispatch : Dispatch
     noise : Noise
+    tables : tuple of CostTables
+        Costs of each run as on an idle machine; the program has their mean.
     """
 
     runs: tuple[Lifted, ...]
     program: Program
     dispatch: Dispatch
     noise: Noise
+    tables: tuple[CostTables, ...]
 
     @property
     def first(self) -> Lifted:
@@ -77,7 +80,7 @@ def basis_of(profiles: Sequence[Profile]) -> Basis:
     program = program_of(runs[0], _mean(tables))
     sender = next((run for run in runs if len(run.profile.transfers)), runs[0])
     program = replace(program, rim_bytes=rim_bytes_of(sender, program))
-    return Basis(runs, program, dispatch, _noise(runs, tables, program))
+    return Basis(runs, program, dispatch, _noise(runs, tables, program), tuple(tables))
 
 
 def _tables(run: Lifted, dispatch: Dispatch) -> CostTables:

@@ -106,6 +106,11 @@ class Lifted:
         return names <= set(self.profile.manifest["barriers"])
 
     @property
+    def mode(self) -> str:
+        """``lockstep``, ``tasked``, or ``partly`` where some barriers were on."""
+        return "lockstep" if self.is_lockstep else "partly" if self.profile.manifest["barriers"] else "tasked"
+
+    @property
     def span_ns(self) -> int:
         """From the first task's start to the last task's end [ns]."""
         return int(self.end.max() - self.start.min())

@@ -8,7 +8,7 @@ percent and is changed by them by some percent of that.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 
 import numpy as np
@@ -21,7 +21,7 @@ from breakstep.forecast.fixed import Schedule, replay_fixed
 from breakstep.forecast.graph import BARRIER, REDUCTION, STEP, Int32s, Int64s, ReplayGraph
 from breakstep.forecast.machines import Machine
 from breakstep.forecast.memory import high_water
-from breakstep.forecast.program import Floats, Program
+from breakstep.forecast.program import CostTables, Floats, Program
 from breakstep.forecast.question import Question
 from breakstep.forecast.results import Replay
 from breakstep.forecast.setting import Setting, changed_program, owners_of, setting_of
@@ -29,6 +29,7 @@ from breakstep.forecast.unfold import Unfolded, unfold
 from breakstep.forecast.urgency import ranks
 
 ROUNDS = 3
+MOST_RUNS = 8  # recorded runs that are played apart
 
 
 @dataclass
@@ -41,12 +42,15 @@ class Scene:
     setting : Setting
     question : Question
     tile_owner : ndarray of int32, shape (tiles,)
+    runs : tuple of (str, CostTables)
+        Mode and costs of each recorded run, for the same phases and tiles.
     """
 
     program: Program
     setting: Setting
     question: Question
     tile_owner: Int32s
+    runs: tuple[tuple[str, CostTables], ...] = ()
     _stretch: dict[int, Floats] = field(default_factory=dict)
 
     @classmethod
@@ -60,7 +64,11 @@ class Scene:
         """
         program = changed_program(basis.program, question)
         setting = setting_of(basis, machine, question, workers)
-        return cls(program, setting, question, owners_of(basis, program, question, workers))
+        runs = tuple(
+            (run.mode, changed_program(replace(basis.program, costs=costs), question).costs)
+            for run, costs in zip(basis.runs, basis.tables, strict=True)
+        )
+        return cls(program, setting, question, owners_of(basis, program, question, workers), runs)
 
     @cached_property
     def unfolded(self) -> Unfolded:
@@ -95,6 +103,22 @@ class Scene:
         """Replay with the order that workers find while playing."""
         return replay_owner(self.graph(kinds, noise), self.setting.model, self.owner, self.rank, kinds)
 
+    def expected_ns(self, kinds: int) -> float:
+        """Mean makespan over the costs of recorded runs, those of the same mode if there are any [ns].
+
+        Not the makespan of mean costs: a barrier waits for whichever task was slow in that run, and means hide that.
+        Of the same mode, because what slows tasks down depends a little on the mode, and no model of it is exact.
+        """
+        mode = {self.unfolded.lockstep: "lockstep", self.unfolded.tasked: "tasked"}.get(kinds, "")
+        same = [costs for run_mode, costs in self.runs if run_mode == mode]
+        chosen = same or [costs for _, costs in self.runs] or [self.program.costs]
+        stretch = self.stretch(kinds)
+        found = []
+        for costs in chosen[:MOST_RUNS]:
+            graph = self._with(stretch, 1.0, costs)
+            found.append(replay_owner(graph, self.setting.model, self.owner, self.rank, kinds).makespan_ns)
+        return float(np.mean(found))
+
     def play_kept(self, before: int, kinds: int) -> Replay:
         """Replay with the order and the durations of another choice of barriers: taking some away then cannot
         lengthen it."""
@@ -123,6 +147,10 @@ class Scene:
         self.graph(kinds)
         return self._stretch[kinds]
 
+    def kernel_ns(self, kinds: int) -> float:
+        """Time in kernels under a choice of barriers, crowding included, all tasks together [ns]."""
+        return float(self._kernels(self.stretch(kinds), self.program.costs).sum())
+
     @property
     def _calm(self) -> Floats:
         return np.ones(self.setting.model.workers)
@@ -137,20 +165,28 @@ class Scene:
             stretch = kernel_stretch(load, setting.dispatch)
         return stretch
 
-    def _with(self, stretch: Floats, noise: Floats | float) -> ReplayGraph:
-        durations = self.unfolded.durations(self._by_phase(stretch) * noise)
+    def _with(self, stretch: Floats, noise: Floats | float, costs: CostTables | None = None) -> ReplayGraph:
+        durations = self.unfolded.durations(self._by_phase(stretch, costs) * noise)
         graph = self.unfolded.graph
         durations[graph.kind == BARRIER] = self.setting.local_turn_ns
         return graph.with_durations(durations)
 
-    def _by_phase(self, stretch: Floats) -> Floats:
-        setting, costs = self.setting, self.program.costs
-        crowded = stretch[self.tile_owner]
-        steps = {step: crowded * self.question.factors.get(step, 1.0) for step in costs.kernel}
-        rows = [phase.cost for phase in self.program.phases]
-        kernels = sum((costs.kernel[step] * factor for step, factor in steps.items()), np.zeros_like(costs.rest))
-        python = (costs.surface + setting.rest * costs.rest) * setting.python
-        return ((kernels + python) / setting.speed)[rows]
+    def _by_phase(self, stretch: Floats, costs: CostTables | None = None) -> Floats:
+        setting, costs = self.setting, costs or self.program.costs
+        python = (costs.surface + setting.rest * costs.rest) * setting.python / setting.speed
+        return self._kernels(stretch, costs) + python[self._rows]
+
+    def _kernels(self, stretch: Floats, costs: CostTables) -> Floats:
+        """Kernels of each step task, shape (phases, tiles) [ns]."""
+        crowded = stretch[self.tile_owner] / self.setting.speed
+        total = np.zeros_like(costs.rest)
+        for step, values in costs.kernel.items():
+            total += values * crowded * self.question.factors.get(step, 1.0)
+        return np.asarray(total[self._rows])
+
+    @cached_property
+    def _rows(self) -> list[int]:
+        return [phase.cost for phase in self.program.phases]
 
     def _messages(self, kinds: int) -> float:
         """Transfers that take processor time from tasks."""
