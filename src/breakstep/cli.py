@@ -13,7 +13,20 @@ import click
 
 from breakstep.errors import BreakstepError
 
-COMMANDS = ("compare", "run", "ledger", "why", "report", "audit", "new", "kernels", "selfcheck", "simulator")
+COMMANDS = (
+    "compare",
+    "run",
+    "ledger",
+    "why",
+    "report",
+    "forecast",
+    "advise",
+    "audit",
+    "new",
+    "kernels",
+    "selfcheck",
+    "simulator",
+)
 
 
 class Commands(click.Group):

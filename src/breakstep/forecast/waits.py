@@ -2,6 +2,8 @@
 
 - A result made once a cycle, lag L: cycle c uses the one made L + 1 cycles before, and the first L + 1 cycles share the
   first.
+  Where the window is narrower than L + 1 cycles, it holds a cycle back until the one that leaves the window is done; as
+  if the lag were the window's, and on all workers together, which is a little more than each for itself.
 - A verdict, lag L: iteration i goes on when that of iteration i - 1 - L is known.
 - What follows a repeat is emitted when the verdict that ended it is known.
 """
@@ -42,7 +44,8 @@ def _cycle_waits(program: Program) -> list[Wait]:
         for name in program.uses.get(phase.stage, ()):
             if phase.cycle < 0:
                 continue
-            maker = made.get(name, {}).get(max(phase.cycle - program.lags[name] - 1, start - 1))
+            late = min(program.lags[name], program.window - 1)  # no cycle before the window lets it
+            maker = made.get(name, {}).get(max(phase.cycle - late - 1, start - 1))
             if maker is not None and maker < number:
                 found.append(Wait(name, maker, number))
     return found
