@@ -1,9 +1,9 @@
 """The answer to a forecast's question: lockstep and tasked over numbers of workers, and how far to trust it.
 
-Next to every figure stands what the same method says of the machine of recording, where it can be compared with what was
-measured. Three figures are given for leaving barriers out: with the order that workers find while playing, which may
-by bad luck be longer than with barriers (Graham's anomalies); with the order of lockstep kept, which cannot;
-and bounds, below which no order goes.
+Next to every figure stands what the same method says of the machine of recording, where it can be compared with
+what was measured. Three figures are given for leaving barriers out: with the order that workers find while playing,
+which may by bad luck be longer than with barriers (Graham's anomalies); with the order of lockstep kept, which
+cannot; and bounds, below which no order goes.
 """
 
 from __future__ import annotations

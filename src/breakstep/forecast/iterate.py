@@ -43,7 +43,8 @@ def _body(program: Program, makers: list[int]) -> list[int]:
 
 def _copy(program: Program, body: list[int], phases: list[Phase], moved: dict[int, int]) -> None:
     """Append the iteration again: what it read of the iteration before, it now reads of itself."""
-    length, shift = len(body), {}
+    length = len(body)
+    shift: dict[int, int] = {}
     for number in body:
         phase = program.phases[number]
         reads = tuple((_again(source, body, length, moved, shift), pattern) for source, pattern in phase.reads)

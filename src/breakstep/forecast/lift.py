@@ -176,7 +176,7 @@ def lift(profile: Profile) -> Lifted:
 
     start, end = grid("start_ns"), grid("end_ns")
     cycle, iteration = integers(tasks, "cycle")[first], integers(tasks, "iteration")[first]
-    skipped = tasks["skipped"].to_numpy(dtype=bool)[rows].reshape(shape).all(axis=1)
+    skipped: Flags = np.asarray(tasks["skipped"].to_numpy(dtype=bool)[rows].reshape(shape).all(axis=1))
     lags = profile.manifest["notes"].get("lags", {})
     reductions = reductions_of(
         kind, place, code, stages, links, tiles, cycle=cycle, iteration=iteration, skipped=skipped, lags=lags

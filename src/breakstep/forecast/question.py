@@ -1,6 +1,6 @@
 """Questions: what is to be different from the recorded run, as options on the command line say it.
 
-A question is data. It refuses to know what the answer is, and checks against a program only whether the names are there.
+A question is data. It refuses to know what the answer is; of a program it checks only whether names are there.
 """
 
 from __future__ import annotations

@@ -139,7 +139,7 @@ def kinds_of_program(scene: Scene, alone: dict[str, int]) -> tuple[Kind, ...]:
     """
     program = scene.program
     reductions = [
-        Kind(f"{name} used {_later(program.lags[name], name in program.verdicts)}", reduction=name)
+        Kind(f"{name} used {in_units(program.lags[name] + 1, name in program.verdicts)} late", reduction=name)
         for name in program.lags
         if name in program.verdicts or any(name in used for used in program.uses.values())
     ][:3]
@@ -152,9 +152,10 @@ def kinds_of_program(scene: Scene, alone: dict[str, int]) -> tuple[Kind, ...]:
     return (*(Kind(f"barrier behind {stage}", (stage,)) for stage in first), named, *reductions)
 
 
-def _later(lag: int, is_verdict: bool) -> str:
+def in_units(lag: int, is_verdict: bool) -> str:
+    """A lag in words: cycles, or iterations for a verdict."""
     unit = "iteration" if is_verdict else "cycle"
-    return f"{lag + 1} {unit if lag + 1 == 1 else unit + 's'} late"
+    return f"{lag} {unit if lag == 1 else unit + 's'}"
 
 
 def rank_kinds(basis: Basis, machine: Machine, question: Question, workers: int) -> Ranking:
@@ -174,9 +175,8 @@ def rank_kinds(basis: Basis, machine: Machine, question: Question, workers: int)
     for chosen in range(1 << len(reductions)):
         later = [name for place, name in enumerate(reductions) if chosen >> place & 1]
         lags = {name: scene.program.lags[name] + 1 for name in later}
-        variant = (
-            Scene.of(basis, machine, replace(question, lags={**question.lags, **lags}), workers) if lags else scene
-        )
+        asked = replace(question, lags={**question.lags, **lags})
+        variant = Scene.of(basis, machine, asked, workers) if lags else scene
         low = chosen << len(barriers)
         makespans[low : low + (1 << len(barriers))] = _played(variant, _masks(variant, barriers))
     free = scene.unfolded.tasked & ~sum(1 << k for k in scene.unfolded.graph.kinds_of("reduction:"))

@@ -57,7 +57,7 @@ def rim_bytes_of(lifted: Lifted, program: Program) -> dict[str, float]:
 
 
 def _crossing(lifted: Lifted, program: Program, stage: str) -> float:
-    """Zones of faces through which the stage's output crossed workers; a rim that one worker reads twice counts once."""
+    """Zones of faces through which a stage's output crossed workers."""
     seen: set[tuple[int, int, int, int]] = set()
     total = 0.0
     for number, phase in enumerate(program.phases):

@@ -24,6 +24,7 @@ from breakstep.forecast.memory import high_water
 from breakstep.forecast.program import CostTables, Floats, Program
 from breakstep.forecast.question import Question
 from breakstep.forecast.results import Replay
+from breakstep.forecast.retile import overhead_factor
 from breakstep.forecast.setting import Setting, changed_program, owners_of, setting_of
 from breakstep.forecast.unfold import Unfolded, unfold
 from breakstep.forecast.urgency import ranks
@@ -63,7 +64,8 @@ class Scene:
             The question does not fit the program.
         """
         program = changed_program(basis.program, question)
-        setting = setting_of(basis, machine, question, workers)
+        larger = overhead_factor(basis.program.tiles, program.tiles)
+        setting = setting_of(basis, machine, question, workers, larger)
         runs = tuple(
             (run.mode, changed_program(replace(basis.program, costs=costs), question).costs)
             for run, costs in zip(basis.runs, basis.tables, strict=True)
@@ -214,7 +216,7 @@ def crossing(graph: ReplayGraph, owner: Int32s) -> Int64s:
     steps = (graph.kind[graph.producer] == STEP) & (graph.kind[consumer] == STEP)
     producer, receiver = graph.producer[steps].astype(np.int64), owner[consumer[steps]].astype(np.int64)
     crosses = owner[producer] != receiver
-    return producer[crosses] * (int(owner.max(initial=0)) + 1) + receiver[crosses]
+    return np.asarray(producer[crosses] * (int(owner.max(initial=0)) + 1) + receiver[crosses])
 
 
 def tree_messages(tile_owner: Int32s, arity: int = 8) -> int:

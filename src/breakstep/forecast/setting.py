@@ -64,8 +64,14 @@ def recorded_machine(run: Lifted) -> Machine:
     return Machine(name=RECORDED, title=title, cores=run.cores, threads=run.threads, network=network)
 
 
-def setting_of(basis: Basis, machine: Machine, question: Question, workers: int) -> Setting:
-    """The setting for so many workers."""
+def setting_of(basis: Basis, machine: Machine, question: Question, workers: int, larger: float = 1.0) -> Setting:
+    """The setting for so many workers.
+
+    Parameters
+    ----------
+    larger : float
+        Factor on our own dispatch's overhead, for other tiles.
+    """
     threads = question.threads or machine.threads
     kind, overhead_us, message_us = _runtime(machine.runtime, question, basis.dispatch, workers)
     nodes = machine.nodes_for(workers, threads)
@@ -74,6 +80,7 @@ def setting_of(basis: Basis, machine: Machine, question: Question, workers: int)
     if machine.crowding is not None:
         dispatch = replace(dispatch, shared=machine.crowding)
     ours = kind != "compiled"
+    overhead_us *= larger if ours else 1.0
     hop_us = dispatch.hop_ns * 1e-3 if ours else message_us
     model = MachineModel(
         workers=workers,

@@ -6,12 +6,22 @@ of edge kinds, chosen when the graph is replayed.
 
 from __future__ import annotations
 
-from collections.abc import Collection, Iterable, Mapping
+from collections.abc import Collection, Iterable
 from dataclasses import dataclass
 
 import numpy as np
 
-from breakstep.forecast.graph import ALL_KINDS, BARRIER, REDUCTION, STEP, Int64s, ReplayGraph, build_graph
+from breakstep.forecast.graph import (
+    ALL_KINDS,
+    BARRIER,
+    REDUCTION,
+    STEP,
+    Int8s,
+    Int32s,
+    Int64s,
+    ReplayGraph,
+    build_graph,
+)
 from breakstep.forecast.program import Floats, Program
 from breakstep.forecast.rims import edge_sizes
 from breakstep.forecast.waits import waits
@@ -73,14 +83,22 @@ def unfold(program: Program, by_phase: Floats | None = None) -> Unfolded:
     edges = _Edges(program, nodes)
     graph = build_graph(
         np.zeros(nodes.count, dtype=np.int64), *edges.ends(),
-        kind=nodes.kind, name=nodes.name, tile=nodes.tile, cycle=nodes.cycle, iteration=nodes.iteration,
-        output_bytes=nodes.output, edge_bytes=edges.joined("size"), edge_kind=edges.joined("kind"),
-        names=nodes.names, edge_kinds=nodes.edge_kinds,
+        kind=_bytes(nodes.kind), name=_halves(nodes.name), tile=_halves(nodes.tile), cycle=_halves(nodes.cycle),
+        iteration=_halves(nodes.iteration), output_bytes=nodes.output, edge_bytes=edges.joined("size"),
+        edge_kind=_bytes(edges.joined("kind")), names=nodes.names, edge_kinds=nodes.edge_kinds,
     )  # fmt: skip
     unfolded = Unfolded(program, graph, nodes.first)
     if by_phase is None:
         by_phase = program.costs.duration({})[[phase.cost for phase in program.phases]]
     return Unfolded(program, graph.with_durations(unfolded.durations(by_phase)), nodes.first)
+
+
+def _bytes(values: Int64s) -> Int8s:
+    return values.astype(np.int8)
+
+
+def _halves(values: Int64s) -> Int32s:
+    return values.astype(np.int32)
 
 
 class _Nodes:
@@ -93,7 +111,8 @@ class _Nodes:
         self.names = (*stages, *made)
         self.reductions: dict[tuple[int, str], int] = {}
         self.barriers: list[int] = []
-        starts, extra = [], []
+        starts: list[int] = []
+        extra: list[tuple[int, int, int, int]] = []
         self.count = 0
         for number, phase in enumerate(program.phases):
             starts.append(self.count)
@@ -204,8 +223,3 @@ class _Edges:
             if source == number - 1 and len(np.unique(pattern.consumer[own])) == self._program.tile_count:
                 return True
         return False
-
-
-def kinds_named(graph: ReplayGraph, prefix: str) -> Mapping[str, int]:
-    """Edge kinds whose names begin with a prefix: what comes behind it, and the kind."""
-    return {graph.edge_kinds[code].removeprefix(prefix): code for code in graph.kinds_of(prefix)}
