@@ -21,12 +21,18 @@ from breakstep.forecast.program import Floats
 from breakstep.forecast.question import Question
 from breakstep.forecast.scene import Scene, by_stage
 from breakstep.forecast.setting import recorded_machine
+from breakstep.forecast.weak import weak_row
 
 DRAWS = 16  # of a makespan's spread: its standard deviation is then known to about a fifth
 MOST_TASKS = 4_000_000  # played for one interval; beyond, fewer draws are made, but at least FEWEST
 FEWEST = 4
 SPREAD = 1.96  # standard deviations to either side of which 95 % lie, were they normal
 MODES = ("lockstep", "tasked")
+WEAK = (
+    "The mesh grows with the workers: recorded costs side by side, mirrored, each task's drawn anew; bounds are those"
+    " of mean costs, and memory and bytes are not followed."
+)
+MOST_WORKERS = 65536  # of a growing mesh, where the user names no numbers
 
 
 @dataclass(frozen=True)
@@ -114,6 +120,8 @@ def worst_error(recorded: dict[str, dict[str, Any]]) -> float | None:
 
 def row_of(basis: Basis, machine: Machine, question: Question, workers: int, draws: int = DRAWS) -> dict[str, Any]:
     """Both modes for one number of workers. Workers beyond the tiles have nothing to do."""
+    if question.weak:
+        return weak_row(basis, machine, question, workers)
     tiles = len(Scene.of(basis, machine, question, 1).program.tiles.origin)
     scene = Scene.of(basis, machine, question, min(workers, tiles))
     lockstep, tasked = scene.unfolded.lockstep, scene.unfolded.tasked
@@ -145,7 +153,7 @@ def default_workers(basis: Basis, machine: Machine, question: Question) -> list[
     """Doubling from 1 to what machine and tiles allow, the recorded number among them."""
     threads = question.threads or machine.threads
     tiles = len(Scene.of(basis, machine, question, 1).program.tiles.origin)
-    most = max(1, min(machine.slots // threads, tiles))
+    most = max(1, min(machine.slots // threads, MOST_WORKERS if question.weak else tiles))
     found = {min(2**power, most) for power in range(most.bit_length() + 1)}
     return sorted(found | ({basis.first.workers} if machine.name == RECORDED else set()))
 
@@ -169,4 +177,5 @@ def answer(basis: Basis, machine: Machine, question: Question, workers: Sequence
         "tiles": basis.program.tile_count,
         "messages_seen": basis.dispatch.seen,
         "runs": len(basis.runs),
+        "notes": [WEAK] if question.weak else [],
     }

@@ -32,7 +32,7 @@ KEYS = {
     "bandwidth": "into one worker, GB/s",
     "memory": "of one worker, GB",
     "window": "cycles in flight at once",
-    "weak": "1: the mesh grows with the workers",
+    "weak": "the mesh grows with the workers, so many tiles for each",
 }
 
 
@@ -55,7 +55,8 @@ class Question:
         A runtime's name, or [us].
     latency_us, bandwidth_gbytes, memory_gbytes : float or None
     window : int or None
-    weak : bool
+    weak : int
+        Tiles for each worker of a mesh that grows; 0 for the mesh as it is.
     """
 
     workers: int | None = None
@@ -71,7 +72,7 @@ class Question:
     bandwidth_gbytes: float | None = None
     memory_gbytes: float | None = None
     window: int | None = None
-    weak: bool = False
+    weak: int = 0
 
     @property
     def keeps_program(self) -> bool:
@@ -191,5 +192,5 @@ _PLAIN: Mapping[str, tuple[str, Callable[[str], Any]]] = {
     "bandwidth": ("bandwidth_gbytes", _positive),
     "memory": ("memory_gbytes", _positive),
     "window": ("window", _count),
-    "weak": ("weak", lambda value: _whole(value) > 0),
+    "weak": ("weak", _whole),
 }

@@ -73,7 +73,7 @@ def _cut(tiles: Tiles, extents: Offset) -> Tiles:
     return replace(tiles, origin=origin, shape=shape.astype(np.int64))
 
 
-def _offsets(tiles: Tiles, pattern: Pattern) -> set[Offset]:
+def offsets_of(tiles: Tiles, pattern: Pattern) -> set[Offset]:
     """From a reading tile to those it reads, in places of the grid; across an edge that wraps, the short way."""
     apart = tiles.places[pattern.producer] - tiles.places[pattern.consumer]
     apart = np.where(np.abs(apart) > 1, -np.sign(apart), apart)
@@ -91,7 +91,7 @@ def _pattern(old: Tiles, new: Tiles, pattern: Pattern) -> Pattern:
     at = np.empty(len(number), dtype=np.int64)
     at[number] = np.arange(len(number))
     pairs = []
-    for offset in _offsets(old, pattern):
+    for offset in offsets_of(old, pattern):
         there = places + np.array(offset)
         inside = ((there >= 0) & (there < grid) | periodic).all(axis=1)
         there %= grid

@@ -149,6 +149,10 @@ class Scene:
         self.graph(kinds)
         return self._stretch[kinds]
 
+    def step_ns(self, kinds: int) -> Floats:
+        """Duration of each step task under a choice of barriers, shape (phases, tiles) [ns]."""
+        return self._by_phase(self.stretch(kinds))
+
     def kernel_ns(self, kinds: int) -> float:
         """Time in kernels under a choice of barriers, crowding included, all tasks together [ns]."""
         return float(self._kernels(self.stretch(kinds), self.program.costs).sum())
