@@ -48,7 +48,7 @@ def figures_of(advice: Advice, before: np.ndarray[Any, Any], after: np.ndarray[A
     """Measured beside forecast. The measured interval is Student's t on the gains of the pairs."""
     gains = before - after
     half = float(stats.t.ppf(0.5 + LEVEL / 2.0, len(gains) - 1)) * float(np.std(gains, ddof=1)) / len(gains) ** 0.5
-    base, gain = float(np.median(before)), float(np.median(gains))
+    base, gain, mean = float(np.median(before)), float(np.median(gains)), float(gains.mean())
     expected = advice.baseline_s
     return {
         "do": advice.do,
@@ -59,7 +59,10 @@ def figures_of(advice: Advice, before: np.ndarray[Any, Any], after: np.ndarray[A
         "forecast_high_s": advice.high_s,
         "baseline_s": base,
         "measured_gain_s": gain,
-        "measured_low_s": float(gains.mean()) - half,
-        "measured_high_s": float(gains.mean()) + half,
+        "measured_low_s": mean - half,
+        "measured_high_s": mean + half,
         "within": bool(advice.low_s / expected <= gain / base <= advice.high_s / expected),
+        "contradicts": bool(
+            (mean + half) / base < advice.low_s / expected or (mean - half) / base > advice.high_s / expected
+        ),
     }

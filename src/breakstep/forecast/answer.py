@@ -135,12 +135,12 @@ def row_of(basis: Basis, machine: Machine, question: Question, workers: int, dra
     }
     for mode, span in spans.items():
         row |= {f"{mode}_s": span.seconds, f"{mode}_low_s": span.low, f"{mode}_high_s": span.high}
-        row[f"{mode}_efficiency"] = scene.work_ns * 1e-9 / (slots * span.seconds)
+        row[f"{mode}_efficiency"] = scene.work_ns(kinds_of(scene, mode)) * 1e-9 / (slots * span.seconds)
     row |= {
-        "tasked_fixed_s": scene.play_kept(lockstep, tasked).makespan_ns * 1e-9,
-        "area_bound_s": bounds.area_ns * 1e-9,
-        "path_bound_s": bounds.path_ns * 1e-9,
-        "worker_bound_s": bounds.worker_ns * 1e-9,
+        "tasked_fixed_s": scene.kept_ns(lockstep, tasked) * 1e-9,
+        "area_bound_s": bounds["area"] * 1e-9,
+        "path_bound_s": bounds["path"] * 1e-9,
+        "worker_bound_s": bounds["worker"] * 1e-9,
         "memory_bytes": scene.memory(replay),
         "moved_bytes": int(replay.received_bytes.sum()),
         "cores": machine.slots,

@@ -14,7 +14,7 @@ from functools import cached_property
 import numpy as np
 
 from breakstep.forecast.basis import Basis
-from breakstep.forecast.bounds import Bounds, lower_bounds
+from breakstep.forecast.bounds import lower_bounds
 from breakstep.forecast.crowd import Load, kernel_stretch
 from breakstep.forecast.dynamic import replay_owner
 from breakstep.forecast.fixed import Schedule, replay_fixed
@@ -103,7 +103,7 @@ class Scene:
 
     def play(self, kinds: int, noise: Floats | float = 1.0) -> Replay:
         """Replay with the order that workers find while playing."""
-        return replay_owner(self.graph(kinds, noise), self.setting.model, self.owner, self.rank, kinds)
+        return self._replayed(self.graph(kinds, noise), kinds)
 
     def expected_ns(self, kinds: int) -> float:
         """Mean makespan over the costs of recorded runs, those of the same mode if there are any [ns].
@@ -111,38 +111,45 @@ class Scene:
         Not the makespan of mean costs: a barrier waits for whichever task was slow in that run, and means hide that.
         Of the same mode, because what slows tasks down depends a little on the mode, and no model of it is exact.
         """
-        mode = {self.unfolded.lockstep: "lockstep", self.unfolded.tasked: "tasked"}.get(kinds, "")
-        same = [costs for run_mode, costs in self.runs if run_mode == mode]
-        chosen = same or [costs for _, costs in self.runs] or [self.program.costs]
-        stretch = self.stretch(kinds)
+        return float(np.mean([self._replayed(graph, kinds).makespan_ns for graph in self._graphs(kinds)]))
+
+    def kept_ns(self, before: int, kinds: int) -> float:
+        """The same with the order and the durations of another choice of barriers: taking some away then cannot
+        lengthen it [ns]."""
         found = []
-        for costs in chosen[:MOST_RUNS]:
-            graph = self._with(stretch, 1.0, costs)
-            found.append(replay_owner(graph, self.setting.model, self.owner, self.rank, kinds).makespan_ns)
+        for graph in self._graphs(before):
+            schedule = Schedule.of(self._replayed(graph, before))
+            found.append(replay_fixed(graph, self.setting.model, schedule, kinds).makespan_ns)
         return float(np.mean(found))
 
-    def play_kept(self, before: int, kinds: int) -> Replay:
-        """Replay with the order and the durations of another choice of barriers: taking some away then cannot
-        lengthen it."""
-        graph = self.graph(before)
-        schedule = Schedule.of(replay_owner(graph, self.setting.model, self.owner, self.rank, before))
-        return replay_fixed(graph, self.setting.model, schedule, kinds)
+    def bounds(self, kinds: int) -> dict[str, float]:
+        """By kind of bound, what no schedule that keeps tiles with their owners goes below, on average [ns]."""
+        found = [lower_bounds(graph, self.setting.model, self.owner, kinds) for graph in self._graphs(kinds)]
+        return {
+            "area": float(np.mean([bounds.area_ns for bounds in found])),
+            "path": float(np.mean([bounds.path_ns for bounds in found])),
+            "worker": float(np.mean([bounds.worker_ns for bounds in found])),
+        }
 
-    def bounds(self, kinds: int) -> Bounds:
-        """No schedule that keeps tiles with their owners is shorter."""
-        return lower_bounds(self.graph(kinds), self.setting.model, self.owner, kinds)
+    def work_ns(self, kinds: int) -> float:
+        """Time in kernels on an idle machine, all tasks together, of the runs that the makespan is made from [ns]."""
+        return float(np.mean([self._kernels(self._calm, costs).sum() for costs in self._chosen(kinds)]))
+
+    def _chosen(self, kinds: int) -> list[CostTables]:
+        mode = {self.unfolded.lockstep: "lockstep", self.unfolded.tasked: "tasked"}.get(kinds, "")
+        same = [costs for run_mode, costs in self.runs if run_mode == mode]
+        return (same or [costs for _, costs in self.runs] or [self.program.costs])[:MOST_RUNS]
+
+    def _graphs(self, kinds: int) -> list[ReplayGraph]:
+        stretch = self.stretch(kinds)
+        return [self._with(stretch, 1.0, costs) for costs in self._chosen(kinds)]
+
+    def _replayed(self, graph: ReplayGraph, kinds: int) -> Replay:
+        return replay_owner(graph, self.setting.model, self.owner, self.rank, kinds)
 
     def memory(self, replay: Replay) -> int:
         """Most bytes that one worker holds at once [bytes]."""
         return int(high_water(self.unfolded.graph, self.setting.model, replay).max(initial=0))
-
-    @property
-    def work_ns(self) -> float:
-        """Time in kernels on an idle machine, all tasks together [ns]."""
-        costs, factors = self.program.costs, self.question.factors
-        rows = [phase.cost for phase in self.program.phases]
-        kernels = [values[rows].sum() * factors.get(step, 1.0) for step, values in costs.kernel.items()]
-        return float(sum(kernels)) / self.setting.speed
 
     def stretch(self, kinds: int) -> Floats:
         """How many times as long kernels take on each worker as on an idle machine."""
@@ -165,7 +172,7 @@ class Scene:
         setting, model = self.setting, self.setting.model
         stretch, work = self._calm, float(self._by_phase(self._calm).sum())
         for _ in range(ROUNDS):
-            replay = replay_owner(self._with(stretch, 1.0), model, self.owner, self.rank, kinds)
+            replay = self._replayed(self._with(stretch, 1.0), kinds)
             busy = replay.busy_ns / max(model.threads * replay.makespan_ns, 1)
             load = Load(busy, model.threads, setting.cores, setting.nodes, work, self._messages(kinds))
             stretch = kernel_stretch(load, setting.dispatch)

@@ -145,7 +145,7 @@ def _halo_bytes(program: Program, number: int) -> int:
 
 def mean_work_ns(splitting: TiledSplitting, scene: Scene) -> float:
     """Kernels on an idle machine, of all tiles together [ns]."""
-    return scene.work_ns * splitting.tiles / scene.program.tile_count
+    return scene.work_ns(scene.unfolded.tasked) * splitting.tiles / scene.program.tile_count
 
 
 def total_ns(splitting: TiledSplitting, overhead_ns: int) -> float:

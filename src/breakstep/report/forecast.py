@@ -182,9 +182,13 @@ def verify_lines(verify: Mapping[str, Any] | None) -> list[str]:
         f" [{verify['measured_low_s']:.3f} to {verify['measured_high_s']:.3f}] of {seconds(verify['baseline_s'])}"
         f" ({share * verify['measured_gain_s']:.1f} %), {counted(int(verify['pairs']), 'pair')}."
     )
-    verdict = (
-        "As a share of the time this lies within the forecast's interval."
-        if verify["within"]
-        else "As a share of the time this lies outside the forecast's interval."
-    )
+    if verify["within"]:
+        verdict = "As a share of the time, the middle pair lies within the forecast's interval."
+    elif verify["contradicts"]:
+        verdict = "As a share of the time, the two intervals do not meet: the forecast was wrong here."
+    else:
+        verdict = (
+            "The middle pair lies outside the forecast's interval, but the measured interval reaches into it: the"
+            " machine is too restless to say more. Try more pairs, or a quieter moment."
+        )
     return ["", *_wrap(text), *_wrap(verdict)]
