@@ -13,7 +13,7 @@ import numpy as np
 
 from breakstep.forecast.lift import Lifted
 from breakstep.forecast.model import MachineModel
-from breakstep.profile.frames import integers, positions
+from breakstep.profile.frames import Integers, integers, positions
 
 
 @dataclass(frozen=True)
@@ -99,11 +99,26 @@ def hop_ns(run: Lifted) -> float:
 
 
 def overhead_ns(run: Lifted) -> float:
-    """Mean gap before a task whose inputs were there when its thread became free [ns]."""
+    """Mean gap before a task whose inputs were there when its thread became free [ns].
+
+    Where barriers are, gaps inside a phase show it; those between phases belong to the turn.
+    """
+    inside = gaps_inside_phases(run) if run.is_lockstep else np.empty(0)
+    if len(inside):
+        return float(inside.mean())
     gaps = run.profile.ledger.gaps
     length = integers(gaps, "end_ns") - integers(gaps, "start_ns")
     pure = integers(gaps, "engine") == length
     return float(length[pure].mean()) if np.any(pure) else UNSEEN.overhead_ns
+
+
+def gaps_inside_phases(run: Lifted) -> Integers:
+    """Gaps between two tasks of one phase that one thread ran one after the other [ns]."""
+    phase = np.repeat(np.arange(run.phases), run.tiles)
+    thread, start = (run.worker * run.threads + run.thread).reshape(-1), run.start.reshape(-1)
+    order = np.lexsort((start, phase, thread))
+    same = (np.diff(thread[order]) == 0) & (np.diff(phase[order]) == 0)
+    return np.asarray((start[order][1:] - run.end.reshape(-1)[order][:-1])[same])
 
 
 def message_ns(run: Lifted) -> float:

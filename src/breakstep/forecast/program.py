@@ -7,6 +7,7 @@ numbers of iterations and tiles can be changed and the graph comes out right. It
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 
@@ -230,7 +231,8 @@ def _reads(lifted: Lifted) -> tuple[tuple[Pattern, ...], list[tuple[tuple[int, i
     patterns: dict[tuple[bytes, bytes], int] = {}
     found: list[Pattern] = []
     reads: list[list[tuple[int, int]]] = [[] for _ in range(lifted.phases)]
-    for low, high in zip(cuts.tolist(), [*cuts[1:].tolist(), len(target)], strict=True):
+    ends = [*cuts.tolist(), len(target)]
+    for low, high in itertools.pairwise(ends):
         pattern = Pattern(theirs[low:high], mine[low:high])
         if pattern.key not in patterns:
             patterns[pattern.key] = len(found)

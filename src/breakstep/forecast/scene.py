@@ -1,8 +1,8 @@
 """A scene: one program on one setting, played under any choice of barriers.
 
 How crowded a node is depends on how busy its threads are, which only a replay tells; so a replay is repeated
-with the crowding that the one before found. Three times are enough: crowding changes durations by some
-percent and is changed by them by some percent of that.
+with the crowding that the one before found. Crowding changes durations by some ten percent and is changed by them by
+some ten percent of that, so that each round gains a digit.
 """
 
 from __future__ import annotations
@@ -29,7 +29,7 @@ from breakstep.forecast.setting import Setting, changed_program, owners_of, sett
 from breakstep.forecast.unfold import Unfolded, unfold
 from breakstep.forecast.urgency import ranks
 
-ROUNDS = 3
+ROUNDS = 4
 MOST_RUNS = 8  # recorded runs that are played apart
 
 
@@ -170,10 +170,11 @@ class Scene:
 
     def _crowded(self, kinds: int) -> Floats:
         setting, model = self.setting, self.setting.model
-        stretch, work = self._calm, float(self._by_phase(self._calm).sum())
+        stretch = self._calm
         for _ in range(ROUNDS):
             replay = self._replayed(self._with(stretch, 1.0), kinds)
             busy = replay.busy_ns / max(model.threads * replay.makespan_ns, 1)
+            work = float(replay.busy_ns.sum())
             load = Load(busy, model.threads, setting.cores, setting.nodes, work, self._messages(kinds))
             stretch = kernel_stretch(load, setting.dispatch)
         return stretch

@@ -23,12 +23,13 @@ from breakstep.forecast.question import Question
 from breakstep.forecast.retile import offsets_of
 from breakstep.forecast.rims import edge_sizes
 from breakstep.forecast.scene import Scene
-from breakstep.forecast.setting import setting_of
+from breakstep.forecast.setting import changed_program, setting_of
 from breakstep.forecast.sweep import sweep_tiles
 from breakstep.forecast.tiles import Gate, Offset, TiledSplitting, TileStage
 from breakstep.forecast.waits import waits
 
-MOST_TASKS = 300_000_000  # event by event, about a minute and a half; with one tile a worker it is a tenth of that
+MOST_TASKS = 300_000_000  # event by event, a minute or two for both modes and all repeats
+MOST_SWEPT = 3_000_000_000  # with one tile a worker, which needs no events
 REPEATS = 3  # with other seeds, for the interval
 
 
@@ -38,14 +39,15 @@ def weak_row(basis: Basis, machine: Machine, question: Question, workers: int) -
     Raises
     ------
     ForecastError
-        More tasks than can be played event by event.
+        More tasks than can be played.
     """
-    splitting, scene = weak_splitting(basis, machine, question, workers)
-    if question.weak > 1 and splitting.tasks > MOST_TASKS:
+    tasks = workers * question.weak * len(changed_program(basis.program, question).phases)
+    if tasks > (MOST_TASKS if question.weak > 1 else MOST_SWEPT):
         raise ForecastError(
-            f"weak={question.weak}: {workers} workers have {splitting.tasks} tasks, more than {MOST_TASKS}; ask for"
-            " fewer workers, or for weak=1"
+            f"weak={question.weak}: {workers} workers have {tasks:.3g} tasks, more than can be played; ask for fewer"
+            " workers, or for weak=1"
         )
+    splitting, scene = weak_splitting(basis, machine, question, workers)
     model = replace(setting_of(basis, machine, question, workers).model, contention=False)
     row: dict[str, Any] = {
         "workers": workers,

@@ -20,6 +20,8 @@ OPTIONS = {
     "compare": (*SHARED, "--pairs", "--barriers"),
     "ledger": ("--json",),
     "why": ("--tile", "--cycle", "--step", "--json"),
+    "forecast": ("--machine", "--workers", "--what-if", "--check", "--json"),
+    "advise": ("--machine", "--workers", "--what-if", "--verify", "--pairs", "--out", "--json"),
     "kernels": ("--json", "--quick"),
     "simulator": ("--json", "--quick"),
 }
