@@ -15,8 +15,8 @@ from typing import Any
 
 from breakstep.engine.execute import execute
 from breakstep.engine.program import Program
-from breakstep.engine.resident.core import Core, CoreOptions, Instruction, Save, SendItem, SendRims, TaskState
-from breakstep.engine.resident.inputs import cut_rims, inputs_of, site_of
+from breakstep.engine.resident.core import Core, CoreOptions, Finish, Instruction, Save, SendItem, SendRims, TaskState
+from breakstep.engine.resident.inputs import cut_rims, inputs_of, site_of, worked_out
 from breakstep.engine.resident.plan import WorkerPlan
 from breakstep.engine.resident.wire import size_of
 from breakstep.engine.run import RunOptions, unroller_for
@@ -126,6 +126,7 @@ class SimulatedCluster:
         self.running: list[list[TaskState]] = [[] for _ in range(workers)]
         self.moving: list[Message] = []
         self.saves: list[tuple[int, Save]] = []
+        self.results: list[tuple[int, Finish]] = []
         self.saved: dict[int, list[Save]] = {}
         self.order: list[tuple[int, int, int]] = []
         self.steps = 0
@@ -139,6 +140,7 @@ class SimulatedCluster:
         while self.moving:
             self.step()
         assert not self.saves
+        assert not self.results
         final: dict[int, dict[str, Array]] = {}
         for core in self.cores:
             final.update(core.final())
@@ -175,6 +177,7 @@ class SimulatedCluster:
             ]
         choices += [(m.key[0], m.worker, lambda m=m: self._deliver(m)) for m in self.moving]
         choices += [("saved", save[0], lambda s=save: self._saved(s)) for save in self.saves]
+        choices += [("made", result[0], lambda r=result: self._made(r)) for result in self.results]
         return choices
 
     def _start(self, worker: int) -> bool:
@@ -216,6 +219,11 @@ class SimulatedCluster:
         self.saves.remove(save)
         return self._obey(save[0], self.cores[save[0]].saved(save[1].cycle))
 
+    def _made(self, result: tuple[int, Finish]) -> bool:
+        self.results.remove(result)
+        worker, order = result
+        return self._obey(worker, self.cores[worker].made(order, worked_out(self.program, order)))
+
     def _obey(self, worker: int, instructions: Sequence[Instruction]) -> bool:
         core = self.cores[worker]
         for order in instructions:
@@ -224,6 +232,8 @@ class SimulatedCluster:
                 self._post(Message(worker, order.worker, key, cut_rims(order, order.arrays)))
             elif isinstance(order, SendItem):
                 self._post(Message(worker, order.worker, order.key, order.vector))
+            elif isinstance(order, Finish):
+                self.results.append((worker, order))
             else:
                 self.saved.setdefault(order.cycle, []).append(order)
                 self.saves.append((worker, order))

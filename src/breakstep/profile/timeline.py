@@ -9,7 +9,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from breakstep.profile.causes import BARRIER, NEVER, Blocks, Inputs, Timeline
+from breakstep.profile.causes import BARRIER, COMBINE, NEVER, STEP, Blocks, Inputs, Timeline
 from breakstep.profile.compiling import compiled_loop
 from breakstep.profile.frames import Frames, Integers, codes_of, integers, positions, thread_keys, words_of
 from breakstep.profile.schema import EDGE_KINDS, TASK_KINDS
@@ -26,7 +26,7 @@ def timeline_of(frames: Frames) -> Timeline:
         end=end,
         worker=integers(tasks, "worker"),
         thread=thread,
-        kind=codes_of(tasks, "kind", TASK_KINDS),
+        kind=_kinds(frames),
         stage=words_of(tasks, "stage")[0],
         inputs=_latest_inputs(frames),
         blocks=_blocks(start, end, thread, len(threads)),
@@ -41,6 +41,14 @@ def _latest_inputs(frames: Frames) -> Inputs:
     kind = codes_of(edges, "kind", EDGE_KINDS)
     arrival = _arrivals(frames, producer, consumer)
     return Inputs(*_pick_latest(len(tasks), NEVER, producer, consumer, kind, kind == BARRIER, arrival))
+
+
+def _kinds(frames: Frames) -> Integers:
+    """Kinds of tasks; a node in which a kernel ran counts as a step: who waits for it waits for that."""
+    tasks, intervals = frames["tasks"], frames["intervals"]
+    kind = codes_of(tasks, "kind", TASK_KINDS)
+    at_work = intervals.loc[(intervals["what"] == "kernel").to_numpy(), "task"].unique()
+    return np.where((kind == COMBINE) & tasks["task"].isin(at_work).to_numpy(), STEP, kind).astype(np.int64)
 
 
 def _arrivals(frames: Frames, producer: Integers, consumer: Integers) -> Integers:

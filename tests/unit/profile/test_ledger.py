@@ -5,7 +5,7 @@ from __future__ import annotations
 import pytest
 
 from breakstep.profile.run import Profile
-from tests.unit.profile.sketch import accounts, draw
+from tests.unit.profile.sketch import accounts, draw, number
 
 
 def test_compute_only() -> None:
@@ -94,6 +94,23 @@ def test_reduction_wait() -> None:
     )
     # gap of worker 1: A runs 2-6, R 6-8; inside R again 2
     assert accounts(record) == {"compute": 10, "reduction": 4, "engine": 4, "unemployed": 2}
+
+
+def test_a_wait_for_a_reduction_s_own_function() -> None:
+    """As above, but R runs a kernel: a function of the user's, for which worker 1 then waits.
+
+    0.0 |AAAAAARR..|
+    1.0 |BB......CC|
+    """
+    record = draw(
+        test_a_wait_for_a_reduction_s_own_function.__doc__,
+        "A>R reduction, B>R reduction, R>C reduction, B>C",
+        kinds={"R": "combine"},
+        stages={"R": "dt"},
+    )
+    record.intervals.append((number("R"), "kernel", "dt", 6, 8, 2))
+    # gap of worker 1: A runs 2-6, R 6-8
+    assert accounts(record) == {"compute": 12, "reduction": 6, "unemployed": 2}
 
 
 def test_barrier_wait() -> None:

@@ -10,12 +10,14 @@ start        the run may begin: phases are emitted as far as the window and know
 take         a thread asks for work: the most urgent ready task, or None
 finish       a thread has run a task: its arrays and contributions are here
 arrive       another worker's item is here: rims, a part of a reduction, a value, a count or a release
+made         the result of a reduction whose root is here has been worked out
 saved        a checkpoint of a cycle has been written
 
 Instructions (what the host must do)
 ------------------------------------
 SendRims     cut these rims from a finished task and send them to a worker
 SendItem     send a small item to a worker
+Finish       work out a result from what all tiles gave, by functions of the user's, then report it as made
 Save         write the state of own tiles at the end of a cycle
 
 Life of a task
@@ -39,7 +41,8 @@ phase       emitted               it holds no newest version any more:  its task
                                   it may lose what nobody reads
 array       its task is done                                            it is not newest and its readers are done
 bundle      rims arrive                                                 its readers are done
-node        its phase is emitted  the last part is there: combined      combined
+node        its phase is emitted  the last part is there: combined, a   combined
+                                  root's result then worked out
 result      made or arrived                                             its cycle is closed, and so are as many
                                                                         after it as it may lag behind
 barrier     its phase is emitted  own tasks are done and the workers    released
@@ -91,6 +94,7 @@ from breakstep.engine.resident.states import (
     Bundle,
     Control,
     Exits,
+    Finish,
     Instruction,
     PhaseState,
     Save,
@@ -104,7 +108,7 @@ from breakstep.steps.step import Array
 
 BundleKey: TypeAlias = tuple[int, int, int]  # reading phase, tile, phase that made it
 
-__all__ = ["BundleKey", "Core", "CoreOptions", "Instruction", "Save", "SendItem", "SendRims", "TaskState"]
+__all__ = ["BundleKey", "Core", "CoreOptions", "Finish", "Instruction", "Save", "SendItem", "SendRims", "TaskState"]
 
 
 @dataclass(frozen=True)
@@ -141,7 +145,8 @@ class Core:
     given : sequence of ndarray
         Results of reductions that the run begins with, when it goes on from a checkpoint.
     control : callable
-        Called when a node, a counter or a release has done its work: kind, phase, place.
+        Called when a node, a counter or a release has done its work: kind, phase, place; for a root when its result
+        has been worked out.
 
     Attributes
     ----------
@@ -261,6 +266,11 @@ class Core:
             raise AssertionError(f"{key} is no item that workers send each other")
         return self._close_event()
 
+    def made(self, order: Finish, vector: Array) -> list[Instruction]:
+        """A result whose root is here has been worked out."""
+        self._reductions.finished(order, vector)
+        return self._close_event()
+
     def saved(self, cycle: int) -> list[Instruction]:
         """The checkpoint of a cycle is on disk: its arrays may go."""
         for state in self._checkpoints.saved(cycle):
@@ -299,6 +309,11 @@ class Core:
         ]
 
     # ---- what the host tells and asks ---------------------------------------------------------------
+
+    @property
+    def top(self) -> int:
+        """Level of the roots of reduction trees."""
+        return self._reductions.tree.top
 
     @property
     def ready_count(self) -> int:

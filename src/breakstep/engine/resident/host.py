@@ -9,6 +9,7 @@ from __future__ import annotations
 import asyncio
 import threading
 import time
+from collections import deque
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -19,8 +20,17 @@ from distributed import Worker
 from breakstep.engine.execute import Output, execute
 from breakstep.engine.program import Program
 from breakstep.engine.resident import adapter
-from breakstep.engine.resident.core import Core, CoreOptions, Instruction, Save, SendItem, SendRims, TaskState
-from breakstep.engine.resident.inputs import cut_rims, inputs_of, site_of
+from breakstep.engine.resident.core import (
+    Core,
+    CoreOptions,
+    Finish,
+    Instruction,
+    Save,
+    SendItem,
+    SendRims,
+    TaskState,
+)
+from breakstep.engine.resident.inputs import cut_rims, inputs_of, site_of, worked_out
 from breakstep.engine.resident.notes import Notebook
 from breakstep.engine.resident.plan import WorkerPlan
 from breakstep.engine.resident.post import Letter, Post
@@ -34,6 +44,7 @@ LEASE_SECONDS = 120.0  # a worker that hears nothing from its driver for so long
 WAIT_SECONDS = 1.0  # how often an idle thread looks up, should nobody wake it
 DRAIN_SECONDS = 0.0005  # between looks at the post when all tasks are done
 ANSWERS = ("taken", "known", "stopped")  # of a worker that has the run; a worker that never heard of it says nothing
+LONG_FINISH_NS = 1_000_000  # a result that takes longer to work out is never worked out in the event loop again
 PUSH_BACK_SECONDS = 0.02  # most by which an answer is held back while memory is short
 
 
@@ -123,6 +134,9 @@ class Host:
         self.working = False
         self.heard = time.monotonic()  # when the driver last asked
         self._saved: list[Saved] = []
+        self._results: deque[Finish] = deque()  # to be worked out by the next thread that is free
+        self._idle = 0  # threads that wait for work
+        self._finishes_long = False
         self._seen: dict[int, int] = {}  # sender -> number of its last message
 
     # ---- a run's life ----------------------------------------------------------------------------
@@ -257,24 +271,32 @@ class Host:
         self.notes.begin_thread(number)
         task: TaskState | None = None
         try:
-            while (task := self._next()) is not None:
-                self._run(task, number)
+            while (work := self._next()) is not None:
+                if isinstance(work, Finish):
+                    self._work_out(work, number)
+                else:
+                    self._run(task := work, number)
         except Exception as error:  # whatever it is, the other threads and the driver must hear of it
             self.stop(error)
         except BaseException as error:  # on a worker nobody handles an interrupt or an exit
             self.stop(_raised(task, error))
 
-    def _next(self) -> TaskState | None:
+    def _next(self) -> TaskState | Finish | None:
+        """Results first: everybody waits for them."""
         core = self._core()
         with self.lock:
             while not self.stopped:
+                if self._results:
+                    return self._results.popleft()
                 task = core.take()
                 if task is not None:
                     return task
                 if core.finished:
                     self.changed.notify_all()
                     return None
+                self._idle += 1
                 self.changed.wait(WAIT_SECONDS)
+                self._idle -= 1
         return None
 
     def _run(self, task: TaskState, thread: int) -> None:
@@ -295,7 +317,45 @@ class Host:
             before = core.ready_count
             instructions = core.finish(task, output.fields, output.partials)
             self._wake(core, before)
-        self._obey(instructions, rims)
+        self._obey(instructions, rims, thread)
+
+    def _work_out(self, order: Finish, thread: int | None) -> None:
+        """Call the functions that make a result; outside the lock, for they are the user's and may take long.
+
+        Parameters
+        ----------
+        thread : int or None
+            The thread whose time it is; None for the event loop and the thread that saves.
+        """
+        core = self._core()
+        start, cpu = self.notes.watch()
+        vector = worked_out(core.program, order)
+        end, spent = time.perf_counter_ns(), time.thread_time_ns() - cpu
+        self._finishes_long = end - start > LONG_FINISH_NS
+        with self.lock:
+            if self.stopped:
+                return
+            self.notes.result(order, (start, end, spent), thread)
+            before = core.ready_count
+            instructions = core.made(order, vector)
+            if core.finished or core.ready_count > before:
+                self.changed.notify_all()
+        self._obey(instructions, thread=thread)
+
+    def _hand_over_result(self, order: Finish) -> None:
+        """From the event loop: to a thread that is idle or, when this is known to take long, to whichever is free next.
+
+        With all threads at work and little to do it is done here and now: the result is what the next tasks wait for.
+        """
+        with self.lock:
+            if self._idle or self._finishes_long:
+                self._results.append(order)
+                self.changed.notify_all()
+                return
+        try:
+            self._work_out(order, None)
+        except Exception as error:  # a reduction's own function
+            self.stop(error)
 
     def _book(self, task: TaskState, thread: int, start: int, output: Output, packing: tuple[int, int] | None) -> int:
         with self.booking:
@@ -308,8 +368,23 @@ class Host:
 
     # ---- what the state machine asks for ---------------------------------------------------------
 
-    def _obey(self, instructions: Sequence[Instruction], rims: Mapping[tuple[int, int], Any] | None = None) -> None:
+    def _obey(
+        self,
+        instructions: Sequence[Instruction],
+        rims: Mapping[tuple[int, int], Any] | None = None,
+        thread: int | None = None,
+    ) -> None:
+        """Do what the state machine asks for.
+
+        Parameters
+        ----------
+        rims : mapping, optional
+            By worker and reading phase, rims that are cut already.
+        thread : int or None
+            Number of the calling thread, if it is one that works on tasks.
+        """
         letters: list[Letter] = []
+        results = [order for order in instructions if isinstance(order, Finish)]
         for order in instructions:
             if isinstance(order, SendRims):
                 ready = (rims or {}).get((order.worker, order.phase))
@@ -317,10 +392,15 @@ class Host:
                 letters.append((order.worker, (("rims", order.phase, order.tile, order.source), arrays)))
             elif isinstance(order, SendItem):
                 letters.append((order.worker, (order.key, order.vector)))
-            else:
+            elif isinstance(order, Save):
                 threading.Thread(target=self._save, args=(order,), name="breakstep-save", daemon=True).start()
         if letters:
             self.post.put(letters)
+        for result in results:
+            if thread is None:
+                self._hand_over_result(result)
+            else:
+                self._work_out(result, thread)
 
     def _save(self, order: Save) -> None:
         from breakstep.engine.checkpoint import save_tiles
@@ -408,6 +488,8 @@ class Host:
             await asyncio.sleep(PUSH_BACK_SECONDS / 4)
 
     def _on_control(self, kind: str, phase: Phase, place: tuple[int, ...]) -> None:
+        if kind == "combine" and place[1] == self._core().top:
+            return  # a root: noted with the time that it took
         self.notes.control(kind, phase, place, time.perf_counter_ns())
 
 

@@ -9,8 +9,9 @@ from typing import Any
 import numpy as np
 
 from breakstep.engine.execute import Inputs, Site
+from breakstep.engine.program import Program
 from breakstep.engine.resident.core import Core
-from breakstep.engine.resident.states import SendRims, TaskState
+from breakstep.engine.resident.states import Finish, SendRims, TaskState
 from breakstep.mesh.halo import cut
 from breakstep.mesh.mesh import Triple
 from breakstep.steps.step import Array
@@ -44,6 +45,18 @@ def inputs_of(core: Core, task: TaskState) -> Inputs:
         values={name: core.values[ref.instance][ref.row] for name, ref in phase.values.items()},
         passes=passes,
     )
+
+
+def worked_out(program: Program, order: Finish) -> Array:
+    """The result that a root's order asks for.
+
+    Raises
+    ------
+    BreakstepError
+        A user's function raised, or says so itself.
+    """
+    making = order.making
+    return program.finish(order.phase.stage.index, making.reduction, order.combined, order.previous, making.rows)
 
 
 def cut_rims(order: SendRims, arrays: Mapping[str, Array]) -> dict[Any, Array]:

@@ -2,7 +2,8 @@
 
 Tasks are numbered here exactly as the driver numbers them afterwards, from the phases alone. Nodes of
 trees, counters and releases do their work in no time worth measuring, in the event loop or in a thread
-that has just finished a task; they are entered as moments.
+that has just finished a task; they are entered as moments. Only the roots of trees call functions of the user's:
+they are entered with the time that they took.
 """
 
 from __future__ import annotations
@@ -14,7 +15,7 @@ from typing import TYPE_CHECKING
 from breakstep.engine.execute import Interval, Output
 from breakstep.engine.recording import Recorder, TaskRow
 from breakstep.engine.resident.cycles import cycles_kept, longest_lag
-from breakstep.engine.resident.states import TaskState
+from breakstep.engine.resident.states import Finish, TaskState
 from breakstep.engine.resident.wire import Key, Parcel, size_of
 from breakstep.graph.numbering import Numbering
 from breakstep.graph.unroll import INITIAL, Phase
@@ -97,6 +98,19 @@ class Notebook:
             label = f"barrier:{phase.stage.name}"
         row = TaskRow(number, kind, label, -1, phase.cycle, phase.iteration)
         self.recorder.task(row, moment, moment, thread=0)
+
+    def result(self, order: Finish, spent: tuple[int, int, int], thread: int | None) -> None:
+        """Enter the root of a tree: start, end and processor time [ns]; a moment if no thread of ours worked on it."""
+        if not self.on:
+            return
+        start, end, cpu = spent
+        number, name, phase = self.numbering.node(*order.place), order.making.reduction.name, order.phase
+        row = TaskRow(number, "combine", name, -1, phase.cycle, phase.iteration)
+        if thread is None:
+            self.recorder.task(row, end, end, thread=0)
+            return
+        self.recorder.intervals(number, [Interval("kernel", name, start, end, cpu)])
+        self.recorder.task(row, start, end, thread=thread)
 
     def arrivals(self, sender: int, parcel: Parcel, arrived: int) -> None:
         """Enter what a message brought; packing and unpacking are booked with its first item."""

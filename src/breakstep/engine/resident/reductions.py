@@ -12,7 +12,7 @@ from typing import Any, TypeAlias
 
 from breakstep.engine.resident.plan import ReductionTree, WorkerPlan
 from breakstep.engine.resident.results import Results
-from breakstep.engine.resident.states import Exits, SendItem, Waiter
+from breakstep.engine.resident.states import Exits, Finish, SendItem, Waiter
 from breakstep.graph.tasks import TREE_ARITY
 from breakstep.graph.unroll import Making, Phase
 from breakstep.steps.reduction import combine
@@ -49,7 +49,7 @@ class Reductions:
         self.tree = ReductionTree(plan.owners)
         self.nodes: dict[Place, Node] = {}
         self.early: dict[int, dict[tuple[int, int], Array | None]] = {}
-        self._program, self._me, self._workers = plan.program, plan.worker, workers
+        self._me, self._workers = plan.worker, workers
         self._own = [node for node in self.tree.nodes.values() if node.home == self._me]
         self._results, self._exits, self._made = results, exits, made
 
@@ -83,16 +83,18 @@ class Reductions:
         instance, level, index = node.place
         del self.nodes[node.place]
         combined = combine(node.making.reduction.combine, node.parts)
-        self._exits.control("combine", node.phase, node.place)
         if level < self.tree.top:
+            self._exits.control("combine", node.phase, node.place)
             self.part(instance, level + 1, index, combined)
             return
-        vector = self._finish(node, combined)
+        making = node.making
+        previous = self._results.known[making.previous][-1] if making.previous is not None else None
+        self._exits.out.append(Finish(node.phase, node.place, making, combined, previous))
+
+    def finished(self, order: Finish, vector: Array) -> None:
+        """A root's result has been worked out: for the other workers, and for this one."""
+        instance = order.place[0]
+        self._exits.control("combine", order.phase, order.place)
         others = (worker for worker in range(self._workers) if worker != self._me)
         self._exits.out.extend(SendItem(worker, ("value", instance), vector) for worker in others)
         self._made(instance, vector)
-
-    def _finish(self, node: Node, combined: Array | None) -> Array:
-        making = node.making
-        previous = self._results.known[making.previous][-1] if making.previous is not None else None
-        return self._program.finish(node.phase.stage.index, making.reduction, combined, previous, making.rows)

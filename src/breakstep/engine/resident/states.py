@@ -10,7 +10,7 @@ from dataclasses import dataclass
 from typing import Any, TypeAlias
 
 from breakstep.engine.resident.plan import Cut, Reach
-from breakstep.graph.unroll import Phase
+from breakstep.graph.unroll import Making, Phase
 from breakstep.steps.step import Array
 
 WAITING, READY, RUNNING, DONE = "waiting", "ready", "running", "done"
@@ -47,7 +47,29 @@ class Save:
     values: Mapping[str, Array]
 
 
-Instruction: TypeAlias = SendRims | SendItem | Save
+@dataclass(frozen=True)
+class Finish:
+    """Work out a result from what all tiles gave, by functions of the user's, then report that it has been made.
+
+    Attributes
+    ----------
+    phase : Phase
+        Which made it.
+    place : tuple of int
+        The root: instance, level, index.
+    making : Making
+    combined, previous : ndarray or None
+        What the tiles gave, and the last row of the result before.
+    """
+
+    phase: Phase
+    place: tuple[int, int, int]
+    making: Making
+    combined: Array | None
+    previous: Array | None
+
+
+Instruction: TypeAlias = SendRims | SendItem | Save | Finish
 Control: TypeAlias = Callable[[str, Phase, tuple[int, ...]], None]
 
 

@@ -9,8 +9,8 @@ import numpy as np
 
 from breakstep.engine.execute import execute
 from breakstep.engine.program import Program
-from breakstep.engine.resident.core import Core, CoreOptions, Instruction, TaskState
-from breakstep.engine.resident.inputs import inputs_of, site_of
+from breakstep.engine.resident.core import Core, CoreOptions, Finish, Instruction, TaskState
+from breakstep.engine.resident.inputs import inputs_of, site_of, worked_out
 from breakstep.engine.resident.plan import WorkerPlan
 from breakstep.engine.run import RunOptions, unroller_for
 from breakstep.graph.unroll import Phase
@@ -58,9 +58,9 @@ def machine(
 
 
 def finish(core: Core, task: TaskState) -> list[Instruction]:
-    """Run a task that was taken."""
+    """Run a task that was taken; returns all instructions that are left to others."""
     output = execute(core.program, site_of(task), inputs_of(core, task))
-    return core.finish(task, output.fields, output.partials)
+    return obeyed(core, core.finish(task, output.fields, output.partials))
 
 
 def take(core: Core) -> TaskState:
@@ -70,8 +70,19 @@ def take(core: Core) -> TaskState:
     return task
 
 
+def obeyed(core: Core, instructions: list[Instruction]) -> list[Instruction]:
+    """Work out results as soon as that is asked for; returns the other instructions, those that follow among them."""
+    left: list[Instruction] = []
+    for order in instructions:
+        if isinstance(order, Finish):
+            left += obeyed(core, core.made(order, worked_out(core.program, order)))
+        else:
+            left.append(order)
+    return left
+
+
 def go_on(core: Core) -> list[Instruction]:
-    """Run whatever can be run; returns all instructions."""
+    """Run whatever can be run; returns all such instructions."""
     made: list[Instruction] = []
     while (task := core.take()) is not None:
         made += finish(core, task)

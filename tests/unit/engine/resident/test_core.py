@@ -16,7 +16,19 @@ from breakstep.engine.serial import SerialDispatch
 from breakstep.steps.step import Read
 from tests.mixtures import Ends, measured, mixing
 from tests.simulated import Beginning, SimulatedCluster
-from tests.unit.engine.resident.hands import DT, LOCAL, SMOOTH, STEERED, ended, finish, go_on, line, machine, take
+from tests.unit.engine.resident.hands import (
+    DT,
+    LOCAL,
+    SMOOTH,
+    STEERED,
+    ended,
+    finish,
+    go_on,
+    line,
+    machine,
+    obeyed,
+    take,
+)
 
 HALVES = [0, 0, 1, 1]
 
@@ -129,7 +141,7 @@ def test_a_result_goes_to_every_other_worker_and_no_part_that_can_stay_leaves() 
     other = machine(line([LOCAL], reductions=[measured("sum", "b")], cycles=1), [0, 0, 1, 1], worker=1)
     parts = [order for order in other.start() + go_on(other) if isinstance(order, SendItem)]
     assert [order.key for order in parts] == [("part", i, 0, tile) for i in (0, 1) for tile in (2, 3)]
-    made = [order for part in parts for order in core.arrive(part.key, part.vector)]
+    made = [order for part in parts for order in obeyed(core, core.arrive(part.key, part.vector))]
     assert [(o.worker, o.key) for o in made if isinstance(o, SendItem)] == [(1, ("value", 0)), (1, ("value", 1))]
 
 
@@ -140,12 +152,12 @@ def test_control_is_told_of_nodes_counters_and_releases() -> None:
     core = machine(program, barriers=names, control=lambda kind, phase, place: told.append((kind, phase.number, place)))
     ended(core)
     assert told == [
-        ("combine", 1, (0, 0, 0)),
         ("count", 1, (0,)),
         ("release", 1, ()),
-        ("combine", 2, (1, 0, 0)),
+        ("combine", 1, (0, 0, 0)),  # a root: when its result has been worked out
         ("count", 2, (0,)),
         ("release", 2, ()),
+        ("combine", 2, (1, 0, 0)),
     ]
 
 

@@ -10,10 +10,11 @@ import numpy as np
 import pytest
 
 from breakstep.engine.program import Program
+from breakstep.engine.resident.inputs import worked_out
 from breakstep.engine.resident.plan import WorkerPlan
 from breakstep.engine.resident.reductions import Node, Reductions
 from breakstep.engine.resident.results import Results
-from breakstep.engine.resident.states import Exits, Instruction, SendItem, Waiter
+from breakstep.engine.resident.states import Exits, Finish, Instruction, SendItem, Waiter
 from breakstep.graph.unroll import Making, Phase
 from breakstep.steps.reduction import Combine, combine, finish_rows
 from breakstep.steps.step import Array
@@ -46,6 +47,9 @@ class Worker:
         if waiter.missing == 0:
             assert isinstance(waiter, Node)
             self.trees.combine(waiter)
+            for order in [order for order in self.out if isinstance(order, Finish)]:
+                self.out.remove(order)
+                self.trees.finished(order, worked_out(self.program, order))
 
     def make(self, instance: int, vector: Array) -> None:
         self.made[instance] = vector
