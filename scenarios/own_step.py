@@ -10,6 +10,7 @@ DIFFUSIVITY, HEAT = 1.2, 900.0  # [cm^2/s], [K] for all of the fuel
 def diffuse(arrays, call):
     """Explicit five-point diffusion; reads one ghost zone on each side."""
     t, dx2 = arrays["warmth"], call.widths[0] ** 2
+    call.require_time_step(0.25 * dx2 / DIFFUSIVITY, "diffusion")  # dt was measured a cycle ago: lag=1 below
     inner = t[:, 1:-1, 1:-1]
     around = t[:, :-2, 1:-1] + t[:, 2:, 1:-1] + t[:, 1:-1, :-2] + t[:, 1:-1, 2:]
     return {"warmth": inner + call.dt * DIFFUSIVITY / dx2 * (around - 4.0 * inner)}
