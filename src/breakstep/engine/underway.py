@@ -7,6 +7,8 @@ read from outside. Refuses to know what is too long.
 
 from __future__ import annotations
 
+import breakstep.kernels.compiled  # noqa: F401  # isort: skip  (must precede numba)
+
 import contextlib
 import os
 import threading
