@@ -293,7 +293,7 @@ def _check_arguments(function: Callable[..., object], code: CodeSection, what: s
 
 
 def _digest(module: ModuleType, sources: tuple[Source, ...]) -> str:
-    """SHA-256 of the file that was loaded; what that file imports is not looked at."""
+    """SHA-256 of the file that was loaded, and of those beside it that it imports."""
     if sources:
         return sources[0].digest
     file = getattr(module, "__file__", None)

@@ -69,6 +69,52 @@ def test_files_beside_it_can_be_imported(tmp_path: Path, monkeypatch: pytest.Mon
     assert load_scenario(file).problem().mesh.shape == (16,)
 
 
+def test_files_beside_it_travel_and_are_loaded_anew_when_they_change(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Another process unpickles functions of theirs, with the files gone; here the changed text is what runs."""
+    monkeypatch.setattr(sys, "path", list(sys.path))
+    (tmp_path / "deeper_of_mine.py").write_text("SHARE = 0.5\n", encoding="utf-8")
+    middle = tmp_path / "smoothing_of_mine.py"
+    text = "from deeper_of_mine import SHARE\nimport numpy as np\ndef start(tile, mesh):\n"
+    text += "    return {'u': SHARE * np.ones((1, *tile.shape))}\n"
+    middle.write_text(text, encoding="utf-8")
+    file = written(tmp_path, OWN.replace("lie([step]), start", "lie([step]), smoothing_of_mine.start"))
+    file.write_text("import smoothing_of_mine\n" + file.read_text(encoding="utf-8"), encoding="utf-8")
+
+    first = load_scenario(file)
+    assert [Path(one.path).stem for one in first.problem().sources[0].beside] == ["deeper_of_mine", "smoothing_of_mine"]
+    program = Program(first.problem(), first.tile)
+    assert float(program.initial(1)["u"].sum()) == 2.0
+    packed = pickle.dumps(program)
+    (tmp_path / "deeper_of_mine.py").write_text("SHARE = 0.75\n", encoding="utf-8")
+    other = load_scenario(file)
+    assert other.resolved()["code"]["digest"] != first.resolved()["code"]["digest"]
+    assert float(Program(other.problem(), other.tile).initial(1)["u"].sum()) == 3.0
+    assert unpacked_elsewhere(packed, tmp_path) == 2.0
+
+
+def unpacked_elsewhere(packed: bytes, folder: Path) -> float:
+    """The sum of a tile's initial state in a process that can see none of the files."""
+    (folder / "program").write_bytes(packed)
+    for file in folder.glob("*.py"):
+        file.unlink()
+    read = "import pickle, sys; p = pickle.load(open('program', 'rb')); print(float(p.initial(1)['u'].sum()))"
+    environment = {"PATH": "", "PYTHONPATH": ":".join(sys.path), "XDG_CACHE_HOME": str(folder / "cache")}
+    done = subprocess.run(
+        [sys.executable, "-c", read], cwd=folder, env=environment, capture_output=True, text=True, check=False
+    )
+    assert done.stderr == ""
+    assert (folder / "cache" / "breakstep" / "code").is_dir()
+    return float(done.stdout)
+
+
+def test_a_file_beside_it_hides_no_module_of_python_s(tmp_path: Path) -> None:
+    (tmp_path / "random.py").write_text("raise RuntimeError('hidden')\n", encoding="utf-8")
+    scenario = load_scenario(written(tmp_path, before="import random\nassert random.random() < 1.0\n"))
+    assert scenario.problem().sources[0].beside == ()
+
+
 def test_overrides(tmp_path: Path) -> None:
     file = written(tmp_path)
     scenario = load_scenario(file, ["run.cycles=7", "mesh.tile=[6]", "code.arguments.zones=24", "run.threads=2"])
@@ -165,13 +211,5 @@ def test_the_program_brings_its_code_along(tmp_path: Path) -> None:
     file = written(tmp_path)
     scenario = load_scenario(file)
     program = Program(scenario.problem(), scenario.tile)
-    (tmp_path / "program").write_bytes(pickle.dumps(program))
-    file.unlink()
-    read = "import pickle, sys; p = pickle.load(open('program', 'rb')); print(float(p.initial(1)['u'].sum()))"
-    environment = {"PATH": "", "PYTHONPATH": ":".join(sys.path), "XDG_CACHE_HOME": str(tmp_path / "cache")}
-    done = subprocess.run(
-        [sys.executable, "-c", read], cwd=tmp_path, env=environment, capture_output=True, text=True, check=False
-    )
-    assert done.stderr == ""
-    assert float(done.stdout) == float(program.initial(1)["u"].sum())
-    assert (tmp_path / "cache" / "breakstep" / "code").is_dir()
+    expected = float(program.initial(1)["u"].sum())
+    assert unpacked_elsewhere(pickle.dumps(program), tmp_path) == expected
