@@ -13,7 +13,7 @@ from breakstep.engine.program import Program
 from breakstep.engine.run import RunOptions
 from breakstep.engine.serial import SerialDispatch
 from breakstep.errors import OverdueError
-from breakstep.steps.timed import without_waits
+from breakstep.steps.rehearsal import without_waits
 
 PROCESS = uuid.uuid4().hex  # of this process alone; ids of processes repeat between containers
 SMALL = 4  # zones along each axis of the copy, unless a halo is wider
@@ -24,7 +24,8 @@ def small_copy(program: Program) -> Program:
     problem = program.problem
     widest = max((width for _, read in problem.splitting.halo_reads() for width in read.halo), default=0)
     mesh = replace(problem.mesh, shape=tuple(min(n, max(SMALL, widest)) for n in problem.mesh.shape))
-    small = replace(problem, mesh=mesh, cycles=len(problem.splitting.orders), ended=None)
+    splitting = without_waits(problem.splitting)
+    small = replace(problem, mesh=mesh, splitting=splitting, cycles=len(splitting.orders), ended=None)
     return Program(small, mesh.shape, program.fuse)
 
 
@@ -44,8 +45,7 @@ def warm_up(program: Program, task_timeout: float = 0.0) -> str:
     KeyboardInterrupt
     OverdueError
     """
-    with without_waits():
-        result = SerialDispatch().run(small_copy(program), RunOptions(record=False, task_timeout=task_timeout))
+    result = SerialDispatch().run(small_copy(program), RunOptions(record=False, task_timeout=task_timeout))
     if isinstance(result.failure, OverdueError):
         raise result.failure
     if result.interrupted:

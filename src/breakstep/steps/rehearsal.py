@@ -8,7 +8,7 @@ real code did. Among real steps a timed one reads and hands on the gas, whose gh
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -17,9 +17,20 @@ from breakstep.mesh.mesh import Mesh, Triple
 from breakstep.mesh.tiling import Tile
 from breakstep.steps.problem import Problem
 from breakstep.steps.reduction import Combine, Reduction
-from breakstep.steps.splitting import Item, Repeat, lie
+from breakstep.steps.splitting import Item, Repeat, Splitting, lie
 from breakstep.steps.step import Array, Call, Read, Step
-from breakstep.steps.timed import MODULUS, STATE, Counting, Make, Mix, PassOn, Schedule, TimedKernel, payload
+from breakstep.steps.timed import (
+    MODULUS,
+    STATE,
+    Counting,
+    Make,
+    Mix,
+    PassOn,
+    Schedule,
+    TimedKernel,
+    payload,
+    timed_kernel,
+)
 
 NUMBER_BYTES = 8
 
@@ -107,6 +118,22 @@ def rehearsal(
 def timed_among(step: TimedStep, field: str, uses: tuple[str, ...], dilate: float) -> Item:
     """A step by timer among real ones: it reads a field with its ghost zones, and hands it on as it was."""
     return _item(step, PassOn(field), (Read(field, step.halo, step.corners),), uses, dilate)
+
+
+def without_waits(splitting: Splitting) -> Splitting:
+    """The same steps, those by timer without their waits."""
+    return replace(splitting, orders=tuple(tuple(_hurried(item) for item in order) for order in splitting.orders))
+
+
+def _hurried(item: Item) -> Item:
+    if isinstance(item, Repeat):
+        return replace(item, body=tuple(_hurried_step(step) for step in item.body))
+    return _hurried_step(item)
+
+
+def _hurried_step(step: Step) -> Step:
+    kernel = timed_kernel(step)
+    return step if kernel is None else replace(step, kernel=replace(kernel, dilate=0.0))
 
 
 def counting_fields(steps: Sequence[TimedStep]) -> tuple[Field, ...]:

@@ -10,11 +10,9 @@ on what was received, and on nothing else.
 from __future__ import annotations
 
 import hashlib
-import threading
 import time
 import zlib
 from collections.abc import Callable, Iterator, Mapping
-from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import cache
 from itertools import product
@@ -35,18 +33,7 @@ RAMP = 1024  # the numbers of a payload differ, so that a part that went astray 
 
 Make: TypeAlias = Callable[[Mapping[str, Array], Call], dict[str, Array]]
 
-_hurry = threading.local()
 _known: WeakValueDictionary[str, Schedule] = WeakValueDictionary()
-
-
-@contextmanager
-def without_waits() -> Iterator[None]:
-    """Let no step of this thread wait: for runs that only load what a run needs."""
-    _hurry.on = True
-    try:
-        yield
-    finally:
-        _hurry.on = False
 
 
 class Schedule:
@@ -90,7 +77,7 @@ class TimedKernel:
     ----------
     schedule : Schedule
     dilate : float
-        Factor applied to every wait.
+        Factor applied to every wait; 0 for none.
     make : callable
         ``make(arrays, call) -> arrays``: what is handed on.
     """
@@ -103,10 +90,9 @@ class TimedKernel:
         """The arrays, once the wait is over; the call then stands for the time that was asked for."""
         began = time.perf_counter_ns()
         made = self.make(arrays, call)
-        if not getattr(_hurry, "on", False):
-            seconds = self.schedule.at(call.cycle, call.iteration, call.tile)
-            call.stands_for = round(seconds * self.dilate * call.fraction * 1e9)
-            wait_until(began + call.stands_for)
+        seconds = self.schedule.at(call.cycle, call.iteration, call.tile)
+        call.stands_for = round(seconds * self.dilate * call.fraction * 1e9)
+        wait_until(began + call.stands_for)
         return made
 
 
