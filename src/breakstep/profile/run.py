@@ -16,6 +16,7 @@ import xarray as xr
 from breakstep.errors import ProfileError
 from breakstep.profile.checks import sound_frames
 from breakstep.profile.fields import dataset_of
+from breakstep.profile.figures import Figures, profile_html
 from breakstep.profile.frames import Frames
 from breakstep.profile.ledger import Ledger, ledger_of
 from breakstep.profile.manifest import Manifest, first_fault
@@ -65,6 +66,19 @@ class Profile:
         sound = cast(Manifest, manifest)
         frames = sound_frames(tables, sound, lambda table: f"record, table {table}")
         return cls(sound, frames, dataset_of(record))
+
+    def __repr__(self) -> str:
+        rows = f"{len(self.tasks)} tasks, {self.manifest['cycles']} cycles, {self.manifest['workers']} workers"
+        place = f" from {self.folder}" if self.folder else ""
+        return f"<Profile {self.title}: {rows}, {self.manifest['status']}{place}>"
+
+    def _repr_html_(self) -> str:
+        return profile_html(self)
+
+    @property
+    def figures(self) -> Figures:
+        """Small figures for a notebook."""
+        return Figures(self)
 
     @property
     def tasks(self) -> pd.DataFrame:
