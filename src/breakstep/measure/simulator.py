@@ -139,7 +139,7 @@ def _stored(sizes: Sizes, variants: int, kinds: int, progress: Progress = lambda
         (f"{variants} what-ifs, replayed", 10.0, variants, lambda: _replays(graph, machines, owner)),
         (f"{variants} what-ifs, fixed order", 10.0, variants, lambda: fixed_makespans(graph, schedule, [Variant(one) for one in machines])),
         (f"{1 << len(barriers)} subsets, fixed order", 10.0, 1 << len(barriers), lambda: subset_makespans(graph, machine, schedule, barriers)),
-        (f"{1 << len(barriers)} subsets, replayed", None, 1 << len(barriers), lambda: subset_replays(graph, machine, owner, barriers)),
+        (f"{1 << len(barriers)} subsets, replayed", 10.0, 1 << len(barriers), lambda: subset_replays(graph, machine, owner, barriers)),
     )  # fmt: skip
     speeds = []
     for what, needed, times, work in steps:
