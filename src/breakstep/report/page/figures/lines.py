@@ -63,23 +63,28 @@ def memory_figure(panel: dict[str, Any]) -> figure:
     plot.xgrid.grid_line_color = None
     drawn = []
     for side, found in panel.items():
-        source = ColumnDataSource(
-            {
-                "x": found["edges_s"][:-1],
-                "y": [count / factor for count in found["bytes"]],
-                "shown": [size(count) for count in found["bytes"]],
-                "when": [f"{moment:.3f} s" for moment in found["edges_s"][:-1]],
-                "side": [side] * len(found["bytes"]),
-            }
-        )
-        dash = "solid" if side == "tasked" else "dashed"
-        drawn.append(
-            plot.step("x", "y", source=source, mode="after", line_color=LIGHT[side], line_width=2, line_dash=dash,
-                      name=f"memory-{side}")
-        )  # fmt: skip
+        drawn.append(_memory_line(plot, found, side, factor))
         _peak(plot, found, side, factor, end)
-    hover(plot, drawn, [("", "side"), ("from", "when"), ("live, at most", "shown")], mode="vline", line_policy="prev")
+    hover(plot, drawn, [("", "side"), ("from", "when"), ("live, at most", "shown")], mode="vline")
     return plot
+
+
+def _memory_line(plot: figure, found: dict[str, Any], side: str, factor: float) -> Any:
+    """The line, and bins under it that cannot be seen and that the pointer meets at any height."""
+    edges, counts = found["edges_s"], found["bytes"]
+    heights = [count / factor for count in counts]
+    dash = "solid" if side == "tasked" else "dashed"
+    plot.step(edges, [*heights, *heights[-1:]], mode="after", line_color=LIGHT[side], line_width=2, line_dash=dash)
+    source = ColumnDataSource(
+        {
+            "left": edges[:-1], "right": edges[1:], "top": heights, "shown": [size(count) for count in counts],
+            "when": [f"{moment:.3f} s" for moment in edges[:-1]], "side": [side] * len(counts),
+        }
+    )  # fmt: skip
+    return plot.quad(
+        source=source, left="left", right="right", top="top", bottom=0, fill_alpha=0, line_alpha=0,
+        name=f"memory-{side}",
+    )  # fmt: skip
 
 
 def _peak(plot: figure, found: dict[str, Any], side: str, factor: float, end: float) -> None:
