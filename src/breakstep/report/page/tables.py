@@ -146,9 +146,9 @@ def _critical_steps(data: Mapping[str, Any]) -> list[str]:
     """Steps on the critical chains, those with most time first."""
     total: dict[str, int] = {}
     for run in data["accounts"].values():
-        for step, accounts in run["critical"]["by_step_ns"].items():
-            total[step] = total.get(step, 0) + sum(accounts.values())
-    return sorted(total, key=lambda name: -total[name])
+        for step, ns in run["critical"]["by_step_ns"].items():
+            total[step] = total.get(step, 0) + ns
+    return [step for step in sorted(total, key=lambda name: -total[name]) if total[step]]
 
 
 def _scaling_alt(panel: Mapping[str, Any]) -> str:

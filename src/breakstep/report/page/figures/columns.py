@@ -132,7 +132,8 @@ def _handed_back(plot: figure, panel: dict[str, Any], top: float) -> None:
     text = f"{abs(handed):.3g} core-s"
     tail = "handed back" if handed > 0 else "more when tasked"
     inside = abs(handed) > 2.2 * _ROOM * top
+    place, align = (WIDTH / 2, "center") if inside else (WIDTH, "right") if handed > 0 else (0.0, "left")
     words(
-        plot, x=[left + WIDTH / 2], y=[low + abs(handed) / 2 if inside else low + abs(handed) + 0.02 * top],
-        text=[f"{text}\n{tail}" if inside else f"{text} {tail}"], text_align="center", text_color=LIGHT["tasked"],
+        plot, x=[left + place], y=[low + abs(handed) / 2 if inside else low + abs(handed) + 0.02 * top],
+        text=[f"{text}\n{tail}" if inside else f"{text} {tail}"], text_align=align, text_color=LIGHT["tasked"],
     )  # fmt: skip

@@ -8,7 +8,7 @@ from typing import Any
 from bokeh.models import ColumnDataSource, FixedTicker
 from bokeh.plotting import figure
 
-from breakstep.report.page.figures.style import hover, new_figure, words
+from breakstep.report.page.figures.style import hover, new_figure, on_paper, words
 from breakstep.report.page.palette import LIGHT
 from breakstep.report.wording import seconds
 
@@ -35,6 +35,7 @@ def scaling_figure(panel: dict[str, Any]) -> figure:
     words(plot, x=[workers[0]], y=[low * 1.12], text=[" out of reach on any schedule"], text_color=LIGHT["soft"],
           text_font_style="italic")  # fmt: skip
     drawn = [_scaling_line(plot, rows, workers, side) for side in _SIDES]
+    _gains(plot, rows[:-1])
     hover(plot, drawn, [("", "side"), ("workers", "workers"), ("forecast", "shown"), ("between", "range")])
     return plot
 
@@ -53,9 +54,19 @@ def _scaling_line(plot: figure, rows: list[dict[str, Any]], workers: list[int], 
     plot.line("workers", "time", source=source, line_color=LIGHT[side], line_width=2.4, line_dash=dash)
     last = times[-1]
     words(plot, x=[workers[-1]], y=[last], text=[f"{side} {seconds(last)}"], text_color=LIGHT[side], text_align="right",
-          text_font_style="bold", y_offset=-16 if side == "lockstep" else 18)  # fmt: skip
+          text_font_style="bold", y_offset=-24 if side == "lockstep" else 24, **on_paper())  # fmt: skip
     return plot.scatter("workers", "time", source=source, marker=marker, size=8, fill_color=LIGHT[side],
                         line_color=LIGHT["paper"], name=f"scaling-{side}")  # fmt: skip
+
+
+def _gains(plot: figure, rows: list[dict[str, Any]]) -> None:
+    """How many times as fast tasks are, between the two lines where there is room."""
+    apart = [row for row in rows if row["lockstep_s"] > 1.15 * row["tasked_s"]]
+    words(
+        plot, x=[row["workers"] for row in apart], y=[math.sqrt(row["lockstep_s"] * row["tasked_s"]) for row in apart],
+        text=[f"{row['lockstep_s'] / row['tasked_s']:.2f}\u00d7" for row in apart], text_align="right", x_offset=-6,
+        text_font_style="bold", **on_paper(),
+    )  # fmt: skip
 
 
 def _round_values(low: float, high: float) -> list[float]:
@@ -120,8 +131,8 @@ def grain_figure(panel: dict[str, Any], side: str) -> figure:
     dots = plot.scatter("x", "y", source=source, size=9, fill_color=LIGHT[side], line_color=LIGHT["paper"],
                         name=f"grain-dots-{side}")  # fmt: skip
     best = times.index(min(times))
-    words(plot, x=[best], y=[times[best]], text=[f"best: {names[best]}, {seconds(times[best])}"], y_offset=-18,
-          text_align="center", text_color=LIGHT[side], text_font_style="bold")  # fmt: skip
+    words(plot, x=[best], y=[times[best]], text=[f"best: {names[best]}, {seconds(times[best])}"], y_offset=-22,
+          text_align="center", text_color=LIGHT[side], text_font_style="bold", **on_paper())  # fmt: skip
     hover(plot, [dots], [("tile", "tile"), ("tasks", "tasks"), ("run time", "shown")])
     return plot
 
@@ -139,7 +150,21 @@ def _layers(plot: figure, rows: list[dict[str, Any]], places: list[int]) -> None
     for key, token in (("compute_s", "wait"), ("engine_s", "machine"), ("wait_s", "shade_tasked")):
         top = [b + row[key] for b, row in zip(base, rows, strict=True)]
         plot.varea(x=places, y1=base, y2=top, fill_color=LIGHT[token], fill_alpha=0.8)
+        _layer_name(plot, key, base, top)
         base = top
+
+
+def _layer_name(plot: figure, key: str, base: list[float], top: list[float]) -> None:
+    """What a layer is, where it is thickest, if that is thick enough for a word."""
+    thickness = [high - low for low, high in zip(base, top, strict=True)]
+    place = thickness.index(max(thickness))
+    if thickness[place] < 0.09 * float(plot.y_range.end):
+        return
+    align = "left" if place == 0 else "right" if place == len(top) - 1 else "center"
+    words(
+        plot, x=[place], y=[(base[place] + top[place]) / 2], text_align=align,
+        text=[{"compute_s": " kernels", "engine_s": " dispatch ", "wait_s": "waits "}[key]],
+    )  # fmt: skip
 
 
 def _tile_name(tile: Any) -> str:

@@ -60,6 +60,11 @@ def words(plot: figure, **options: Any) -> Any:
     return plot.text(**{**defaults, **options})
 
 
+def on_paper() -> dict[str, Any]:
+    """Options of text that has to be read across lines: paper behind it."""
+    return {"background_fill_color": LIGHT["paper"], "background_fill_alpha": 0.85, "padding": 1}
+
+
 def hover(plot: figure, renderers: list[Any], rows: list[tuple[str, str]], **options: Any) -> None:
     """Show some columns of what the pointer is at; ``rows`` are labels and columns."""
     body = "".join(f"<div>{label} <b>@{{{column}}}</b></div>" for label, column in rows)

@@ -9,7 +9,7 @@ from breakstep.profile.run import Profile
 from breakstep.profile.words import LABELS
 from breakstep.report.page.numbers import seconds, share, significant
 from breakstep.report.page.runs import Runs
-from breakstep.report.page.waits import blame
+from breakstep.report.page.waits import blame, costliest
 
 
 def accounts_panel(runs: Runs) -> dict[str, Any]:
@@ -76,11 +76,8 @@ def _factors(profile: Profile) -> dict[str, float | None]:
 def _critical(profile: Profile) -> dict[str, Any]:
     """The chain of tasks that made the run as long as it was: its time by account, and by step [ns]."""
     chain = profile.ledger.chain
-    by_step = chain.by_step[chain.by_step.sum(axis=1) > 0]
-    return {
-        "span_ns": chain.span_ns,
-        "accounts_ns": dict(chain.accounts_ns),
-        "by_step_ns": {
-            str(step): {str(account): int(ns) for account, ns in row.items()} for step, row in by_step.iterrows()
-        },
-    }
+    by_step: dict[str, int] = {}
+    for stage, ns in chain.by_step.sum(axis=1).items():
+        step = "barriers" if str(stage).startswith("barrier:") else costliest(profile, str(stage))
+        by_step[step] = by_step.get(step, 0) + int(ns)
+    return {"span_ns": chain.span_ns, "accounts_ns": dict(chain.accounts_ns), "by_step_ns": by_step}
