@@ -62,6 +62,7 @@ class Bench:
     calls: int = 0
     writable: bool = False
     inside: bool = False  # a kernel is running
+    is_erratic: bool = False  # the same call gives other bits
 
     def __post_init__(self) -> None:
         self.watch = Watch()

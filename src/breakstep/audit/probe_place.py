@@ -22,24 +22,32 @@ SECONDS = 10.0  # on influences
 
 def probe_numbers(bench: Bench) -> Iterator[Finding]:
     """Another number for the same tile; then another place and another cycle, on which it may depend."""
+    yield from _tile_number(bench)
     said: set[str] = set()
     for sample in bench.samples:
         plain, call = bench.run(sample), sample.call
         if plain.arrays is None or not bench.run(sample).same(plain):
             continue
-        for number in (call.tile + 1, call.tile + 7, 0):
-            outcome = bench.run(sample, call=replace(call, tile=number))
-            if not outcome.same(plain) and "tile" not in said:
-                said.add("tile")
-                yield Finding(
-                    bench.part.name, "tile number",
-                    f"The same zones as tile {number} instead of {call.tile} give other bits:"
-                    f" {first_difference(plain, outcome, call.origin)}.",
-                )  # fmt: skip
         for what, other in _elsewhere(call):
             if what not in said and not bench.run(sample, call=other).same(plain):
                 said.add(what)
                 yield Finding(bench.part.name, "position", f"It depends on {what}.", NOTE)
+
+
+def _tile_number(bench: Bench) -> Iterator[Finding]:
+    for base in bench.in_time():
+        plain, call = base.outcome, base.call
+        if plain is None or plain.arrays is None:
+            continue
+        for number in (call.tile + 1, call.tile + 7, 0):
+            outcome = bench.run(base.sample, base.given, call=replace(call, tile=number), values=base.values)
+            if not outcome.same(plain):
+                yield Finding(
+                    bench.part.name, "tile number",
+                    f"The same zones as tile {number} instead of {call.tile} give other bits:"
+                    f" {first_difference(plain, outcome, call.origin)} (cycle {call.cycle}).",
+                )  # fmt: skip
+                return
 
 
 def _elsewhere(call: Call) -> Iterator[tuple[str, Call]]:

@@ -142,7 +142,7 @@ def _other_value(bench: Bench, name: str, base: Base) -> Iterator[Outcome]:
     own = base.values.get(name)
     if own is None:
         return
-    for factor in (1.001, 0.5, 3.0, -1.0, 1e-6, 1e6, np.nan):
+    for factor in (1.001, 0.5, 3.0, -1.0, 1e-6, 1e6, 1e100):
         with np.errstate(all="ignore"):
             changed = np.asarray(own * factor + (own == 0.0) * factor, np.float64)
         yield bench.run(base.sample, base.given, call=base.call, values={**base.values, name: changed})
@@ -183,7 +183,7 @@ def region_matters(bench: Bench, name: str, mask_of: Callable[[Array], NDArray[n
 
 
 def _replacements(array: Array, mask: NDArray[np.bool_], seed: int) -> Iterator[Array]:
-    """The array with the masked zones changed: a little, by factors, by jumps of any size, to NaN."""
+    """The array with the masked zones changed: a little, by factors, by jumps of any size, to absurd numbers."""
     rng = np.random.default_rng(seed)
     old = array[:, mask]
     if not old.size:
@@ -196,7 +196,7 @@ def _replacements(array: Array, mask: NDArray[np.bool_], seed: int) -> Iterator[
             old * np.exp(noise),
             old + size * noise,
             -old + size * 1e3 * np.abs(noise),
-            np.full_like(old, np.nan),
+            np.full_like(old, -1e150),  # not NaN, which shows even through a factor of 0
         ]
     for new in made:
         changed = array.copy()

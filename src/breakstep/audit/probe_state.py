@@ -18,6 +18,7 @@ from breakstep.audit.findings import NOTE, Finding
 from breakstep.audit.reach import SHARED, Reached, reached_state, static_memory
 from breakstep.audit.sample import digest
 
+REPEATS = 24  # calls in a row, for what happens now and then
 THREAD_SECONDS = 0.15  # on concurrent calls; a race that shows less often than that is found by its memory
 
 
@@ -33,6 +34,8 @@ def probe_repeats(bench: Bench) -> Iterator[Finding]:
     after = _everything(bench)
     _plain(bench, bases[-1])
     third = _plain(bench, first)
+    more = (_plain(bench, first) for _ in range(REPEATS))
+    odd = next((outcome for outcome in more if not outcome.same(third)), None)
     last = _everything(bench)
     changed = before.differing(after) | after.differing(last)
     kept = sorted(changed - SHARED.keys())
@@ -45,8 +48,12 @@ def probe_repeats(bench: Bench) -> Iterator[Finding]:
             name, "hidden state",
             f"A call differs after another one has come between: {first_difference(once, third)}{where}.",
         )  # fmt: skip
+    elif odd is not None:
+        kind = "hidden state" if kept else "not repeatable"
+        yield Finding(name, kind, f"One of {REPEATS} calls in a row differs: {first_difference(third, odd)}{where}.")
     elif kept:
         yield from _quiet_state(name, kept, after.arrays)
+    bench.is_erratic = not (once.same(again) and once.same(third) and odd is None)
     for shared in sorted(changed & SHARED.keys()):
         yield Finding(name, "side effect", f"A call changes {shared}, which the whole process shares.")
 
