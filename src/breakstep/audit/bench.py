@@ -14,7 +14,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from breakstep.audit.calls import Outcome, Part, call_part
+from breakstep.audit.calls import Outcome, Part, call_watched
 from breakstep.audit.memory import MARGIN, Guarded, Watch, fill_heap
 from breakstep.audit.sample import Sample
 from breakstep.mesh.fields import Field
@@ -145,10 +145,7 @@ class Bench:
         )
         self.inside = True
         with np.errstate(all="ignore"):
-            with self.watch.on():
-                outcome = call_part(*arguments)
-            if outcome.kind == "SystemError":  # NumPy freed while it raised, and a watched free loses the error
-                outcome = call_part(*arguments)
+            outcome = call_watched(self.watch, *arguments)
         fill_heap(0)
         self.inside = False
         self.calls += 1

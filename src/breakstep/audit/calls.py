@@ -11,6 +11,7 @@ from typing import Any, TypeAlias
 import numpy as np
 from numpy.typing import NDArray
 
+from breakstep.audit.memory import Watch
 from breakstep.errors import BreakstepError
 from breakstep.mesh.fields import Field
 from breakstep.mesh.mesh import Triple
@@ -126,6 +127,24 @@ def call_part(
     return outcome
 
 
+def call_watched(
+    watch: Watch,
+    part: Part,
+    given: Mapping[str, Array],
+    call: Call,
+    others: Mapping[str, Array],
+    values: Mapping[str, Array],
+) -> Outcome:
+    """The same while NumPy's memory is watched.
+
+    Freeing watched memory loses an error that NumPy has set already and leaves a SystemError; the call is then
+    repeated unwatched, for its own error.
+    """
+    with watch.on():
+        outcome = call_part(part, given, call, others, values)
+    return call_part(part, given, call, others, values) if outcome.kind == "SystemError" else outcome
+
+
 def _taken(made: Any, part: Part) -> Outcome:
     if isinstance(part, Reduction):
         try:
@@ -143,7 +162,7 @@ def _taken(made: Any, part: Part) -> Outcome:
 def _place(error: Exception) -> str:
     if isinstance(error, BreakstepError):
         return ""
-    frames = traceback.extract_tb(error.__traceback__)[1:]
+    frames = [frame for frame in traceback.extract_tb(error.__traceback__) if frame.filename != __file__]
     return f"{Path(frames[-1].filename).name}, line {frames[-1].lineno}" if frames else ""
 
 

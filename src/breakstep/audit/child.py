@@ -18,7 +18,6 @@ from typing import Any
 from breakstep.audit.bench import Bench
 from breakstep.audit.carry import load, save
 from breakstep.audit.findings import NOTE, Finding
-from breakstep.audit.memory import Watch
 from breakstep.audit.probe_memory import probe_pages, probe_protected, probe_surroundings, probe_uninitialised
 from breakstep.audit.probe_place import probe_cut, probe_influence, probe_numbers
 from breakstep.audit.probe_reads import probe_contract, probe_corners, probe_undeclared, probe_unused
@@ -83,8 +82,7 @@ def walk(folder: Path, lines: Lines, skip: frozenset[str], cycles: int) -> None:
     program = load(folder / "program")
     walked = Walk(program, cycles, skip, lambda part: lines.say(begins=part))
     try:
-        with Watch().on():  # what writes a little past its arrays then spoils nothing, and the walk goes on
-            walked.run()
+        walked.run()
     except BreakstepError as error:
         lines.say(stopped=str(error))
     splitting = program.problem.splitting

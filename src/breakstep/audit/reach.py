@@ -207,6 +207,7 @@ def _installed_places() -> tuple[Path, ...]:
     return tuple(Path(path).resolve() for path in paths)
 
 
+@functools.cache
 def _is_installed(file: Path) -> bool:
     resolved = file.resolve()
     return any(resolved.is_relative_to(place) for place in _installed_places())

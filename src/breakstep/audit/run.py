@@ -154,6 +154,9 @@ def _walked(program: Program, folder: Path, cycles: int, timeout: float) -> list
     for line in ran.said:
         if "part" in line:
             parts[line["part"]].samples = int(line["samples"])
+    stopped = next((str(line["stopped"]) for line in ran.said if "stopped" in line), "")
+    if stopped and not any(part.samples or part.findings for part in parts.values()):
+        raise KernelError(f"the audit found no state to begin with: {stopped}")
     return list(parts.values())
 
 

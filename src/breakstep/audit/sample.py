@@ -13,7 +13,8 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from breakstep.audit.calls import Outcome, Part, call_part, name_writes
+from breakstep.audit.calls import Outcome, Part, call_watched, name_writes
+from breakstep.audit.memory import Watch
 from breakstep.audit.reach import SHARED, Reached, reached_state
 from breakstep.engine.program import Program
 from breakstep.mesh.halo import assemble, cut, plan_halo
@@ -90,6 +91,7 @@ class Walk:
         self.state: dict[str, list[Array]] = {}
         self.values: dict[str, Array] = {}
         self._seen: dict[str, Reached] = {}
+        self._watch = Watch()  # what writes a little past its arrays then spoils nothing, and the walk goes on
 
     def run(self) -> None:
         """Walk, and keep samples."""
@@ -125,9 +127,9 @@ class Walk:
         for tile, outcome in self._calls(step, cycle, iteration, repeat):
             if outcome.arrays is None or name_writes(outcome, step, self.program.fields, self.tiles[tile].shape):
                 self.failures.setdefault(step.name, outcome.error)
-                return
+                continue
             made.append({name: np.ascontiguousarray(outcome.arrays[name]).copy() for name in step.writes})
-        for name in step.writes if made else ():
+        for name in step.writes if len(made) == len(self.tiles) else ():
             self.state[name] = [arrays[name] for arrays in made]
 
     def _reduce(self, reduction: Reduction, cycle: int, iteration: int, repeat: str) -> None:
@@ -135,9 +137,9 @@ class Walk:
         for _, outcome in self._calls(reduction, cycle, iteration, repeat):
             if outcome.arrays is None:
                 self.failures.setdefault(reduction.name, outcome.error)
-                return
+                continue
             vectors.append(outcome.arrays[""].copy())
-        if vectors:
+        if len(vectors) == len(self.tiles):
             combined = combine(reduction.combine, vectors)
             self.values[reduction.name] = finish_rows(reduction, combined, self.values.get(reduction.name), 1)[-1]
 
@@ -162,7 +164,7 @@ class Walk:
             given = {read.field: _protected(self._padded(tile, read)) for read in part.reads}
             others = _Copies({name: arrays[tile] for name, arrays in self.state.items()})
             kept = self._sample(part, tile, call, repeat) if tile in wanted else None
-            outcome = call_part(part, given, call, others, self.values)
+            outcome = call_watched(self._watch, part, given, call, others, self.values)
             if kept is not None:
                 kept.digest = digest(outcome)
                 self.samples.setdefault(part.name, []).append(kept)

@@ -9,7 +9,7 @@ import pytest
 
 from breakstep.audit.run import PartAudit, audit_program
 from breakstep.steps.reduction import Reduction
-from tests.audit_cases import c_cases, numba_cases, python_false, python_true
+from tests.audit_cases import adversarial, c_cases, numba_cases, python_false, python_true
 from tests.audit_cases.common import Case, case_program
 
 EVOLVING = {"evolve_u", "evolve_w", "dt", "other", "largest_move"}  # correct parts that every program has
@@ -47,7 +47,10 @@ def names(parts: list[PartAudit]) -> set[str]:
 
 def test_the_seeded_set_is_large_enough() -> None:
     rows = [(name, kinds) for name, _, _, kinds in c_cases.TABLE]
-    rows += [(case.name, case.kinds) for case in (*python_false.CASES, *numba_cases.CASES, *python_true.CASES)]
+    rows += [
+        (case.name, case.kinds)
+        for case in (*python_false.CASES, *adversarial.CASES, *numba_cases.CASES, *python_true.CASES)
+    ]
     rows += [(name, (kind,)) for name, (_, kind) in python_false.REDUCTIONS.items()]
     rows += [(name, ()) for name in python_true.REDUCTIONS]
     assert sum(bool(kinds) for _, kinds in rows) >= 40
@@ -56,7 +59,9 @@ def test_the_seeded_set_is_large_enough() -> None:
 
 @pytest.mark.slow
 def test_false_declarations_in_python_are_found() -> None:
-    parts, expected = audited(python_false.CASES, python_false.REDUCTIONS, fields=(("w2", False),))
+    parts, expected = audited(
+        [*python_false.CASES, *adversarial.CASES], python_false.REDUCTIONS, fields=(("w2", False),)
+    )
     assert names(parts) == set(expected)
     assert missed(parts, expected) == {}
 
