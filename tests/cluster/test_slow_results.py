@@ -32,7 +32,9 @@ class Ponder:
     fails: bool = False
 
     def __call__(self, combined: Array, previous: Array | None) -> Array:
-        time.sleep(self.seconds)
+        end = time.thread_time() + self.seconds  # at work: asleep it would not count as computing
+        while time.thread_time() < end:
+            pass
         if self.fails and previous is not None:
             raise LookupError("no such time step")
         return next_step(combined, previous)
