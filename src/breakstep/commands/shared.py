@@ -128,7 +128,7 @@ def crowded(place: Place, program: Program) -> Place:
     """
     processors = available_processors()
     waits = all(timed_kernel(step) for step in program.problem.splitting.steps())
-    if not waits or not place.is_local or place.dispatch == "serial" or (place.workers or 1) <= processors:
+    if not waits or not place.is_local or place.dispatch != "resident" or (place.workers or 1) <= processors:
         return place
     click.echo(
         f"breakstep: all steps are by timer, so {place.workers} workers share"

@@ -233,3 +233,20 @@ def test_names_that_no_file_system_takes(breakstep: Shell) -> None:
     for arguments in (("ledger", long), ("run", f"{long}.toml"), ("run", "--resume", long)):
         refused(breakstep(*arguments), "cannot be read (File name too long)")
     refused(breakstep("run", "shock_tube", "--scheduler-file", long), "File name too long")
+
+
+def test_dilation_needs_steps_by_timer(breakstep: Shell) -> None:
+    for command in ("compare", "run"):
+        refused(breakstep(command, "shock_tube", "--dilate", "2"), "--dilate stretches the waits of steps by timer")
+
+
+def test_faults_of_timer_records_are_said_together(breakstep: Shell, tmp_path: Path) -> None:
+    (tmp_path / "r.csv").write_text("rank,step,cycle,seconds\n0,burn,0,0.1\n1,burn,0,-1\n0,burn,1,0.1\n1,brun,1,0.1\n")
+    text = 'name = "s"\n[run]\ncycles = 2\n[timers]\nfile = "r.csv"\nranks = [2]\n[[timers.steps]]\nname = "burn"\n'
+    (tmp_path / "s.toml").write_text(text)
+    refused(
+        breakstep("run", tmp_path / "s.toml"),
+        "s.toml: timers.file: r.csv: seconds: expected numbers from 0 to 1e+06, came -1.0 in line 3",
+        "r.csv: step: expected burn, came brun in line 5; did you mean burn?",
+        "r.csv: there is no record of rank 1, step burn, cycle 1",
+    )

@@ -12,7 +12,7 @@ from breakstep.cli import COMMANDS, cli
 from tests.unit.commands.conftest import Shell
 
 SHARED = (
-    *("--set", "--workers", "--threads", "--placement", "--dispatch", "--memory-limit"),
+    *("--set", "--workers", "--threads", "--dilate", "--placement", "--dispatch", "--memory-limit"),
     *("--address", "--scheduler-file", "--out", "--json"),
 )
 OPTIONS = {

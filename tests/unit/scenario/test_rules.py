@@ -79,7 +79,7 @@ def test_a_lag_at_the_limits_is_allowed() -> None:
 def test_a_run_needs_a_step() -> None:
     spoilt = tables(hydro=None, transport=None, burning=None, species={"network": "alpha13"})
     (fault,) = faults_of(spoilt)
-    assert fault == "example.toml: no step takes part; add one of the tables [hydro], [transport], [burning]"
+    assert fault == "example.toml: no step takes part; add one of the tables [hydro], [transport], [burning], [timers]"
 
 
 def test_without_hydrodynamics_the_step_needs_a_bound() -> None:
