@@ -50,7 +50,7 @@ def lower_bounds(
     lengths = graph.duration_ns[steps] + machine.overhead_ns
     area = -(-int(lengths.sum()) // machine.slots)
     head, tail = heads(graph, machine, owner, kinds), tails(graph, machine, owner, kinds)
-    path = int(tail[steps].max(initial=0))
+    path = int(tail.max(initial=0))
     if owner is None:
         return Bounds(area, path, 0)
     homes = checked_owner(graph, machine, owner)[steps]
@@ -102,7 +102,7 @@ def interval_bound(graph: ReplayGraph, slots: int, kinds: int = ALL_KINDS, point
     steps = graph.on_worker
     length = graph.duration_ns[steps]
     head, tail = heads(graph, machine, None, kinds)[steps], tails(graph, machine, None, kinds)[steps]
-    span = int(tail.max(initial=0))
+    span = int((head + tail).max(initial=0))
     latest = span - tail
     moments = np.unique(np.concatenate([head, latest, head + length, latest + length]))
     if len(moments) > points:

@@ -72,7 +72,7 @@ def replay_fixed(graph: ReplayGraph, machine: MachineModel, schedule: Schedule, 
     ForecastError
         The schedule is not one of this graph on this machine.
     """
-    _check(graph, machine, schedule)
+    _check(graph, machine, schedule, kinds)
     out = graph.outgoing
     counts = Counts.none(machine.workers)
     times = np.zeros(graph.tasks, dtype=np.int64), np.zeros(graph.tasks, dtype=np.int64)
@@ -93,9 +93,19 @@ def replay_fixed(graph: ReplayGraph, machine: MachineModel, schedule: Schedule, 
 
 
 def fixed_makespans(graph: ReplayGraph, schedule: Schedule, variants: Sequence[Variant], jobs: int = 2) -> Int64s:
-    """Makespan of each variant [ns], shape (variants,), on ``jobs`` threads of this process."""
+    """Makespan of each variant [ns], shape (variants,), on ``jobs`` threads of this process.
+
+    Raises
+    ------
+    ForecastError
+        The schedule is not one of this graph on one of the machines.
+    """
+    bound = 0
     for variant in variants:
-        _check(graph, variant.machine, schedule)
+        bound |= variant.kinds
+    for machine in {variant.machine for variant in variants}:
+        _check(graph, machine, schedule, bound)
+        bound = 0  # edges need to be looked at once
     groups = [variants[at : at + LANES] for at in range(0, len(variants), LANES)]
     graph.outgoing  # noqa: B018  (made once, before the threads share it)
     with ThreadPoolExecutor(max(1, jobs)) as pool:
@@ -103,8 +113,10 @@ def fixed_makespans(graph: ReplayGraph, schedule: Schedule, variants: Sequence[V
     return np.concatenate([np.zeros(0, dtype=np.int64), *found])
 
 
-def recorded_schedule(graph: ReplayGraph, slot: Int32s, start_ns: Int64s, finish_ns: Int64s) -> Schedule:
-    """The order of a recorded run.
+def recorded_schedule(
+    graph: ReplayGraph, slot: Int32s, start_ns: Int64s, finish_ns: Int64s, kinds: int = ALL_KINDS
+) -> Schedule:
+    """The order of a recorded run in which the edges of ``kinds`` bound.
 
     Clocks of workers agree only so well, so a task may seem to be done before its input. The order
     on each thread is then kept, and the tasks are sorted by the earliest times that it allows.
@@ -117,7 +129,7 @@ def recorded_schedule(graph: ReplayGraph, slot: Int32s, start_ns: Int64s, finish
     slot = np.asarray(slot, dtype=np.int32)
     order = np.lexsort((np.arange(graph.tasks), start_ns, finish_ns)).astype(np.int32)
     place = np.argsort(order)
-    if np.all(place[graph.producer] < place[graph.consumer]):
+    if not _misplaced(graph.first, graph.producer, graph.edge_kind, place, np.int64(kinds)):
         return Schedule(slot, order)
     by_thread = np.lexsort((np.arange(graph.tasks), finish_ns, start_ns, slot))
     by_thread = by_thread[slot[by_thread] >= 0]
@@ -125,23 +137,31 @@ def recorded_schedule(graph: ReplayGraph, slot: Int32s, start_ns: Int64s, finish
     same = slot[by_thread[:-1]] == slot[by_thread[1:]]
     then[by_thread[:-1][same]] = by_thread[1:][same]
     out = graph.outgoing
-    sorted_tasks = _sorted(graph.first, out.first, out.consumer, then)
+    sorted_tasks = _sorted(graph.first, graph.edge_kind, out.first, out.consumer, out.edge_kind, then, np.int64(kinds))
     if len(sorted_tasks) < graph.tasks:
         raise ForecastError(
             f"{graph.tasks - len(sorted_tasks)} of {graph.tasks} tasks of the recorded order would wait for each"
             " other: its threads ran them in an order that the edges forbid."
         )
     threads = int(slot.max(initial=0)) + 1
-    earliest = replay_fixed(graph, MachineModel(threads), Schedule(slot, sorted_tasks))
+    earliest = replay_fixed(graph, MachineModel(threads), Schedule(slot, sorted_tasks), kinds)
     return Schedule(slot, earliest.order)
 
 
-def _check(graph: ReplayGraph, machine: MachineModel, schedule: Schedule) -> None:
+def _check(graph: ReplayGraph, machine: MachineModel, schedule: Schedule, kinds: int) -> None:
     fits = len(schedule.slot) == len(schedule.order) == graph.tasks
     if not fits or schedule.slot.max(initial=-1) >= machine.slots or np.any(schedule.slot[graph.on_worker] < 0):
         raise ForecastError(
             f"A schedule of {len(schedule.order)} tasks on threads up to {schedule.slot.max(initial=-1)} was given;"
             f" expected {graph.tasks} tasks on threads 0 to {machine.slots - 1}."
+        )
+    place = np.full(graph.tasks, -1, dtype=np.int64)
+    place[schedule.order] = np.arange(graph.tasks)
+    wrong = _misplaced(graph.first, graph.producer, graph.edge_kind, place, np.int64(kinds))
+    if place.min(initial=0) < 0 or wrong:
+        raise ForecastError(
+            f"A schedule was given in which {wrong} of {graph.edges} edges point backwards; expected every task once, after"
+            " its inputs. Play the schedule with the edge kinds that bound in it."
         )
 
 
@@ -180,12 +200,32 @@ def _group(graph: ReplayGraph, schedule: Schedule, variants: Sequence[Variant]) 
 
 
 @compiled_loop
-def _sorted(first: Int64s, out_first: Int64s, consumer: Int32s, then: Int64s) -> Int32s:
+def _misplaced(first: Int64s, producer: Int32s, edge_kind: Int8s, place: Int64s, kinds: int) -> int:
+    """How many edges lead to a task that stands before its input."""
+    wrong = 0
+    for task in range(len(place)):
+        for edge in range(first[task], first[task + 1]):
+            if (kinds >> edge_kind[edge]) & 1 and place[producer[edge]] >= place[task]:
+                wrong += 1
+    return wrong
+
+
+@compiled_loop
+def _sorted(
+    first: Int64s,
+    in_kind: Int8s,
+    out_first: Int64s,
+    consumer: Int32s,
+    out_kind: Int8s,
+    then: Int64s,
+    kinds: int,
+) -> Int32s:
     """Tasks in an order that edges and threads allow; fewer than all when they contradict each other."""
     tasks = len(then)
-    missing = np.empty(tasks, dtype=np.int64)
+    missing = np.zeros(tasks, dtype=np.int64)
     for task in range(tasks):
-        missing[task] = first[task + 1] - first[task]
+        for edge in range(first[task], first[task + 1]):
+            missing[task] += (kinds >> in_kind[edge]) & 1
     for task in range(tasks):
         if then[task] >= 0:
             missing[then[task]] += 1
@@ -200,6 +240,8 @@ def _sorted(first: Int64s, out_first: Int64s, consumer: Int32s, then: Int64s) ->
         task = order[taken]
         taken += 1
         for edge in range(out_first[task], out_first[task + 1]):
+            if not (kinds >> out_kind[edge]) & 1:
+                continue
             missing[consumer[edge]] -= 1
             if missing[consumer[edge]] == 0:
                 order[count] = consumer[edge]
