@@ -1,6 +1,11 @@
 /* Routines in the form a legacy code has them: flat arrays, work done in place or into an array of the caller's.
    u is padded by hx and hy ghost zones, the rest is not. All arithmetic is invented. */
+#include <fenv.h>
 #include <stdlib.h>
+#include <string.h>
+#ifdef __SSE2__
+#include <xmmintrin.h>
+#endif
 
 #define U(i, j) u[((i) + hx) * (ny + 2 * hy) + (j) + hy]
 #define OUT(i, j) out[(i) * ny + (j)]
@@ -91,3 +96,50 @@ void draws(ARGUMENTS) { EACH OUT(i, j) = U(i, j) + 1e-9 * rand(); }
 void dies(ARGUMENTS) { volatile double *nowhere = 0; EACH OUT(i, j) = U(i, j) + *nowhere; }
 
 void hangs(ARGUMENTS) { volatile double x = 1.0; while (x > 0.0) x = U(0, 0) * 0.0 + 1.0; OUT(0, 0) = x; }
+
+/* What follows was thought up after the audit was written. */
+void flushes(ARGUMENTS) {
+#ifdef __SSE2__
+    _mm_setcsr(_mm_getcsr() | 0x8040);
+#else
+    fesetround(FE_UPWARD);
+#endif
+    EACH OUT(i, j) = U(i, j) + 1.0;
+}
+
+void rounds_up(ARGUMENTS) { fesetround(FE_UPWARD); EACH OUT(i, j) = U(i, j) / 3.0; }
+
+void far_overrun(ARGUMENTS) { out[nx * ny + 700] = 3.0; EACH OUT(i, j) = U(i, j); }
+
+void far_read(ARGUMENTS) { EACH OUT(i, j) = U(i, j); if (u[nx * ny + 1400] > 1e250) OUT(0, 0) = 0; }
+
+static double *sum = 0;
+void heap_state(ARGUMENTS) { if (!sum) sum = calloc(1, 8); *sum += 1e-6; EACH OUT(i, j) = U(i, j) + *sum; }
+
+static double *work = 0;
+void heap_scratch(ARGUMENTS) {
+    if (!work) work = malloc(1 << 16);
+    EACH work[i * ny + j] = U(i, j);
+    EACH OUT(i, j) = work[i * ny + j] * 2.0;
+}
+
+void in_place_when_hot(ARGUMENTS) { EACH OUT(i, j) = U(i, j) * 2.0; EACH if (U(i, j) > 1e5) U(i, j) = 1e5; }
+
+void partly_when_hot(ARGUMENTS) { EACH if (U(i, j) < 1e5) OUT(i, j) = U(i, j); }
+
+/* Takes an input for the one before when their first and last zones agree. */
+static double memo_in[8192], memo_out[8192];
+static long memo_size = 0;
+void memo(ARGUMENTS) {
+    long n = nx * ny;
+    if (memo_size == n && memo_in[0] == U(0, 0) && memo_in[n - 1] == U(nx - 1, ny - 1)) {
+        memcpy(out, memo_out, n * 8);
+        return;
+    }
+    EACH { OUT(i, j) = U(i, j) * U(i, j); memo_in[i * ny + j] = U(i, j); }
+    memcpy(memo_out, out, n * 8);
+    memo_size = n;
+}
+
+static _Thread_local double mine = 0.0;
+void thread_local_state(ARGUMENTS) { mine += 1.0; EACH OUT(i, j) = U(i, j) + mine; }

@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from breakstep.audit.calls import Outcome, Part, call_watched
-from breakstep.audit.memory import MARGIN, Guarded, Watch, fill_heap
+from breakstep.audit.memory import MARGIN, Guarded, Watch, fill_heap, odd_arithmetic, usual_arithmetic
 from breakstep.audit.sample import Sample
 from breakstep.mesh.fields import Field
 from breakstep.mesh.mesh import Triple
@@ -66,7 +66,7 @@ class Bench:
 
     def __post_init__(self) -> None:
         self.watch = Watch()
-        self._had_denormals = has_denormals()
+        self._odd = odd_arithmetic()
         self.reads: tuple[Read, ...] = self.part.reads
         self._bases: list[Base] = []
 
@@ -149,12 +149,12 @@ class Bench:
         fill_heap(0)
         self.inside = False
         self.calls += 1
-        if self._had_denormals and not has_denormals():
+        odd = odd_arithmetic() if not self._odd else ""
+        if odd:
             self.incident(
-                "side effect", "denormals",
-                "it makes the processor take the smallest numbers for 0 (flags of the unit that computes, as the"
-                " compiler's -ffast-math sets them when a library is loaded), for whatever runs in the thread later",
-            )  # fmt: skip
+                "side effect", "arithmetic", f"it makes the processor {odd}, for all that its thread runs later"
+            )
+            usual_arithmetic()
         self._note(sample, outcome, guarded)
         if outcome.arrays is None and "read" in outcome.error and "only" in outcome.error and not self.writable:
             where = outcome.place or sample.where()
@@ -240,12 +240,6 @@ class Bench:
         origin = call.origin if turn % 2 else _moved(call, rng)
         call = replace(call, cycle=call.cycle + turn, origin=origin)
         return Base(sample, given, call, values)
-
-
-def has_denormals() -> bool:
-    """Whether the processor computes with numbers below 2.2e-308 rather than taking them for 0."""
-    smallest = np.array([2.0**-1030, 1.0])
-    return float(smallest[0]) * float(smallest[1]) != 0.0
 
 
 def _varied(array: Array, kind: int, turn: int, rng: np.random.Generator) -> Array:

@@ -7,6 +7,17 @@ from functools import cache
 from pathlib import Path
 
 _LOAD, _WRITE, _OBJECT, _TABLES = 1, 2, 1, (2, 11)  # segment type and flag, symbol type, sections .symtab and .dynsym
+_RUNTIME = ("completed.", "__", "_DYNAMIC", "_GLOBAL")  # variables of the compiler's runtime
+_PYTHON = ("Py", "pyx", "f2py", "capi", "module")  # and of extension modules: counts of references change there
+
+
+@cache
+def is_extension(file: str) -> bool:
+    """Whether a library is an extension module of Python, whose statics point at Python's objects."""
+    try:
+        return b"PyInit_" in Path(file).read_bytes()
+    except OSError:
+        return True
 
 
 @cache
@@ -58,6 +69,6 @@ def _variables(data: bytes, segments: list[tuple[int, int]]) -> set[tuple[str, i
             inside = any(start <= address and address + length <= start + most for start, most in segments)
             if info & 15 == _OBJECT and length and inside:
                 word = data[names + name : data.index(b"\0", names + name)].decode()
-                if not word.startswith(("completed.", "__", "_DYNAMIC", "_GLOBAL")):
+                if not word.startswith(_RUNTIME) and not any(mark in word for mark in _PYTHON):
                     found.add((word, int(address), int(length)))
     return found

@@ -19,7 +19,6 @@ Array = NDArray[np.float64]
 Bytes = NDArray[np.uint8]
 
 MARGIN = 8192  # bytes of poison on each side: a few rows of a small tile
-SURROUND = 256  # bytes of canary around each array that a kernel allocates
 CANARY = 0xA7  # unless a probe says otherwise
 _M_PERTURB = -6  # glibc: fill what malloc gives and free takes
 PROT_NONE, PROT_READ, PROT_WRITE = 0, 1, 2
@@ -75,19 +74,34 @@ class Paged:
     """A copy of an array that ends, or begins, at a page that nobody may touch, and may itself be unwritable."""
 
     def __init__(self, array: Array, *, at_end: bool, writable: bool) -> None:
-        pages = max(1, -(-array.nbytes // PAGE))
-        self._map = mmap.mmap(-1, (pages + 2) * PAGE)
+        inside = max(1, -(-array.nbytes // PAGE)) * PAGE
+        self._map = mmap.mmap(-1, inside + 2 * GUARD)
         base = ctypes.addressof(ctypes.c_char.from_buffer(self._map))
-        offset = PAGE + ((pages * PAGE - array.nbytes) // 16 * 16 if at_end else 0)
+        offset = GUARD + ((inside - array.nbytes) // 16 * 16 if at_end else 0)
         self.array: Array = np.frombuffer(self._map, np.float64, array.size, offset).reshape(array.shape)
         self.array[...] = array
         for start, length, allowed in (
-            (base, PAGE, PROT_NONE),
-            (base + (pages + 1) * PAGE, PAGE, PROT_NONE),
-            (base + PAGE, pages * PAGE, PROT_READ | (PROT_WRITE if writable else 0)),
+            (base, GUARD, PROT_NONE),
+            (base + GUARD + inside, GUARD, PROT_NONE),
+            (base + GUARD, inside, PROT_READ | (PROT_WRITE if writable else 0)),
         ):
             if libc.mprotect(start, length, allowed) != 0:
                 raise OSError(ctypes.get_errno(), "mprotect refused")
+
+
+def odd_arithmetic() -> str:
+    """How this thread's processor departs from the usual arithmetic, in words; "" if it does not."""
+    tiny, one, three = np.array([2.0**-1030, 1.0, 3.0]).tolist()
+    if tiny * one == 0.0:
+        return "take the smallest numbers for 0, as -ffast-math does when a library is loaded"
+    third = one / three
+    return "round in another direction" if third != 0.3333333333333333 or -third != -one / three else ""
+
+
+def usual_arithmetic() -> None:
+    """Undo what a kernel did to the processor's arithmetic, where the C library knows how."""
+    if hasattr(libc, "fesetenv"):
+        libc.fesetenv(ctypes.c_void_p(-1))  # FE_DFL_ENV of glibc
 
 
 def fill_heap(byte: int) -> None:
@@ -115,6 +129,11 @@ class _Handler(ctypes.Structure):
 class Watch:
     """NumPy's allocations between canaries, filled with a pattern; install once a process.
 
+    Parameters
+    ----------
+    surround : int
+        Bytes of canary on each side of an array; a multiple of 64.
+
     Attributes
     ----------
     fill, canary : int
@@ -125,12 +144,14 @@ class Watch:
         Bytes beyond an array that somebody wrote, the most seen since it was last set to 0.
     """
 
-    def __init__(self) -> None:
+    def __init__(self, surround: int = MARGIN) -> None:
+        self.surround = surround
         self.fill = 0x00
         self.canary = CANARY
         self.paged = False
         self.overrun = 0
         self._live: dict[int, tuple[int, int]] = {}  # address -> (size, canary)
+        self._canaries: dict[int, bytes] = {}
         self._mapped: dict[int, tuple[int, int]] = {}  # address -> (start and length of its pages)
         functions = _MALLOC(self._malloc), _CALLOC(self._calloc), _REALLOC(self._realloc), _FREE(self._free)
         self._handler = _Handler(b"watched", 1, _Allocator(None, *functions))
@@ -154,16 +175,24 @@ class Watch:
         return self.overrun
 
     def _look(self, address: int, size: int, canary: int) -> None:
-        expected = bytes([canary]) * SURROUND
+        expected = self._expected(canary)
         # Not string_at at first: it would raise, and so lose, an error that NumPy has set before it frees.
-        if not (libc.memcmp(address - SURROUND, expected, SURROUND) or libc.memcmp(address + size, expected, SURROUND)):
+        if not (
+            libc.memcmp(address - self.surround, expected, self.surround)
+            or libc.memcmp(address + size, expected, self.surround)
+        ):
             return
-        before = ctypes.string_at(address - SURROUND, SURROUND)
-        after = ctypes.string_at(address + size, SURROUND)
+        before = ctypes.string_at(address - self.surround, self.surround)
+        after = ctypes.string_at(address + size, self.surround)
         if before != expected or after != expected:
-            low = SURROUND - next((i for i, b in enumerate(before) if b != canary), SURROUND)
-            high = next((SURROUND - i for i, b in enumerate(reversed(after)) if b != canary), 0)
+            low = self.surround - next((i for i, b in enumerate(before) if b != canary), self.surround)
+            high = next((self.surround - i for i, b in enumerate(reversed(after)) if b != canary), 0)
             self.overrun = max(self.overrun, low, high)
+
+    def _expected(self, canary: int) -> bytes:
+        if canary not in self._canaries:
+            self._canaries[canary] = bytes([canary]) * self.surround
+        return self._canaries[canary]
 
     def _malloc(self, _ctx: Any, size: int) -> int:
         return self._allocate(size, self.fill)
@@ -171,14 +200,14 @@ class Watch:
     def _allocate(self, size: int, fill: int) -> int:
         if self.paged:
             return self._map(size, fill)
-        start = libc.malloc(size + 2 * SURROUND)
+        start = libc.malloc(size + 2 * self.surround)
         if not start:
             return 0
-        ctypes.memset(start, self.canary, SURROUND)
-        ctypes.memset(start + SURROUND, fill, size)
-        ctypes.memset(start + SURROUND + size, self.canary, SURROUND)
-        self._live[start + SURROUND] = size, self.canary
-        return int(start) + SURROUND
+        ctypes.memset(start, self.canary, self.surround)
+        ctypes.memset(start + self.surround, fill, size)
+        ctypes.memset(start + self.surround + size, self.canary, self.surround)
+        self._live[start + self.surround] = size, self.canary
+        return int(start) + self.surround
 
     def _map(self, size: int, fill: int) -> int:
         """New memory whose last byte, but for alignment, lies before a forbidden page."""
@@ -211,7 +240,7 @@ class Watch:
         if address is None or known is None:
             return
         self._look(address, *known)
-        libc.free(address - SURROUND)
+        libc.free(address - self.surround)
 
 
 def _capsule(handler: _Handler) -> Any:

@@ -35,15 +35,14 @@ def probe_surroundings(bench: Bench) -> Iterator[Finding]:
 
 def probe_uninitialised(bench: Bench) -> Iterator[Finding]:
     """Different contents of new memory must not show in its results."""
-    for sample in bench.samples:
-        plain = bench.run(sample)
+    for base in bench.in_time():
         for fill in FILLS:
-            outcome = bench.run(sample, fill=fill)
-            if not outcome.same(plain) and bench.run(sample).same(plain):
+            plain, outcome = base.outcome, bench.again(base, fill=fill)
+            if plain is not None and not outcome.same(plain) and bench.again(base).same(plain):
                 yield Finding(
                     bench.part.name, "uninitialised",
                     "Its results hold, or depend on, memory that it never set: with other contents of new memory"
-                    f" ({sample.where()}), {first_difference(plain, outcome, sample.call.origin)}.",
+                    f" ({base.sample.where()}), {first_difference(plain, outcome, base.call.origin)}.",
                 )  # fmt: skip
                 return
 

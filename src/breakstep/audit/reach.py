@@ -24,9 +24,11 @@ from typing import Any
 
 import numpy as np
 
-from breakstep.audit.elf import static_places
+from breakstep.audit.elf import is_extension, static_places
 
 DEPTH = 8
+POINTERS = 4096  # words of one static variable that are tried as pointers
+MOST_POINTED = 1 << 22  # bytes looked at behind one pointer
 LARGEST = 1 << 26  # bytes of an array beyond which it is not looked at
 SHARED: dict[str, Callable[[], str]] = {
     "the generator of module random": lambda: repr(random.getstate()),
@@ -231,14 +233,35 @@ def static_memory(named: set[str]) -> dict[str, bytes]:
         return {}
     wanted = {str(Path(name).resolve()) for name in named}
     bases: dict[str, int] = {}
+    heaps: list[tuple[int, int]] = []
     for line in maps.read_text(encoding="utf-8").splitlines():
         parts = line.split(maxsplit=5)
+        start, end = (int(x, 16) for x in parts[0].split("-"))
         file = parts[5] if len(parts) > 5 else ""
         if ".so" in file and int(parts[2], 16) == 0:
-            bases.setdefault(file, int(parts[0].split("-")[0], 16))
+            bases.setdefault(file, start)
+        elif parts[1].startswith("rw") and file in ("", "[heap]"):
+            heaps.append((start, end))
     found: dict[str, bytes] = {}
     for file, base in bases.items():
         if file in wanted or not _is_installed(Path(file)):
-            for title, start, size in static_places(file):
-                found[title] = ctypes.string_at(base + start, size)
+            for title, offset, size in static_places(file):
+                found[title] = ctypes.string_at(base + offset, size)
+                if not is_extension(file):
+                    found |= _pointed_at(title, found[title], heaps)
+    return found
+
+
+def _pointed_at(title: str, data: bytes, heaps: list[tuple[int, int]]) -> dict[str, bytes]:
+    """The pieces of allocated memory that pointers among some static bytes lead to."""
+    found = {}
+    whole = np.frombuffer(data[: len(data) // 8 * 8], np.uint64)[:POINTERS]
+    for address in {int(word) for word in whole if word and word % 16 == 0}:
+        for start, end in heaps:
+            if start + 16 <= address < end:
+                (size,) = np.frombuffer(
+                    ctypes.string_at(address - 8, 8), np.uint64
+                )  # glibc: the piece's size and flags
+                length = min(int(size) & ~15, end - address, MOST_POINTED)
+                found[f"memory that {title} points to"] = ctypes.string_at(address, max(length - 16, 0))
     return found

@@ -14,16 +14,18 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from breakstep.audit.calls import Outcome, Part, call_watched, name_writes
-from breakstep.audit.memory import Watch
+from breakstep.audit.memory import Watch, usual_arithmetic
 from breakstep.audit.reach import SHARED, Reached, reached_state
 from breakstep.engine.program import Program
 from breakstep.mesh.halo import assemble, cut, plan_halo
 from breakstep.mesh.mesh import Triple
+from breakstep.steps.calling import call_user
 from breakstep.steps.reduction import Reduction, combine, finish_rows
 from breakstep.steps.splitting import Repeat
 from breakstep.steps.step import Array, Call, Read, Step
 
 EXTRA = 2  # ghost zones beyond the declared ones that a sample keeps, where the tiling has them
+WIDE = 1 << 16  # bytes around what kernels allocate during the walk
 MOST = 6  # samples of one step; more than that seldom showed anything new
 
 
@@ -91,7 +93,7 @@ class Walk:
         self.state: dict[str, list[Array]] = {}
         self.values: dict[str, Array] = {}
         self._seen: dict[str, Reached] = {}
-        self._watch = Watch()  # what writes a little past its arrays then spoils nothing, and the walk goes on
+        self._watch = Watch(WIDE)  # what writes past its arrays then spoils nothing, and the walk goes on
 
     def run(self) -> None:
         """Walk, and keep samples."""
@@ -104,7 +106,7 @@ class Walk:
                 self._reduce(reduction, cycle, -1, "")
             if program.problem.ended is not None and splitting.reductions:
                 first = self.values.get(splitting.reductions[0].name)
-                if first is None or program.problem.ended(first):
+                if first is None or call_user(program.problem.ended, first, where=f"ended before cycle {cycle}"):
                     break
             for item in splitting.orders[cycle % len(splitting.orders)]:
                 self._item(item, cycle)
@@ -119,7 +121,7 @@ class Walk:
                 self._step(step, cycle, iteration, item.name)
             self._reduce(item.until, cycle, iteration, item.name)
             verdict = self.values.get(item.until.name)
-            if verdict is None or item.stop(verdict):
+            if verdict is None or call_user(item.stop, verdict, where=f"stop of repeat {item.name}"):
                 return
 
     def _step(self, step: Step, cycle: int, iteration: int, repeat: str) -> None:
@@ -165,6 +167,7 @@ class Walk:
             others = _Copies({name: arrays[tile] for name, arrays in self.state.items()})
             kept = self._sample(part, tile, call, repeat) if tile in wanted else None
             outcome = call_watched(self._watch, part, given, call, others, self.values)
+            usual_arithmetic()
             if kept is not None:
                 kept.digest = digest(outcome)
                 self.samples.setdefault(part.name, []).append(kept)
