@@ -25,7 +25,7 @@ from breakstep.steps.splitting import Repeat
 from breakstep.steps.step import Array, Call, Read, Step
 
 EXTRA = 2  # ghost zones beyond the declared ones that a sample keeps, where the tiling has them
-WIDE = 1 << 16  # bytes around what kernels allocate during the walk
+WIDE = 1 << 15  # bytes around what kernels allocate during the walk; more makes the C library map pages for each
 MOST = 6  # samples of one step; more than that seldom showed anything new
 
 

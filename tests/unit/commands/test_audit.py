@@ -109,7 +109,7 @@ def test_a_step_that_never_returns_is_a_finding_and_others_are_audited() -> None
     steps = [*program.problem.splitting.orders[0], Step("hangs", waits_for_ever, (Read("u"),), ("u",))]
     program = Program(replace(program.problem, splitting=lie(steps, program.problem.splitting.reductions)), (6, 8))
     parts = {part.name: part for part in audit_program(program, timeout=3.0)}
-    assert [finding.kind for finding in parts["hangs"].faults] == ["timeout"]
+    assert {finding.kind for finding in parts["hangs"].faults} == {"timeout"}
     assert not parts["evolve_u"].faults
     assert parts["evolve_u"].samples
 
