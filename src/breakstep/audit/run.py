@@ -14,7 +14,7 @@ import tempfile
 import time
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -22,6 +22,8 @@ from breakstep.audit.carry import save
 from breakstep.audit.findings import NOTE, Finding
 from breakstep.engine.program import Program
 from breakstep.errors import DeclarationError, KernelError
+from breakstep.steps.rehearsal import without_waits
+from breakstep.steps.timed import timed_kernel
 
 DERIVED = {
     "call order": {"uninitialised", "outside memory", "not repeatable", "hidden state", "shared result"},
@@ -47,12 +49,15 @@ class PartAudit:
         ``step`` or ``reduction``.
     samples, calls : int
         Calls kept from the run, and calls made by the probes.
+    is_timed : bool
+        Whether it is a step by timer, without code.
     """
 
     name: str
     kind: str
     samples: int = 0
     calls: int = 0
+    is_timed: bool = False
     findings: list[Finding] = field(default_factory=list)
 
     @property
@@ -117,7 +122,9 @@ def audit_program(
     """
     with tempfile.TemporaryDirectory(prefix="audit-") as name:
         folder = Path(name)
-        save(program, folder / "program")
+        problem = program.problem
+        hurried = replace(problem, splitting=without_waits(problem.splitting))
+        save(Program(hurried, program.tile_shape, program.fuse), folder / "program")
         parts = _walked(program, folder, min(max(cycles, 1), program.problem.cycles), timeout)
         with ThreadPoolExecutor(max_workers=_processors()) as pool:
             list(pool.map(lambda part: _audited(part, folder, timeout, progress), parts))
@@ -130,7 +137,7 @@ def _processors() -> int:
 
 def _parts(program: Program) -> list[PartAudit]:
     splitting = program.problem.splitting
-    found = {step.name: PartAudit(step.name, "step") for step in splitting.steps()}
+    found = {s.name: PartAudit(s.name, "step", is_timed=timed_kernel(s) is not None) for s in splitting.steps()}
     found |= {reduction.name: PartAudit(reduction.name, "reduction") for reduction in splitting.all_reductions()}
     return list(found.values())
 
@@ -162,6 +169,10 @@ def _walked(program: Program, folder: Path, cycles: int, timeout: float) -> list
 
 def _audited(part: PartAudit, folder: Path, timeout: float, progress: Callable[[str], None]) -> None:
     """Probe one part, as often as it takes to get through."""
+    if part.is_timed:
+        text = "It is made of recorded times alone: nothing of a kernel's is there to be audited."
+        part.findings = [Finding(part.name, "position", text, NOTE)]
+        return
     progress(part.name)
     if not part.samples:
         if not part.findings:

@@ -19,7 +19,7 @@ def audit_lines(name: str, parts: Sequence[PartAudit], hazards: Sequence[dict[st
     guilty = sum(bool(part.faults) for part in parts)
     calls = sum(part.calls for part in parts)
     if faults:
-        head = f"{name}: {_counted(faults, 'fault')} in {guilty} of {_counted(len(parts), 'step and reduction', 's')}."
+        head = f"{name}: {_counted(faults, 'fault')} in {guilty} of {len(parts)} steps and reductions."
     else:
         head = (
             f"{name}: the declarations of all {len(parts)} steps and reductions hold, as far as {calls} calls can tell."
@@ -33,14 +33,12 @@ def audit_lines(name: str, parts: Sequence[PartAudit], hazards: Sequence[dict[st
         yield from _hazards(hazards)
 
 
-def _counted(count: int, noun: str, plural: str = "s") -> str:
-    if noun == "step and reduction":
-        return f"{count} steps and reductions"
-    return f"{count} {noun}{'' if count == 1 else plural}"
+def _counted(count: int, noun: str) -> str:
+    return f"{count} {noun}{'' if count == 1 else 's'}"
 
 
 def _block(part: PartAudit) -> Iterator[str]:
-    verdict = _counted(len(part.faults), "fault") if part.faults else "clean"
+    verdict = _counted(len(part.faults), "fault") if part.faults else "by timer" if part.is_timed else "clean"
     yield f"{part.kind} {part.name}: {verdict} ({_counted(part.samples, 'sample')}, {_counted(part.calls, 'call')})"
     for finding in part.findings:
         yield from _sentences(finding)

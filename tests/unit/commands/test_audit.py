@@ -15,6 +15,7 @@ from breakstep.audit.wording import audit_figures, audit_lines
 from breakstep.cli import cli
 from breakstep.engine.program import Program
 from breakstep.errors import DeclarationError, KernelError, ScenarioError
+from breakstep.mesh.mesh import Edge
 from breakstep.steps.splitting import lie
 from breakstep.steps.step import Array, Call, Read, Step
 from tests import toys
@@ -126,3 +127,22 @@ def test_a_clean_audit_says_how_sure_it_is() -> None:
         "gas: the declarations of all 2 steps and reductions hold, as far as 400 calls"
     )
     assert audit_figures("gas", parts, [])["faults"] == 0
+
+
+@pytest.mark.slow
+def test_steps_by_timer_are_named_and_not_probed() -> None:
+    done = CliRunner().invoke(cli, ["audit", "moving_hot_ranks"], standalone_mode=False)
+    assert done.exception is None
+    assert done.return_value == 0
+    assert "step sweep: by timer (6 samples, 0 calls)" in done.output
+    assert "reduction dt: clean" in done.output
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize(("zones", "tile"), [((12,), (4,)), ((8, 6, 6), (4, 3, 3))])
+def test_the_toy_is_clean_in_one_and_three_dimensions(zones: tuple[int, ...], tile: tuple[int, ...]) -> None:
+    edges = (Edge.PERIODIC, Edge.REFLECTING, Edge.FIXED)
+    toy = toys.Toy(zones, edges, two_orders=len(zones) > 1, two_passes=len(zones) > 1, dt_lag=1)
+    parts = audit_program(Program(toy.problem(), tile))
+    assert {part.name: [finding.text for finding in part.faults] for part in parts if part.faults} == {}
+    assert all(part.samples >= 4 for part in parts)
