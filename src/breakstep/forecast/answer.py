@@ -107,10 +107,14 @@ def recorded_errors(basis: Basis, runs: Sequence[Lifted] | None = None) -> dict[
 
 
 def _as_recorded(basis: Basis, run: Lifted) -> Question:
-    """Placement of the run that is compared with, where it is not the first of the basis."""
+    """Placement of the run that is compared with, where it is not the first of the basis, and its stretched waits."""
     named = str(run.profile.manifest["notes"].get("placement", "blocks"))
     same = run.workers == basis.first.workers
-    return Question(threads=run.threads, placement="" if same or named in ("shared", "dask") else named)
+    return Question(
+        threads=run.threads,
+        placement="" if same or named in ("shared", "dask") else named,
+        factors=dict.fromkeys(run.timed, run.dilate),
+    )
 
 
 def worst_error(recorded: dict[str, dict[str, Any]]) -> float | None:

@@ -89,7 +89,7 @@ def _tables(run: Lifted, dispatch: Dispatch) -> CostTables:
     python = python_stretch(run.workers, dispatch)
     costs = run.costs
     return CostTables(
-        kernel={step: values / kernel for step, values in costs.kernel.items()},
+        kernel={step: values / (1.0 if step in run.timed else kernel) for step, values in costs.kernel.items()},
         surface=(costs.halo + costs.pack) / python,
         rest=costs.rest / python,
         output=run.output.astype(np.float64),

@@ -13,6 +13,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -33,7 +34,8 @@ class Costs:
     Attributes
     ----------
     kernel, cpu : dict of str to ndarray
-        By step, time inside its kernel: by the clock, and on a processor.
+        By step, time inside its kernel: by the clock, and on a processor. Of a step that only waited: the time that
+        it was to wait, without the stretching of a rehearsal and without what it woke up late, in both.
     halo, pack : ndarray
         Putting ghost zones together; cutting rims for other workers.
     halo_cpu, pack_cpu : ndarray
@@ -119,6 +121,16 @@ class Lifted:
     def window(self) -> int:
         """Cycles that could be in flight at once."""
         return int(self.profile.manifest["notes"].get("window", 4))
+
+    @property
+    def timed(self) -> tuple[str, ...]:
+        """Steps that only waited, by records of times."""
+        return tuple(self.profile.timed_steps)
+
+    @property
+    def dilate(self) -> float:
+        """Factor by which their waits were stretched."""
+        return _dilation(self.profile)
 
     @property
     def workers(self) -> int:
@@ -264,15 +276,25 @@ def _costs(profile: Profile, place: Integers, lasted: Integers) -> Costs:
     by_step = {name: kernel & (step == steps.index(name)) for name in used}
     halo, pack = total(what == "halo", wall), total(what == "pack", wall)
     kernels = {name: total(rows, wall) for name, rows in by_step.items()}
+    rest = np.maximum(lasted - halo - pack - sum(kernels.values(), np.zeros_like(lasted)), 0)
+    on_processor = {name: total(rows, cpu) for name, rows in by_step.items()}
+    for name in set(profile.timed_steps) & set(kernels):  # its processor time is what the wait stood for
+        meant = np.rint(on_processor[name] / _dilation(profile)).astype(np.int64)
+        kernels[name] = on_processor[name] = meant
     return Costs(
         kernel=kernels,
-        cpu={name: total(rows, cpu) for name, rows in by_step.items()},
+        cpu=on_processor,
         halo=halo,
         pack=pack,
         halo_cpu=total(what == "halo", cpu),
         pack_cpu=total(what == "pack", cpu),
-        rest=np.maximum(lasted - halo - pack - sum(kernels.values(), np.zeros_like(lasted)), 0),
+        rest=rest,
     )
+
+
+def _dilation(profile: Profile) -> float:
+    manifest: Any = profile.manifest
+    return float(manifest.get("dilate", 1.0)) if profile.timed_steps else 1.0
 
 
 def lift_all(profiles: Sequence[Profile]) -> list[Lifted]:

@@ -132,6 +132,8 @@ class Program:
         By reduction that ends a repeat, the stage that makes it.
     window : int
         Cycles that may be in flight at once.
+    timed : tuple of str
+        Steps that only waited when they were recorded: nothing slows them down.
     rim_bytes : dict of str to float
         By stage, bytes that cross each zone face of a tile's border for a neighbour [bytes].
     """
@@ -145,6 +147,7 @@ class Program:
     verdicts: Mapping[str, str]
     window: int
     rim_bytes: Mapping[str, float] = field(default_factory=dict)
+    timed: tuple[str, ...] = ()
 
     @property
     def tile_count(self) -> int:
@@ -204,6 +207,7 @@ def program_of(lifted: Lifted, costs: CostTables, rim_bytes: Mapping[str, float]
     return Program(
         phases, patterns, costs, tiles, _stage_uses(lifted, names), dict(reductions.lags),
         _verdict_stages(lifted, names), lifted.window, rim_bytes or {},
+        lifted.timed,
     )  # fmt: skip
 
 

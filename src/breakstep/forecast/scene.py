@@ -195,7 +195,8 @@ class Scene:
         crowded = stretch[self.tile_owner] / self.setting.speed
         total = np.zeros_like(costs.rest)
         for step, values in costs.kernel.items():
-            total += values * crowded * self.question.factors.get(step, 1.0)
+            slower = 1.0 / self.setting.speed if step in self.program.timed else crowded
+            total += values * slower * self.question.factors.get(step, 1.0)
         return np.asarray(total[self._rows])
 
     @cached_property

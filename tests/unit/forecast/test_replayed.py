@@ -11,6 +11,7 @@ from breakstep.forecast.fixed import recorded_schedule, replay_fixed
 from breakstep.forecast.question import Question, parse_question
 from breakstep.forecast.scene import Scene
 from breakstep.forecast.setting import recorded_machine
+from breakstep.profile.run import Profile
 from tests.unit.forecast.recorded import Ring, Stage, even, hot
 
 #: With one worker nothing but rounding to whole nanoseconds is left. With more, crowding is taken out of the record and
@@ -92,3 +93,18 @@ def test_identical_repeats_leave_the_interval_without_width() -> None:
     basis = basis_of([Ring(hot()).profile(), Ring(hot()).profile()])
     row = answer(basis, recorded_machine(basis.first), Question(), [2])["rows"][0]
     assert row["lockstep_high_s"] - row["lockstep_low_s"] < 1e-6
+
+
+def test_stretched_waits_of_a_rehearsal_are_taken_back_and_put_in_again() -> None:
+    """Forecasts speak of the code that is rehearsed; the comparison with the rehearsal speaks of the rehearsal."""
+    record = Ring(hot(12), 1).record()
+    record.manifest |= {"timed_steps": ["s0", "s1", "s2"], "dilate": 4.0}
+    profile = Profile.from_record(record)
+    basis = basis_of([profile])
+    kernels = sum(basis.first.costs.kernel.values())
+    assert np.array_equal(kernels, np.array([phase.costs for phase in hot(12)]) // 4)
+    found = recorded_errors(basis)["lockstep"]
+    assert found["measured_s"] == pytest.approx(profile.ledger.span_ns * 1e-9)
+    assert abs(found["error"]) < ROUNDS_LEFT
+    (row,) = answer(basis, recorded_machine(basis.first), Question(), [1])["rows"]
+    assert row["lockstep_s"] < 0.5 * found["measured_s"]
