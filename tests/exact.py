@@ -2,8 +2,12 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from decimal import Decimal
 from fractions import Fraction
+
+import numpy as np
+import pandas as pd
 
 from breakstep.profile.causes import WAITS
 from breakstep.profile.chain import CHAIN_ACCOUNTS, Chain
@@ -93,6 +97,14 @@ def check_bytes(profile: Profile) -> None:
     if len(live.total):
         assert live.total.iloc[-1] == 0
         assert live.peak_bytes <= profile.tasks["output_bytes"].sum()
+    for parts in (live.by_worker, live.by_kind, live.by_data):
+        assert _born(parts.values()) == profile.tasks["output_bytes"].sum()
+    assert (profile.demand["bytes"] > 0).all()
+
+
+def _born(curves: Iterable[pd.Series[int]]) -> int:
+    """Everything that was ever added, moment by moment, over some curves."""
+    return sum(int(np.maximum(np.diff(curve.to_numpy(), prepend=0), 0).sum()) for curve in curves)
 
 
 def check_why(profile: Profile) -> None:

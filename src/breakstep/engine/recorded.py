@@ -154,6 +154,7 @@ def _manifest(dispatch: Dispatch, program: Program, options: RunOptions, result:
             "fuse": program.fuse,
             "lags": {reduction.name: reduction.lag for reduction in splitting.all_reductions()},
             "stages": [stage.name for stage in program.template.stages],
+            "data": _data(program),
             "values": {name: value[-1].tolist() for name, value in result.values.items()},
         },
     }
@@ -165,6 +166,23 @@ def _waits(program: Program) -> dict[str, Any]:
     if not kernels:
         return {}
     return {"timed_steps": sorted(kernels), "dilate": next(iter(kernels.values())).dilate}
+
+
+def _data(program: Program) -> dict[str, Any]:
+    """What stages read and write, so that bytes can be told by kind long after the run."""
+    stages: dict[str, dict[str, Any]] = {}
+    for stage in program.template.stages:  # one that occurs twice has the same steps, and perhaps a reduction's reads
+        facts = stages.setdefault(stage.name, {"reads": {}, "writes": list(stage.writes)})
+        for read in stage.reads:
+            known = facts["reads"].get(read.field)
+            if known is None or not any(known["halo"]):
+                facts["reads"][read.field] = {"halo": list(read.halo), "corners": read.corners}
+    fields = {
+        name: {"components": field.size, "per_tile": field.per_tile, "scratch": field.scratch}
+        for name, field in program.fields.items()
+    }
+    mesh = program.problem.mesh
+    return {"fields": fields, "stages": stages, "periodic": [mesh.is_periodic(axis) for axis in range(3)]}
 
 
 def _placement(

@@ -1,9 +1,10 @@
 """Live bytes: how much of what tasks made was still needed, when, and on which worker.
 
-An output lives on the worker that made it, from its task's end to the end of the last task that reads it
-(over a data or reduction edge), and to the run's end if none does. What a worker keeps of what it received
-is the sender's output in this account, so nothing is counted twice. Inputs are freed after outputs are there,
-as functional updates have it: at the moment a task ends, both count.
+An output lives on the worker that made it, from its task's end to the end of the last task that reads it, and to
+the run's end if none does; where the run says what its steps wrote and read, each field of an output by itself (see
+:mod:`breakstep.profile.outputs`). What a worker keeps of what it received is the sender's output in this account, so
+nothing is counted twice; the initial state is nobody's output, and does not count. Inputs are freed after outputs
+are there, as functional updates have it: at the moment a task ends, both count.
 """
 
 from __future__ import annotations
@@ -14,9 +15,8 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from breakstep.profile.causes import BARRIER
-from breakstep.profile.frames import Frames, Integers, codes_of, integers, positions, words_of
-from breakstep.profile.schema import EDGE_KINDS
+from breakstep.profile.frames import Frames, Integers, integers, words_of
+from breakstep.profile.outputs import DataKinds, pieces_of, whole_outputs
 
 
 @dataclass(frozen=True)
@@ -32,11 +32,15 @@ class LiveBytes:
         The same for each worker that made something.
     by_kind : dict of str to Series
         The same for each kind of task that made something.
+    by_data : dict of str to Series
+        The same for each kind of data: a field's name, "rims" of pack tasks, "values" of reductions; "outputs" where
+        the run does not say what steps wrote.
     """
 
     total: pd.Series[int]
     by_worker: dict[int, pd.Series[int]]
     by_kind: dict[str, pd.Series[int]]
+    by_data: dict[str, pd.Series[int]]
 
     @property
     def peak_bytes(self) -> int:
@@ -53,42 +57,41 @@ class LiveBytes:
         """High-water mark of each kind of task's output, each at its own moment [bytes]."""
         return {kind: _peak(series) for kind, series in self.by_kind.items()}
 
+    @property
+    def peak_by_data(self) -> dict[str, int]:
+        """High-water mark of each kind of data, each at its own moment [bytes]."""
+        return {data: _peak(series) for data, series in self.by_data.items()}
+
 
 def _peak(series: pd.Series[int]) -> int:
     return int(series.max()) if len(series) else 0
 
 
-def live_bytes(frames: Frames) -> LiveBytes:
-    """Live bytes of a run whose tables are sound."""
+def live_bytes(frames: Frames, kinds: DataKinds | None = None) -> LiveBytes:
+    """Live bytes of a run whose tables are sound.
+
+    Parameters
+    ----------
+    kinds : DataKinds, optional
+        What outputs consist of; without it an output is one piece, which lives as long as any of it is read.
+    """
     tasks = frames["tasks"]
-    made = integers(tasks, "output_bytes") > 0
-    size, born = integers(tasks, "output_bytes")[made], integers(tasks, "end_ns")[made]
-    freed = np.maximum(_last_use(frames)[made], born)
-    worker = integers(tasks, "worker")[made]
-    kind, kinds = words_of(tasks, "kind")
+    pieces = whole_outputs(frames) if kinds is None else pieces_of(frames, kinds)
+    size, born = pieces.size, integers(tasks, "end_ns")[pieces.task]
+    freed = np.maximum(pieces.freed, born)
+    worker = integers(tasks, "worker")[pieces.task]
+    kind, names = words_of(tasks, "kind")
+    kind = kind[pieces.task]
     return LiveBytes(
         _series(size, born, freed),
         {int(w): _series(*_of(worker == w, size, born, freed)) for w in np.unique(worker)},
-        {kinds[k]: _series(*_of(kind[made] == k, size, born, freed)) for k in np.unique(kind[made])},
+        {names[k]: _series(*_of(kind == k, size, born, freed)) for k in np.unique(kind)},
+        {pieces.names[d]: _series(*_of(pieces.data == d, size, born, freed)) for d in np.unique(pieces.data)},
     )
 
 
 def _of(chosen: Any, *columns: Integers) -> tuple[Integers, ...]:
     return tuple(column[chosen] for column in columns)
-
-
-def _last_use(frames: Frames) -> Integers:
-    """End of the last consumer of each task [ns]; the run's end for a task that has none."""
-    tasks, edges = frames["tasks"], frames["edges"]
-    numbers, end = integers(tasks, "task"), integers(tasks, "end_ns")
-    carries = codes_of(edges, "kind", EDGE_KINDS) != BARRIER
-    producer = positions(numbers, integers(edges, "producer")[carries])
-    consumer = positions(numbers, integers(edges, "consumer")[carries])
-    never = np.iinfo(np.int64).min
-    last = np.full(len(numbers), never, dtype=np.int64)
-    np.maximum.at(last, producer, end[consumer])
-    last[last == never] = end.max(initial=0)
-    return last
 
 
 def _series(size: Integers, born: Integers, freed: Integers) -> pd.Series[int]:

@@ -15,12 +15,14 @@ import xarray as xr
 
 from breakstep.errors import ProfileError
 from breakstep.profile.checks import sound_frames
+from breakstep.profile.demand import demand_of
 from breakstep.profile.fields import dataset_of
 from breakstep.profile.figures import Figures, profile_html
 from breakstep.profile.frames import Frames
 from breakstep.profile.ledger import Ledger, ledger_of
 from breakstep.profile.manifest import Manifest, first_fault
 from breakstep.profile.memory import LiveBytes, live_bytes
+from breakstep.profile.outputs import data_kinds
 from breakstep.profile.record import RunRecord
 from breakstep.profile.settle import settled
 from breakstep.profile.traffic import Traffic, traffic_of
@@ -171,4 +173,9 @@ class Profile:
     @cached_property
     def live(self) -> LiveBytes:
         """Live bytes over the run."""
-        return live_bytes(self.frames)
+        return live_bytes(self.frames, data_kinds(cast(dict[str, Any], self.manifest)))
+
+    @cached_property
+    def demand(self) -> pd.DataFrame:
+        """Bytes that steps read across tile faces; see :func:`breakstep.profile.demand.demand_of`."""
+        return demand_of(self.frames, cast(dict[str, Any], self.manifest))

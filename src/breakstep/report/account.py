@@ -101,6 +101,17 @@ def _chain_table(profile: Profile) -> Iterator[str]:
         yield f"{shortened(name, 24):<25}" + "".join(f"{ns / 1e9:>11.{digits}f}" for ns in [*spent, sum(spent)])
 
 
+def _demand_lines(profile: Profile) -> Iterator[str]:
+    """Logical bytes, to be read beside those that moved."""
+    demand = profile.demand
+    if len(demand):
+        across = demand[demand["from_worker"] != demand["to_worker"]]
+        whole, apart = int(demand["bytes"].sum()), int(across["bytes"].sum())
+        yield f"read across tile faces: {size(whole)}, of that from tiles of other workers: {size(apart)}"
+        for stage, count in demand.groupby("stage")["bytes"].sum().sort_values(ascending=False).items():
+            yield f"  by {stage}: {size(int(count))}"
+
+
 def _clock_lines(profile: Profile) -> list[str]:
     """How well the workers' clocks agree, and what the accounts owe to it."""
     clock = profile.manifest["clock"]
@@ -137,7 +148,12 @@ def _traffic_lines(profile: Profile) -> Iterator[str]:
         yield f"  between {counted(len(links) - TOP_LINKS, 'other pair')}: {size(rest)}"
     for stage, count in sorted(traffic.by_stage.items(), key=lambda item: -item[1]):
         yield from textwrap.wrap(f"  made by {stage}: {size(count)}", WIDTH, subsequent_indent="    ")
+    yield from _demand_lines(profile)
+    peaks = sorted(profile.live.peak_by_data.items(), key=lambda item: -item[1])
     yield f"most alive at once: {size(profile.live.peak_bytes)}"
+    for data, peak in peaks:
+        if peak:
+            yield f"  of {data}: {size(peak)}"
     for row in profile.counters_by_step.itertuples():
         if not str(row.counter).startswith("checksum:"):
             yield from wrapped(f"counted in {row.step}: {row.counter} {row.value}", bullet=True)

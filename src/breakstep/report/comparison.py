@@ -107,7 +107,8 @@ def run_figures(profile: Profile) -> dict[str, Any]:
         "bytes_by_stage": profile.traffic.by_stage,
         "bytes_by_workers": {f"{a}->{b}": n for (a, b), n in profile.traffic.by_workers.items()},
         "peak_bytes": profile.live.peak_bytes,
-        "peak_bytes_by_kind": profile.live.peak_by_kind,
+        "peak_bytes_by_data": profile.live.peak_by_data,
+        "bytes_read": _bytes_read(profile),
         "compute_by_step": profile.work["compute_seconds"].to_dict(),
         "imbalance_by_step": imbalance.to_dict(orient="index"),
         "counters": {
@@ -124,6 +125,18 @@ def run_figures(profile: Profile) -> dict[str, Any]:
         "message": profile.manifest["message"],
     }
     return {key: _without_nan(value) for key, value in figures.items()}
+
+
+def _bytes_read(profile: Profile) -> dict[str, Any]:
+    """Logical bytes: what steps read across tile faces, and of that from tiles of other workers."""
+    demand = profile.demand
+    across = demand[demand["from_worker"] != demand["to_worker"]]
+    by_stage = {str(stage): int(count) for stage, count in demand.groupby("stage")["bytes"].sum().items()}
+    return {
+        "across_faces": int(demand["bytes"].sum()),
+        "across_workers": int(across["bytes"].sum()),
+        "by_stage": by_stage,
+    }
 
 
 def _efficiency(ledger: Ledger) -> dict[str, float]:

@@ -36,7 +36,7 @@ DOCUMENTED_OF_A_RUN = {
 }
 BESIDE_OF_A_RUN = {
     *("bytes_by_stage", "bytes_by_workers", "counters", "barriers", "status", "message"),
-    *("efficiency", "critical_chain", "clock", "peak_bytes_by_kind"),
+    *("efficiency", "critical_chain", "clock", "peak_bytes_by_data", "bytes_read"),
     *("attempts", "resumed_from_cycle", "rehearsal"),
 }
 
