@@ -7,7 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
-from typing import Any
+from typing import Any, TypeAlias
 
 import numpy as np
 
@@ -31,7 +31,8 @@ class Edges:
     Attributes
     ----------
     between : frozenset of (str, int, str, int)
-        Consumer's stage and tile, producer's stage and tile, of every edge between two tiles.
+        Consumer's step and tile, producer's step and tile, of every edge between two tiles. Steps, not stages:
+        another declaration may fuse other steps.
     data, values : int
         All edges that carry arrays; those that carry results of reductions.
     ghost_bytes : int
@@ -62,25 +63,33 @@ def edges_of(program: Program) -> Edges:
     """Count the edges of one settled round, divided by the cycles in it."""
     graph = TaskGraph(program.tiling, [0] * len(program.tiling))
     orders = len(program.template.orders)
-    names: dict[int, tuple[str, int]] = {-1 - tile: ("initial", tile) for tile in range(len(program.tiling))}
+    phases: dict[int, Phase] = {}
     between: set[tuple[str, int, str, int]] = set()
     data = values = ghost = 0
     for settled, phase in cycle_phases(program.template):
+        phases[phase.number] = phase
         for task in graph.expand(phase, barrier_after=False):
-            if task.kind is not Kind.STEP:
+            if task.kind is not Kind.STEP or not settled:
                 continue
-            names[task.number] = (phase.stage.name, task.tile)
-            if not settled:
-                continue
-            producers = {*task.own.values(), *(rim.producer for rim in task.rims)}
-            data += len(producers)
+            data += len({*task.own.values(), *(rim.producer for rim in task.rims)})
             values += len(phase.stage.uses)
-            ghost += sum(rim.rim.zones * program.fields[rim.field].size * 8 for rim in task.rims)
-            for producer in producers:
-                stage, tile = names[producer]
-                if tile != task.tile:
-                    between.add((phase.stage.name, task.tile, stage, tile))
+            for rim in task.rims:
+                ghost += rim.rim.zones * program.fields[rim.field].size * 8
+                writer = _writer(phases.get(phase.sources[rim.field]), rim.field)
+                between.add((_reader(phase, rim.field), task.tile, writer, rim.rim.neighbour))
     return Edges(frozenset(between), data // orders, values // orders, ghost // orders)
+
+
+def _reader(phase: Phase, name: str) -> str:
+    """The step of a phase that reads a field beyond its tile."""
+    halos = ((step.name, read) for step in phase.stage.steps for read in step.reads)
+    return next(step for step, read in halos if read.field == name and not read.is_local)
+
+
+def _writer(phase: Phase | None, name: str) -> str:
+    """The step of a phase that leaves a field behind."""
+    steps = phase.stage.steps if phase is not None else ()
+    return next((step.name for step in reversed(steps) if name in step.writes), "initial")
 
 
 def with_cost(program: Program, finding: Finding, profile: Profile | None = None) -> Finding:
@@ -95,9 +104,8 @@ def with_cost(program: Program, finding: Finding, profile: Profile | None = None
     except BreakstepError as error:
         return replace(finding, cost=f"The true declaration does not fit this tiling: {error}.")
     words = _difference(before, after)
-    gone = before.between - after.between
-    if profile is not None and gone:
-        words += _waits(profile, gone)
+    if profile is not None and before.between - after.between:
+        words += _waits(profile, before.between - after.between, after.between)
     return replace(finding, cost=words)
 
 
@@ -164,58 +172,71 @@ def _step_with(step: Step, name: str, change: dict[str, Any]) -> Step:
     return replace(step, reads=(*step.reads, new))
 
 
-def _waits(profile: Profile, gone: frozenset[tuple[str, int, str, int]]) -> str:
+Between: TypeAlias = frozenset[tuple[str, int, str, int]]
+
+
+def _waits(profile: Profile, gone: Between, kept: Between) -> str:
     """How much of the recorded waiting for neighbours hangs on edges that would go, at most."""
-    nanoseconds, total = waits_on(profile, gone)
-    seconds, all_seconds = nanoseconds * 1e-9, total * 1e-9
+    nanoseconds, total = waits_on(profile, gone, kept)
     return (
-        f" Of {all_seconds:.3g} core-seconds that the recorded run waited for neighbours, at most {seconds:.3g} hang on"
-        " those edges."
+        f" Of {total * 1e-9:.3g} core-seconds that the recorded run waited for neighbours, at most"
+        f" {nanoseconds * 1e-9:.3g} hang on those edges."
     )
 
 
-def waits_on(profile: Profile, gone: frozenset[tuple[str, int, str, int]]) -> tuple[int, int]:
+def waits_on(profile: Profile, gone: Between, kept: Between = frozenset()) -> tuple[int, int]:
     """Waits for neighbours [ns] that end when an edge of ``gone`` is satisfied, and all of them.
 
     A wait counts from the moment the last of the task's other inputs was there: what an edge adds, no more.
+
+    Parameters
+    ----------
+    gone, kept : frozenset
+        Edges as in :class:`Edges`; two tasks that an edge of ``kept`` joins as well stay joined.
     """
-    tasks = profile.tasks
-    gaps = profile.ledger.gaps
-    waited = gaps[gaps["neighbour"] > 0]
-    numbers = [int(number) for number in tasks["task"]]
-    stages = dict(zip(numbers, tasks["stage"].astype(str), strict=True))
-    kinds = dict(zip(numbers, tasks["kind"].astype(str), strict=True))
-    tiles = {number: int(tile) for number, tile in zip(numbers, tasks["tile"], strict=True)}
-    ends = {number: int(end) for number, end in zip(numbers, tasks["end_ns"], strict=True)}
+    recorded = _Recorded(profile, gone, kept)
+    waited = profile.ledger.gaps[profile.ledger.gaps["neighbour"] > 0]
     edges = profile.edges[profile.edges["kind"].astype(str) != "barrier"]
     wanted = edges[edges["consumer"].isin(set(waited["task"]))]
     producers: dict[int, list[int]] = {}
     for producer, consumer in zip(wanted["producer"], wanted["consumer"], strict=True):
         producers.setdefault(int(consumer), []).append(int(producer))
-    found = 0
-    for task, nanoseconds in zip(waited["task"], waited["neighbour"], strict=True):
-        inputs = [p for p in producers.get(int(task), []) if p in ends]
-        goes = [p for p in inputs if _is_gone(int(task), p, stages, tiles, kinds, gone)]
-        if not goes:
-            continue
-        others = [int(ends[p]) for p in inputs if p not in goes]
-        added = max(int(ends[p]) for p in goes) - max(others, default=0)
-        found += max(0, min(int(nanoseconds), added))
+    found = sum(
+        recorded.added(int(task), producers.get(int(task), []), int(nanoseconds))
+        for task, nanoseconds in zip(waited["task"], waited["neighbour"], strict=True)
+    )
     return found, int(np.asarray(waited["neighbour"], np.int64).sum())
 
 
-def _is_gone(
-    task: int,
-    producer: int,
-    stages: dict[int, str],
-    tiles: dict[int, int],
-    kinds: dict[int, str],
-    gone: frozenset[tuple[str, int, str, int]],
-) -> bool:
-    """Whether the edge between two recorded tasks is one of those; a pack task stands for the tile it cuts."""
-    if kinds[producer] == "pack":
-        return any(c == stages[task] and t == tiles[task] and n == tiles[producer] for c, t, _, n in gone)
-    return (stages[task], int(tiles[task]), stages[producer], int(tiles[producer])) in gone
+class _Recorded:
+    """The tasks of a recorded run, and which of their edges would go."""
+
+    def __init__(self, profile: Profile, gone: Between, kept: Between) -> None:
+        tasks = profile.tasks
+        columns = (tasks[name] for name in ("task", "stage", "kind", "tile", "end_ns"))
+        self._tasks = {
+            int(number): (str(stage).split("+"), str(kind), int(tile), int(end))
+            for number, stage, kind, tile, end in zip(*columns, strict=True)
+        }
+        self._gone, self._kept = gone, kept
+
+    def added(self, task: int, producers: list[int], waited: int) -> int:
+        """How much of a task's wait its going edges add to the others [ns]."""
+        inputs = [producer for producer in producers if producer in self._tasks]
+        goes = [producer for producer in inputs if self._goes(task, producer)]
+        if not goes:
+            return 0
+        others = [self._tasks[producer][3] for producer in inputs if producer not in goes]
+        last = max(self._tasks[producer][3] for producer in goes)
+        return max(0, min(waited, last - max(others, default=0)))
+
+    def _goes(self, task: int, producer: int) -> bool:
+        readers, _, tile, _ = self._tasks[task]
+        writers, kind, neighbour, _ = self._tasks[producer]
+        if tile == neighbour or kind not in ("step", "pack"):
+            return False
+        joined = {(reader, tile, writer, neighbour) for reader in readers for writer in writers}
+        return bool(joined & self._gone) and not joined & self._kept
 
 
 def inplace_hazards(program: Program) -> list[dict[str, Any]]:

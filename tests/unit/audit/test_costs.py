@@ -72,6 +72,14 @@ def test_an_undeclared_field_of_another_step_is_priced() -> None:
     assert edges_of(after).data - edges_of(before).data == 4  # each tile now waits for its own drift, too
 
 
+def test_edges_of_steps_that_are_fused_differently_are_the_same() -> None:
+    wide = Step("grow", toys.smooth, (Read("u", (1, 0, 0)),), ("u",))
+    local = Step("grow", toys.smooth, (Read("u"),), ("u",))
+    apart, fused = edges_of(ring(SMOOTH, wide)), edges_of(ring(SMOOTH, local))
+    assert {edge[0] for edge in apart.between} == {"smooth", "grow"}
+    assert {edge[0] for edge in apart.between - fused.between} == {"grow"}
+
+
 def test_a_note_costs_nothing() -> None:
     note = Finding("smooth", "position", "x", NOTE)
     assert with_cost(ring(SMOOTH), note) is note
@@ -80,13 +88,14 @@ def test_a_note_costs_nothing() -> None:
 def test_waits_on_edges_are_bounded_by_the_waits_for_neighbours() -> None:
     profile = read_profile(RECORDED)
     total = int(profile.ledger.gaps["neighbour"].sum())
-    stages = set(profile.tasks["stage"].astype(str))
+    stages = {part for stage in set(profile.tasks["stage"].astype(str)) for part in stage.split("+")}
     tiles = range(profile.tile_count)
     every = frozenset((c, t, p, n) for c in stages for p in stages for t in tiles for n in tiles if t != n)
     found, whole = waits_on(profile, every)
     assert whole == total > 0
     assert 0 < found <= total
     assert waits_on(profile, frozenset()) == (0, total)
+    assert waits_on(profile, every, every) == (0, total)  # an edge that another read needs as well stays
 
 
 def test_a_step_that_updates_what_it_reads_needs_a_second_buffer() -> None:
