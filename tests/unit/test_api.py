@@ -24,10 +24,10 @@ def _elsewhere(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.chdir(tmp_path)
 
 
-def program(folder: Path, text: str) -> subprocess.CompletedProcess[str]:
+def program(folder: Path, text: str, how: tuple[str, ...] = ("program.py",)) -> subprocess.CompletedProcess[str]:
     """Run a text as a program of its own."""
     (folder / "program.py").write_text(text, encoding="utf-8")
-    command = [sys.executable, "program.py"]
+    command = [sys.executable, *how]
     return subprocess.run(command, cwd=folder, capture_output=True, text=True, timeout=120, check=False)
 
 
@@ -99,9 +99,10 @@ def test_faulty_options(tmp_path: Path, options: dict[str, object]) -> None:
         breakstep.run("nowhere.py")
 
 
-def test_a_program_without_a_guard_is_told_so_before_anything_starts(tmp_path: Path) -> None:
+@pytest.mark.parametrize("how", [("program.py",), ("-m", "program")])
+def test_a_program_without_a_guard_is_told_so_before_anything_starts(tmp_path: Path, how: tuple[str, ...]) -> None:
     """Its workers would run it again and again."""
-    done = program(tmp_path, WORKING + "def main():\n    breakstep.run(setup())\n\nif True:\n    main()\n")
+    done = program(tmp_path, WORKING + "def main():\n    breakstep.run(setup())\n\nif True:\n    main()\n", how)
     assert done.returncode == 1
     last = done.stderr.splitlines()[-1]
     assert last.startswith("breakstep.errors.ClusterError: ")

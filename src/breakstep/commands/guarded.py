@@ -26,7 +26,8 @@ def check_guard() -> None:
     main = sys.modules["__main__"]
     path, spec = getattr(main, "__file__", None), getattr(main, "__spec__", None)
     frame = _top_level(sys._getframe(1), vars(main))
-    if path is None or spec is not None or frame is None:
+    is_package = spec is not None and spec.name.endswith(".__main__")  # those are not imported again
+    if path is None or is_package or frame is None:
         return
     try:
         tree = ast.parse(Path(path).read_bytes())

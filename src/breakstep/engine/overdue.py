@@ -7,6 +7,7 @@ processes that were started here end with the run; on a cluster of the user's th
 
 from __future__ import annotations
 
+import contextlib
 import shutil
 import tempfile
 import time
@@ -18,7 +19,7 @@ from distributed import Client
 
 from breakstep.engine.underway import CALLS, Underway, read_underway
 from breakstep.engine.workers import run_on
-from breakstep.errors import OverdueError
+from breakstep.errors import ClusterError, OverdueError
 
 SILENCE_SECONDS = 10.0  # beyond the limit: a worker that says nothing for so long is taken to be in a kernel
 FAREWELL_SECONDS = 3.0  # most that a worker may take for an answer once a kernel is overdue
@@ -59,14 +60,28 @@ class Overseer:
     def __enter__(self) -> Overseer:
         if self.limit:
             self._folder = Path(tempfile.mkdtemp(prefix="breakstep-"))
+            try:
+                self._tell_workers()
+            except BaseException:
+                shutil.rmtree(self._folder, ignore_errors=True)
+                raise
+        return self
+
+    def _tell_workers(self) -> None:
+        try:
             for number, address in enumerate(self.addresses):
                 self._file(number).touch()
                 run_on(self.client, [address], keep, str(self._file(number)))
-        return self
+        except OSError as error:
+            raise ClusterError(f"a worker was lost before the run began ({error!r})", lost=True) from error
 
     def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, at: TracebackType | None) -> None:
-        if self._folder is not None:
-            shutil.rmtree(self._folder, ignore_errors=True)
+        if self._folder is None:
+            return
+        shutil.rmtree(self._folder, ignore_errors=True)
+        if not self._is_over and self.client.status == "running":
+            with contextlib.suppress(OSError, ClusterError):  # workers that have gone remember nothing
+                run_on(self.client, self.addresses, forget)
 
     def _file(self, number: int) -> Path:
         assert self._folder is not None
@@ -134,6 +149,11 @@ class Overseer:
 def keep(file: str) -> None:
     """Have a worker keep track of its calls."""
     CALLS.keep(file)
+
+
+def forget() -> None:
+    """Have a worker keep track no more."""
+    CALLS.forget()
 
 
 def now() -> list[Underway]:
