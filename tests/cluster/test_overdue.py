@@ -6,6 +6,7 @@ import os
 import re
 import subprocess
 import sys
+import time
 from pathlib import Path
 
 import psutil
@@ -45,7 +46,7 @@ def test_workers_that_were_started_here_end_with_the_run(stuck: Path, dispatch: 
         command, cwd=stuck.parent, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True, start_new_session=True
     ) as program:
         out, err = program.communicate(timeout=120)
-        left = [one for one in psutil.process_iter(["pid"]) if _session(one) == program.pid]
+        left = left_behind(program.pid)
     assert (program.returncode, out) == (2, "")
     first, second = err.splitlines()
     assert SENTENCE.fullmatch(first.removeprefix("breakstep: "))
@@ -55,6 +56,16 @@ def test_workers_that_were_started_here_end_with_the_run(stuck: Path, dispatch: 
     assert profile.manifest["status"] == "failed"
     assert SENTENCE.fullmatch(profile.manifest["message"])
     assert len(profile.tasks) > 0
+
+
+def left_behind(session: int) -> list[psutil.Process]:
+    """Processes of a session that are still there after a moment: one that has been killed takes its time to go."""
+    deadline = time.monotonic() + 5.0
+    while left := [one for one in psutil.process_iter() if _session(one) == session]:
+        if time.monotonic() > deadline:
+            break
+        time.sleep(0.1)
+    return left
 
 
 def _session(process: psutil.Process) -> int:
