@@ -183,12 +183,16 @@ def see_folder(folder: Path) -> None:
 
 
 def users_traceback(error: BaseException) -> str:
-    """The traceback of an error from the first line of the user's on."""
-    step = error.__traceback__
-    while step is not None and (step.tb_frame.f_code.co_filename.startswith("<frozen importlib") or _is_ours(step)):
-        step = step.tb_next
-    return "".join(traceback.format_exception(type(error), error, step, chain=False))
+    """The traceback of an error without the lines of this package and of Python's import machinery."""
+    frames = [frame for frame in traceback.extract_tb(error.__traceback__) if not _is_ours(frame.filename)]
+    lines = ["Traceback (most recent call last):\n", *traceback.format_list(frames)] if frames else []
+    return "".join([*lines, *traceback.format_exception_only(error)])
 
 
-def _is_ours(step: object) -> bool:
-    return Path(step.tb_frame.f_code.co_filename).is_relative_to(Path(__file__).parents[1])  # type: ignore[attr-defined]
+def _is_ours(file: str) -> bool:
+    """Whether a line is of no use to the user; scenarios that come with the package are the user's as well."""
+    package = Path(__file__).parents[1]
+    shipped = package / "scenario" / "library"
+    if file.startswith("<"):
+        return True
+    return Path(file).is_relative_to(package) and not Path(file).is_relative_to(shipped)

@@ -179,7 +179,7 @@ def test_faulty_code(tmp_path: Path, text: str, sentence: str, line: str) -> Non
     shown = str(error.details.get("traceback", ""))
     assert line in shown
     assert "importlib" not in shown
-    assert "scenario/code.py" not in shown
+    assert "src/breakstep" not in shown
 
 
 def test_a_problem_is_no_setup_yet(tmp_path: Path) -> None:
