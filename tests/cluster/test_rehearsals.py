@@ -181,7 +181,7 @@ def test_compare_rehearses_on_few_processes(tmp_path: Path) -> None:
 @pytest.mark.slow
 def test_a_thousand_ranks_on_sixty_four_workers(tmp_path: Path) -> None:
     """1,024 ranks, 50 cycles, hot ranks that move, in two processes."""
-    what = Invention((32, 32), 50, seed=1, spots=6, width=2.0)
+    what = Invention((32, 32), 50, seed=1, spots=6, width=2.0, face_bytes=4096.0)
     dilate, workers = 0.5, 64
     frame = invent(what)
     scenario = invented(tmp_path, what, dilate=dilate)
