@@ -118,13 +118,20 @@ def pieces_of(frames: Frames, kinds: DataKinds) -> Pieces:
     split = rest == 0
     whole = whole_outputs(frames)
     kept = ~split[whole.task]
-    columns = [Pieces(*(column[kept] for column in whole[:4]), whole.names)]
+    columns = [Pieces(whole.task[kept], whole.size[kept], whole.freed[kept], whole.data[kept], whole.names)]
     for place, (field, size) in enumerate(made.items()):
         task = np.flatnonzero((size > 0) & split)
         freed = _freed(frames, kinds, readers, field, size > 0)
-        columns.append(Pieces(task, size[task], freed[task], np.full(len(task), len(whole.names) + place), []))
-    joined = [np.concatenate([piece[column] for piece in columns]).astype(np.int64) for column in range(4)]
-    return Pieces(joined[0], joined[1], joined[2], joined[3], [*whole.names, *made])
+        columns.append(
+            Pieces(task, size[task], freed[task], np.full(len(task), len(whole.names) + place, dtype=np.int64), [])
+        )
+    return Pieces(
+        task=np.concatenate([piece.task for piece in columns]),
+        size=np.concatenate([piece.size for piece in columns]),
+        freed=np.concatenate([piece.freed for piece in columns]),
+        data=np.concatenate([piece.data for piece in columns]),
+        names=[*whole.names, *made],
+    )
 
 
 def _sizes(frames: Frames, kinds: DataKinds) -> dict[str, Integers]:
