@@ -86,9 +86,9 @@ class PlainReplay:
             del self.running[self.found.slot[task]]
         for other, size in sorted(self.outputs[task], key=lambda output: output[0]):
             moment = now
-            if self.owner is not None and self.is_step(task) and self.is_step(other):
-                if self.owner[task] != self.owner[other]:
-                    moment = self.sent(now, int(self.owner[other]), size)
+            both = self.owner is not None and self.is_step(task) and self.is_step(other)
+            if both and self.owner[task] != self.owner[other]:
+                moment = self.sent(now, int(self.owner[other]), size)
             self.there[other] = max(self.there[other], moment)
             self.missing[other] -= 1
             if self.missing[other] == 0:

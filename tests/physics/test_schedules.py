@@ -57,7 +57,7 @@ def test_graham_anomalies(
 
 
 def test_a_changed_list_schedule_stays_within_grahams_bound() -> None:
-    """Another list, fewer edges, shorter tasks, other machines: at most 1 + (m - 1) / m2 times as long (Graham 1969)."""
+    """Another list, fewer edges, shorter tasks, other machines: at most 1 + (m - 1) / m2 times (Graham 1969)."""
     worst = 0.0
     for seed in range(300):
         rng = np.random.default_rng(seed)
@@ -106,8 +106,8 @@ def test_work_and_span_enclose_every_greedy_schedule() -> None:
         assert interval_bound(graph, machine.slots) <= found
 
 
-# H. Topcuoglu, S. Hariri, M.-Y. Wu, IEEE Trans. Parallel Distrib. Syst. 13 (2002) 260: ten tasks on three processors, the
-# worked example; values from memory. Ranks with three decimals as printed there, the makespan is 80.
+# H. Topcuoglu, S. Hariri, M.-Y. Wu, IEEE Trans. Parallel Distrib. Syst. 13 (2002) 260: ten tasks on three processors,
+# the worked example; values from memory. Ranks with three decimals as printed there, the makespan is 80.
 COMPUTATION = [
     (14, 16, 9), (13, 19, 18), (11, 13, 19), (13, 8, 17), (12, 13, 10),
     (13, 16, 9), (7, 15, 11), (5, 11, 14), (18, 12, 20), (21, 7, 16),
@@ -170,7 +170,7 @@ def test_earliest_finish_schedule_of_the_worked_example() -> None:
     assert found.finish_ns.tolist() == [end[task] for task in range(1, 11)]
 
 
-# Optima: for RANDOM and 2, 4, 8 machines in the results published with the set; the others equal a bound, so are proved.
+# Optima: for RANDOM and 2, 4, 8 machines in the results published with the set; all equal a bound, so are proved.
 OPTIMA = [
     (RANDOM, 262, 55, {2: 131, 3: 88, 4: 66, 5: 55, 8: 55}),
     (ROBOT, 2483, 569, {2: 1242, 5: 569, 6: 569, 8: 569}),

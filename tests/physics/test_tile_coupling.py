@@ -42,7 +42,9 @@ def agrees(samples: NDArray[np.float64], expected: float, allowance: float = 0.0
     assert abs(samples.mean() - expected) <= 3 * error + allowance, (samples.mean(), error, expected)
 
 
-def ring(tiles: int, steps: int, offsets: tuple[Offset, ...], law: Law, slack: int = 1, seed: int = 1) -> TiledSplitting:
+def ring(
+    tiles: int, steps: int, offsets: tuple[Offset, ...], law: Law, slack: int = 1, seed: int = 1
+) -> TiledSplitting:
     return TiledSplitting((tiles,), steps, (TileStage(Cost.even(tiles, UNIT, law), offsets, slack=slack),), seed=seed)
 
 
@@ -96,8 +98,8 @@ def test_both_neighbours(tiles: int, step: Fraction) -> None:
 def test_large_ring_with_both_neighbours() -> None:
     """1 / 0.4194, the growth velocity of the restricted solid-on-solid model in one dimension.
 
-    J. M. Kim and J. M. Kosterlitz, Phys. Rev. Lett. 62 (1989) 2289; J. Krug and P. Meakin, J. Phys. A 23 (1990) L987 (from
-    memory). A ring of P tiles is faster by about 1.7 / P, as P = 4, 5, 6 above show, and 0.4194 is rounded.
+    J. M. Kim and J. M. Kosterlitz, Phys. Rev. Lett. 62 (1989) 2289; J. Krug and P. Meakin, J. Phys. A 23 (1990) L987
+    (from memory). A ring of P tiles is faster by about 1.7 / P, as P = 4, 5, 6 above show, and 0.4194 is rounded.
     """
     splitting = ring(2048, 12_000, along(0), Law.exponential())
     agrees(rates(splitting, 24)[4:], 1 / 0.4194, 1.7 / 2048 + 0.0003)
@@ -136,7 +138,7 @@ def test_last_passage(side: int, mean: float) -> None:
 
 
 def test_last_passage_through_a_large_grid() -> None:
-    """(sqrt M + sqrt N)^2 less 1.7711 N^(1/3) 2^(4/3) for M = N: 379.29 at 100 x 100 (Johansson 2000, Tracy and Widom)."""
+    """(sqrt M + sqrt N)^2 less 1.7711 N^(1/3) 2^(4/3) for M = N: 379.29 at 100 x 100 (Johansson 2000)."""
     expected = 400 - 1.7711 * 100 ** (1 / 3) * 2 ** (4 / 3)
     agrees(grids(100, 60, 100), expected, 0.0003 * expected)  # terms of higher order: 0.03 % here
 
@@ -144,7 +146,7 @@ def test_last_passage_through_a_large_grid() -> None:
 def test_flat_start() -> None:
     """Mean end of step n on a one-sided ring: 1, 5/2, 25/6.
 
-    W. FitzGerald and J. Warren, Probab. Theory Relat. Fields 178 (2020) 121. Tiles further apart than n are independent.
+    W. FitzGerald and J. Warren, Probab. Theory Relat. Fields 178 (2020) 121. Tiles more than n apart are independent.
     """
     for steps, mean in ((1, 1.0), (2, 5 / 2), (3, 25 / 6)):
         finish = sweep_tiles(ring(200_000, steps, LEFT, Law.exponential()), ONE, jobs=1).finish_ns / UNIT
@@ -152,7 +154,7 @@ def test_flat_start() -> None:
 
 
 def test_exact_means_of_small_graphs() -> None:
-    """Recursions over order ideals, computed apart: ring of 4 for 3 steps 6, lockstep 25/4; 3 x 3 on 2 workers 423/64."""
+    """Recursions over order ideals, computed apart: ring of 4, 3 steps, 6; lockstep 25/4; 3 x 3 on 2 workers 423/64."""
     splittings = [ring(4, 3, along(0), Law.exponential(), seed=seed) for seed in range(3000)]
     agrees(np.array([sweep_tiles(one, ONE).makespan_ns for one in splittings]) / UNIT, 6)
     agrees(np.array([sweep_tiles(one.lockstep(), ONE).makespan_ns for one in splittings]) / UNIT, 25 / 4)
@@ -201,10 +203,10 @@ def test_moving_hot_tile(two_sided: bool) -> None:
 
 @pytest.mark.parametrize(("each", "fixed", "dynamic"), [(1, 52, 52), (2, 64, 52), (4, 64, 52), (8, 96, 96)])
 def test_latency_hidden_behind_other_tiles(each: int, fixed: int, dynamic: int) -> None:
-    """k tiles a worker in a row, those at its rim first, always in the same order: max(k (t + o), 2 (t + o) + c) a step.
+    """k tiles a worker in a row, those at its rim first, in a fixed order: max(k (t + o), 2 (t + o) + c) a step.
 
-    With one tile t + o + c. When the worker takes whichever rim tile has its halo first, the two change places every step:
-    max(k (t + o), t + o + c), the largest mean of a cycle of tasks and transfers. Derived by hand.
+    With one tile t + o + c. When the worker takes whichever rim tile has its halo first, the two change places every
+    step: max(k (t + o), t + o + c), the largest mean of a cycle of tasks and transfers. Derived by hand.
     """
     time, overhead, transfer, workers, steps = 10, 2, 40, 4, 60
     tiles, own = each * workers, time + overhead

@@ -83,7 +83,7 @@ def test_wavefront_on_few_workers() -> None:
     ("columns", "rows", "units", "transfer", "makespan"), [(4, 4, 10, 0, 48), (4, 4, 10, 2, 60), (8, 8, 48, 2, 214)]
 )
 def test_sweep_from_one_corner(columns: int, rows: int, units: int, transfer: int, makespan: int) -> None:
-    """t (K + Px + Py - 2) + c (Px + Py - 2), the pipeline count of K. R. Koch, R. S. Baker, R. E. Alcouffe (from memory)."""
+    """t (K + Px + Py - 2) + c (Px + Py - 2), the pipeline count of Koch, Baker and Alcouffe (from memory)."""
     sketch = Sketch()
     for unit, i, j in itertools.product(range(units), range(columns), range(rows)):
         sketch.add((unit, i, j), 3, [(unit, i - 1, j), (unit, i, j - 1)], owner=i * rows + j)
@@ -150,11 +150,11 @@ def test_grain_of_a_pipelined_line_solve() -> None:
         assert found[groups] == pytest.approx((groups + ranks - 1) * (lines / groups + latency), abs=1e-4)
     assert min(found, key=found.__getitem__) == 27
     assert found[27] == pytest.approx(1629.48, abs=0.005)  # two decimals were kept
-    assert 1629.46 <= found[27] + 0.005  # the continuous optimum lies below
+    assert found[27] + 0.005 >= 1629.46  # the continuous optimum lies below
 
 
 def test_tiled_cholesky_critical_path() -> None:
-    """Kernels of weight 1, 3, 3, 6: t (t+1)(t+2) / 6 tasks, work t^3, critical path 9t - 10 (published, from memory)."""
+    """Kernels of weight 1, 3, 3, 6: t (t+1)(t+2) / 6 tasks, work t^3, critical path 9t - 10 (from memory)."""
     for tiles, path in ((2, 8), (3, 17), (4, 26), (8, 62)):
         sketch = Sketch()
         for k in range(tiles):

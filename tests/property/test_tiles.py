@@ -1,4 +1,4 @@
-"""Three engines, one splitting: stored graph, tiles by rule, and the sweep with a worker per tile, to the nanosecond."""
+"""Three engines, one splitting: stored graph, tiles by rule, and the sweep with a worker a tile, to the nanosecond."""
 
 from __future__ import annotations
 

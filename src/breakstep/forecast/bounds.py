@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from breakstep.forecast.dynamic import checked_owner
-from breakstep.forecast.graph import ALL_KINDS, Int8s, Int32s, Int64s, ReplayGraph
+from breakstep.forecast.graph import ALL_KINDS, Int8s, Int32s, Int64s, Number, ReplayGraph
 from breakstep.forecast.model import MachineModel
 from breakstep.profile.compiling import compiled_loop
 
@@ -137,7 +137,7 @@ def _heads(
     edges: tuple[Int64s, Int32s, Int32s, Int8s],
     kind: Int8s,
     owner: Int32s,
-    kinds: int,
+    kinds: Number,
     numbers: tuple[int, int, int, int],
     earliest: Int64s,
 ) -> None:
@@ -160,7 +160,7 @@ def _tails(
     edges: tuple[Int64s, Int32s, Int32s, Int8s],
     kind: Int8s,
     owner: Int32s,
-    kinds: int,
+    kinds: Number,
     numbers: tuple[int, int, int, int],
     longest: Int64s,
 ) -> None:
@@ -185,7 +185,7 @@ def _tails(
 
 
 @compiled_loop
-def _most_excess(moments: Int64s, head: Int64s, latest: Int64s, length: Int64s, slots: int) -> int:
+def _most_excess(moments: Int64s, head: Int64s, latest: Int64s, length: Int64s, slots: Number) -> Number:
     most = np.int64(0)
     for i in range(len(moments)):
         for j in range(i + 1, len(moments)):

@@ -18,7 +18,7 @@ from __future__ import annotations
 import numpy as np
 
 from breakstep.errors import ForecastError
-from breakstep.forecast.graph import ALL_KINDS, Int8s, Int32s, Int64s, ReplayGraph
+from breakstep.forecast.graph import ALL_KINDS, Int8s, Int32s, Int64s, Number, ReplayGraph
 from breakstep.forecast.model import MachineModel
 from breakstep.forecast.results import Counts, Replay, replay_of
 from breakstep.profile.compiling import compiled_loop
@@ -101,7 +101,7 @@ def ready_keys(tasks: int, rank: Int32s | None) -> Int64s:
 
 
 @compiled_loop
-def _push(heap: Int64s, size: int, time: int, code: int) -> int:
+def _push(heap: Int64s, size: Number, time: Number, code: Number) -> Number:
     """Add an event to a heap of pairs (time, code); the new size."""
     at = size
     while at > 0:
@@ -117,7 +117,7 @@ def _push(heap: Int64s, size: int, time: int, code: int) -> int:
 
 
 @compiled_loop
-def _pop(heap: Int64s, size: int) -> int:
+def _pop(heap: Int64s, size: Number) -> Number:
     """Take the first event away; the new size."""
     size -= 1
     time, code = heap[size, 0], heap[size, 1]
@@ -142,7 +142,7 @@ def _pop(heap: Int64s, size: int) -> int:
 
 
 @compiled_loop
-def _push_key(keys: Int64s, base: int, size: int, key: int) -> None:
+def _push_key(keys: Int64s, base: Number, size: Number, key: Number) -> None:
     """Add a ready task to the heap of keys that begins at ``base``."""
     at = size
     while at > 0:
@@ -155,7 +155,7 @@ def _push_key(keys: Int64s, base: int, size: int, key: int) -> None:
 
 
 @compiled_loop
-def _pop_key(keys: Int64s, base: int, size: int) -> int:
+def _pop_key(keys: Int64s, base: Number, size: Number) -> Number:
     """Take the first key away from the heap at ``base`` that held ``size``; the key."""
     first = keys[base]
     size -= 1
@@ -184,14 +184,14 @@ def _play(
     owner: Int32s,
     keys: Int64s,
     bins: Int64s,
-    kinds: int,
+    kinds: Number,
     numbers: tuple[int, int, int, int, int],
     contention: bool,
     times: tuple[Int64s, Int64s],
     slot: Int32s,
     order: Int32s,
     counts: tuple[Int64s, Int64s, Int64s, Int64s],
-) -> int:
+) -> Number:
     """The event loop; how many tasks finished.
 
     An event's code is the task number, plus ``finishing`` for a finish. A task whose inputs are there when

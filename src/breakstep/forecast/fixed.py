@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from breakstep.errors import ForecastError
-from breakstep.forecast.graph import ALL_KINDS, Int8s, Int32s, Int64s, ReplayGraph
+from breakstep.forecast.graph import ALL_KINDS, Int8s, Int32s, Int64s, Number, ReplayGraph
 from breakstep.forecast.model import MachineModel
 from breakstep.forecast.results import Counts, Replay, replay_of
 from breakstep.profile.compiling import compiled_loop
@@ -160,8 +160,8 @@ def _check(graph: ReplayGraph, machine: MachineModel, schedule: Schedule, kinds:
     wrong = _misplaced(graph.first, graph.producer, graph.edge_kind, place, np.int64(kinds))
     if place.min(initial=0) < 0 or wrong:
         raise ForecastError(
-            f"A schedule was given in which {wrong} of {graph.edges} edges point backwards; expected every task once, after"
-            " its inputs. Play the schedule with the edge kinds that bound in it."
+            f"A schedule was given in which {wrong} of {graph.edges} edges point backwards; expected every task"
+            " once, after its inputs. Play the schedule with the edge kinds that bound in it."
         )
 
 
@@ -200,7 +200,7 @@ def _group(graph: ReplayGraph, schedule: Schedule, variants: Sequence[Variant]) 
 
 
 @compiled_loop
-def _misplaced(first: Int64s, producer: Int32s, edge_kind: Int8s, place: Int64s, kinds: int) -> int:
+def _misplaced(first: Int64s, producer: Int32s, edge_kind: Int8s, place: Int64s, kinds: Number) -> Number:
     """How many edges lead to a task that stands before its input."""
     wrong = 0
     for task in range(len(place)):
@@ -218,7 +218,7 @@ def _sorted(
     consumer: Int32s,
     out_kind: Int8s,
     then: Int64s,
-    kinds: int,
+    kinds: Number,
 ) -> Int32s:
     """Tasks in an order that edges and threads allow; fewer than all when they contradict each other."""
     tasks = len(then)
@@ -261,7 +261,7 @@ def _walk(
     out: tuple[Int64s, Int32s, Int32s, Int8s],
     slot: Int32s,
     order: Int32s,
-    kinds: int,
+    kinds: Number,
     numbers: tuple[int, int, int, int, int],
     contention: bool,
     times: tuple[Int64s, Int64s],
@@ -312,8 +312,8 @@ def _walk_lanes(
     out: tuple[Int64s, Int32s, Int32s, Int8s],
     slot: Int32s,
     order: Int32s,
-    threads: int,
-    slots: int,
+    threads: Number,
+    slots: Number,
     numbers: Int64s,
     gate: Int64s,
     factor: NDArray[np.float64],

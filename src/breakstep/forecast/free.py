@@ -13,9 +13,10 @@ whenever its two tasks ran on different workers, so an edge from a tile to itsel
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from breakstep.forecast.dynamic import ready_keys
-from breakstep.forecast.graph import ALL_KINDS, Int8s, Int32s, Int64s, ReplayGraph
+from breakstep.forecast.graph import ALL_KINDS, Int8s, Int32s, Int64s, Number, ReplayGraph
 from breakstep.forecast.model import MachineModel
 from breakstep.forecast.results import Counts, Replay, replay_of
 from breakstep.profile.compiling import compiled_loop
@@ -65,7 +66,7 @@ def replay_free(
 
 
 @compiled_loop
-def _push(heap: Int64s, size: int, time: int, code: int) -> int:
+def _push(heap: Int64s, size: Number, time: Number, code: Number) -> Number:
     """Add an event to a heap of pairs (time, code); the new size."""
     at = size
     while at > 0:
@@ -81,7 +82,7 @@ def _push(heap: Int64s, size: int, time: int, code: int) -> int:
 
 
 @compiled_loop
-def _pop(heap: Int64s, size: int) -> int:
+def _pop(heap: Int64s, size: Number) -> Number:
     """Take the first event away; the new size."""
     size -= 1
     time, code = heap[size, 0], heap[size, 1]
@@ -106,7 +107,7 @@ def _pop(heap: Int64s, size: int) -> int:
 
 
 @compiled_loop
-def _push_key(keys: Int64s, base: int, size: int, key: int) -> None:
+def _push_key(keys: Int64s, base: Number, size: Number, key: Number) -> None:
     """Add a ready task to the heap of keys that begins at ``base``."""
     at = size
     while at > 0:
@@ -119,7 +120,7 @@ def _push_key(keys: Int64s, base: int, size: int, key: int) -> None:
 
 
 @compiled_loop
-def _pop_key(keys: Int64s, base: int, size: int) -> int:
+def _pop_key(keys: Int64s, base: Number, size: Number) -> Number:
     """Take the first key away from the heap at ``base`` that held ``size``; the key."""
     first = keys[base]
     size -= 1
@@ -142,13 +143,13 @@ def _pop_key(keys: Int64s, base: int, size: int) -> int:
 @compiled_loop
 def _choose(
     edges: tuple[Int64s, Int32s, Int32s, Int8s],
-    task: int,
-    kinds: int,
+    task: Number,
+    kinds: Number,
     slot: Int32s,
-    threads: int,
+    threads: Number,
     free: Int64s,
     held: Int64s,
-) -> int:
+) -> Number:
     """The free worker that holds most bytes of a task's inputs, or -1; ``held`` is all zero before and after."""
     first, producer, size, kind = edges
     best = -1
@@ -174,16 +175,16 @@ def _choose(
 @compiled_loop
 def _fetched(
     edges: tuple[Int64s, Int32s, Int32s, Int8s],
-    task: int,
-    kinds: int,
+    task: Number,
+    kinds: Number,
     slot: Int32s,
-    worker: int,
-    now: int,
+    worker: Number,
+    now: Number,
     numbers: tuple[int, int, int, int, int],
     contention: bool,
     link: Int64s,
     counts: tuple[Int64s, Int64s, Int64s, Int64s],
-) -> int:
+) -> Number:
     """When the inputs of a task given to ``worker`` now are all there."""
     first, producer, size, kind = edges
     threads, _, alpha, beta, _ = numbers
@@ -209,16 +210,16 @@ def _play(
     duration: Int64s,
     edges: tuple[Int64s, Int32s, Int32s, Int8s],
     out: tuple[Int64s, Int32s, Int8s],
-    step: Int8s,
+    step: NDArray[np.bool_],
     keys: Int64s,
-    kinds: int,
+    kinds: Number,
     numbers: tuple[int, int, int, int, int],
     options: tuple[bool, bool],
     times: tuple[Int64s, Int64s],
     slot: Int32s,
     order: Int32s,
     counts: tuple[Int64s, Int64s, Int64s, Int64s],
-) -> int:
+) -> Number:
     """The event loop; how many tasks finished. All events are finishes, by (time, task number)."""
     out_first, consumer, out_kind = out
     threads, overhead, _, _, tree = numbers

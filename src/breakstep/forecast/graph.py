@@ -17,6 +17,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from functools import cached_property
+from typing import Any, TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
@@ -32,6 +33,9 @@ ALL_KINDS = (1 << MAX_EDGE_KINDS) - 1
 Int8s = NDArray[np.int8]
 Int32s = NDArray[np.int32]
 Int64s = NDArray[np.int64]
+
+#: A number inside compiled loops: an int64 or a float64 there, whether Python or numpy made it.
+Number: TypeAlias = Any
 
 
 @dataclass(frozen=True)
@@ -110,7 +114,8 @@ class ReplayGraph:
     @property
     def on_worker(self) -> NDArray[np.bool_]:
         """Which tasks are steps, shape (tasks,)."""
-        return self.kind == STEP
+        steps: NDArray[np.bool_] = self.kind == STEP
+        return steps
 
     def kinds_of(self, prefix: str) -> list[int]:
         """Edge kinds whose names begin with ``prefix``, for example ``"barrier:"``."""

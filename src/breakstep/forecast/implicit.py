@@ -11,11 +11,12 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
 from breakstep.errors import ForecastError
-from breakstep.forecast.graph import BARRIER, STEP, Int32s, Int64s, ReplayGraph, build_graph
+from breakstep.forecast.graph import BARRIER, STEP, Int32s, Int64s, Number, ReplayGraph, build_graph
 from breakstep.forecast.laws import Floats
 from breakstep.forecast.model import MachineModel
 from breakstep.forecast.results import Counts
@@ -106,7 +107,7 @@ def stored_graph(splitting: TiledSplitting) -> ReplayGraph:
     costs[:, :tiles] = task_costs(splitting)
     gated = {(gate.stage, number, gate.back) for number, stage in enumerate(splitting.stages) for gate in stage.gates}
     at = np.arange(tiles)
-    edges: list[tuple[Int64s, Int64s, int, int]] = []  # producers, consumers, bytes, kind
+    edges: list[tuple[Any, Any, int, int]] = []  # producers, consumers, bytes, kind
     for phase in range(splitting.phases):
         here, cycle, stage = phase * (tiles + 1), phase // stages, phase % stages
         if any(origin == stage for origin, _, _ in gated):
@@ -156,7 +157,7 @@ def _check(splitting: TiledSplitting, machine: MachineModel, owner: Int32s) -> N
 
 
 @compiled_loop
-def _push(heap: Int64s, size: int, time: int, code: int) -> int:
+def _push(heap: Int64s, size: Number, time: Number, code: Number) -> Number:
     """Add an event to a heap of pairs (time, code); the new size."""
     at = size
     while at > 0:
@@ -172,7 +173,7 @@ def _push(heap: Int64s, size: int, time: int, code: int) -> int:
 
 
 @compiled_loop
-def _pop(heap: Int64s, size: int) -> int:
+def _pop(heap: Int64s, size: Number) -> Number:
     """Take the first event away; the new size."""
     size -= 1
     time, code = heap[size, 0], heap[size, 1]
@@ -197,7 +198,7 @@ def _pop(heap: Int64s, size: int) -> int:
 
 
 @compiled_loop
-def _push_key(keys: Int64s, base: int, size: int, key: int) -> None:
+def _push_key(keys: Int64s, base: Number, size: Number, key: Number) -> None:
     """Add a ready task to the heap of keys that begins at ``base``."""
     at = size
     while at > 0:
@@ -210,7 +211,7 @@ def _push_key(keys: Int64s, base: int, size: int, key: int) -> None:
 
 
 @compiled_loop
-def _pop_key(keys: Int64s, base: int, size: int) -> int:
+def _pop_key(keys: Int64s, base: Number, size: Number) -> Number:
     """Take the first key away from the heap at ``base`` that held ``size``; the key."""
     first = keys[base]
     size -= 1
@@ -231,7 +232,7 @@ def _pop_key(keys: Int64s, base: int, size: int) -> int:
 
 
 @compiled_loop
-def _key(seed: int, phase: int) -> int:
+def _key(seed: Number, phase: Number) -> Number:
     """What the random numbers of one phase begin with."""
     z = np.uint64(seed) * np.uint64(0x9E3779B97F4A7C15) + np.uint64(phase)
     z = (z ^ (z >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
@@ -240,7 +241,7 @@ def _key(seed: int, phase: int) -> int:
 
 
 @compiled_loop
-def _variate(key: int, tile: int) -> float:
+def _variate(key: Number, tile: Number) -> Number:
     """Exponential variate of a tile: the finaliser of splitmix64 on a counter (Steele, Lea, Flood 2014)."""
     z = key + np.uint64(tile) * np.uint64(0x9E3779B97F4A7C15)
     z = (z ^ (z >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
@@ -250,7 +251,7 @@ def _variate(key: int, tile: int) -> float:
 
 
 @compiled_loop
-def _drawn(mean: int, law: int, table: Floats, begin: int, key: int, tile: int) -> int:
+def _drawn(mean: Number, law: Number, table: Floats, begin: Number, key: Number, tile: Number) -> Number:
     """Duration of one task [ns]."""
     if law == 0:
         return mean
@@ -264,7 +265,7 @@ def _drawn(mean: int, law: int, table: Floats, begin: int, key: int, tile: int) 
 
 
 @compiled_loop
-def _all_costs(seed, costs, found):  # type: ignore[no-untyped-def]
+def _all_costs(seed: Any, costs: Any, found: Any) -> Any:
     patterns, where, cells, tables = costs
     stages = len(where)
     for phase in range(found.shape[0]):
@@ -276,7 +277,9 @@ def _all_costs(seed, costs, found):  # type: ignore[no-untyped-def]
 
 
 @compiled_loop
-def _play(seed, costs, stencil, gates, owner, bins, numbers, ends, counts):  # type: ignore[no-untyped-def]
+def _play(
+    seed: Any, costs: Any, stencil: Any, gates: Any, owner: Any, bins: Any, numbers: Any, ends: Any, counts: Any
+) -> Any:
     """The event loop. A finish has code tile + ``finishing``, an arrival the tile alone."""
     patterns, where, cells, tables = costs
     table_of, directions, transfer, size_of = stencil

@@ -10,10 +10,11 @@ from __future__ import annotations
 import math
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
-from breakstep.forecast.graph import Int64s
+from breakstep.forecast.graph import Int64s, Number
 from breakstep.forecast.laws import Floats
 from breakstep.forecast.model import MachineModel
 from breakstep.forecast.tiles import TiledSplitting, packed_costs
@@ -98,7 +99,7 @@ def _offsets(splitting: TiledSplitting) -> tuple[Int64s, Int64s]:
 
 
 @compiled_loop
-def _key(seed: int, phase: int) -> int:
+def _key(seed: Number, phase: Number) -> Number:
     """What the random numbers of one phase begin with."""
     z = np.uint64(seed) * np.uint64(0x9E3779B97F4A7C15) + np.uint64(phase)
     z = (z ^ (z >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
@@ -107,7 +108,7 @@ def _key(seed: int, phase: int) -> int:
 
 
 @compiled_loop
-def _variate(key: int, tile: int) -> float:
+def _variate(key: Number, tile: Number) -> Number:
     """Exponential variate of a tile: the finaliser of splitmix64 on a counter (Steele, Lea, Flood 2014)."""
     z = key + np.uint64(tile) * np.uint64(0x9E3779B97F4A7C15)
     z = (z ^ (z >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
@@ -117,7 +118,7 @@ def _variate(key: int, tile: int) -> float:
 
 
 @compiled_loop
-def _drawn(mean: int, law: int, table: Floats, begin: int, key: int, tile: int) -> int:
+def _drawn(mean: Number, law: Number, table: Floats, begin: Number, key: Number, tile: Number) -> Number:
     """Duration of one task [ns]."""
     if law == 0:
         return mean
@@ -131,7 +132,18 @@ def _drawn(mean: int, law: int, table: Floats, begin: int, key: int, tile: int) 
 
 
 @compiled_loop
-def _phases(box, periodic, seed, costs, stencil, gates, transfer, numbers, history, ends):  # type: ignore[no-untyped-def]
+def _phases(
+    box: Any,
+    periodic: Any,
+    seed: Any,
+    costs: Any,
+    stencil: Any,
+    gates: Any,
+    transfer: Any,
+    numbers: Any,
+    history: Any,
+    ends: Any,
+) -> Any:
     """All phases one after another; the work done."""
     work = np.int64(0)
     for phase in range(len(ends)):
@@ -144,7 +156,21 @@ def _phases(box, periodic, seed, costs, stencil, gates, transfer, numbers, histo
 
 
 @compiled_loop
-def _phase(phase, low, high, box, periodic, seed, costs, stencil, gates, transfer, numbers, history, ends):  # type: ignore[no-untyped-def]
+def _phase(
+    phase: Any,
+    low: Any,
+    high: Any,
+    box: Any,
+    periodic: Any,
+    seed: Any,
+    costs: Any,
+    stencil: Any,
+    gates: Any,
+    transfer: Any,
+    numbers: Any,
+    history: Any,
+    ends: Any,
+) -> Any:
     """Tiles from ``low`` to ``high`` of one phase; their latest end and their work."""
     patterns, where, cells, tables = costs
     offsets, counts, slacks = stencil
@@ -182,7 +208,16 @@ def _phase(phase, low, high, box, periodic, seed, costs, stencil, gates, transfe
 
 
 @compiled_loop
-def _gather(target, source, low, until, box, offset, periodic, transfer):  # type: ignore[no-untyped-def]
+def _gather(
+    target: Any,
+    source: Any,
+    low: Any,
+    until: Any,
+    box: Any,
+    offset: Any,
+    periodic: Any,
+    transfer: Any,
+) -> Any:
     """Raise start times within one row to the arrivals from one direction."""
     row, column = low // box[2], low % box[2]
     first, second = row // box[1] + offset[0], row % box[1] + offset[1]

@@ -131,15 +131,17 @@ def _stored(sizes: Sizes, variants: int, kinds: int, progress: Progress = lambda
     title = f"{tasks:,} tasks, {WORKERS} workers"
     progress(title)
     replayed = replay_owner(graph, machine, owner)
-    schedule = Schedule.of(replayed)
+    order = Schedule.of(replayed)
     machines = _machines(machine, variants)
+    whatifs = [Variant(one) for one in machines]
+    subsets, lifted = 1 << len(barriers), graph.without(barriers)
     steps = (
-        ("event replay, tasked", 1.0, 1, lambda: replay_owner(_fresh(graph), machine, owner, None, graph.without(barriers))),
+        ("event replay, tasked", 1.0, 1, lambda: replay_owner(_fresh(graph), machine, owner, None, lifted)),
         ("event replay, lockstep", 1.0, 1, lambda: replay_owner(_fresh(graph), machine, owner)),
         (f"{variants} what-ifs, replayed", 10.0, variants, lambda: _replays(graph, machines, owner)),
-        (f"{variants} what-ifs, fixed order", 10.0, variants, lambda: fixed_makespans(graph, schedule, [Variant(one) for one in machines])),
-        (f"{1 << len(barriers)} subsets, fixed order", 10.0, 1 << len(barriers), lambda: subset_makespans(graph, machine, schedule, barriers)),
-        (f"{1 << len(barriers)} subsets, replayed", 10.0, 1 << len(barriers), lambda: subset_replays(graph, machine, owner, barriers)),
+        (f"{variants} what-ifs, fixed order", 10.0, variants, lambda: fixed_makespans(graph, order, whatifs)),
+        (f"{subsets} subsets, fixed order", 10.0, subsets, lambda: subset_makespans(graph, machine, order, barriers)),
+        (f"{subsets} subsets, replayed", 10.0, subsets, lambda: subset_replays(graph, machine, owner, barriers)),
     )  # fmt: skip
     speeds = []
     for what, needed, times, work in steps:
