@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from pathlib import Path
+from typing import Any
 
 import pytest
 from axe_playwright_python.sync_playwright import Axe
@@ -11,6 +12,7 @@ from axe_playwright_python.sync_playwright import Axe
 from breakstep.report.page.palette import DARK, LIGHT
 from breakstep.report.page.runs import Runs, runs_of
 from tests.page.conftest import Open, recorded, write_page
+from tests.page.test_reading import COLUMN, tip_at
 
 pytestmark = pytest.mark.page
 
@@ -116,11 +118,20 @@ def test_the_skip_link_comes_first_and_focus_is_seen(opened: Open) -> None:
     assert found.page.evaluate("document.activeElement.id") == "main"
 
 
+def largest_at(data: dict[str, Any], side: str) -> int:
+    """Which part of a column is the largest."""
+    amounts = [part["core_s"][side] for part in data["columns"]["parts"]]
+    return amounts.index(max(amounts))
+
+
 @pytest.mark.parametrize("side", ["lockstep", "tasked"])
 def test_one_run_alone_shows_what_can_be_shown(opened: Open, tmp_path: Path, side: str) -> None:
     runs = Runs(recorded(side), None) if side == "lockstep" else Runs(None, recorded(side))
     found = opened(which=write_page(runs, tmp_path, forecast=None))
     assert found.complaints == []
     assert found.page.locator("[data-key=gain]").count() == 0
-    assert found.page.locator("#plot-columns canvas").count() > 0
+    largest = max(found.data["columns"]["parts"], key=lambda part: part["core_s"][side])
+    bottom = sum(part["core_s"][side] for part in found.data["columns"]["parts"][: largest_at(found.data, side)])
+    tip = tip_at(found.page, "columns", COLUMN[side], bottom + largest["core_s"][side] / 2)
+    assert f"core-seconds {largest['core_s'][side]:.4g}" in tip
     assert Axe().run(found.page).violations_count == 0

@@ -12,6 +12,8 @@ from tests.page.conftest import Open
 
 pytestmark = pytest.mark.page
 
+#: The middle of each run's column, on the figure's own axis.
+COLUMN = {"lockstep": 0.5, "tasked": 2.5}
 #: Where a value of a figure's axes is on the screen.
 _PIXEL = """([name, x, y]) => {
     const view = breakstep.views[name], place = document.getElementById(`plot-${name}`);
@@ -49,7 +51,7 @@ def moment_of(page: Page, data: dict[str, Any]) -> float:
 
 def test_pointing_at_a_column_reads_its_core_seconds(opened: Open) -> None:
     found = opened()
-    for side, middle in (("lockstep", 0.5), ("tasked", 2.5)):
+    for side, middle in COLUMN.items():
         bottom = 0.0
         for part in found.data["columns"]["parts"]:
             height = part["core_s"][side]

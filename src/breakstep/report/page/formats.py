@@ -69,6 +69,11 @@ def signed_size(value: float) -> str:
     return "the same" if value == 0 else f"{'+' if value > 0 else _MINUS}{size(abs(value))}"
 
 
+def moment(value: float) -> str:
+    """A moment of a run, to the millisecond."""
+    return f"{value:.3f} s"
+
+
 FILTERS: dict[str, Any] = {
     "s": seconds,
     "size": size,
@@ -79,6 +84,7 @@ FILTERS: dict[str, Any] = {
     "three": three,
     "whole": whole,
     "one": one,
+    "moment": moment,
     "percent": percent,
     "closure": closure,
     "signed_size": signed_size,

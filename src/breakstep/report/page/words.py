@@ -190,7 +190,12 @@ def _remedy(runs: Runs, profile: Profile) -> str:
     if runs.lockstep is not None and share(runs.lockstep, "barrier") >= NOTABLE_SHARE:
         step = next(iter(blame(runs.lockstep, "barrier")), "")
         return f"Take out the barrier behind {step}: more waiting at barriers is for {step} than for any other step."
-    return "Leave the barriers as they are: little is lost at them."
+    if runs.lockstep is not None:
+        return "Leave the barriers as they are: little is lost at them."
+    step = next(iter(blame(profile, "neighbour")), "")
+    if step and share(profile, "neighbour") >= NOTABLE_SHARE:
+        return f"Spread {step} better, by placement or smaller tiles: most waiting for neighbour tiles is for {step}."
+    return "Nothing stands out. A lockstep run beside this one would say what barriers cost."
 
 
 def _mean_ms(profile: Profile) -> float:

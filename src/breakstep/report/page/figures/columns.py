@@ -23,7 +23,12 @@ def columns_figure(panel: dict[str, Any]) -> figure:
     """Columns of the runs that are there."""
     sides = list(panel["total_core_s"])
     top = max(panel["total_core_s"].values())
-    plot = new_figure(HEIGHT, (-0.05, 3.05 if len(sides) == 2 else 1.6), (-0.01 * top, 1.11 * top), name="columns")
+    plot = new_figure(
+        HEIGHT,
+        (_LEFT[sides[0]] - 0.05, _LEFT[sides[-1]] + (1.05 if len(sides) == 2 else 1.6)),
+        (-0.01 * top, 1.11 * top),
+        name="columns",
+    )
     plot.axis.visible = False
     plot.grid.grid_line_color = None
     bottoms = {side: _bottoms(panel, side) for side in sides}

@@ -163,7 +163,7 @@ def _layer_name(plot: figure, key: str, base: list[float], top: list[float]) -> 
     align = "left" if place == 0 else "right" if place == len(top) - 1 else "center"
     words(
         plot, x=[place], y=[(base[place] + top[place]) / 2], text_align=align,
-        text=[{"compute_s": " kernels", "engine_s": " dispatch ", "wait_s": "waits "}[key]],
+        text=[{"compute_s": " kernels", "engine_s": " dispatch ", "wait_s": "waits "}[key]], **on_paper(),
     )  # fmt: skip
 
 

@@ -32,14 +32,16 @@ def fronts_panel(profile: Profile, cells: Cells) -> dict[str, Any]:
     Returns
     -------
     dict
-        ``cycles``: which cycles have a line. ``front_s`` and ``idle_s``, for each of them and each cell: the moment
-        [s], and how long the threads of the cell's worker stood idle, on average, since the line before [s].
+        ``cycles``: which cycles have a line, every so many of them (``cycles_per_line``). ``front_s`` and
+        ``idle_s``, for each of them, for the run's end, and for each cell: the moment [s], and how long the threads
+        of the cell's worker stood idle, on average, since the line before [s].
         ``span_s``; ``bend_s``, the mean over lines of last minus first moment.
     """
     ready, owner = _ready(profile, cells)
     origin, span = profile.ledger.first_ns, profile.ledger.span_ns
     cycles = np.flatnonzero((ready != _ABSENT).any(axis=1))
-    chosen = cycles[:: max(1, -(-len(cycles) // MOST_FRONTS))]
+    every = max(1, -(-len(cycles) // MOST_FRONTS))
+    chosen = cycles[::every]
     fronts = _filled(ready[chosen]) - origin
     ends = np.concatenate([fronts, np.full((1, cells.count), span)])
     owners = np.concatenate([owner[chosen], owner[chosen][-1:]])
@@ -47,6 +49,7 @@ def fronts_panel(profile: Profile, cells: Cells) -> dict[str, Any]:
     inner = ends[1:-1]
     return {
         "cycles": [int(cycle) for cycle in chosen],
+        "cycles_per_line": every,
         "front_s": [all_seconds(row) for row in ends],
         "idle_s": [all_seconds(row) for row in idle],
         "span_s": seconds(span),

@@ -118,6 +118,7 @@
   // --- step fronts and their moment
   const slider = find("moment");
   const end = Math.max(...sides.map((side) => data.fronts[side].span_s));
+  const every = data.fronts[sides[0]].cycles_per_line; // cycles from line to line
   let pointed = -1;
   function cycleAt(side, cell, moment) {
     const { front_s, cycles, span_s } = data.fronts[side];
@@ -151,8 +152,9 @@
     if (pointed < 0) {
       const spread = sides.map((side) => {
         const found = cells.places.map((_, cell) => cycleAt(side, cell, moment));
-        const distinct = [...new Set(found)];
-        return `${side}: ${distinct.length === 1 ? `all tiles in ${named(distinct[0])}` : `tiles in cycles ${distinct[0] === "–" ? "" : ""}${Math.min(...found.filter(Number.isFinite))} to ${Math.max(...found.filter(Number.isFinite))}`}`;
+        const distinct = [...new Set(found)], numbers = found.filter(Number.isFinite);
+        if (distinct.length === 1) return `${side}: all tiles in ${named(distinct[0])}`;
+        return `${side}: tiles in cycles ${Math.min(...numbers)} to ${Math.max(...numbers) + every - 1}`;
       });
       find("fronts-readout").textContent = `At ${time(moment)}, ${spread.join("; ")}.`;
       return;
@@ -160,7 +162,7 @@
     const said = sides.map((side) => `${side} in ${named(cycleAt(side, pointed, moment))}`);
     find("fronts-readout").textContent = `At ${time(moment)}, ${tile(pointed)}: ${said.join(", ")}.`;
   }
-  const named = (cycle) => (cycle === "end" ? "its end" : cycle === "–" ? "its start" : `cycle ${cycle}`);
+  const named = (cycle) => (cycle === "end" ? "its end" : cycle === "–" ? "its start" : every === 1 ? `cycle ${cycle}` : `cycles ${cycle} to ${cycle + every - 1}`);
   slider.addEventListener("input", showMoment);
   for (const side of sides) listen(maps[`moment-${side}`], (cell) => { pointed = cell; sayMoment(); });
   for (const holder of document.querySelectorAll("[data-fronts]")) {

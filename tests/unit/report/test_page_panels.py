@@ -1,0 +1,149 @@
+"""The page's numbers from runs that were drawn by hand: one character is a millisecond."""
+
+from __future__ import annotations
+
+import numpy as np
+import pandas as pd
+import pytest
+
+from breakstep.errors import PairsError
+from breakstep.profile.run import Profile
+from breakstep.report.page.cells import Cells, cells_of
+from breakstep.report.page.data import page_data
+from breakstep.report.page.numbers import plain, significant
+from breakstep.report.page.panels.columns import columns_panel
+from breakstep.report.page.panels.fronts import fronts_panel
+from breakstep.report.page.panels.idle import IdleTime
+from breakstep.report.page.panels.memory import binned_highest
+from breakstep.report.page.runs import Runs, runs_of
+from tests.unit.profile.sketch import manifest
+from tests.unit.report.made import BARRED, FREE
+
+
+def row_of(tiles: int, *, axis: int = 0, owners: list[int] | None = None) -> Cells:
+    shape = [1, 1, 1]
+    shape[axis] = tiles
+    places = [[0, 0, 0] for _ in range(tiles)]
+    for number, place in enumerate(places):
+        place[axis] = number
+    mesh = {"shape": shape, "tile_shape": [1, 1, 1], "tiles": [{"origin": p, "shape": [1, 1, 1]} for p in places]}
+    return cells_of(manifest(2, 2, tiles, mesh=mesh, placement=owners or [0] * tiles))  # type: ignore[arg-type]
+
+
+def square_of(edge: int) -> Cells:
+    places = [[i, j, 0] for i in range(edge) for j in range(edge)]
+    mesh = {
+        "shape": [edge, edge, 1],
+        "tile_shape": [1, 1, 1],
+        "tiles": [{"origin": p, "shape": [1, 1, 1]} for p in places],
+    }
+    return cells_of(manifest(1, 1, edge**2, mesh=mesh))  # type: ignore[arg-type]
+
+
+def test_a_square_of_tiles_is_drawn_with_its_second_axis_upwards() -> None:
+    cells = square_of(3)
+    where = {label: tuple(place) for label, place in zip(cells.labels, cells.places, strict=True)}
+    assert where["0,0"] == (0, 2)
+    assert where["2,0"] == (2, 2)
+    assert where["0,2"] == (0, 0)
+    steps = np.abs(np.diff(np.array(square_of(4).places), axis=0)).sum(axis=1)
+    assert set(steps.tolist()) == {1}  # along the curve every step goes to a neighbour
+
+
+def test_axes_of_one_tile_take_no_room() -> None:
+    for axis in range(3):
+        cells = row_of(5, axis=axis)
+        assert (cells.columns, cells.rows) == (5, 1)
+
+
+def test_too_many_tiles_are_drawn_in_blocks() -> None:
+    cells = square_of(50)
+    assert cells.block == 3
+    assert cells.count == 17**2
+    assert cells.labels[0] == "0-2,0-2"
+    assert sorted(np.bincount(cells.of_tile).tolist())[-1] == 9
+
+
+def test_a_cell_of_several_owners_belongs_to_nobody() -> None:
+    assert row_of(3, owners=[0, 0, 1]).owners == [0, 0, 1]
+    wide = row_of(1200, owners=[0] * 601 + [1] * 599)
+    assert sorted(set(wide.owners)) == [-1, 0, 1]
+
+
+def test_idle_time_grows_while_a_thread_waits_and_only_then() -> None:
+    """Worker 1 runs C for 2 ms, waits for 7, runs D for 4: without the release, its wait is the barrier's."""
+    profile = BARRED.profile()
+    idle = IdleTime.of(profile)
+    at = np.array([0, 2, 5, 9, 13]) * 1_000_000
+    waited = int(profile.ledger.by_thread.loc[(1, 0), ["neighbour", "reduction", "barrier"]].sum())
+    assert idle.until(1, at)[:2].tolist() == [0.0, 0.0]
+    assert idle.until(1, at)[3] == pytest.approx(waited)
+    assert idle.until(1, at)[4] == pytest.approx(waited)
+    assert np.all(np.diff(idle.until(0, at)) >= 0)
+
+
+def test_fronts_end_with_the_run_and_hold_all_idle_time_since_the_first() -> None:
+    profile = FREE.profile()
+    panel = fronts_panel(profile, cells_of(profile.manifest))
+    assert panel["cycles"] == [0]
+    assert set(panel["front_s"][-1]) == {panel["span_s"]}
+    assert panel["idle_s"][0] == [0.0] * len(panel["idle_s"][0])
+
+
+@pytest.mark.parametrize("drawn", [BARRED, FREE])
+def test_columns_add_up_to_threads_times_span(drawn: object) -> None:
+    profile = drawn.profile()  # type: ignore[attr-defined]
+    panel = columns_panel(Runs(profile, None))
+    total = sum(part["core_s"]["lockstep"] for part in panel["parts"])
+    assert total == pytest.approx(panel["total_core_s"]["lockstep"], abs=2e-6 * len(panel["parts"]))  # each to 1 us
+
+
+def test_bins_keep_the_highest_value_and_what_they_are_entered_with() -> None:
+    series = pd.Series([5, 9, 1, 4], index=pd.Index([10, 12, 12, 35]))
+    assert binned_highest(series, 0, np.array([0.0, 10.0, 20.0, 30.0, 40.0])) == [0, 9, 1, 4]
+    assert binned_highest(series[:0], 0, np.array([0.0, 1.0])) == [0]
+
+
+def test_runs_that_are_no_pair_are_refused() -> None:
+    one, other = FREE.profile(), BARRED.profile()
+    with pytest.raises(PairsError, match="as many runs in lockstep as tasked, not 1 and 2"):
+        runs_of([other], [one, one])
+    with pytest.raises(PairsError, match="all 2 runs are tasked"):
+        runs_of([], [one, one])
+    other.manifest["scenario"]["name"] = "else"
+    with pytest.raises(PairsError, match="different scenarios or meshes"):
+        runs_of([other], [one])
+
+
+def pair() -> tuple[Profile, Profile]:
+    return BARRED.profile(), FREE.profile()
+
+
+def test_the_words_near_the_top_answer_from_the_figures() -> None:
+    """Lockstep 13 ms on two threads, tasked 12: A runs 7, C 2, so at the barrier worker 1 waits for burn."""
+    lockstep, tasked = pair()
+    data = page_data(runs_of([lockstep], [tasked]))
+    answers = {row["question"]: row["answer"] for row in data["answers"]}
+    bought = answers["What would leaving lockstep buy?"]
+    assert bought.startswith(
+        "13 ms in lockstep, 12 ms tasked on 2 threads: 0.00200 of 0.0260 core-seconds handed back."
+    )
+    assert "one pair has no interval" in bought
+    why = answers["Why do cores stand idle in lockstep?"]
+    idle = sum(lockstep.ledger.accounts_ns[a] for a in ("neighbour", "reduction", "barrier", "unemployed"))
+    assert why.startswith(f"For {100 * idle / lockstep.ledger.available_ns:.0f} % of their time")
+    assert "waiting at a barrier" in why
+    assert "for burn" in why
+
+
+def test_the_largest_advice_is_what_to_do_first() -> None:
+    advice = [{"do": "Take out the barrier behind burn", "gain_s": 0.5, "bytes": 0, "memory_bytes": 0, "command": ""}]
+    data = page_data(runs_of(*([one] for one in pair())), {"advice": advice})
+    assert data["answers"][-1]["answer"].startswith("Take out the barrier behind burn: the forecast hands back 500 ms")
+
+
+def test_numbers_that_json_cannot_hold_become_nothing() -> None:
+    assert plain({1: (float("nan"), 2.0)}) == {"1": [None, 2.0]}
+    assert significant(float("inf")) is None
+    assert significant(123456.0, 3) == 123000.0
+    assert significant(0.0) == 0.0
