@@ -127,6 +127,39 @@ def sums_in_thread_order(arrays: Arrays, call: Call) -> dict[str, Array]:
     return {"of_sums_in_thread_order": arrays["u"] + total}
 
 
+def takes_with_wrap(arrays: Arrays, call: Call) -> dict[str, Array]:
+    u = arrays["u"]
+    places = np.arange(1, u.shape[1] - 1)
+    return {"of_takes_with_wrap": np.take(u, places + 2, axis=1, mode="wrap") - np.take(u, places, axis=1)}
+
+
+def draws_by_tile(arrays: Arrays, call: Call) -> dict[str, Array]:
+    return {"of_draws_by_tile": arrays["u"] + np.random.default_rng(call.tile).random()}
+
+
+def default_argument(arrays: Arrays, call: Call, memo: dict[str, float] = {}) -> dict[str, Array]:  # noqa: B006
+    scale = memo.setdefault("scale", float(arrays["u"].ravel()[0]))
+    return {"of_default_argument": arrays["u"] * scale}
+
+
+def sorts_the_tile(arrays: Arrays, call: Call) -> dict[str, Array]:
+    return {"of_sorts_the_tile": np.sort(arrays["u"], axis=1)}
+
+
+def last_row_unset(arrays: Arrays, call: Call) -> dict[str, Array]:
+    """Leaves a row unset in tiles at the far edge of the mesh."""
+    made = np.empty_like(arrays["u"])
+    rows = call.shape[0] - (call.origin[0] >= 12)
+    made[:, :rows] = arrays["u"][:, :rows]
+    return {"of_last_row_unset": made}
+
+
+def seldom_reads(arrays: Arrays, call: Call) -> dict[str, Array]:
+    """Reads ``w`` in the eighth cycle, when it is hot: no call of the audit's meets both."""
+    made = arrays["u"] * 2.0
+    return {"of_seldom_reads": made + arrays["w"][:1] if call.cycle == 7 and made.max() > 1e6 else made}
+
+
 CASES = [
     Case("every_tenth_call", every_tenth_call, (U,), ("hidden state", "call order")),
     Case("asks_a_neighbour", asks_a_neighbour, (U,), ("call order", "hidden state")),
@@ -144,4 +177,11 @@ CASES = [
     Case("sets_environment", sets_environment, (U,), ("side effect",)),
     Case("keeps_results", keeps_results, (U,), ("shared result", "hidden state")),
     Case("sums_in_thread_order", sums_in_thread_order, (U,), ("not repeatable", "hidden state", "call order")),
+    Case("takes_with_wrap", takes_with_wrap, (Read("u", X),), ("undeclared halo", "tiling")),
+    Case("draws_by_tile", draws_by_tile, (U,), ("tile number",)),
+    Case("default_argument", default_argument, (U,), ("call order", "hidden state")),
+    Case("sorts_the_tile", sorts_the_tile, (U,), ("undeclared halo", "tiling")),
+    Case("last_row_unset", last_row_unset, (U,), ("uninitialised",)),
 ]
+MISSED = Case("seldom_reads", seldom_reads, (U,))
+"""Not seen by calling it; its code gives it away, which makes a note."""

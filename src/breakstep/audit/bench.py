@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import itertools
 import time
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -128,42 +128,37 @@ class Bench:
     ) -> tuple[Outcome, dict[str, Guarded]]:
         """Call the kernel; the outcome's arrays are what it returned, beside the inputs it had."""
         declared = self.given(sample) if given is None else given
-        extra = {n: a for n, a in (sample.fields if others is None else others).items() if n not in declared}
-        guarded = {name: Guarded(array, poison) for name, array in {**extra, **declared}.items()}
-        if not self.writable:
-            for one in guarded.values():
-                one.protect()
-        served = {name: one.array for name, one in guarded.items()}
+        guarded = {name: self._guarded(array, poison) for name, array in declared.items()}
+        others = sample.fields if others is None else others
+        asked = _OnRequest(others, lambda name: guarded.setdefault(name, self._guarded(others[name], poison)).array)
         self.watch.fill, self.watch.overrun = fill, 0
         fill_heap(fill or 0x11)
-        arguments = (
-            self.part,
-            {name: served[name] for name in declared},
-            call or sample.call,
-            {name: served[name] for name in extra},
-            sample.call.values if values is None else values,
-        )
         self.inside = True
         with np.errstate(all="ignore"):
-            outcome = call_watched(self.watch, *arguments)
-        fill_heap(0)
-        self.inside = False
-        self.calls += 1
-        odd = odd_arithmetic() if not self._odd else ""
-        if odd:
-            self.incident(
-                "side effect", "arithmetic", f"it makes the processor {odd}, for all that its thread runs later"
+            outcome = call_watched(
+                self.watch,
+                self.part,
+                {name: guarded[name].array for name in declared},
+                call or sample.call,
+                asked,
+                sample.call.values if values is None else values,
             )
-            usual_arithmetic()
+        self.inside = False
+        fill_heap(0)
+        self.calls += 1
         self._note(sample, outcome, guarded)
-        if outcome.arrays is None and "read" in outcome.error and "only" in outcome.error and not self.writable:
-            where = outcome.place or sample.where()
-            self.incident("changed input", "", f"it writes to an array it was given ({where}: {outcome.error})")
-            self.writable = True
-            return self.run_raw(
-                sample, given, call=call, values=values, others=others, poison=poison, fill=fill
-            )  # fmt: skip
-        return outcome, guarded
+        if self.writable or not outcome.refused_to_write():
+            return outcome, guarded
+        where = outcome.place or sample.where()
+        self.incident("changed input", "", f"it writes to an array it was given ({where}: {outcome.error})")
+        self.writable = True
+        return self.run_raw(sample, given, call=call, values=values, others=others, poison=poison, fill=fill)
+
+    def _guarded(self, array: Array, poison: float) -> Guarded:
+        guarded = Guarded(array, poison)
+        if not self.writable:
+            guarded.protect()
+        return guarded
 
     def incident(self, kind: str, name: str, evidence: str) -> None:
         """Note something once."""
@@ -193,12 +188,19 @@ class Bench:
                     "outside memory", f"written:{name}",
                     f"it wrote outside of {name!r}: the double {side} of the array changed ({sample.where()})",
                 )  # fmt: skip
+        self._note_arithmetic()
         if self.watch.check():
             self.incident(
                 "outside memory", "made",
                 f"it wrote past an array that it had made, by up to {self.watch.overrun} bytes ({sample.where()})",
             )  # fmt: skip
             self.watch.overrun = 0
+
+    def _note_arithmetic(self) -> None:
+        odd = "" if self._odd else odd_arithmetic()
+        if odd:
+            self.incident("side effect", "", f"it makes the processor {odd}, for all that its thread runs later")
+            usual_arithmetic()
 
     def bases(self) -> Iterator[Base]:
         """States to perturb, made once: the samples, then states made up from them, each with its outcome."""
@@ -240,6 +242,17 @@ class Bench:
         origin = call.origin if turn % 2 else _moved(call, rng)
         call = replace(call, cycle=call.cycle + turn, origin=origin)
         return Base(sample, given, call, values)
+
+
+class _OnRequest(dict[str, Array]):
+    """Arrays that are made when they are asked for."""
+
+    def __init__(self, names: Iterable[str], make: Callable[[str], Array]) -> None:
+        super().__init__({name: np.empty(0) for name in names})
+        self._make = make
+
+    def __getitem__(self, name: str) -> Array:
+        return self._make(name)
 
 
 def _varied(array: Array, kind: int, turn: int, rng: np.random.Generator) -> Array:

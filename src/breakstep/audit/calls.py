@@ -77,6 +77,10 @@ class Outcome:
         """Whether there is a result and all of it is finite."""
         return self.arrays is not None and all(np.isfinite(array).all() for array in self.arrays.values())
 
+    def refused_to_write(self) -> bool:
+        """Whether NumPy ("read-only") or Numba ("readonly") would not let it write to an array."""
+        return self.arrays is None and ("read-only" in self.error or "readonly" in self.error)
+
     def copied(self) -> Outcome:
         """The same with arrays of its own."""
         if self.arrays is None:

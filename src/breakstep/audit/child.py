@@ -20,7 +20,7 @@ from breakstep.audit.carry import load, save
 from breakstep.audit.findings import NOTE, Finding
 from breakstep.audit.probe_memory import probe_pages, probe_protected, probe_surroundings, probe_uninitialised
 from breakstep.audit.probe_place import probe_cut, probe_influence, probe_numbers
-from breakstep.audit.probe_reads import probe_contract, probe_corners, probe_undeclared, probe_unused
+from breakstep.audit.probe_reads import probe_contract, probe_corners, probe_named, probe_undeclared, probe_unused
 from breakstep.audit.probe_state import (
     probe_clock,
     probe_processes,
@@ -47,6 +47,7 @@ PROBES: dict[str, Probe] = {
     "clock": probe_clock,
     "unused": probe_unused,
     "undeclared": probe_undeclared,
+    "named": probe_named,
     "threads": probe_threads,
     "pages": probe_pages,
     "protected pages": probe_protected,

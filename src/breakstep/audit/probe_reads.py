@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from breakstep.audit.bench import Base, Bench, Given, corner_mask, layer_mask
 from breakstep.audit.calls import Outcome, first_difference, name_writes
 from breakstep.audit.findings import NOTE, Finding
+from breakstep.audit.reach import reached_state
 from breakstep.audit.sample import Sample
 from breakstep.mesh.mesh import AXIS_NAMES, Triple
 from breakstep.steps.step import Array, Read, Step
@@ -129,6 +130,20 @@ def probe_undeclared(bench: Bench) -> Iterator[Finding]:
                 bench.part.name, kind, f"It asks for the reduction {name!r} {verb} ({where}{tried.evidence}).",
                 field=name, change={"uses": True},
             )  # fmt: skip
+
+
+def probe_named(bench: Bench) -> Iterator[Finding]:
+    """Fields and reductions whose names stand in its code, and which it neither declares nor was seen to ask for."""
+    part = bench.part
+    declared = {read.field for read in part.reads} | {name for _, name in bench.incidents}
+    declared |= {*part.writes, *part.uses} if isinstance(part, Step) else set()
+    known = dict.fromkeys(bench.fields, "undeclared field")
+    known |= dict.fromkeys(bench.samples[0].call.values, "undeclared reduction")
+    for name in sorted(reached_state(part.kernel).words & known.keys() - declared):
+        text = (
+            f"Its code names {name!r}, which it does not declare; it was not seen to ask for it in {bench.calls} calls."
+        )
+        yield Finding(part.name, known[name], text, NOTE, name)
 
 
 def _other_field(bench: Bench, name: str, base: Base) -> Iterator[Outcome]:

@@ -55,12 +55,15 @@ class Reached:
         Files of the shared libraries that it holds.
     compiled : set of str
         Functions compiled by Numba.
+    words : set of str
+        Strings that stand in the code of the user's functions.
     """
 
     digests: dict[str, str] = field(default_factory=dict)
     arrays: set[str] = field(default_factory=set)
     libraries: set[str] = field(default_factory=set)
     compiled: set[str] = field(default_factory=set)
+    words: set[str] = field(default_factory=set)
 
     def differing(self, later: Reached) -> set[str]:
         """Paths that both have and that changed; what only one has is a cache that was filled."""
@@ -122,7 +125,7 @@ def _parts(path: str, value: Any, found: Reached) -> Iterator[tuple[str, Any]]:
         yield f"{path}.args", value.args
         yield f"{path}.keywords", value.keywords
     elif isinstance(value, types.FunctionType):
-        yield from _of_function(path, value)
+        yield from _of_function(path, value, found)
     elif isinstance(value, types.MethodType):
         yield from ((f"{path}.__func__", value.__func__), (f"{path}.__self__", value.__self__))
     elif isinstance(value, ctypes.CDLL):
@@ -130,7 +133,7 @@ def _parts(path: str, value: Any, found: Reached) -> Iterator[tuple[str, Any]]:
     elif hasattr(value, "py_func"):  # a function compiled by Numba
         if not str(getattr(value, "__module__", "")).startswith("breakstep."):
             found.compiled.add(path)
-            yield from _of_function(path, value.py_func)
+            yield from _of_function(path, value.py_func, found)
     elif isinstance(value, Mapping):
         yield f"the length of {path}", len(value)
         yield from ((f"{path}[{key!r}]", inner) for key, inner in list(value.items())[:200])
@@ -155,7 +158,7 @@ def _of_object(path: str, value: Any) -> Iterator[tuple[str, Any]]:
     yield from ((f"{path}.{name}", inner) for name, inner in getattr(value, "__dict__", {}).items())
 
 
-def _of_function(path: str, function: types.FunctionType) -> Iterator[tuple[str, Any]]:
+def _of_function(path: str, function: types.FunctionType, found: Reached) -> Iterator[tuple[str, Any]]:
     for name, cell in zip(function.__code__.co_freevars, function.__closure__ or (), strict=False):
         try:
             yield name, cell.cell_contents
@@ -167,6 +170,7 @@ def _of_function(path: str, function: types.FunctionType) -> Iterator[tuple[str,
     if not _is_users(function.__module__):
         return
     names = set(_names(function.__code__))
+    found.words |= {word for code in _codes(function.__code__) for word in code.co_consts if isinstance(word, str)}
     for name in names & function.__globals__.keys():
         value = function.__globals__[name]
         if isinstance(value, types.ModuleType):
@@ -184,10 +188,16 @@ def _of_function(path: str, function: types.FunctionType) -> Iterator[tuple[str,
 
 
 def _names(code: types.CodeType) -> Iterator[str]:
-    yield from code.co_names
+    for one in _codes(code):
+        yield from one.co_names
+
+
+def _codes(code: types.CodeType) -> Iterator[types.CodeType]:
+    """The code of a function and of those inside it."""
+    yield code
     for constant in code.co_consts:
         if isinstance(constant, types.CodeType):
-            yield from _names(constant)
+            yield from _codes(constant)
 
 
 @functools.cache

@@ -168,40 +168,48 @@ def _walked(program: Program, folder: Path, cycles: int, timeout: float) -> list
 
 
 def _audited(part: PartAudit, folder: Path, timeout: float, progress: Callable[[str], None]) -> None:
-    """Probe one part, as often as it takes to get through."""
+    """Everything about one part."""
     if part.is_timed:
         text = "It is made of recorded times alone: nothing of a kernel's is there to be audited."
         part.findings = [Finding(part.name, "position", text, NOTE)]
         return
     progress(part.name)
-    if not part.samples:
-        if not part.findings:
-            text = "It was never called: a step before it failed, or the run ended before it."
-            part.findings.append(Finding(part.name, "raises", text))
-        return
+    if part.samples:
+        if _probed(part, folder, timeout):
+            ran = spawn("python", folder, set(), part.name, timeout)
+            part.findings += [Finding(**line["finding"]) for line in ran.said if "finding" in line]
+        part.findings = tidied(part.findings)
+    elif not part.findings:
+        text = "It was never called: a step before it failed, or the run ended before it."
+        part.findings.append(Finding(part.name, "raises", text))
+
+
+def _probed(part: PartAudit, folder: Path, timeout: float) -> bool:
+    """Probe one part, as often as it takes to get through; whether it holds functions compiled by Numba."""
     skip: set[str] = set()
-    compiled: list[str] = []
+    compiled = False
     while True:
         ran = spawn("probe", folder, skip, part.name, timeout)
         for line in ran.said:
-            if "finding" in line:
-                part.findings.append(Finding(**line["finding"]))
-            part.calls += int(line.get("calls", 0))
-            compiled = line.get("compiled", compiled)
-            if "broken" in line:
-                raise KernelError(f"the audit of {part.name} broke off: {line['broken']}\n{ran.log[-2000:]}")
-            if "moved" in line:
-                part.findings.append(_moved(part.name, line["moved"]))
+            _heard(part, line, ran.log)
+            compiled = compiled or bool(line.get("compiled"))
         if ran.is_done:
-            break
+            return compiled
         part.findings.append(_ended(part.name, ran))
         if ran.doing in skip or ran.doing in ("", "contract"):
-            break
+            return compiled
         skip.add(ran.doing)
-    if compiled:
-        ran = spawn("python", folder, set(), part.name, timeout)
-        part.findings += [Finding(**line["finding"]) for line in ran.said if "finding" in line]
-    part.findings = tidied(part.findings)
+
+
+def _heard(part: PartAudit, line: dict[str, Any], log: str) -> None:
+    """Take one line of the probing process."""
+    if "broken" in line:
+        raise KernelError(f"the audit of {part.name} broke off: {line['broken']}\n{log[-2000:]}")
+    if "finding" in line:
+        part.findings.append(Finding(**line["finding"]))
+    if "moved" in line:
+        part.findings.append(_moved(part.name, line["moved"]))
+    part.calls += int(line.get("calls", 0))
 
 
 def _ended(name: str, ran: Spawned) -> Finding:

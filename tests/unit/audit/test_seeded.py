@@ -88,3 +88,11 @@ def test_false_declarations_in_numba_are_found() -> None:
     parts, expected = audited(numba_cases.CASES)
     assert names(parts) == set(expected)
     assert missed(parts, expected) == {}
+
+
+@pytest.mark.slow
+def test_a_read_that_no_call_shows_is_a_note() -> None:
+    parts, _ = audited([adversarial.MISSED])
+    (found,) = [part for part in parts if part.name == "seldom_reads"]
+    assert not found.faults
+    assert [(finding.kind, finding.field) for finding in found.findings] == [("undeclared field", "w")]
