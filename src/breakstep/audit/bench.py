@@ -22,7 +22,7 @@ from breakstep.mesh.mesh import Triple
 from breakstep.steps.step import Array, Call, Read, Step
 
 FINITE = 1.0  # what surrounds inputs unless a probe says otherwise
-SECONDS = 20.0  # for one question to one kernel; only costly kernels come near it
+SECONDS = 8.0  # for one question to one kernel; only costly kernels come near it
 VARIATIONS = 18  # states made up beside the samples
 Given = dict[str, Array]
 

@@ -174,7 +174,8 @@ def _audited(part: PartAudit, folder: Path, timeout: float, progress: Callable[[
         part.findings = [Finding(part.name, "position", text, NOTE)]
         return
     progress(part.name)
-    if part.samples:
+    hung = any(finding.kind == "timeout" for finding in part.findings)
+    if part.samples and not hung:  # what hung once would hang again
         if _probed(part, folder, timeout):
             ran = spawn("python", folder, set(), part.name, timeout)
             part.findings += [Finding(**line["finding"]) for line in ran.said if "finding" in line]
