@@ -32,6 +32,10 @@ WEAK = (
     "The mesh grows with the workers: recorded costs side by side, mirrored, each task's drawn anew; bounds are those"
     " of mean costs, and memory and bytes are not followed."
 )
+ONE_RUN = (
+    "No mode was recorded twice: intervals hold what differs from task to task, not what differs from run to run, which"
+    " is usually more. Give several runs."
+)
 MOST_WORKERS = 65536  # of a growing mesh, where the user names no numbers
 
 
@@ -153,6 +157,11 @@ def row_of(basis: Basis, machine: Machine, question: Question, workers: int, dra
     return row
 
 
+def _is_repeated(basis: Basis) -> bool:
+    modes = [run.mode for run in basis.runs]
+    return len(modes) > len(set(modes))
+
+
 def default_workers(basis: Basis, machine: Machine, question: Question) -> list[int]:
     """Doubling from 1 to what machine and tiles allow, the recorded number among them."""
     threads = question.threads or machine.threads
@@ -181,5 +190,5 @@ def answer(basis: Basis, machine: Machine, question: Question, workers: Sequence
         "tiles": basis.program.tile_count,
         "messages_seen": basis.dispatch.seen,
         "runs": len(basis.runs),
-        "notes": [WEAK] if question.weak else [],
+        "notes": [WEAK] * bool(question.weak) + [ONE_RUN] * (not _is_repeated(basis)),
     }

@@ -56,10 +56,11 @@ def page_forecast(lockstep: Profile | None, tasked: Profile | None) -> dict[str,
     """
     basis = basis_of([profile for profile in (lockstep, tasked) if profile is not None])
     machine, question, workers = recorded_machine(basis.first), Question(), basis.first.workers
-    scaling = answer(basis, machine, question, _page_workers(basis))
+    more = _more_nodes(machine, _page_workers(basis))
+    scaling = answer(basis, more, question, _page_workers(basis))
     ranking = rank_kinds(basis, machine, question, workers)
     return {
-        "scaling": {"machine": machine.title, "rows": scaling["rows"], "recorded": recorded_errors(basis)},
+        "scaling": {"machine": more.title, "rows": scaling["rows"], "recorded": recorded_errors(basis)},
         "barriers": ranking_figures(ranking),
         "grain": {
             "recorded_tile": list(recorded_tile(basis)),
@@ -69,9 +70,16 @@ def page_forecast(lockstep: Profile | None, tasked: Profile | None) -> dict[str,
     }
 
 
+def _more_nodes(machine: Machine, workers: Sequence[int]) -> Machine:
+    """As many nodes like the machine of recording as that many workers need; messages take as long as recorded."""
+    nodes = -(-max(workers) * machine.threads // machine.cores)
+    if nodes <= 1:
+        return machine
+    return machine.model_copy(update={"nodes": nodes, "title": f"{machine.title}; beyond them, more nodes like it"})
+
+
 def _page_workers(basis: Basis) -> list[int]:
-    """Doubling from one to one tile a worker: beyond the recorded machine's cores the figures say what more of the
-    same nodes would do."""
+    """Doubling from one worker towards one tile a worker."""
     tiles = basis.program.tile_count
     doubling = [2**power for power in range(tiles.bit_length()) if 2**power <= tiles]
     return sorted({*doubling[:PAGE_WORKERS], basis.first.workers})

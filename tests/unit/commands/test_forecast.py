@@ -146,7 +146,7 @@ def test_figures_for_the_page() -> None:
     lockstep, tasked = (read_profile(SHIPPED / mode) for mode in ("lockstep", "tasked"))
     for found in (page_forecast(lockstep, tasked), page_forecast(lockstep, None), page_forecast(None, tasked)):
         assert set(found) == {"scaling", "barriers", "grain", "advice"}
-        assert found["scaling"]["rows"]
+        assert [row["workers"] for row in found["scaling"]["rows"]] == [1, 2, 4]
         assert found["grain"]["recorded_tile"] == [32, 32, 1]
         assert {"tile", "tasks", "lockstep_s", "tasked_s", "compute_s", "engine_s", "wait_s"} <= set(
             found["grain"]["rows"][0]

@@ -91,8 +91,15 @@ def test_the_error_is_that_of_the_median_run() -> None:
 def test_identical_repeats_leave_the_interval_without_width() -> None:
     """Intervals of identical repeats have no width."""
     basis = basis_of([Ring(hot()).profile(), Ring(hot()).profile()])
-    row = answer(basis, recorded_machine(basis.first), Question(), [2])["rows"][0]
-    assert row["lockstep_high_s"] - row["lockstep_low_s"] < 1e-6
+    found = answer(basis, recorded_machine(basis.first), Question(), [2])
+    assert found["rows"][0]["lockstep_high_s"] - found["rows"][0]["lockstep_low_s"] < 1e-6
+    assert found["notes"] == []
+
+
+def test_a_single_run_cannot_say_how_runs_differ_and_says_so() -> None:
+    basis = basis_of([Ring(hot()).profile()])
+    (note,) = answer(basis, recorded_machine(basis.first), Question(), [2])["notes"]
+    assert "No mode was recorded twice" in note
 
 
 def test_stretched_waits_of_a_rehearsal_are_taken_back_and_put_in_again() -> None:
