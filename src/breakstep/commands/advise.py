@@ -62,7 +62,7 @@ def advise(
         "workers": count,
         "recorded": recorded_errors(basis),
         **ranking_figures(ranking),
-        "advice": [one.facts(command_of(one, scenario_name(basis), count, threads)) for one in found],
+        "advice": [one.facts(command_of(one, basis, count, threads)) for one in found],
     }
     if verify and found:
         folder = output_folder(out, f"{scenario_name(basis)}-verify")

@@ -302,10 +302,21 @@ class Adviser:
         """A trial beside what all trials share."""
         changed = {override.partition("=")[0] for override in overrides}
         kept = tuple(one for one in self.common if one.partition("=")[0] not in changed)
-        named = self.question.placement
+        named = self.question.placement or recorded_option(self.basis, "placement")
         return Trial((*kept, *overrides), barriers, named)
 
 
-def command_of(advice: Advice, scenario: str, workers: int, threads: int) -> str:
+def recorded_option(basis: Basis, key: str) -> str:
+    """How the run was placed or dispatched, where an option had it otherwise than its scenario; else nothing."""
+    manifest = basis.first.profile.manifest
+    ran = str(manifest["dispatch"] if key == "dispatch" else manifest["notes"].get(key, ""))
+    wanted = manifest["scenario"].get("resolved", {}).get("run", {}).get(key, ran)
+    return ran if ran != wanted else ""
+
+
+def command_of(advice: Advice, basis: Basis, workers: int, threads: int) -> str:
     """The command that tries advice for real; its figures are to be compared with the baseline's own."""
-    return f"breakstep run {scenario} --workers {workers} --threads {threads} {advice.trial.options()}"
+    name = str(basis.first.profile.manifest["scenario"].get("name", "SCENARIO"))
+    dispatch = recorded_option(basis, "dispatch")
+    parts = [f"breakstep run {name} --workers {workers} --threads {threads}", f"--dispatch {dispatch}" * bool(dispatch)]
+    return " ".join([*filter(None, parts), advice.trial.options()])

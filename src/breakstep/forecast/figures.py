@@ -37,8 +37,8 @@ def advice_figures(
         Overrides by which the recorded run differed from its scenario; every command repeats them.
     """
     adviser = Adviser(basis, machine, question, workers, tuple(common))
-    name, threads = scenario_name(basis), question.threads or machine.threads
-    return [one.facts(command_of(one, name, workers, threads)) for one in adviser.advice(ranking)]
+    threads = question.threads or machine.threads
+    return [one.facts(command_of(one, basis, workers, threads)) for one in adviser.advice(ranking)]
 
 
 def scenario_name(basis: Basis) -> str:

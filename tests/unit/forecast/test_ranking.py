@@ -8,9 +8,11 @@ import numpy as np
 import pytest
 
 from breakstep.forecast.basis import Basis, basis_of
+from breakstep.forecast.figures import advice_figures
 from breakstep.forecast.question import Question
 from breakstep.forecast.ranking import Ranking, best_order, rank_kinds
 from breakstep.forecast.setting import recorded_machine
+from breakstep.profile.run import Profile
 from tests.unit.forecast.recorded import MS, Ring, Stage, hot
 
 
@@ -87,3 +89,16 @@ def test_many_kinds_are_grouped_to_eight() -> None:
     assert len(ranking.kinds) == 8
     assert sum(len(kind.stages) for kind in ranking.kinds) == 12
     assert any(row["what"].startswith("other barriers") for row in ranking.rows())
+
+
+def test_commands_repeat_how_the_run_was_placed_and_dispatched() -> None:
+    record = Ring(hot(12)).record()
+    record.manifest["scenario"]["resolved"] = {"run": {"placement": "curve", "dispatch": "resident"}}
+    record.manifest |= {"dispatch": "native"}
+    basis = basis_of([Profile.from_record(record)])
+    machine = recorded_machine(basis.first)
+    found = advice_figures(basis, machine, Question(), 2, ranked(basis))
+    assert found
+    for advice in found:
+        assert "--dispatch native" in advice["command"]
+        assert "--placement" in advice["command"]
