@@ -25,8 +25,8 @@ FORECAST: dict[str, Any] = {
     "barriers": {
         "ranking": [
             {"what": "burn", "alone_s": 0.31, "in_order_s": 0.31, "share_s": 0.27},
-            {"what": "sweep_x", "alone_s": 0.04, "in_order_s": 0.36, "share_s": 0.07},
-            {"what": "dt", "alone_s": 0.0, "in_order_s": 0.41, "share_s": 0.07},
+            {"what": "sweep_x", "alone_s": 0.04, "in_order_s": 0.05, "share_s": 0.07},
+            {"what": "dt", "alone_s": 0.0, "in_order_s": 0.05, "share_s": 0.07},
         ],
         "tie": {},
     },

@@ -83,7 +83,7 @@ def test_pointing_at_forecasts_reads_their_figures(opened: Open) -> None:
     grain = found.data["forecast"]["grain"]["rows"][2]
     assert "tasks 400" in tip_at(found.page, "grain-tasked", 2, grain["tasked_s"])
     tip = tip_at(found.page, "barriers", 0.15, 0)
-    assert "burn\nup to here, s 0.31" in tip
+    assert "burn\nin this order, s 0.31" in tip
 
 
 def test_the_arrow_keys_move_the_moment_and_maps_follow(opened: Open) -> None:

@@ -139,7 +139,9 @@ def test_the_words_near_the_top_answer_from_the_figures() -> None:
 def test_the_largest_advice_is_what_to_do_first() -> None:
     advice = [{"do": "Take out the barrier behind burn", "gain_s": 0.5, "bytes": 0, "memory_bytes": 0, "command": ""}]
     data = page_data(runs_of(*([one] for one in pair())), {"advice": advice})
-    assert data["answers"][-1]["answer"].startswith("Take out the barrier behind burn: the forecast hands back 500 ms")
+    assert data["answers"][-1]["answer"].startswith(
+        "Take out the barrier behind burn: by forecast that hands back 500 ms"
+    )
 
 
 def test_numbers_that_json_cannot_hold_become_nothing() -> None:

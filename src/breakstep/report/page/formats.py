@@ -74,6 +74,11 @@ def moment(value: float) -> str:
     return f"{value:.3f} s"
 
 
+def capital(text: str) -> str:
+    """A sentence's first letter as a capital, the others as they are."""
+    return text[:1].upper() + text[1:]
+
+
 FILTERS: dict[str, Any] = {
     "s": seconds,
     "size": size,
@@ -85,6 +90,7 @@ FILTERS: dict[str, Any] = {
     "whole": whole,
     "one": one,
     "moment": moment,
+    "capital": capital,
     "percent": percent,
     "closure": closure,
     "signed_size": signed_size,

@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 
+from breakstep.report.page.figures.forecast import in_order
 from breakstep.report.page.formats import core, digits, percent
 from breakstep.report.page.panels.traffic import by_stage_table
 from breakstep.report.wording import listed, seconds, size
@@ -28,6 +29,7 @@ def helpers(data: Mapping[str, Any]) -> dict[str, Callable[..., Any]]:
         "critical_steps": lambda: _critical_steps(data),
         "waited_steps": lambda: _waited_steps(data),
         "scaling_alt": lambda: _scaling_alt(data["forecast"]["scaling"]),
+        "barrier_rows": lambda: in_order(data["forecast"]["barriers"]),
         "barriers_alt": lambda: _barriers_alt(data["forecast"]["barriers"]),
         "grain_alt": lambda side: _grain_alt(data["forecast"]["grain"], side),
         "tile_name": tile_name,
@@ -158,7 +160,7 @@ def _scaling_alt(panel: Mapping[str, Any]) -> str:
 
 
 def _barriers_alt(panel: Mapping[str, Any]) -> str:
-    parts = [f"{row['what']} {row['in_order_s']:.3g} s" for row in panel["ranking"]]
+    parts = [f"{row['what']} {row['in_order_s']:.3g} s" for row in in_order(dict(panel))]
     return f"Forecast seconds handed back as barriers go in this order: {listed(parts)}."
 
 

@@ -11,7 +11,7 @@ from typing import Any
 import numpy as np
 
 from breakstep.profile.run import Profile
-from breakstep.report.page.formats import digits
+from breakstep.report.page.formats import capital, digits
 from breakstep.report.page.runs import Runs
 from breakstep.report.page.spots import HotSpot, hot_spot
 from breakstep.report.page.waits import IDLE_ACCOUNTS, PHRASES, blame, idle_share
@@ -170,7 +170,10 @@ def _first(runs: Runs, data: dict[str, Any]) -> str:
     """The forecast's first advice, or what the accounts alone suggest."""
     advice = data["forecast"].get("advice") or []
     if advice:
-        return f"{advice[0]['do']}: the forecast hands back {seconds(float(advice[0]['gain_s']))}. See the list below."
+        best = advice[0]
+        of = f" of {seconds(float(best['baseline_s']))}" if "baseline_s" in best else ""
+        gain = seconds(float(best["gain_s"]))
+        return f"{capital(str(best['do']))}: by forecast that hands back {gain}{of}. The list at the end has more."
     profile = runs.tasked or runs.either
     caution = ""
     if share(profile, "stolen") > MUCH_STOLEN:

@@ -23,13 +23,12 @@ def _of(profile: Profile) -> dict[str, Any]:
     ledger, live = profile.ledger, profile.live
     edges = np.linspace(0, ledger.span_ns, BINS + 1)
     total = binned_highest(live.total, ledger.first_ns, edges)
-    kinds = getattr(live, "by_data", None) or live.by_kind
     return {
         "edges_s": [seconds(edge) for edge in edges],
         "bytes": total,
         "peak_bytes": live.peak_bytes,
         "peak_s": seconds(_moment_of_peak(live.total) - ledger.first_ns) if len(live.total) else 0.0,
-        "peak_by_kind": {str(kind): int(series.max()) if len(series) else 0 for kind, series in kinds.items()},
+        "peak_by_data": {str(data): peak for data, peak in live.peak_by_data.items()},
         "peak_by_worker": {str(worker): count for worker, count in live.peak_by_worker.items()},
     }
 

@@ -19,9 +19,9 @@ def traffic_panel(runs: Runs, cells: Cells) -> dict[str, Any]:
     Returns
     -------
     dict
-        For each run ``total_bytes``, ``transfers``, ``by_stage``, ``by_field``, ``by_workers`` (sender, receiver,
-        bytes; the busiest pairs) and ``faces`` (two cells and the bytes both ways between them, the largest
-        first), ``control_bytes`` (what no tile made or used).
+        For each run ``total_bytes``, ``transfers``, ``by_stage``, ``read_by_stage``, ``by_field``, ``by_workers``
+        (sender, receiver, bytes; the busiest pairs), ``faces`` (two cells and the bytes both ways between them, the
+        largest first), and ``control_bytes`` (what no tile made or used).
     """
     return {side: _of(profile, cells) for side, profile in runs.sides.items()}
 
@@ -34,6 +34,7 @@ def _of(profile: Profile, cells: Cells) -> dict[str, Any]:
         "total_bytes": traffic.total_bytes,
         "transfers": traffic.transfers,
         "by_stage": _largest_first(traffic.by_stage),
+        "read_by_stage": _read(profile),
         "by_field": _largest_first(traffic.by_field),
         "by_workers": [[sender, receiver, count] for (sender, receiver), count in pairs[:MOST_PAIRS]],
         "worker_pairs": len(pairs),
@@ -42,6 +43,12 @@ def _of(profile: Profile, cells: Cells) -> dict[str, Any]:
         "control_bytes": control,
         "per_core_second_bytes": round(traffic.total_bytes / max(profile.ledger.available_ns * 1e-9, 1e-9)),
     }
+
+
+def _read(profile: Profile) -> dict[str, int]:
+    """Bytes that steps read across tile faces, whoever owns the tiles; empty where the run does not say."""
+    read = profile.demand.groupby("stage")["bytes"].sum()
+    return _largest_first({str(stage): int(count) for stage, count in read.items()})
 
 
 def _largest_first(counts: dict[str, int]) -> dict[str, int]:
