@@ -52,7 +52,7 @@ def face_lines(data: Mapping[str, Any], side: str) -> Markup:
     lines = []
     for a, b, count in faces:
         (x, y), (u, v) = _centre(cells, a), _centre(cells, b)
-        width = 0.35 + 2.4 * count / most
+        width = 0.3 + 1.4 * count / most
         apart = math.hypot(u - x, v - y)
         paths = [(x, y, u, v)] if apart < 1.6 * CELL else [_stub(x, y, u, v, apart), _stub(u, v, x, y, apart)]
         for p, q, r, s in paths:

@@ -95,7 +95,7 @@ def barriers_figure(panel: dict[str, Any]) -> figure:
     left, right = min(0.0, *ends), max(*ends, 1e-9)
     reach = right - left
     plot = new_figure(
-        70 + 46 * count, (left - 0.03 * reach, right + 0.22 * reach), (-count + 0.4, 0.75), name="barriers"
+        70 + 46 * count, (left - 0.03 * reach, right + 0.3 * reach), (-count + 0.4, 0.75), name="barriers"
     )
     plot.xaxis.axis_label = "seconds handed back of the lockstep run"
     plot.yaxis.visible = False
@@ -114,9 +114,9 @@ def barriers_figure(panel: dict[str, Any]) -> figure:
     diamonds = plot.scatter("alone", "y", source=source, size=9, marker="diamond", fill_color=LIGHT["paper"],
                             line_color=LIGHT["ink"], line_width=1.5)  # fmt: skip
     names = [f"{place + 1}. {row['what']}" for place, row in enumerate(rows)]
-    words(plot, x=[max(left, 0.0)] * count, y=[0.36 + y for y in places], text=names)
+    words(plot, x=[left - 0.02 * reach] * count, y=[0.36 + y for y in places], text=names)
     words(plot, x=[max(row["from_s"], row["until_s"], row["alone_s"]) for row in rows], y=places,
-          text=[f"{row['in_order_s']:+.3g} s" for row in rows], text_color=LIGHT["tasked"], text_font_style="bold",
+          text=[f"{row['in_order_s']:+.2g} s" for row in rows], text_color=LIGHT["tasked"], text_font_style="bold",
           x_offset=12)  # fmt: skip
     hover(plot, [bars, diamonds], [("", "what"), ("in this order, s", "step_shown"), ("alone, s", "alone_shown")])
     return plot

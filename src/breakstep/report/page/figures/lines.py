@@ -58,7 +58,7 @@ def memory_figure(panel: dict[str, Any]) -> figure:
     end = max(side["edges_s"][-1] for side in panel.values())
     top = max(side["peak_bytes"] for side in panel.values()) or 1
     unit, factor = _unit(top)
-    plot = new_figure(230, (0, end), (0, 1.22 * top / factor), name="memory")
+    plot = new_figure(230, (0, end), (0, 1.32 * top / factor), name="memory")
     plot.xaxis.axis_label, plot.yaxis.axis_label = "wall time, s", f"live, {unit}"
     plot.xgrid.grid_line_color = None
     drawn = []
@@ -93,7 +93,7 @@ def _peak(plot: figure, found: dict[str, Any], side: str, factor: float, end: fl
     offset = -14 if side == "tasked" else -30
     words(
         plot, x=[x], y=[y], text=[f"{side}: {size(found['peak_bytes'])}"], text_color=LIGHT[side], y_offset=offset,
-        text_align="left" if x < 0.2 * end else "right" if x > 0.8 * end else "center", text_font_style="bold",
+        text_align="left" if x < 0.35 * end else "right" if x > 0.65 * end else "center", text_font_style="bold",
     )  # fmt: skip
 
 
