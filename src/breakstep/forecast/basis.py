@@ -20,6 +20,7 @@ from breakstep.forecast.rims import rim_bytes_of
 from breakstep.profile.frames import words_of
 from breakstep.profile.run import Profile
 
+ROUNDS = 4  # crowding changes durations by ten or twenty percent and is changed by them by as much of that
 CONTROL = ("value", "control")  # what a transfer is called that carries no tile data
 
 
@@ -85,7 +86,7 @@ def basis_of(profiles: Sequence[Profile]) -> Basis:
 
 def _tables(run: Lifted, dispatch: Dispatch) -> CostTables:
     """One run's costs with its crowding taken out."""
-    kernel = kernel_stretch(recorded_load(run), dispatch)[run.worker]
+    kernel = recorded_stretch(run, dispatch)[run.worker]
     python = python_stretch(run.workers, dispatch)
     costs = run.costs
     return CostTables(
@@ -96,8 +97,18 @@ def _tables(run: Lifted, dispatch: Dispatch) -> CostTables:
     )
 
 
-def recorded_load(run: Lifted) -> Load:
-    """How busy the machine of recording was."""
+def recorded_stretch(run: Lifted, dispatch: Dispatch) -> Floats:
+    """How many times as long kernels took on each worker as on an idle machine, worked out as replays do."""
+    costs, stretch = run.costs, np.ones(run.workers)
+    kernels = sum((values.astype(np.float64) for values in costs.kernel.values()), np.zeros(run.start.shape))
+    python = float((costs.halo + costs.pack + costs.rest).sum())
+    for _ in range(ROUNDS):
+        stretch = kernel_stretch(recorded_load(run, python + float((kernels / stretch[run.worker]).sum())), dispatch)
+    return stretch
+
+
+def recorded_load(run: Lifted, work_ns: float) -> Load:
+    """How busy the machine of recording was, with so much time in tasks were it not crowded [ns]."""
     lasted = run.end - run.start
     busy = np.bincount(run.worker.reshape(-1), lasted.reshape(-1), minlength=run.workers)
     return Load(
@@ -105,7 +116,7 @@ def recorded_load(run: Lifted) -> Load:
         threads=run.threads,
         cores=run.cores,
         nodes=1,
-        work_ns=float(lasted.sum()),
+        work_ns=work_ns,
         messages=float(colliding(run)),
     )
 

@@ -32,7 +32,7 @@ class Load:
     threads, cores, nodes : int
         Threads of a worker, cores of a node, nodes in use.
     work_ns : float
-        Time in tasks, all threads together [ns].
+        Time in tasks were it not crowded, all threads together [ns].
     messages : float
         Transfers.
     """

@@ -1,8 +1,7 @@
 """A scene: one program on one setting, played under any choice of barriers.
 
 How crowded a node is depends on how busy its threads are, which only a replay tells; so a replay is repeated
-with the crowding that the one before found. Crowding changes durations by some ten percent and is changed by them by
-some ten percent of that, so that each round gains a digit.
+with the crowding that the one before found, a few times.
 """
 
 from __future__ import annotations
@@ -13,7 +12,7 @@ from functools import cached_property
 
 import numpy as np
 
-from breakstep.forecast.basis import Basis
+from breakstep.forecast.basis import ROUNDS, Basis
 from breakstep.forecast.bounds import lower_bounds
 from breakstep.forecast.crowd import Load, kernel_stretch
 from breakstep.forecast.dynamic import replay_owner
@@ -29,7 +28,6 @@ from breakstep.forecast.setting import Setting, changed_program, owners_of, sett
 from breakstep.forecast.unfold import Unfolded, unfold
 from breakstep.forecast.urgency import ranks
 
-ROUNDS = 4
 MOST_RUNS = 8  # recorded runs that are played apart
 
 
@@ -170,11 +168,10 @@ class Scene:
 
     def _crowded(self, kinds: int) -> Floats:
         setting, model = self.setting, self.setting.model
-        stretch = self._calm
+        stretch, work = self._calm, float(self._by_phase(self._calm).sum())
         for _ in range(ROUNDS):
             replay = self._replayed(self._with(stretch, 1.0), kinds)
             busy = replay.busy_ns / max(model.threads * replay.makespan_ns, 1)
-            work = float(replay.busy_ns.sum())
             load = Load(busy, model.threads, setting.cores, setting.nodes, work, self._messages(kinds))
             stretch = kernel_stretch(load, setting.dispatch)
         return stretch
