@@ -8,6 +8,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import Any
 
+from breakstep.errors import ProfileError
 from breakstep.forecast.advice import Adviser, command_of
 from breakstep.forecast.answer import answer, recorded_errors
 from breakstep.forecast.basis import Basis, basis_of
@@ -49,12 +50,16 @@ def scenario_name(basis: Basis) -> str:
 def page_forecast(lockstep: Profile | None, tasked: Profile | None) -> dict[str, Any]:
     """All that the report page shows of a forecast on the machine of recording.
 
-    Raises
-    ------
-    ProfileError
-        Neither is given, a run did not complete, or the two are not of one program.
+    Empty where nothing can be forecast from the runs: none is given, one did not complete, or they are of two
+    programs. A page shows such runs all the same.
     """
-    basis = basis_of([profile for profile in (lockstep, tasked) if profile is not None])
+    given = [profile for profile in (lockstep, tasked) if profile is not None]
+    if not given:
+        return {}
+    try:
+        basis = basis_of(given)
+    except ProfileError:
+        return {}
     machine, question, workers = recorded_machine(basis.first), Question(), basis.first.workers
     more = _more_nodes(machine, _page_workers(basis))
     scaling = answer(basis, more, question, _page_workers(basis))

@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from breakstep.forecast.basis import Basis, basis_of
-from breakstep.forecast.figures import advice_figures
+from breakstep.forecast.figures import advice_figures, page_forecast
 from breakstep.forecast.question import Question
 from breakstep.forecast.ranking import Ranking, best_order, rank_kinds
 from breakstep.forecast.setting import recorded_machine
@@ -102,3 +102,11 @@ def test_commands_repeat_how_the_run_was_placed_and_dispatched() -> None:
     for advice in found:
         assert "--dispatch native" in advice["command"]
         assert "--placement" in advice["command"]
+
+
+def test_a_page_of_runs_that_cannot_be_forecast_from_goes_without() -> None:
+    record = Ring(hot(12)).record()
+    record.manifest["status"] = "interrupted"
+    unfinished = Profile.from_record(record)
+    assert page_forecast(unfinished, None) == page_forecast(None, None) == {}
+    assert page_forecast(Ring(hot(12)).profile(), Ring(hot(9), lockstep=False).profile()) == {}
