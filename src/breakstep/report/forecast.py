@@ -131,7 +131,7 @@ def advice_lines(name: str, figures: Mapping[str, Any]) -> list[str]:
         " place in brackets; fair shares are means over all orders and sum to the whole."
         f" Error of the forecast here: {error}."
     )
-    lines += ["", *_wrap(tie_sentence(figures["tie"])), ""]
+    lines += ["", *_wrap(tie_sentence(figures["tie"]) + _measured_gain(figures["recorded"])), ""]
     for number, advice in enumerate(figures["advice"][:TOP_ADVICE], start=1):
         lines += _advice(number, advice, error)
     if not figures["advice"]:
@@ -147,10 +147,22 @@ def tie_sentence(tie: Mapping[str, Any]) -> str:
     if tie["reductions_limit_gain"]:
         return (
             f"{barriers}: little, for the reductions still tie the cycles together, and hold back another {held}."
-            f" Using their results later brings {_gain(tie['later_reductions_gain_s'])} more, extra iterations"
-            f" counted; were they free, it would be {_gain(tie['gain_without_reductions_s'])} in all."
+            f" Using their results later would {_brings(tie['later_reductions_gain_s'])}, extra iterations counted;"
+            f" were they free, the gain would be {_gain(tie['gain_without_reductions_s'])} in all."
         )
     return f"{barriers}; the reductions hold back another {held}, so they are not what ties the cycles together."
+
+
+def _brings(gain: float) -> str:
+    return f"bring {_gain(gain)} more" if gain >= 0.0 else f"cost {_gain(-gain)} on balance"
+
+
+def _measured_gain(recorded: Mapping[str, Mapping[str, Any]]) -> str:
+    """What leaving barriers out gained in the recorded runs, where both modes are there."""
+    if not {"lockstep", "tasked"} <= set(recorded):
+        return ""
+    gain = float(recorded["lockstep"]["measured_s"]) - float(recorded["tasked"]["measured_s"])
+    return f" Measured in the recorded runs: {_gain(gain)}."
 
 
 def _gain(value: float) -> str:
