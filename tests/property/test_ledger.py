@@ -79,7 +79,11 @@ def runs(draw: st.DrawFn, skewed: bool = False) -> DrawnRun:
         ready = max([free[task.place], *(arrival(source, task) for source, _ in task.inputs)])
         task.start = ready + draw(st.integers(0, 4))
         halo, kernel, rest = draw(st.tuples(*[st.integers(0, 4)] * 3))
-        task.inside = {"step": (halo, kernel, rest), "pack": (halo, 0, rest)}.get(kind, (0, 0, rest))
+        task.inside = {
+            "step": (halo, kernel, rest),
+            "pack": (halo, 0, rest),
+            "combine": (0, kernel, rest),  # a reduction's own function
+        }.get(kind, (0, 0, rest))
         task.stolen = draw(st.integers(0, task.inside[1]))
         free[task.place] = task.end
         tasks.append(task)
@@ -114,7 +118,9 @@ def record_of(run: DrawnRun) -> RunRecord:
         halo, kernel, _ = t.inside
         what = "pack" if t.kind == "pack" else "halo"
         record.intervals.append((t.number, what, "s", t.start, t.start + halo, halo))
-        record.intervals.append((t.number, "kernel", "s", t.start + halo, t.start + halo + kernel, kernel - t.stolen))
+        if kernel or t.kind == "step":
+            end = t.start + halo + kernel
+            record.intervals.append((t.number, "kernel", "s", t.start + halo, end, kernel - t.stolen))
         record.edges.extend((source.number, t.number, kind) for source, kind in t.inputs)
         record.transfers.extend((t.number, "f", t.worker, w, 8, 0, 0, t.end, at) for w, at in t.arrivals.items())
     workers = len({worker for worker, _ in run.threads})
@@ -146,7 +152,8 @@ def cause(run: DrawnRun, task: DrawnTask, moment: int) -> str:
             moving = "transfer" if kind == "data" else kind  # a message of a reduction or barrier is its own cost
             return moving if source.worker != task.worker else "engine"
         if moment >= source.start:
-            return {"step": why, "pack": "transfer"}.get(source.kind, "engine")
+            at_work = source.kind == "step" or (source.kind == "combine" and source.inside[1] > 0)
+            return why if at_work else "transfer" if source.kind == "pack" else "engine"
         task = source
 
 
