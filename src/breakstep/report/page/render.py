@@ -20,8 +20,8 @@ from breakstep.report.page import drawing, formats, tables
 from breakstep.report.page.figures.columns import columns_figure, tokens_of
 from breakstep.report.page.figures.forecast import barriers_figure, grain_figure, scaling_figure
 from breakstep.report.page.figures.fronts import fronts_figure
-from breakstep.report.page.figures.lines import memory_figure, unevenness_figure
-from breakstep.report.page.palette import DARK, HATCHES, LIGHT
+from breakstep.report.page.figures.lines import kinds_figure, memory_figure, unevenness_figure
+from breakstep.report.page.palette import DARK, HATCHES, LIGHT, STEPS
 
 #: What ends or opens something inside a script element, as JSON can also write it.
 _UNSAFE = {"<": "\\u003c", ">": "\\u003e", "&": "\\u0026", "\u2028": "\\u2028", "\u2029": "\\u2029"}
@@ -58,6 +58,7 @@ def page_html(data: Mapping[str, Any]) -> str:
         chain_marks=partial(drawing.chain_marks, data),
         link_number=partial(drawing.link_number, data),
         line_sample=partial(drawing.line_sample, tokens),
+        kind_sample=lambda place: drawing.line_sample({"": STEPS[place]}, "", place),
         **tables.helpers(data),
     )
     css = environment.get_template("page.css.j2").render(light=LIGHT, dark=DARK, hatches=_HATCH_PICTURES)
@@ -120,6 +121,9 @@ def _figures(data: Mapping[str, Any], tokens: dict[str, str]) -> dict[str, Any]:
     }
     figures["columns"] = columns_figure(data["columns"])
     figures["memory"] = memory_figure(data["memory"])
+    last = list(data["memory"])[-1]
+    if data["memory"][last]["bytes_by_data"]:
+        figures["memory-kinds"] = kinds_figure(data["memory"][last], last)
     if data["costs"]["steps"] and data["costs"]["cycles"]:
         figures["unevenness"] = unevenness_figure(data["costs"], tokens)
     return {**figures, **_forecasts(data["forecast"])}

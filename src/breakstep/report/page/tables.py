@@ -26,6 +26,7 @@ def helpers(data: Mapping[str, Any]) -> dict[str, Callable[..., Any]]:
         "stage_rows": lambda: by_stage_table(data["traffic"]),
         "memory_words": lambda: _memory_words(data),
         "memory_alt": lambda: f"Lines of live bytes over wall time. {_memory_words(data)}",
+        "kinds_alt": lambda side: _kinds_alt(data["memory"][side], side),
         "critical_steps": lambda: _critical_steps(data),
         "waited_steps": lambda: _waited_steps(data),
         "scaling_alt": lambda: _scaling_alt(data["forecast"]["scaling"]),
@@ -132,6 +133,11 @@ def _memory_words(data: Mapping[str, Any]) -> str:
         for side, found in data["memory"].items()
     ]
     return f"Arrays that tasks made and that somebody may still read: {listed(parts)}."
+
+
+def _kinds_alt(found: Mapping[str, Any], side: str) -> str:
+    parts = [f"{name} at most {size(max(counts))}" for name, counts in found["bytes_by_data"].items()]
+    return f"Lines of live bytes by kind of data over wall time, {side}: {listed(parts)}."
 
 
 def _waited_steps(data: Mapping[str, Any]) -> list[str]:

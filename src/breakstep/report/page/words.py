@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 
 from breakstep.profile.run import Profile
+from breakstep.profile.words import LABELS
 from breakstep.report.page.formats import capital, digits
 from breakstep.report.page.runs import Runs
 from breakstep.report.page.spots import HotSpot, hot_spot
@@ -51,8 +52,21 @@ def _bought(runs: Runs, data: dict[str, Any]) -> str:
         if handed >= 0
         else f"{digits(-handed)} core-seconds more than lockstep's {digits(whole)}"
     )
+    evidence = _evidence(gain.median, gain.low, gain.high, len(gain.ratios))
+    against = _against(runs.lockstep, runs.tasked)
+    return f"{spans} on {left.threads} threads: {change}. {evidence}{against}"
+
+
+def _against(lockstep: Profile, tasked: Profile) -> str:
+    """What takes back of the waiting that is saved, where it takes back half of it or more."""
+    grown = {account: ns - lockstep.ledger.accounts_ns[account] for account, ns in tasked.ledger.accounts_ns.items()}
+    saved = -sum(grown[account] for account in IDLE_ACCOUNTS)
+    worst = max((account for account in grown if account not in IDLE_ACCOUNTS), key=lambda account: grown[account])
+    if saved <= 0 or grown[worst] < saved / 2:
+        return ""
     return (
-        f"{spans} on {left.threads} threads: {change}. {_evidence(gain.median, gain.low, gain.high, len(gain.ratios))}"
+        f" Idle time falls by {digits(saved * 1e-9)} core-seconds, but {LABELS[worst]} grows by"
+        f" {digits(grown[worst] * 1e-9)}."
     )
 
 
@@ -167,22 +181,22 @@ def _lags(tasked: Profile) -> list[str]:
 
 
 def _first(runs: Runs, data: dict[str, Any]) -> str:
-    """The forecast's first advice, or what the accounts alone suggest."""
-    advice = data["forecast"].get("advice") or []
-    if advice:
-        best = advice[0]
-        of = f" of {seconds(float(best['baseline_s']))}" if "baseline_s" in best else ""
-        gain = seconds(float(best["gain_s"]))
-        return f"{capital(str(best['do']))}: by forecast that hands back {gain}{of}. The list at the end has more."
+    """A caution where the machine was busy; then the forecast's first advice, or what the accounts suggest."""
     profile = runs.tasked or runs.either
-    caution = ""
-    if share(profile, "stolen") > MUCH_STOLEN:
-        caution = (
-            f"Measure again on a quiet machine: for {percent(share(profile, 'stolen'))} of the time kernels had no"
-            " processor, because other programs had it. If the figures stay: "
-        )
-    found = _remedy(runs, profile)
-    return caution + (found[0].lower() + found[1:] if caution else found)
+    advice = data["forecast"].get("advice") or []
+    found = _advice(advice[0]) if advice else _remedy(runs, profile)
+    if share(profile, "stolen") <= MUCH_STOLEN:
+        return found
+    return (
+        f"Measure again on a quiet machine: for {percent(share(profile, 'stolen'))} of the time kernels had no"
+        f" processor, because something else had it. If the figures stay: {found[0].lower()}{found[1:]}"
+    )
+
+
+def _advice(best: dict[str, Any]) -> str:
+    of = f" of {seconds(float(best['baseline_s']))}" if "baseline_s" in best else ""
+    gain = seconds(float(best["gain_s"]))
+    return f"{capital(str(best['do']))}: by forecast that hands back {gain}{of}. The list at the end has more."
 
 
 def _remedy(runs: Runs, profile: Profile) -> str:

@@ -8,7 +8,7 @@ from bokeh.models import ColumnDataSource, Span
 from bokeh.plotting import figure
 
 from breakstep.report.page.figures.style import hover, new_figure, words
-from breakstep.report.page.palette import DASHES, LIGHT, MARKERS
+from breakstep.report.page.palette import DASHES, LIGHT, MARKERS, STEPS
 from breakstep.report.wording import size
 
 
@@ -85,6 +85,32 @@ def _memory_line(plot: figure, found: dict[str, Any], side: str, factor: float) 
         source=source, left="left", right="right", top="top", bottom=0, fill_alpha=0, line_alpha=0,
         name=f"memory-{side}",
     )  # fmt: skip
+
+
+def kinds_figure(found: dict[str, Any], side: str) -> figure:
+    """Live bytes of one run by kind of data, a line a kind."""
+    edges, kinds = found["edges_s"], found["bytes_by_data"]
+    unit, factor = _unit(max(max(counts) for counts in kinds.values()) or 1)
+    top = max(max(counts) for counts in kinds.values()) / factor
+    plot = new_figure(200, (0, edges[-1]), (0, 1.08 * top or 1), name="memory-kinds")
+    plot.xaxis.axis_label, plot.yaxis.axis_label = f"wall time, s, {side}", f"live, {unit}"
+    plot.xgrid.grid_line_color = None
+    drawn = []
+    for place, (data, counts) in enumerate(kinds.items()):
+        heights = [count / factor for count in counts]
+        colour, dash = LIGHT[STEPS[place]], DASHES[place]
+        plot.step(edges, [*heights, *heights[-1:]], mode="after", line_color=colour, line_width=2, line_dash=dash)
+        source = ColumnDataSource(
+            {
+                "left": edges[:-1], "right": edges[1:], "top": heights, "shown": [size(count) for count in counts],
+                "data": [data] * len(counts),
+            }
+        )  # fmt: skip
+        drawn.append(
+            plot.quad(source=source, left="left", right="right", top="top", bottom=0, fill_alpha=0, line_alpha=0)
+        )
+    hover(plot, drawn, [("", "data"), ("live, at most", "shown")], mode="vline")
+    return plot
 
 
 def _peak(plot: figure, found: dict[str, Any], side: str, factor: float, end: float) -> None:

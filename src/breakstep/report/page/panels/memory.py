@@ -11,11 +11,14 @@ from breakstep.profile.run import Profile
 from breakstep.report.page.numbers import seconds
 from breakstep.report.page.runs import Runs
 
+MOST_KINDS = 5  # kinds of data with a line of their own
+SMALL = 0.02  # of the high-water mark: lines below it lie on the axis
 BINS = 360  # a bin is then three pixels on a screen 1200 wide
 
 
 def memory_panel(runs: Runs) -> dict[str, Any]:
-    """For each run ``edges_s`` (begin of each bin, and the end) and ``bytes`` (highest in each), and ``peak_bytes``."""
+    """For each run ``edges_s`` (begin of each bin, and the end) and ``bytes`` (highest in each), ``peak_bytes``,
+    and ``bytes_by_data``."""
     return {side: _of(profile) for side, profile in runs.sides.items()}
 
 
@@ -28,9 +31,19 @@ def _of(profile: Profile) -> dict[str, Any]:
         "bytes": total,
         "peak_bytes": live.peak_bytes,
         "peak_s": seconds(_moment_of_peak(live.total) - ledger.first_ns) if len(live.total) else 0.0,
+        "bytes_by_data": _by_data(profile, edges),
         "peak_by_data": {str(data): peak for data, peak in live.peak_by_data.items()},
         "peak_by_worker": {str(worker): count for worker, count in live.peak_by_worker.items()},
     }
+
+
+def _by_data(profile: Profile, edges: np.ndarray[Any, Any]) -> dict[str, list[int]]:
+    """Highest live bytes of the largest kinds of data in each bin, the largest first; nothing where all is one kind."""
+    peaks = sorted(profile.live.peak_by_data.items(), key=lambda item: -item[1])
+    large = [data for data, peak in peaks if peak >= SMALL * profile.live.peak_bytes][:MOST_KINDS]
+    if len(large) < 2:
+        return {}
+    return {data: binned_highest(profile.live.by_data[data], profile.ledger.first_ns, edges) for data in large}
 
 
 def _moment_of_peak(series: pd.Series[int]) -> int:
