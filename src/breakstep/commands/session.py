@@ -19,6 +19,8 @@ from breakstep.graph.stages import parse_barriers
 from breakstep.profile.run import Profile
 from breakstep.scenario.load import AnyScenario, any_scenario_from, load_scenario
 
+LONGEST_SECONDS = 1e9  # thirty years; the timers that end a hung kernel overflow at 9.2e9 s
+
 
 class Stopped(Exception):  # noqa: N818  (nothing went wrong)
     """The user stopped a run; its profile has been written."""
@@ -111,7 +113,18 @@ class Session:
         return replace(self.options, checkpoint_every=cycles or 0)
 
     def allow(self, task_timeout: float | None) -> None:
-        """Limit how long a kernel may take [s]."""
+        """Limit how long a kernel may take [s].
+
+        Raises
+        ------
+        ScenarioError
+            No clock could measure that: NaN, infinite, negative or more than thirty years.
+        """
+        if task_timeout is not None and not 0.0 <= task_timeout <= LONGEST_SECONDS:
+            raise ScenarioError(
+                f"a task timeout needs seconds above 0 and up to {LONGEST_SECONDS:g}, not {task_timeout:g};"
+                " leave it out for no limit"
+            )
         self.options = replace(self.options, task_timeout=task_timeout or 0.0)
 
     def check_dispatch(self, name: str) -> None:

@@ -250,3 +250,12 @@ def test_faults_of_timer_records_are_said_together(breakstep: Shell, tmp_path: P
         "r.csv: step: expected burn, came brun in line 5; did you mean burn?",
         "r.csv: there is no record of rank 1, step burn, cycle 1",
     )
+
+
+@pytest.mark.parametrize("seconds", ["nan", "inf", "1e300"])
+@pytest.mark.parametrize("command", COMMANDS)
+def test_a_task_timeout_that_no_clock_could_measure(breakstep: Shell, command: str, seconds: str) -> None:
+    """NaN would pass for a limit that is never reached; what is too large overflows the timer that ends a run."""
+    given = breakstep(command, "shock_tube", *TINY, "--task-timeout", seconds)
+    refused(given, "a task timeout needs seconds above 0 and up to 1e+09, not")
+    nothing_made()
