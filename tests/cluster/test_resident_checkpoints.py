@@ -66,6 +66,14 @@ def test_several_threads_go_on_where_one_left_off(client: Client, tmp_path: Path
     assert resumed.digest == serial(program, tmp_path).digest
 
 
+def test_a_run_with_nothing_left_to_do_gives_the_last_results_alone(client: Client, tmp_path: Path) -> None:
+    """A checkpoint holds as many earlier results as a lag needs; none of them is a result of the run."""
+    program, root = Program(TOYS["long lag"].problem(), TILE), tmp_path / "checkpoints"
+    whole = record(ResidentDispatch(client, 2, checkpoints=root), program, tmp_path, checkpoint_every=7)
+    resumed = record(ResidentDispatch(client, 1, resume=last_checkpoint(root)), program, tmp_path)
+    assert resumed.result.values["dt"].tolist() == whole.result.values["dt"].tolist()
+
+
 @pytest.mark.parametrize("every", [1, 3])
 def test_a_longer_run_goes_on_from_the_end_of_a_shorter_one(client: Client, tmp_path: Path, every: int) -> None:
     toy = TOYS["two orders"]

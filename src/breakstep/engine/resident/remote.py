@@ -182,9 +182,10 @@ def _record(host: Host) -> dict[str, Any]:
 
 
 def _last_values(host: Host) -> dict[str, Array]:
+    """The newest result of each, one row: what a checkpoint hands on has rows for the lag as well."""
     core = host.core
     newest = core.unroller.last_values() if core is not None else {}
-    return {n: core.values[i] for n, i in newest.items() if core is not None and i in core.values}
+    return {n: core.values[i][-1:] for n, i in newest.items() if core is not None and i in core.values}
 
 
 def _host(run: str) -> Host:
