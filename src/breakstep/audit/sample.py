@@ -19,7 +19,7 @@ from breakstep.audit.reach import SHARED, Reached, reached_state
 from breakstep.engine.program import Program
 from breakstep.mesh.halo import assemble, cut, plan_halo
 from breakstep.mesh.mesh import Triple
-from breakstep.steps.calling import call_user
+from breakstep.steps.calling import ask_user
 from breakstep.steps.reduction import Reduction, combine, finish_rows
 from breakstep.steps.splitting import Repeat
 from breakstep.steps.step import Array, Call, Read, Step
@@ -106,7 +106,7 @@ class Walk:
                 self._reduce(reduction, cycle, -1, "")
             if program.problem.ended is not None and splitting.reductions:
                 first = self.values.get(splitting.reductions[0].name)
-                if first is None or call_user(program.problem.ended, first, where=f"ended before cycle {cycle}"):
+                if first is None or ask_user(program.problem.ended, first, where=f"ended before cycle {cycle}"):
                     break
             for item in splitting.orders[cycle % len(splitting.orders)]:
                 self._item(item, cycle)
@@ -121,7 +121,7 @@ class Walk:
                 self._step(step, cycle, iteration, item.name)
             self._reduce(item.until, cycle, iteration, item.name)
             verdict = self.values.get(item.until.name)
-            if verdict is None or call_user(item.stop, verdict, where=f"stop of repeat {item.name}"):
+            if verdict is None or ask_user(item.stop, verdict, where=f"stop of repeat {item.name}"):
                 return
 
     def _step(self, step: Step, cycle: int, iteration: int, repeat: str) -> None:

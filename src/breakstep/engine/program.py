@@ -2,18 +2,20 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 
+from breakstep.errors import KernelError
 from breakstep.graph.stages import Template, build_template
 from breakstep.graph.tasks import HaloPlans
 from breakstep.mesh.fields import Field
 from breakstep.mesh.halo import Rim
 from breakstep.mesh.mesh import Triple
 from breakstep.mesh.tiling import Tiling
-from breakstep.steps.calling import call_user
+from breakstep.steps.calling import ask_user, call_user
 from breakstep.steps.modules import Source
 from breakstep.steps.problem import Problem
 from breakstep.steps.reduction import Reduction, finish_rows
@@ -79,16 +81,18 @@ class Program:
 
         place = self.tiling.tiles[tile]
         where = f"the initial state of tile {tile}"
-        arrays = dict(call_user(self.problem.initial, place, self.problem.mesh, where=where))
+        made = call_user(self.problem.initial, place, self.problem.mesh, where=where)
+        if not isinstance(made, Mapping):
+            raise KernelError(f"{where}: expected a mapping of field to array, got {type(made).__name__}")
         zeros = self.scratch_values(tile)
-        arrays = {**zeros, **arrays}
+        arrays = {**zeros, **made}
         expected = {*self.state_fields, *zeros, *self.template.needed, *(arrays.keys() & self.fields.keys())}
         return check_arrays(arrays, sorted(expected), self.fields, place, where)
 
     def stop(self, stage: int, verdict: Array) -> bool:
         """Whether a verdict ends the repeat that a stage belongs to."""
         repeat = self.template.stages[stage].repeat
-        return bool(call_user(self._stops[repeat], verdict, where=f"stop of repeat {repeat}"))
+        return ask_user(self._stops[repeat], verdict, where=f"stop of repeat {repeat}")
 
     def finish(
         self, stage: int, reduction: Reduction, combined: Array | None, previous: Array | None, rows: int

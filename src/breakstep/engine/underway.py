@@ -69,6 +69,7 @@ class Calls:
     def keep(self, file: str | None = None) -> None:
         """Keep track from now on, in a file too if there is one by that path."""
         self.forget()
+        self._calls.clear()  # those of an earlier run that never returned are not this run's
         with contextlib.suppress(OSError):
             self._file = os.open(file, os.O_WRONLY) if file else None
         if self._listener is None:

@@ -21,7 +21,7 @@ from typing import TypeAlias
 
 from breakstep.errors import ConvergenceError
 from breakstep.graph.stages import RepeatStages, Stage, Template
-from breakstep.steps.calling import call_user
+from breakstep.steps.calling import ask_user
 from breakstep.steps.reduction import Reduction
 from breakstep.steps.step import Array
 
@@ -208,7 +208,7 @@ class Unroller:
                 ref = self._cycle_value(self.template.splitting.reductions[0], cycle)
                 answer = yield Need((ref.instance,))
                 assert answer is not None
-                if call_user(self.ended, answer[0][ref.row], where=f"ended before cycle {cycle}"):
+                if ask_user(self.ended, answer[0][ref.row], where=f"ended before cycle {cycle}"):
                     return
             yield from self._cycle(cycle)
 
@@ -263,7 +263,7 @@ class Unroller:
             for value in answer:
                 last = value
                 where = f"stop of repeat {repeat.name}, cycle {cycle}"
-                if stopped_at is None and call_user(repeat.stop, value[0], where=where):
+                if stopped_at is None and ask_user(repeat.stop, value[0], where=where):
                     stopped_at = known
                 known += 1
         self._iterations[repeat.name] = min(stopped_at + lag + 1, repeat.at_most)

@@ -37,7 +37,8 @@ class Mesh:
     spacing : tuple of float
         Zone width along the same axes [cm].
     edges : tuple of (Edge, Edge)
-        Condition on the low and the high side of each axis; both sides are periodic or neither is.
+        Condition on the low and the high side of each axis, as members of Edge or as their words; both sides are
+        periodic or neither is.
     origin : tuple of float
         Position of the low corner [cm].
 
@@ -55,6 +56,7 @@ class Mesh:
     widths: tuple[float, float, float] = field(init=False)
 
     def __post_init__(self) -> None:
+        object.__setattr__(self, "edges", tuple(_known_pair(sides) for sides in self.edges))
         faults = list(self._faults())
         if faults:
             raise TilingError("; ".join(faults))
@@ -73,10 +75,13 @@ class Mesh:
             faults.append("the origin of a mesh needs one entry an axis")
         if any(n < 1 for n in self.shape):
             faults.append(f"a mesh needs at least one zone along each axis, not {self.shape}")
-        if any(not dx > 0.0 for dx in self.spacing):
+        if any(not 0.0 < dx < math.inf for dx in self.spacing):
             faults.append(f"zone widths must be positive, not {self.spacing}")
         for name, sides in zip(AXIS_NAMES, self.edges, strict=False):
-            if (sides[0] is Edge.PERIODIC) != (sides[1] is Edge.PERIODIC):
+            if len(sides) != 2 or not all(isinstance(side, Edge) for side in sides):
+                known = ", ".join(Edge)
+                faults.append(f"the {name} edges must be two of {known}, not {', '.join(map(str, sides))}")
+            elif (sides[0] is Edge.PERIODIC) != (sides[1] is Edge.PERIODIC):
                 faults.append(f"both {name} edges must be periodic or neither")
         return faults
 
@@ -108,3 +113,9 @@ class Mesh:
         ]
         heads = ("axis", "zones", "zone width [cm]", "from [cm]", "to [cm]", "edges")
         return columns(f"Mesh of {math.prod(self.shape)} zones", heads, rows)
+
+
+def _known_pair(sides: object) -> tuple[object, ...]:
+    """The two conditions of an axis; words become members, so that none is mistaken for another kind later."""
+    pair = tuple(sides) if isinstance(sides, tuple | list) else (sides,)
+    return tuple(Edge(side) if side in tuple(Edge) else side for side in pair)

@@ -271,7 +271,7 @@ def _setup(module: ModuleType, code: CodeSection, what: str) -> Setup:
     _check_arguments(offered, code, what)
     try:
         made = offered(**code.arguments)
-    except Exception as error:
+    except (Exception, SystemExit) as error:
         raise _users(error, f"{what}: {code.name}() failed") from error
     if not isinstance(made, Setup):
         raise refusal(_wrong_type(what, f"{code.name}()", made))

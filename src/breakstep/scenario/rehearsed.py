@@ -18,6 +18,7 @@ from breakstep.mesh.tiling import Tiling
 from breakstep.scenario.faults import Fault
 from breakstep.scenario.model import SWITCHES
 from breakstep.scenario.reading import Rule
+from breakstep.scenario.timer_tables import MOST_FACE_BYTES
 from breakstep.scenario.timers import Records, read_records
 from breakstep.steps.problem import Problem
 from breakstep.steps.reduction import Reduction
@@ -155,6 +156,14 @@ def _sizes(file: Any, records: Records) -> Iterator[Fault]:
         if is_timed_alone(file) and step.halo and step.face_bytes is None and not records.sent:
             key = f"timers.steps.{number}.face_bytes"
             yield Fault(key, "is missing; expected bytes sent to one neighbour, or a column bytes in the records")
+        if is_timed_alone(file) and step.halo and step.face_bytes is None:
+            sent = records.sent.get(step.name, 0.0) / _faces(step, len(file.mesh.zones))
+            if sent > MOST_FACE_BYTES:
+                yield Fault(
+                    f"timers.steps.{number}.face_bytes",
+                    f"the records have {sent:.3g} bytes sent to one neighbour, and a rehearsal moves at most"
+                    f" {MOST_FACE_BYTES:g}; give a number up to that",
+                )
 
 
 TIMER_RULES: tuple[Rule, ...] = (
@@ -199,6 +208,11 @@ def timed_steps(file: Any, mesh: Mesh) -> list[TimedStep]:
     records = _records(file)
     order = rank_of_tile(mesh, file.mesh.tile, file.timers.numbering)
     return [_timed_step(table, records, order, mesh) for table in file.timers.steps]
+
+
+def _faces(step: Any, dimensions: int) -> int:
+    """Neighbours across faces, among which what a rank sends in a call is divided."""
+    return 2 * len(set(step.axes) or AXIS_NAMES[:dimensions])
 
 
 def _timed_step(table: Any, records: Records, order: list[int], mesh: Mesh) -> TimedStep:

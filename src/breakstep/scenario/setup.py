@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Literal
+from operator import index
+from typing import Literal, SupportsIndex
 
 from breakstep.errors import DeclarationError
 from breakstep.mesh.shown import facts
@@ -55,11 +56,11 @@ class Setup:
         if not isinstance(self.problem, Problem):
             raise DeclarationError(f"a Setup needs a Problem, came {type(self.problem).__name__}")
         sizes = self.tile if isinstance(self.tile, tuple | list) else ()
-        if not sizes or not all(isinstance(size, int) for size in sizes):
+        if not sizes or not all(isinstance(size, SupportsIndex) for size in sizes):
             raise DeclarationError(
                 f"a Setup needs the zones of a tile along each axis, such as (32, 32), not {self.tile}"
             )
-        object.__setattr__(self, "tile", tuple(sizes))
+        object.__setattr__(self, "tile", tuple(index(size) for size in sizes))
         self.problem.cut(self.tile)
 
     def _repr_html_(self) -> str:

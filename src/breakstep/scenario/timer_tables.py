@@ -9,7 +9,8 @@ from pydantic import BeforeValidator, Field
 from breakstep.scenario.sections import Counts, Positive, Section, Word, lists
 from breakstep.scenario.states import AxisWord
 
-FaceBytes = Annotated[float, Field(ge=0.0, le=1e6)]
+MOST_FACE_BYTES = 1e6
+FaceBytes = Annotated[float, Field(ge=0.0, le=MOST_FACE_BYTES)]
 """A rehearsal puts a rank's payload and its neighbours' into one array, of up to 27 times this size."""
 
 

@@ -100,17 +100,19 @@ def _table(path: Path) -> dict[str, Any]:
     wanted = (*PLACES, *NEEDED, "iteration", "bytes")
     if path.suffix == ".parquet":
         names = pa.parquet.read_schema(path).names
-        table = pa.parquet.read_table(path, columns=[name for name in wanted if name in names])
+        table = pa.parquet.read_table(path, columns=[name for name in wanted if names.count(name) == 1])
     else:
         table = pa.csv.read_csv(path)
         names = table.column_names
-    columns = {name: table.column(name).to_pandas() for name in wanted if name in table.column_names}
+    columns = {name: table.column(name).to_pandas() for name in wanted if list(table.column_names).count(name) == 1}
     return {"names": names, "rows": table.num_rows, "columns": columns}
 
 
 def _missing(table: Mapping[str, Any]) -> list[str]:
     """Faults of the file as a whole."""
     names, faults = table["names"], []
+    used = (*PLACES, *NEEDED, "iteration", "bytes")
+    faults += [f"there are {names.count(name)} columns {name}" for name in used if names.count(name) > 1]
     places = [name for name in PLACES if name in names]
     if len(places) == 2:
         faults.append("expected a column tile or a column rank, came both")
@@ -181,16 +183,16 @@ class _Check:
     def _whole(self, name: str, values: pd.Series[Any]) -> NDArray[np.int64]:
         if pd.api.types.is_integer_dtype(values.dtype):
             numbers = values.to_numpy()
-            bad = numbers < 0
+            bad = (numbers < 0) | (numbers > np.iinfo(np.int64).max)
         else:
-            numbers = pd.to_numeric(values, errors="coerce").to_numpy(dtype=np.float64)
+            numbers = _numbers(values)
             with np.errstate(invalid="ignore"):
                 bad = ~((numbers >= 0) & (numbers < 2**53) & (numbers == np.floor(numbers)))
         self._blame(bad, f"{name}: expected whole numbers from 0", values)
         return np.where(bad, 0, numbers).astype(np.int64)
 
     def _amount(self, name: str, values: pd.Series[Any], most: float) -> NDArray[np.float64]:
-        numbers = pd.to_numeric(values, errors="coerce").to_numpy(dtype=np.float64)
+        numbers = _numbers(values)
         with np.errstate(invalid="ignore"):
             bad = ~((numbers >= 0.0) & (numbers <= most))
         self._blame(bad, f"{name}: expected numbers from 0 to {most:g}", values, has_place=True)
@@ -282,6 +284,14 @@ class _Check:
         sums = np.bincount(self.step, weights=self.bytes, minlength=len(self.steps))
         calls = np.bincount(self.step, minlength=len(self.steps))
         return {name: float(total / count) for name, total, count in zip(self.steps, sums, calls, strict=True)}
+
+
+def _numbers(values: pd.Series[Any]) -> NDArray[np.float64]:
+    """What can be read as numbers; NaN for the rest, times and truth values included, which pandas would convert."""
+    kind = values.dtype
+    if pd.api.types.is_bool_dtype(kind) or pd.api.types.is_datetime64_any_dtype(kind) or kind.kind == "m":
+        return np.full(len(values), np.nan)
+    return np.asarray(pd.to_numeric(values, errors="coerce").to_numpy(dtype=np.float64))
 
 
 def _without_empty(seconds: NDArray[np.float64]) -> NDArray[np.float64]:

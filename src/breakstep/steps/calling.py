@@ -6,6 +6,7 @@ reductions and repeats. Errors raised on purpose pass unchanged.
 
 from __future__ import annotations
 
+import contextlib
 import traceback
 from collections.abc import Callable
 from typing import Any, TypeVar
@@ -32,11 +33,26 @@ def call_user(function: Callable[..., _T], *arguments: Any, where: str) -> _T:
         return function(*arguments)
     except BreakstepError:
         raise
-    except Exception as error:
+    except (Exception, SystemExit) as error:  # sys.exit() of a kernel would end a worker without a word
         raise _failed(error, where) from error
 
 
-def _failed(error: Exception, where: str) -> KernelError:
+def ask_user(function: Callable[..., Any], *arguments: Any, where: str) -> bool:
+    """What a function of the user's that says yes or no says.
+
+    Raises
+    ------
+    KernelError
+        It raised, or returned what is neither, such as an array of several entries.
+    """
+    answer = call_user(function, *arguments, where=where)
+    with contextlib.suppress(TypeError, ValueError):
+        if answer is not None:
+            return bool(answer)
+    raise KernelError(f"{where}: expected True or False, got {type(answer).__name__}; return one answer")
+
+
+def _failed(error: BaseException, where: str) -> KernelError:
     below = error.__traceback__.tb_next if error.__traceback__ is not None else None
     frames = traceback.extract_tb(below)
     place = f" ({frames[0].filename}, line {frames[0].lineno}, in {frames[0].name})" if frames else ""
@@ -48,7 +64,7 @@ def _failed(error: Exception, where: str) -> KernelError:
     )
 
 
-def _advice(error: Exception) -> str:
+def _advice(error: BaseException) -> str:
     """What to do: NumPy says "read-only", Numba "readonly", of an array that may not be changed."""
     if "read-only" in str(error) or "readonly" in str(error):
         return "a function may not change the arrays it is given, only return new ones"

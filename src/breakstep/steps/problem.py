@@ -58,6 +58,13 @@ class Problem:
         names = [field.name for field in self.fields]
         if len(set(names)) < len(names):
             raise DeclarationError(f"two fields share a name among {', '.join(names)}")
+        taken = {*AXIS_NAMES, *(f"{name}_component" for name in names)}  # dimensions of the final fields
+        for name in names:
+            if name in taken:
+                raise DeclarationError(
+                    f"a field cannot be named {name!r}: that is a dimension of the fields of a profile;"
+                    " choose another name"
+                )
         if self.cycles < 1:
             raise DeclarationError(f"a run needs at least one cycle, not {self.cycles}")
         if self.ended is not None and not self.splitting.reductions:

@@ -63,6 +63,10 @@ class Reduction:
         check_reads(f"reduction {self.name!r}", self.reads)
         if not isinstance(self.lag, int) or self.lag < 0:
             raise DeclarationError(f"reduction {self.name!r}: lag must be a whole number, 0 or more, not {self.lag!r}")
+        if self.combine not in tuple(Combine):
+            known = ", ".join(Combine)
+            raise DeclarationError(f"reduction {self.name!r} combines by one of {known}, not {self.combine!r}")
+        object.__setattr__(self, "combine", Combine(self.combine))
         if not all(read.is_local for read in self.reads):
             raise DeclarationError(f"reduction {self.name!r} reads ghost zones; it may read its own zones only")
 

@@ -5,9 +5,10 @@ Built-in physics and users' own steps are declared through this module alone.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
-from typing import TypeAlias
+from operator import index
+from typing import SupportsIndex, TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
@@ -36,6 +37,13 @@ class Read:
     field: str
     halo: Triple = (0, 0, 0)
     corners: bool = False
+
+    def __post_init__(self) -> None:
+        if isinstance(
+            self.halo, Sequence | np.ndarray
+        ):  # plans are kept by read: what stands for the same read must be the same
+            halo = tuple(index(w) if isinstance(w, SupportsIndex) else w for w in self.halo)
+            object.__setattr__(self, "halo", halo)
 
     @property
     def is_local(self) -> bool:
@@ -86,6 +94,11 @@ class Call:
     @property
     def dt(self) -> float:
         """Time this call advances [s]: the first entry of reduction ``dt`` times ``fraction``."""
+        if "dt" not in self.values:
+            raise DeclarationError(
+                f'{self.where()}: it asks for the time step without declaring so: give the step uses=("dt",), and'
+                " the splitting a reduction called dt"
+            )
         return float(self.values["dt"][0]) * self.fraction
 
     def require_time_step(self, limit: float, where: str = "") -> None:
@@ -203,7 +216,11 @@ def check_reads(owner: str, reads: tuple[Read, ...]) -> None:
     for name in sorted({name for name in fields if fields.count(name) > 1}):
         raise DeclarationError(f"{owner} declares its read of field {name!r} twice; give the wider halo once")
     for read in reads:
-        if len(read.halo) != 3 or any(not isinstance(w, int) or w < 0 for w in read.halo):
+        if (
+            not isinstance(read.halo, tuple)
+            or len(read.halo) != 3
+            or any(not isinstance(w, int) or w < 0 for w in read.halo)
+        ):
             raise DeclarationError(
                 f"{owner} reads field {read.field!r} with halo {read.halo!r}; expected three whole numbers, 0 or more"
             )

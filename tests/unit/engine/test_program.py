@@ -47,6 +47,17 @@ def test_scratch_fields_need_no_initial_state() -> None:
     assert {name: array.shape for name, array in program.initial(1).items()} == {"u": (1, 3, 1, 1), "t": (1, 1, 1, 1)}
 
 
+def nothing(tile: object, mesh: object) -> None:
+    """A function that forgot to return."""
+
+
+def test_an_initial_state_that_is_none_is_refused() -> None:
+    with pytest.raises(
+        KernelError, match="the initial state of tile 1: expected a mapping of field to array, got None"
+    ):
+        Program(scratch_problem(scratch=True, initial=nothing), (3,)).initial(1)
+
+
 def test_an_incomplete_initial_state_is_refused() -> None:
     with pytest.raises(KernelError, match="the initial state of tile 1: expected new arrays for t, u, w, got t, u"):
         Program(scratch_problem(scratch=False), (3,)).initial(1)

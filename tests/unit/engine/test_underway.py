@@ -35,6 +35,16 @@ def test_a_call_is_known_while_it_lasts(tmp_path: Path) -> None:
     calls.forget()
 
 
+def test_what_an_earlier_run_left_behind_is_not_this_one_s() -> None:
+    calls = Calls()
+    calls.keep()
+    with calls.under_way(CALL):  # a kernel that never returned
+        calls.forget()
+        calls.keep()
+        assert calls.now() == []
+    calls.forget()
+
+
 def test_a_compiler_s_time_does_not_count(tmp_path: Path) -> None:
     file = tmp_path / "calls"
     file.touch()

@@ -29,6 +29,14 @@ def test_edges_are_found_by_axis_and_side() -> None:
     assert mesh.origin == (-2.0, 3.0)
 
 
+def test_words_stand_for_edges() -> None:
+    """A word that was kept as it is would be no member of Edge, and taken for an edge that is not periodic."""
+    mesh = Mesh((4, 4), (1.0, 1.0), (["periodic", "periodic"], ("outflow", "reflecting")))  # type: ignore[arg-type]
+    assert mesh == Mesh((4, 4), (1.0, 1.0), (PERIODIC, OPEN))
+    assert mesh.is_periodic(0)
+    assert mesh.edge(1, 1) is Edge.REFLECTING
+
+
 @pytest.mark.parametrize(
     ("arguments", "sentence"),
     [
@@ -38,6 +46,13 @@ def test_edges_are_found_by_axis_and_side() -> None:
         (((0,), (1.0,), (OPEN,)), "at least one zone along each axis"),
         (((4,), (0.0,), (OPEN,)), "zone widths must be positive"),
         (((4,), (float("nan"),), (OPEN,)), "zone widths must be positive"),
+        (((4,), (float("inf"),), (OPEN,)), "zone widths must be positive"),
+        (
+            ((4,), (1.0,), (("open", "outflow"),)),
+            "x edges must be two of periodic, reflecting, outflow, fixed, not open",
+        ),
+        (((4,), (1.0,), (Edge.PERIODIC,)), "x edges must be two of periodic, reflecting, outflow, fixed, not periodic"),
+        (((4,), (1.0,), ("periodic",)), "x edges must be two of"),
         (((4, 4), (1.0, 1.0), (OPEN, (Edge.OUTFLOW, Edge.PERIODIC))), "both y edges must be periodic or neither"),
         (((4,), (1.0,), (OPEN,), (0.0, 0.0)), "the origin of a mesh needs one entry an axis"),
     ],

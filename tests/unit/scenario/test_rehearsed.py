@@ -82,6 +82,16 @@ def test_bytes_must_come_from_somewhere(tmp_path: Path) -> None:
     assert "timers.steps.0.face_bytes: is missing" in refused(made)[0]
 
 
+def test_more_bytes_than_a_rehearsal_moves(tmp_path: Path) -> None:
+    """Of 8e6 bytes an exchange along two axes, a neighbour gets 2e6."""
+    frame = table(6, 3, STEPS).assign(bytes=8e6)
+    made = tables(saved(frame, tmp_path / "r.csv"), (3, 2), 3)
+    found = refused(made)
+    assert "timers.steps.0.face_bytes: the records have 2e+06 bytes sent to one neighbour" in found[0]
+    made["timers"]["steps"][0]["face_bytes"] = made["timers"]["steps"][2]["face_bytes"] = 1e6
+    scenario_from(made, source="s")
+
+
 def test_records_lie_beside_the_scenario(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     saved(table(2, 1), tmp_path / "r.csv")
     text = 'name = "s"\n[run]\ncycles = 1\n[timers]\nfile = "r.csv"\nranks = [2]\n[[timers.steps]]\nname = "burn"\n'

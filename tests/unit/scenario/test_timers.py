@@ -78,6 +78,7 @@ def put(column: str, row: int, value: object) -> Callable[[pd.DataFrame], pd.Dat
         (lambda f: f.rename(columns={"seconds": "second"}), "the column seconds is missing; did you mean second"),
         (lambda f: f.drop(columns="rank"), "the column tile or rank is missing"),
         (lambda f: f.assign(tile=f["rank"]), "expected a column tile or a column rank, came both"),
+        (lambda f: f.assign(seconds=True), "seconds: expected numbers from 0 to 1e+06, came True in line 2"),
         (lambda f: f[:0], "there are no records in it"),
         (put("cycle", 7, 10**12), "there are gaps: 8 records cannot fill 1 steps, 1000000000001 cycles"),
     ],
@@ -86,6 +87,29 @@ def test_a_fault_is_said_with_its_line(
     tmp_path: Path, spoil: Callable[[pd.DataFrame], pd.DataFrame], sentence: str
 ) -> None:
     assert any(sentence in fault for fault in faults(spoil(table(4, 2)), tmp_path))
+
+
+@pytest.mark.parametrize(
+    ("spoil", "sentence"),
+    [
+        (lambda f: f.assign(seconds=pd.to_timedelta(f["seconds"], unit="s")), "seconds: expected numbers from 0"),
+        (lambda f: f.assign(cycle=pd.to_datetime(f["cycle"])), "cycle: expected whole numbers from 0"),
+        (lambda f: f.assign(rank=f["rank"].astype("u8") + np.uint64(2**63)), "rank: expected whole numbers from 0"),
+    ],
+)
+def test_columns_of_another_kind_are_no_numbers(
+    tmp_path: Path, spoil: Callable[[pd.DataFrame], pd.DataFrame], sentence: str
+) -> None:
+    """pandas would count durations in nanoseconds, and whole numbers of 64 bits without a sign turn negative."""
+    _, found = read_records(saved(spoil(table(4, 2)), tmp_path / "r.parquet"), ("burn",), 4)
+    assert sentence in found[0]
+
+
+@pytest.mark.parametrize("column", ["rank", "step", "seconds", "bytes"])
+def test_a_column_that_is_there_twice(tmp_path: Path, column: str) -> None:
+    path = saved(table(4, 2).assign(bytes=1, again=2), tmp_path / "r.csv")
+    path.write_text(path.read_text().replace("again", column, 1))
+    assert f"r.csv: there are 2 columns {column}" in read_records(path, ("burn",), 4)[1]
 
 
 def test_all_faults_are_said_together(tmp_path: Path) -> None:

@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from breakstep.errors import CourantError, KernelError
-from breakstep.steps.calling import call_user
+from breakstep.steps.calling import ask_user, call_user
 
 
 def halve(number: float) -> float:
@@ -81,3 +81,24 @@ def test_errors_survive_the_journey_from_a_worker() -> None:
     assert type(copy) is KernelError
     assert str(copy) == str(caught.value)
     assert copy.details == caught.value.details
+
+
+def leave() -> None:
+    """What ends a worker without a word."""
+    raise SystemExit(3)
+
+
+def test_leaving_is_an_error_as_well() -> None:
+    with pytest.raises(KernelError, match=r"^here: the user's function raised SystemExit: 3 \("):
+        call_user(leave, where="here")
+
+
+@pytest.mark.parametrize(("answer", "said"), [(True, True), (np.array([0.0]) > 1.0, False), (np.bool_(True), True)])
+def test_answers(answer: object, said: bool) -> None:
+    assert ask_user(lambda: answer, where="here") is said
+
+
+@pytest.mark.parametrize("answer", [None, np.array([True, False])])
+def test_what_is_neither_yes_nor_no(answer: object) -> None:
+    with pytest.raises(KernelError, match=r"^here: expected True or False, got "):
+        ask_user(lambda: answer, where="here")

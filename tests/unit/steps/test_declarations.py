@@ -33,6 +33,8 @@ SOLVE = Repeat("solve", (Step("relax", toys.relax, (Read("v", (1, 0, 0)),), ("v"
         (lambda: replace(SMOOTH, reads=(Read("u", (1, 0)),)), r"halo \(1, 0\); expected three whole numbers"),  # type: ignore[arg-type]
         (lambda: replace(SMOOTH, reads=(Read("u", (-1, 0, 0)),)), "expected three whole numbers, 0 or more"),
         (lambda: replace(SMOOTH, reads=(Read("u", (1.0, 0, 0)),)), "expected three whole numbers, 0 or more"),  # type: ignore[arg-type]
+        (lambda: replace(SMOOTH, reads=(Read("u", 1),)), "halo 1; expected three whole numbers"),  # type: ignore[arg-type]
+        (lambda: replace(RESIDUAL, combine="mean"), "combines by one of min, max, sum, not 'mean'"),  # type: ignore[arg-type]
         (lambda: replace(RESIDUAL, name="1st"), "name of a reduction must be an identifier"),
         (lambda: replace(RESIDUAL, lag=-1), "lag must be a whole number, 0 or more, not -1"),
         (
@@ -49,6 +51,19 @@ SOLVE = Repeat("solve", (Step("relax", toys.relax, (Read("v", (1, 0, 0)),), ("v"
 def test_steps_reductions_and_repeats(declare: Callable[[], object], sentence: str) -> None:
     with pytest.raises(DeclarationError, match=sentence):
         declare()
+
+
+def test_halos_may_be_lists_and_of_any_kind_of_whole_number() -> None:
+    """Plans are kept by read, so that all must be one and hashable."""
+    plain = Read("u", (1, 0, 0))
+    for halo in ([1, 0, 0], np.array([1, 0, 0]), (np.int64(1), 0, 0)):
+        read = Read("u", halo)  # type: ignore[arg-type]
+        assert read == plain
+        assert hash(read) == hash(plain)
+
+
+def test_words_stand_for_ways_to_combine() -> None:
+    assert replace(RESIDUAL, combine="max").combine is Combine.MAX  # type: ignore[arg-type]
 
 
 @pytest.mark.parametrize(
@@ -105,6 +120,11 @@ def with_values_a_tile(problem: Problem) -> Problem:
         (lambda p: replace(p, fields=p.fields[1:]), "names field 'u'; the fields are change, v, w"),
         (lambda p: replace(p, fields=p.fields[:3]), "reduction 'residual' names field 'change'|step 'relax' names"),
         (lambda p: replace(p, fields=(*p.fields, Field("u", ("u",)))), "two fields share a name among u, w, v"),
+        (
+            lambda p: replace(p, fields=(*p.fields, Field("x", ("mass",)))),
+            "a field cannot be named 'x': that is a dimension",
+        ),
+        (lambda p: replace(p, fields=(*p.fields, Field("u_component", ("c",)))), "cannot be named 'u_component'"),
         (lambda p: replace(p, cycles=0), "at least one cycle, not 0"),
         (
             lambda p: replace(p, splitting=lie([SMOOTH]), ended=toys.is_small),

@@ -13,7 +13,7 @@ import pytest
 from breakstep.engine.program import Program
 from breakstep.engine.run import RunOptions
 from breakstep.engine.serial import SerialDispatch
-from breakstep.errors import CourantError
+from breakstep.errors import CourantError, DeclarationError
 from breakstep.steps.splitting import lie
 from breakstep.steps.step import Array, Call, Read, Step
 from tests.toys import Toy, dt_reduction
@@ -50,6 +50,11 @@ def test_a_time_step_above_the_limit_is_an_error_that_says_all(limit: float) -> 
     assert "allows (conduction in zone 7); lower the CFL factor, the growth of the time step or the lag of dt" in str(
         error
     )
+
+
+def test_a_time_step_must_be_declared() -> None:
+    with pytest.raises(DeclarationError, match=r"^step conduct, tile 3, cycle 4.*uses=\(\"dt\",\)"):
+        replace(called(0.1), values={}).dt  # noqa: B018
 
 
 def test_half_a_step_counts_as_half() -> None:
