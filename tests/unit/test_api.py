@@ -115,3 +115,20 @@ def test_a_program_without_a_guard_is_told_so_before_anything_starts(tmp_path: P
 def test_in_one_thread_no_guard_is_needed(tmp_path: Path) -> None:
     done = program(tmp_path, WORKING + "print(breakstep.run(setup(), dispatch='serial').manifest['cycles'])\n")
     assert (done.stdout, done.stderr) == ("5\n", "")
+
+
+def test_a_guard_may_stand_within_another_statement(tmp_path: Path) -> None:
+    """The workers of the run import the program, and come to nothing there."""
+    text = (
+        WORKING
+        + "with open(__file__):\n    if __name__ == '__main__':\n        check_guard()\n        print('passed')\n"
+    )
+    done = program(tmp_path, "from breakstep.commands.guarded import check_guard\n" + text)
+    assert (done.stdout, done.stderr) == ("passed\n", "")
+
+
+def test_a_program_in_no_file_is_told_so(tmp_path: Path) -> None:
+    """Python calls what it reads from standard input a file, and its workers look for that."""
+    text = "from breakstep.commands.guarded import check_guard\ncheck_guard()\n"
+    done = subprocess.run([sys.executable, "-"], input=text, cwd=tmp_path, capture_output=True, text=True, check=False)
+    assert "worker processes import the program that starts them, and this one is in no file" in done.stderr

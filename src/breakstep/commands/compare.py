@@ -14,6 +14,7 @@ from breakstep.commands.shared import (
     open_dispatch,
     output_folder,
     run_options,
+    tell_remarks,
     timeout_option,
     write_json,
 )
@@ -55,6 +56,7 @@ def compare(
     session = Session.load(scenario, overrides, placement, memory_limit or 0, dilate)
     session.allow(task_timeout)
     session.barriers(barriers)
+    tell_remarks(session.scenario.remarks)
     check_json(json_file)
     place = choose_place(session.scenario.run, dispatch, workers, threads, address, scheduler_file)
     session.check_dispatch(place.dispatch)

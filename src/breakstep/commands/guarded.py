@@ -25,6 +25,11 @@ def check_guard() -> None:
     """
     main = sys.modules["__main__"]
     path, spec = getattr(main, "__file__", None), getattr(main, "__spec__", None)
+    if path is not None and spec is None and not Path(path).is_file():
+        raise ClusterError(
+            f"worker processes import the program that starts them, and this one is in no file ({path}): write it into"
+            ' one, or pass dispatch="serial" or a Dask client'
+        )
     frame = _top_level(sys._getframe(1), vars(main))
     is_package = spec is not None and spec.name.endswith(".__main__")  # those are not imported again
     if path is None or is_package or frame is None:
@@ -34,12 +39,12 @@ def check_guard() -> None:
     except (OSError, SyntaxError, ValueError):
         return
     line = frame.f_lineno
-    for statement in tree.body:
-        if statement.lineno <= line <= (statement.end_lineno or line) and not _is_guard(statement):
-            raise ClusterError(
-                f"{path}, line {line}: worker processes import this program, and would run it again; put what it runs"
-                ' under a line  if __name__ == "__main__":  or pass dispatch="serial" or a Dask client'
-            )
+    within = [node for node in ast.walk(tree) if isinstance(node, ast.stmt) and _spans(node, line)]
+    if within and not any(_is_guard(statement) for statement in within):
+        raise ClusterError(
+            f"{path}, line {line}: worker processes import this program, and would run it again; put what it runs"
+            ' under a line  if __name__ == "__main__":  or pass dispatch="serial" or a Dask client'
+        )
 
 
 def _top_level(frame: FrameType | None, namespace: object) -> FrameType | None:
@@ -47,6 +52,10 @@ def _top_level(frame: FrameType | None, namespace: object) -> FrameType | None:
     while frame is not None and not (frame.f_globals is namespace and frame.f_code.co_name == "<module>"):
         frame = frame.f_back
     return frame
+
+
+def _spans(statement: ast.stmt, line: int) -> bool:
+    return statement.lineno <= line <= (statement.end_lineno or line)
 
 
 def _is_guard(statement: ast.stmt) -> bool:

@@ -27,7 +27,7 @@ from breakstep.scenario.overrides import apply_overrides
 from breakstep.scenario.reading import Reader
 from breakstep.scenario.sections import Count, Counts, PlaceSection, Section, Word
 from breakstep.scenario.setup import Setup
-from breakstep.steps.modules import Source, read_source, see_folder, users_traceback
+from breakstep.steps.modules import Source, hidden, read_source, see_folder, users_traceback
 from breakstep.steps.problem import Problem
 
 PYTHON = re.compile(r"(?P<file>.+\.py)(?::(?P<name>\w+))?")
@@ -161,10 +161,11 @@ def code_scenario(
     module, sources = _module(code, folder or Path(), source)
     setup = _setup(module, code, Path(code.file).name if code.file else str(code.module))
     digest = _digest(module, sources)
-    remarks = () if code.digest in (None, digest) else (_has_changed(module),)
+    remarks = [] if code.digest in (None, digest) else [_has_changed(module)]
+    remarks += [_is_hidden(file) for one in sources for file in hidden(one)]
     place = sources[0].path if sources else None
     changed["code"] = {**changed["code"], "digest": digest, **({"file": place} if place else {})}
-    return _checked(changed, setup, source, paths, sources, remarks)
+    return _checked(changed, setup, source, paths, sources, tuple(remarks))
 
 
 def scenario_of(setup: Setup, overrides: Sequence[str] = ()) -> CodeScenario:
@@ -241,17 +242,27 @@ def _imported(load: Callable[[], ModuleType], what: str) -> ModuleType:
                 " a file of yours is given by its path, such as my_code.py"
             ) from error
         raise _users(error, f"{what} cannot be imported") from error
-    except BreakstepError as error:
-        raise _users(error, f"{what} cannot be imported") from error
+    except ImportError as error:
+        raise _users(error, f"{what} cannot be imported", _import_advice(error, what)) from error
     except (Exception, SystemExit) as error:
         raise _users(error, f"{what} cannot be imported") from error
 
 
-def _users(error: BaseException, what: str) -> ScenarioError:
+def _import_advice(error: ImportError, what: str) -> str:
+    """What to do about an import that fails for a reason that Python's own sentence hides."""
+    if "relative import" in str(error):
+        return "; a file given by its path belongs to no package: name it as package.module, from the folder above"
+    beside = Path(what).with_name(f"{error.name}.py")
+    if error.path and beside.is_file() and not beside.samefile(error.path):
+        return f"; {beside} is not what Python imports by that name, which is taken: give your file another"
+    return ""
+
+
+def _users(error: BaseException, what: str, advice: str = "") -> ScenarioError:
     """What the user's code raised, in a sentence, and its own lines."""
     first = (str(error).splitlines() or [""])[0]
     kind = "" if isinstance(error, BreakstepError) else f"{type(error).__name__}: "
-    sentence = f"{what}: {kind}{first}".removesuffix(": ")
+    sentence = f"{what}: {kind}{first}".removesuffix(": ") + advice
     return ScenarioError(sentence, faults=[sentence], traceback=users_traceback(error))
 
 
@@ -298,6 +309,10 @@ def _digest(module: ModuleType, sources: tuple[Source, ...]) -> str:
         return sources[0].digest
     file = getattr(module, "__file__", None)
     return hashlib.sha256(Path(file).read_bytes()).hexdigest() if file else ""
+
+
+def _is_hidden(file: str) -> str:
+    return f"{file} is not imported: Python finds another module by that name; give the file another if it is wanted"
 
 
 def _has_changed(module: ModuleType) -> str:

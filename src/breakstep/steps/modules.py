@@ -154,6 +154,18 @@ def _beside(path: Path, text: bytes, seen: set[str]) -> Iterator[Source]:
             yield Source(str(file), theirs)
 
 
+def hidden(source: Source) -> list[str]:
+    """Files beside a source that are imported by name, there or beside it, and not found: Python finds another."""
+    found: dict[str, None] = {}
+    for one in (*source.beside, source):
+        path = Path(one.path)
+        for name in _imported(one.text):
+            file = path.with_name(f"{name}.py")
+            if name != path.stem and file.is_file() and _is_elsewhere(name, path.parent):
+                found[str(file)] = None
+    return list(found)
+
+
 def _imported(text: bytes) -> list[str]:
     """First words of the modules that a text imports; none of a text that Python cannot read, which it will say."""
     try:

@@ -10,14 +10,15 @@ import numpy as np
 import pytest
 
 from breakstep.engine.program import Program
-from breakstep.engine.warm import small_copy, warm_up
+from breakstep.engine.warm import is_ours, small_copy, warm_up
 from breakstep.errors import KernelError
 from breakstep.mesh.fields import Field
 from breakstep.mesh.mesh import Mesh
 from breakstep.mesh.tiling import Tile
+from breakstep.scenario.load import load_scenario
 from breakstep.steps.problem import Problem
 from breakstep.steps.reduction import Combine, Reduction
-from breakstep.steps.splitting import lie
+from breakstep.steps.splitting import Repeat, lie
 from breakstep.steps.step import Array, Read, Step
 from tests import toys
 from tests.toys import Toy, dt_reduction, faulty_problem
@@ -123,7 +124,7 @@ def test_cycle_level_results_always_move_on() -> None:
 def test_the_small_copy_runs_every_order_on_one_tile() -> None:
     program = Program(Toy((48, 48), two_orders=True, cycles=90).problem(), (12, 12))
     small = small_copy(program)
-    assert small.problem.mesh.shape == (4, 4)
+    assert small.problem.mesh.shape == (12, 12)  # tiles of a user, which these kernels are
     assert small.problem.cycles == 2
     assert len(small.tiling) == 1
     assert warm_up(program) == ""
@@ -132,7 +133,7 @@ def test_the_small_copy_runs_every_order_on_one_tile() -> None:
 def test_wide_halos_fit_the_small_copy() -> None:
     step = Step("wide", lambda arrays, call: {"u": arrays["u"][:, 7:-7]}, (Read("u", (7, 0, 0)),), ("u",))
     program = Program(replace(Toy((28,)).problem(), splitting=lie([step])), (14,))
-    assert small_copy(program).problem.mesh.shape == (7,)
+    assert small_copy(program).problem.mesh.shape == (14,)
     assert warm_up(program) == ""
 
 
@@ -145,3 +146,20 @@ def test_reductions_with_a_name_of_their_own_are_found() -> None:
     problem = Toy((12,)).problem()
     program = Program(replace(problem, splitting=lie(problem.splitting.orders[0], [dt_reduction(), total])), (3,))
     assert program.reduction("total") is total
+
+
+def test_a_user_s_kernels_warm_up_on_tiles_of_the_problem_s_shape() -> None:
+    """An old routine may know its dimensions since it was compiled, and writes past a smaller block."""
+    program = Program(Toy((36,)).problem(), (9,))
+    small = small_copy(program)
+    assert not is_ours(program)
+    assert [tile.shape for tile in small.tiling.tiles] == [(9, 1, 1)]
+    repeats = [item for item in small.problem.splitting.items() if isinstance(item, Repeat)]
+    assert all(repeat.stop(np.array([np.nan])) for repeat in repeats)
+    assert repeats
+
+
+def test_built_in_kernels_warm_up_on_a_few_zones() -> None:
+    program = Program(load_scenario("quiet_gas").problem(), load_scenario("quiet_gas").tile)
+    assert is_ours(program)
+    assert max(small_copy(program).problem.mesh.shape) == 4

@@ -113,6 +113,16 @@ def test_a_file_beside_it_hides_no_module_of_python_s(tmp_path: Path) -> None:
     (tmp_path / "random.py").write_text("raise RuntimeError('hidden')\n", encoding="utf-8")
     scenario = load_scenario(written(tmp_path, before="import random\nassert random.random() < 1.0\n"))
     assert scenario.problem().sources[0].beside == ()
+    (remark,) = scenario.remarks
+    assert remark.startswith(f"{tmp_path / 'random.py'} is not imported: Python finds another module by that name")
+
+
+def test_imports_that_fail_for_a_hidden_reason(tmp_path: Path) -> None:
+    (tmp_path / "profile.py").write_text("STEP = 1.0\n", encoding="utf-8")
+    error = refused(written(tmp_path, "from profile import STEP\n"))
+    assert "profile.py is not what Python imports by that name, which is taken" in error.message
+    error = refused(written(tmp_path, "from .profile import STEP\n"))
+    assert "a file given by its path belongs to no package: name it as package.module" in error.message
 
 
 def test_overrides(tmp_path: Path) -> None:

@@ -28,7 +28,7 @@ from breakstep.engine.placement import owners
 from breakstep.engine.program import Program
 from breakstep.engine.recording import record_edges
 from breakstep.engine.run import Progress, RunOptions, RunResult, unroller_for
-from breakstep.engine.warm import warm_up
+from breakstep.engine.warm import is_ours, lost_in_warm_up, warm_up
 from breakstep.engine.workers import known_workers, present_workers, require_present, run_on
 from breakstep.errors import BreakstepError, ClusterError, OverdueError
 from breakstep.graph.tasks import ANYWHERE, Kind, Task, TaskGraph
@@ -70,18 +70,20 @@ class NativeDispatch:
         """
         require_present(self.client, self.addresses)
         if id(program) not in self._warm:
-            if overseer is None or not overseer.limit:
+            meanwhile = overseer.look_at_files if overseer is not None else None
+            if is_ours(program) and (overseer is None or not overseer.limit):
                 warm_up(program)
-                self._load(program, self.addresses)
-            else:  # here nothing could end a kernel that does not return; so the first worker compiles
-                self._load(program, self.addresses[:1], overseer.look_at_files)
-                self._load(program, self.addresses, overseer.look_at_files)
+            else:  # here nothing could end a kernel that does not return, and one that crashes would end the driver
+                self._load(program, self.addresses[:1], meanwhile)
+            self._load(program, self.addresses, meanwhile)
             self._warm.add(id(program))
 
     def _load(self, program: Program, addresses: list[str], meanwhile: Callable[[], None] | None = None) -> None:
         try:
             run_on(self.client, addresses, warm_up, program, meanwhile=meanwhile)
-        except (OSError, ClusterError, OverdueError):
+        except OSError as error:
+            raise lost_in_warm_up(error) from error
+        except (ClusterError, OverdueError):
             raise
         except Exception as error:  # pickling and importing raise anything
             raise ClusterError(

@@ -19,7 +19,7 @@ from breakstep.engine.program import Program
 from breakstep.engine.resident.attempt import Attempt, Site
 from breakstep.engine.resident.host import LEASE_SECONDS
 from breakstep.engine.run import Progress, RunOptions, RunResult
-from breakstep.engine.warm import process, warm_up
+from breakstep.engine.warm import is_ours, lost_in_warm_up, process, warm_up
 from breakstep.engine.workers import known_workers, run_on
 from breakstep.errors import ClusterError, OverdueError
 from breakstep.profile.record import RunRecord
@@ -76,14 +76,16 @@ class ResidentDispatch:
         OverdueError
             A kernel has not returned within the overseer's limit.
         """
+        # Not here with a limit, for nothing could end a kernel that does not return; nor a user's, which may crash.
+        here = is_ours(program) and (overseer is None or not overseer.limit)
         if program is not self._program:
-            if overseer is None or not overseer.limit:
-                warm_up(program)  # not with a limit: here nothing could end a kernel that does not return
+            if here:
+                warm_up(program)
             self._warm.clear()
             self._program = program
         cold = [address for address in self.addresses if address not in self._warm]
         if cold:
-            if overseer is not None and overseer.limit:
+            if not here:
                 self._load(program, cold[:1], overseer)
             self._load(program, cold, overseer)
             self._warm.update(cold)
@@ -94,7 +96,7 @@ class ResidentDispatch:
             apart = {found: address for address, found in run_on(self.client, addresses, process).items()}
             run_on(self.client, list(apart.values()), warm_up, program, meanwhile=meanwhile)
         except OSError as error:
-            raise ClusterError(f"a worker was lost before the run began ({error!r})", lost=True) from error
+            raise lost_in_warm_up(error) from error
         except (ClusterError, OverdueError):
             raise
         except Exception as error:  # pickling and importing raise anything
