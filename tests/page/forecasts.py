@@ -13,7 +13,7 @@ FORECAST: dict[str, Any] = {
                 "workers": workers,
                 "lockstep_s": lockstep, "lockstep_low_s": 0.93 * lockstep, "lockstep_high_s": 1.07 * lockstep,
                 "tasked_s": tasked, "tasked_low_s": 0.95 * tasked, "tasked_high_s": 1.05 * tasked,
-                "area_bound_s": 9.0 / workers, "path_bound_s": 1.1,
+                "area_bound_s": 9.0 / workers, "path_bound_s": 1.1, "least_s": max(9.0 / workers, 1.1),
             }
             for workers, lockstep, tasked in _TIMES
         ],

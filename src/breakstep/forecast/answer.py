@@ -3,7 +3,9 @@
 Next to every figure stands what the same method says of the machine of recording, where it can be compared with
 what was measured. Three figures are given for leaving barriers out: with the order that workers find while playing,
 which may by bad luck be longer than with barriers (Graham's anomalies); with the order of lockstep kept, which
-cannot; and bounds, below which no order goes.
+cannot; and bounds, below which no order of the tasked run goes, its tiles, messages and crowding being what they are on
+so many workers. So these may rise with the workers. What no order and no placement goes below, in either mode, is
+``least_s``.
 """
 
 from __future__ import annotations
@@ -29,8 +31,8 @@ FEWEST = 4
 SPREAD = 1.96  # standard deviations to either side of which 95 % lie, were they normal
 MODES = ("lockstep", "tasked")
 WEAK = (
-    "The mesh grows with the workers: recorded costs side by side, mirrored, each task's drawn anew; bounds are those"
-    " of mean costs, and memory and bytes are not followed."
+    "The mesh grows with the workers: recorded costs side by side, mirrored, each task's drawn anew; fewer tiles"
+    " than were recorded are a corner of them; bounds are those of mean costs, and memory and bytes are not followed."
 )
 ONE_RUN = (
     "No mode was recorded twice: intervals hold what differs from task to task, not what differs from run to run, which"
@@ -130,7 +132,8 @@ def row_of(basis: Basis, machine: Machine, question: Question, workers: int, dra
     """Both modes for one number of workers. Workers beyond the tiles have nothing to do."""
     if question.weak:
         return weak_row(basis, machine, question, workers)
-    tiles = len(Scene.of(basis, machine, question, 1).program.tiles.origin)
+    alone = Scene.of(basis, machine, question, 1)
+    tiles = alone.program.tile_count
     scene = Scene.of(basis, machine, question, min(workers, tiles))
     lockstep, tasked = scene.unfolded.lockstep, scene.unfolded.tasked
     spans = {mode: span_of(scene, basis, kinds_of(scene, mode), draws) for mode in MODES}
@@ -149,6 +152,7 @@ def row_of(basis: Basis, machine: Machine, question: Question, workers: int, dra
         "area_bound_s": bounds["area"] * 1e-9,
         "path_bound_s": bounds["path"] * 1e-9,
         "worker_bound_s": bounds["worker"] * 1e-9,
+        "least_s": min(alone.least_ns(kinds_of(alone, mode), slots) for mode in MODES) * 1e-9,
         "memory_bytes": scene.memory(replay),
         "moved_bytes": int(replay.received_bytes.sum()),
         "cores": machine.slots,

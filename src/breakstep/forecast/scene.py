@@ -129,6 +129,16 @@ class Scene:
             "worker": float(np.mean([bounds.worker_ns for bounds in found])),
         }
 
+    def least_ns(self, kinds: int, slots: int) -> float:
+        """What no order and no placement on so many threads goes below, for the runs played in a mode [ns].
+
+        Costs are those of an idle machine, and messages and trees of workers cost nothing. Of a scene with one worker,
+        which pays least for its interpreter, this is a bound for any number of workers, and more never raise it.
+        """
+        free = replace(self.setting.model, workers=slots, threads=1, alpha_ns=0, hop_ns=0)
+        graphs = [self._with(self._calm, 1.0, costs) for costs in self._chosen(kinds)]
+        return float(np.mean([lower_bounds(graph, free, None, self.unfolded.tasked).best_ns for graph in graphs]))
+
     def work_ns(self, kinds: int) -> float:
         """Time in kernels on an idle machine, all tasks together, of the runs that the makespan is made from [ns]."""
         return float(np.mean([self._kernels(self._calm, costs).sum() for costs in self._chosen(kinds)]))

@@ -61,7 +61,7 @@ def weak_row(basis: Basis, machine: Machine, question: Question, workers: int) -
         middle, half = float(np.mean(spans)), 1.96 * float(np.std(spans, ddof=1))
         row |= {f"{mode}_s": middle, f"{mode}_low_s": max(middle - half, 0.0), f"{mode}_high_s": middle + half}
         row[f"{mode}_efficiency"] = work * 1e-9 / (workers * middle)
-    path = max(stage_path_ns(splitting)) * 1e-9
+    path = float(stage_path_ns(splitting).max()) * 1e-9
     area = total_ns(splitting, model.overhead_ns) / workers * 1e-9
     return row | {
         "tasked_fixed_s": row["tasked_s"],
@@ -158,5 +158,9 @@ def total_ns(splitting: TiledSplitting, overhead_ns: int) -> float:
 
 
 def stage_path_ns(splitting: TiledSplitting) -> Floats:
-    """Each tile's own tasks one after the other, by cell of the recorded map: no run is shorter [ns]."""
-    return np.asarray(sum(stage.cost.pattern_ns[0].astype(np.float64) for stage in splitting.stages))
+    """Each tile's own tasks one after the other, shape (tiles,): no run of mean costs is shorter [ns].
+
+    By tile, not by cell of the recorded map: few tiles may not reach the recorded hot spot.
+    """
+    stages = (stage.cost for stage in splitting.stages)
+    return np.asarray(sum(cost.pattern_ns[0][cost.cell].astype(np.float64) for cost in stages))

@@ -46,8 +46,9 @@ def forecast_lines(name: str, figures: Mapping[str, Any], asked: Sequence[str]) 
     lines += ["", *_header(), *(_row(row, error) for row in figures["rows"]), ""]
     lines += _wrap(
         "All in seconds; in brackets where 95 % of repeats should lie. Kept: without barriers, each worker in"
-        " lockstep's order, never longer than lockstep. No schedule is shorter than a bound: all work over all"
-        " threads, the longest path, the busiest worker. Useful: kernels' own time over threads x time. Error"
+        " lockstep's order and costs, never longer than lockstep. Bounds: no order of the tasked run is shorter, its"
+        " tiles and messages being where they are: all work over all threads, the longest path with its messages, the"
+        " busiest worker. Useful: kernels' own time over threads x time. Error"
         " here: how far the same method missed the runs that were recorded."
     )
     for note in notes(figures):

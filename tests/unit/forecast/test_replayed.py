@@ -12,7 +12,7 @@ from breakstep.forecast.question import Question, parse_question
 from breakstep.forecast.scene import Scene
 from breakstep.forecast.setting import recorded_machine
 from breakstep.profile.run import Profile
-from tests.unit.forecast.recorded import Ring, Stage, even, hot
+from tests.unit.forecast.recorded import MS, Ring, Stage, even, hot
 
 #: With one worker nothing but rounding to whole nanoseconds is left. With more, crowding is taken out of the record and
 #: put back in four rounds, each of which gains a digit, and a run's first gap is in the makespan but not in the span.
@@ -62,6 +62,31 @@ def test_bounds_hold_and_one_worker_takes_the_area() -> None:
         assert row["tasked_s"] < row["lockstep_s"]
         assert 0.0 < row["tasked_efficiency"] <= 1.0
     assert rows[0]["tasked_s"] == pytest.approx(rows[0]["area_bound_s"])
+
+
+def test_what_is_out_of_reach_stays_so_in_both_modes_and_more_workers_never_raise_it() -> None:
+    """Messages take far longer than tasks here, so that the longest path with them rises with the workers."""
+    basis = basis_of([Ring(hot(24)).profile()])
+    question = parse_question(["latency=1e4"], basis.program)
+    rows = answer(basis, recorded_machine(basis.first), question, [1, 2, 4, 8, 64])["rows"]
+    least = [row["least_s"] for row in rows]
+    assert least == sorted(least, reverse=True)
+    assert rows[1]["path_bound_s"] > 1.2 * rows[0]["path_bound_s"]
+    for row in rows:
+        reached = min(row["lockstep_s"], row["tasked_s"], row["tasked_fixed_s"])
+        assert 0.0 < row["least_s"] <= reached * (1 + 1e-9)
+
+
+@pytest.mark.parametrize("tiles", [1, 4])
+@pytest.mark.parametrize("workers", [1, 2, 8])
+def test_bounds_hold_for_a_mesh_that_grows(tiles: int, workers: int) -> None:
+    """Few tiles do not reach the hot one of the record, which must not bound them. Nothing here is drawn but ones."""
+    phases = [Stage("burn", [MS] * 7 + [20 * MS], cycle) for cycle in range(4)]
+    basis = basis_of([Ring(phases).profile()])
+    question = parse_question([f"weak={tiles}"], basis.program)
+    row = answer(basis, recorded_machine(basis.first), question, [workers])["rows"][0]
+    highest = max(row["area_bound_s"], row["path_bound_s"], row["worker_bound_s"])
+    assert 0.0 < highest <= min(row["tasked_s"], row["lockstep_s"]) * (1 + 1e-9)
 
 
 def test_workers_beyond_the_tiles_have_nothing_to_do() -> None:

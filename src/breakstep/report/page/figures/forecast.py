@@ -21,7 +21,7 @@ def scaling_figure(panel: dict[str, Any]) -> figure:
     rows = panel["rows"]
     workers = [row["workers"] for row in rows]
     times = [row[f"{side}_{end}_s"] for row in rows for side in _SIDES for end in ("low", "high")]
-    bound = [max(row["area_bound_s"], row["path_bound_s"]) for row in rows]
+    bound = [row["least_s"] for row in rows]
     low, high = min(*times, *bound) * 0.8, max(times) * 1.25
     plot = new_figure(
         340, (workers[0] * 0.85, workers[-1] * 1.18), (low, high), x_axis_type="log", y_axis_type="log", name="scaling",
