@@ -18,7 +18,8 @@ from breakstep.errors import MachineError
 SUFFIX = ".toml"
 RECORDED = "recorded"  # the machine that the profile was recorded on
 
-Positive = Annotated[float, Field(gt=0.0, le=1e15)]
+# Times are whole nanoseconds in 64 bits, sizes whole bytes: within these limits no run that is recorded overflows them.
+Positive = Annotated[float, Field(ge=1e-6, le=1e6)]
 Share = Annotated[float, Field(ge=0.0, le=10.0)]
 Micros = Annotated[float, Field(ge=0.0, le=1e9)]
 Count = Annotated[int, Field(ge=1, le=100_000_000)]

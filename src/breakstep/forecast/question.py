@@ -17,6 +17,12 @@ from breakstep.partition import ORDERS
 
 PRIORITIES = ("program", "path")
 RUNTIMES = ("native", "resident", "compiled")
+#: Times are whole nanoseconds in 64 bits. Figures within these limits keep a run's sums far below 2^63 ns: a run of
+#: an hour, made a million times as slow, is 4e18 ns. Nothing that is built lies outside of them.
+MOST_TIMES = 1e6  # as often, or as rarely
+MOST_MICROSECONDS = 1e9  # a message or a task's overhead of a quarter of an hour
+LEAST_GBYTES, MOST_GBYTES = 1e-6, 1e9
+MOST_THREADS = 4096  # of one worker
 
 KEYS = {
     "threads": "threads of each worker",
@@ -114,7 +120,7 @@ def _answered(question: Question, key: str, value: str, program: Program) -> Que
     if key == "priority":
         return replace(question, priority=_word(value, PRIORITIES))
     if key == "overhead":
-        return replace(question, overhead=value if value in RUNTIMES else _number(value))
+        return replace(question, overhead=value if value in RUNTIMES else _micros(value))
     if head == "lag":
         return replace(question, lags={**question.lags, _known(name, program.lags): _whole(value)})
     if head == "iterations":
@@ -124,11 +130,16 @@ def _answered(question: Question, key: str, value: str, program: Program) -> Que
     steps = program.costs.kernel
     if head == "speed":
         chosen = [_known(name, steps)] if name else list(steps)
-        slower = {step: question.factors.get(step, 1.0) / _times(value) for step in chosen}
-        return replace(question, factors={**question.factors, **slower})
+        return _slower(question, chosen, 1.0 / _times(value))
     if key in steps:
-        return replace(question, factors={**question.factors, key: question.factors.get(key, 1.0) * _times(value)})
+        return _slower(question, [key], _times(value))
     raise ValueError(f"no such key; keys: {', '.join(KEYS)}; steps: {', '.join(steps)}")
+
+
+def _slower(question: Question, steps: Sequence[str], factor: float) -> Question:
+    """Factors of several answers multiply; their product keeps within the limit too."""
+    factors = {step: _within(question.factors.get(step, 1.0) * factor, 1.0 / MOST_TIMES, MOST_TIMES) for step in steps}
+    return replace(question, factors={**question.factors, **factors})
 
 
 def _known(name: str, known: Mapping[str, Any]) -> str:
@@ -153,11 +164,19 @@ def _number(value: str, may_be_negative: bool = False) -> float:
     return number
 
 
-def _positive(value: str) -> float:
-    number = _number(value)
-    if number <= 0.0:
-        raise ValueError("expected a number above 0")
+def _within(number: float, least: float, most: float) -> float:
+    # A product of factors may miss the limit that it reaches by a rounding error.
+    if not least * (1.0 - 1e-12) <= number <= most * (1.0 + 1e-12):
+        raise ValueError(f"expected a number from {least:g} to {most:g}, came {number:g}")
     return number
+
+
+def _micros(value: str) -> float:
+    return _within(_number(value), 0.0, MOST_MICROSECONDS)
+
+
+def _gbytes(value: str) -> float:
+    return _within(_number(value), LEAST_GBYTES, MOST_GBYTES)
 
 
 def _whole(value: str) -> int:
@@ -173,8 +192,12 @@ def _count(value: str) -> int:
     return number
 
 
+def _threads(value: str) -> int:
+    return int(_within(_count(value), 1, MOST_THREADS))
+
+
 def _times(value: str) -> float:
-    return _positive(value.removesuffix("x"))
+    return _within(_number(value.removesuffix("x")), 1.0 / MOST_TIMES, MOST_TIMES)
 
 
 def _shape(value: str) -> tuple[int, ...]:
@@ -186,11 +209,11 @@ def _shape(value: str) -> tuple[int, ...]:
 
 _PLAIN: Mapping[str, tuple[str, Callable[[str], Any]]] = {
     "workers": ("workers", _count),
-    "threads": ("threads", _count),
+    "threads": ("threads", _threads),
     "tile": ("tile", _shape),
-    "latency": ("latency_us", _number),
-    "bandwidth": ("bandwidth_gbytes", _positive),
-    "memory": ("memory_gbytes", _positive),
+    "latency": ("latency_us", _micros),
+    "bandwidth": ("bandwidth_gbytes", _gbytes),
+    "memory": ("memory_gbytes", _gbytes),
     "window": ("window", _count),
     "weak": ("weak", _whole),
 }

@@ -45,6 +45,13 @@ def test_all_faults_come_together() -> None:
     assert all(fault.startswith("mine.toml: ") for fault in faults)
 
 
+def test_what_64_bits_do_not_hold_is_refused() -> None:
+    wrong = SOUND | {"speed": 1e-15, "memory_gbytes": 1e15, "network": {"latency_us": 1.0, "bandwidth_gbytes": 1e-15}}
+    with pytest.raises(MachineError) as caught:
+        machine_from(wrong, "mine.toml")
+    assert len(caught.value.details["faults"]) == 3
+
+
 def test_common_practice_names_keys_that_are_there() -> None:
     with pytest.raises(MachineError, match=r"common_practice: network\.speed"):
         machine_from(SOUND | {"common_practice": ["network.speed"]}, "mine.toml")

@@ -46,6 +46,22 @@ def test_all_faults_come_together(program: Program) -> None:
     assert [fault.split(": ")[0] for fault in faults] == [f"--what-if {text}" for text in texts]
 
 
+@pytest.mark.parametrize(
+    "text",
+    ["burn=1e7x", "speed=1e-300", "latency=1e300", "overhead=1e30", "bandwidth=1e-30", "memory=1e300", "threads=99999"],
+)
+def test_what_64_bits_do_not_hold_is_refused(program: Program, text: str) -> None:
+    with pytest.raises(ForecastError, match=f"--what-if {text}: expected a number from"):
+        parse_question([text], program)
+
+
+def test_factors_multiply_and_their_product_is_bounded_too(program: Program) -> None:
+    there_and_back = parse_question(["burn=1e6x", "burn=1e-6x"], program)
+    assert there_and_back.factors["burn"] == pytest.approx(1.0)
+    with pytest.raises(ForecastError, match=r"burn=2x: expected a number from 1e-06 to 1e\+06, came 2e\+06"):
+        parse_question(["burn=1e6x", "burn=2x"], program)
+
+
 def test_an_unknown_key_lists_the_steps(program: Program) -> None:
     with pytest.raises(ForecastError, match="steps: burn, sweep"):
         parse_question(["freeze=2x"], program)
