@@ -44,6 +44,12 @@ def test_nothing_is_overwritten(breakstep: Shell, there: str) -> None:
     assert Path(there).read_text(encoding="utf-8") == "my own"
 
 
+@pytest.mark.parametrize("name", ["numpy", "class", "json", "breakstep"])
+def test_names_that_python_has_taken(breakstep: Shell, name: str) -> None:
+    refused(breakstep("new", name), "choose another name")
+    assert files(Path.cwd()) == []
+
+
 @pytest.mark.parametrize("name", ["my-own", "3d", "a/b", "é"])
 def test_names_that_cannot_be(breakstep: Shell, name: str) -> None:
     refused(breakstep("new", name), "cannot name a file of code: expected letters, digits and underscores")
