@@ -19,7 +19,9 @@ from breakstep.forecast.figures import ranking_figures, scenario_name
 from breakstep.forecast.machines import RECORDED
 from breakstep.forecast.question import parse_question
 from breakstep.forecast.ranking import rank_kinds
+from breakstep.forecast.setting import changed_program
 from breakstep.report.forecast import advice_lines
+from breakstep.report.wording import counted
 from breakstep.scenario.load import load_scenario
 
 
@@ -48,10 +50,11 @@ def advise(
         raise ForecastError("--verify runs on this machine, as recorded; leave --machine and --what-if out")
     basis = basis_of(read_all(profiles))
     chosen, question = machine_named(machine, basis), parse_question(asked, basis.program)
-    count = workers or question.workers or basis.first.workers
-    if count > basis.program.tile_count and not question.tile:
+    tiles = changed_program(basis.program, question).tile_count
+    count = workers or question.workers or min(basis.first.workers, tiles)
+    if count > tiles:
         raise ForecastError(
-            f"{count} workers for {basis.program.tile_count} tiles: expected at most one a tile; ask for fewer workers"
+            f"{count} workers for {counted(tiles, 'tile')}: expected at most one a tile; ask for fewer workers"
             " or for smaller tiles (--what-if tile=...)"
         )
     ranking = rank_kinds(basis, chosen, question, count)

@@ -6,7 +6,8 @@ takes the first by rank.
 The tie rule, which a second engine must share to agree to the nanosecond. At each moment all events of
 that moment are booked, arrivals before finishes, then by task number, with those that booking adds.
 Then free threads, lowest first, take ready tasks, lowest (rank, task number) first. A task that takes no
-time finishes in the same moment, and the round repeats.
+time finishes in the same moment, and the round repeats. A run begins with the threads' turn: free threads take
+steps without inputs before anything is booked, also control nodes that have none.
 
 An output crosses to another worker as soon as it is made: it is there ``alpha + bytes * beta`` later. With
 contention, each worker's incoming link serves one message at a time, in the order of the producers'

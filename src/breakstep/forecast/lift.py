@@ -222,7 +222,12 @@ def _refuse_unfinished(profile: Profile) -> None:
 
 
 def _refuse_broken(profile: Profile, tile: Integers, tiles: int) -> None:
-    if not len(tile) or len(tile) % tiles or np.any(tile.reshape(-1, tiles) != np.arange(tiles)):
+    if not len(tile):
+        raise ProfileError(
+            f"{profile.folder}: a forecast needs tasks, this run has none, as when it was resumed with no cycle left;"
+            " give the run that did the cycles"
+        )
+    if len(tile) % tiles or np.any(tile.reshape(-1, tiles) != np.arange(tiles)):
         raise ProfileError(
             f"{profile.folder}: a forecast needs whole phases, one task for each of {tiles} tiles; this run"
             " lost some on the way; record it again without losing a worker"

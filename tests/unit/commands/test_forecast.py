@@ -97,6 +97,7 @@ def test_a_mesh_that_grows_with_the_workers(breakstep: Shell) -> None:
         (("forecast", SHIPPED, "--what-if", "tile=1000x8"), "do not fit"),
         (("forecast", SHIPPED, "--what-if", "weak=100000", "--workers", "100000"), "ask for fewer workers"),
         (("advise", SHIPPED, "--workers", "9"), "9 workers for 4 tiles"),
+        (("advise", SHIPPED, "--workers", "9", "--what-if", "tile=64x32"), "9 workers for 2 tiles"),
         (("advise", SHIPPED, "--verify", "--machine", "laptop"), "--verify runs on this machine"),
     ],
 )

@@ -50,6 +50,14 @@ def test_pack_tasks_collapse(lockstep: bool) -> None:
     assert np.array_equal(direct.consumer, packed.consumer)
 
 
+def test_a_run_of_no_tasks_is_refused_for_what_it_is() -> None:
+    """As when it was resumed with no cycle left: it lost no worker."""
+    profile = Ring(even()).profile()
+    profile.frames["tasks"] = profile.tasks.iloc[:0]
+    with pytest.raises(ProfileError, match="needs tasks, this run has none"):
+        lift(profile)
+
+
 def test_trees_collapse_to_instances() -> None:
     phases = [
         Stage("m", [MS] * 4, -1, makes="dt"),
