@@ -301,9 +301,15 @@ class Adviser:
     def _trial(self, barriers: str, overrides: Sequence[str] = ()) -> Trial:
         """A trial beside what all trials share."""
         changed = {override.partition("=")[0] for override in overrides}
-        kept = tuple(one for one in self.common if one.partition("=")[0] not in changed)
+        shared = {one.partition("=")[0]: one for one in (*self.common, *self._asked())}
+        kept = tuple(one for key, one in shared.items() if key not in changed)
         named = self.question.placement or recorded_option(self.basis, "placement")
         return Trial((*kept, *overrides), barriers, named)
+
+    def _asked(self) -> list[str]:
+        """What the question changes of the scenario itself: a command that left it out would try something else."""
+        question, tile = self.question, list(self.question.tile)
+        return [f"mesh.tile={tile}"] * bool(tile) + [f"run.window={question.window}"] * bool(question.window)
 
 
 def recorded_option(basis: Basis, key: str) -> str:

@@ -139,6 +139,14 @@ def test_commands_of_advice_are_understood(breakstep: Shell) -> None:
         assert session.scenario.run.cycles == 3  # the shipped profile's own, not the scenario's
 
 
+def test_commands_of_advice_keep_the_tiles_and_the_window_that_were_asked_for(breakstep: Shell) -> None:
+    asked = ("--what-if", "tile=16x16", "--what-if", "window=3")
+    for advice in figures(breakstep, "advise", SHIPPED, *asked)["advice"]:
+        assert advice["command"].count("mesh.tile=") == 1
+        assert "run.window=" in advice["command"]
+        assert "tiles of" in advice["do"] or "mesh.tile=[16, 16]" in advice["command"]
+
+
 def test_the_text_says_that_gains_do_not_add(breakstep: Shell) -> None:
     assert "Gains do not add" in breakstep("advise", SHIPPED).out
 
