@@ -57,7 +57,7 @@ def worker_counts(text: str | None) -> list[int]:
     ------
     ForecastError
     """
-    parts = [part.strip() for part in (text or "").split(",") if part.strip()]
+    parts = [part.strip() for part in text.split(",")] if text is not None else []
     if not all(part.isdigit() and 1 <= int(part) <= 10_000_000 for part in parts):
         raise ForecastError(f"--workers {text}: expected whole numbers from 1 on joined by commas, as 2,8,64")
     return [int(part) for part in parts]
@@ -93,6 +93,8 @@ def forecast(
     basis = basis_of(read_all(profiles))
     chosen = machine_named(machine, basis)
     question = parse_question(asked, basis.program)
+    if counts and question.workers is not None:
+        raise ForecastError("--workers and --what-if workers= name numbers of workers each; give one of them")
     figures = answer(basis, chosen, question, counts)
     figures["checked"] = [checked(basis, folder) for folder in checks]
     figures["what_if"] = list(asked)

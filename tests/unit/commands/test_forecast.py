@@ -94,6 +94,8 @@ def test_a_mesh_that_grows_with_the_workers(breakstep: Shell) -> None:
         (("forecast", "nowhere"), "there is none"),
         (("forecast", SHIPPED, "--machine", "toaster"), "no machine is named"),
         (("forecast", SHIPPED, "--workers", "2,x"), "--workers 2,x: expected whole numbers"),
+        (("forecast", SHIPPED, "--workers", "2,,3"), "--workers 2,,3: expected whole numbers"),
+        (("forecast", SHIPPED, "--workers", "2", "--what-if", "workers=4"), "give one of them"),
         (("forecast", SHIPPED, "--what-if", "tile=1000x8"), "do not fit"),
         (("forecast", SHIPPED, "--what-if", "weak=100000", "--workers", "100000"), "ask for fewer workers"),
         (("advise", SHIPPED, "--workers", "9"), "9 workers for 4 tiles"),
