@@ -103,7 +103,7 @@ def with_grudge(where: str) -> Problem:
     (dt,) = splitting.reductions
     (repeat,) = [item for item in splitting.items() if isinstance(item, Repeat)]
     if where == "finish":
-        return replace(problem, splitting=replace(splitting, reductions=(replace(dt, finish=grudging(dt.finish, 9)),)))
+        return replace(problem, splitting=replace(splitting, reductions=(replace(dt, finish=grudging(dt.finish, 5)),)))
     if where == "ended":
         return replace(problem, ended=grudging(lambda value: False, 4))
     stubborn = replace(repeat, stop=grudging(repeat.stop, 40))

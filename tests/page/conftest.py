@@ -34,8 +34,9 @@ OPTIONS = (
 SIZES = {"wide": (1280, 900), "phone": (390, 844)}
 
 
-@pytest.fixture(scope="session")
+@pytest.fixture(scope="package")
 def browser() -> Iterator[Browser]:
+    """One browser for this folder's tests; not longer, since Playwright keeps an event loop running in this thread."""
     found = next((path for path in map(shutil.which, NAMES) if path), None)
     if found is None:
         pytest.skip("no Chromium on this machine: install one (Debian: apt-get install chromium)")

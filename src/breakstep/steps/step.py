@@ -94,12 +94,14 @@ class Call:
     @property
     def dt(self) -> float:
         """Time this call advances [s]: the first entry of reduction ``dt`` times ``fraction``."""
-        if "dt" not in self.values:
+        try:
+            first = float(self.values["dt"][0])
+        except KeyError:
             raise DeclarationError(
                 f'{self.where()}: it asks for the time step without declaring so: give the step uses=("dt",), and'
                 " the splitting a reduction called dt"
-            )
-        return float(self.values["dt"][0]) * self.fraction
+            ) from None
+        return first * self.fraction
 
     def require_time_step(self, limit: float, where: str = "") -> None:
         """Refuse a time step that the state at hand does not allow; to be called by every step that has a limit.
