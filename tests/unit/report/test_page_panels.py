@@ -10,12 +10,14 @@ from breakstep.errors import PairsError
 from breakstep.profile.run import Profile
 from breakstep.report.page.cells import Cells, cells_of
 from breakstep.report.page.data import page_data
+from breakstep.report.page.grain import grain_words, larger_is_better
 from breakstep.report.page.numbers import plain, significant
 from breakstep.report.page.panels.columns import columns_panel
 from breakstep.report.page.panels.fronts import fronts_panel
 from breakstep.report.page.panels.idle import IdleTime
 from breakstep.report.page.panels.memory import binned_highest
 from breakstep.report.page.runs import Runs, runs_of
+from breakstep.report.page.waits import blame
 from tests.unit.profile.sketch import manifest
 from tests.unit.report.made import BARRED, FREE
 
@@ -126,14 +128,18 @@ def test_the_words_near_the_top_answer_from_the_figures() -> None:
     answers = {row["question"]: row["answer"] for row in data["answers"]}
     bought = answers["What would leaving lockstep buy?"]
     assert bought.startswith(
-        "13 ms in lockstep, 12 ms tasked on 2 threads: 0.00200 of 0.0260 core-seconds handed back."
+        "13 ms in lockstep, 12 ms tasked on 2 threads: 0.00200 of 0.0260 core-seconds handed back (lockstep less"
+        " tasked; 1 ms of wall time)."
     )
     assert "one pair has no interval" in bought
     why = answers["Why do cores stand idle in lockstep?"]
     idle = sum(lockstep.ledger.accounts_ns[a] for a in ("neighbour", "reduction", "barrier", "unemployed"))
-    assert why.startswith(f"For {100 * idle / lockstep.ledger.available_ns:.0f} % of their time")
+    burn = sum(blame(lockstep, a).get("burn", 0) for a in ("neighbour", "reduction", "barrier", "unemployed"))
+    whole = "Of all idle core-seconds in lockstep, these steps are waited for: burn"
+    assert why.startswith(f"{whole} {100 * burn / idle:.0f} %")
+    assert f"For {100 * idle / lockstep.ledger.available_ns:.0f} % of their time" in why
     assert "waiting at a barrier" in why
-    assert "for burn" in why
+    assert "root of its chain of causes" in why
 
 
 def test_the_largest_advice_is_what_to_do_first() -> None:
@@ -142,6 +148,47 @@ def test_the_largest_advice_is_what_to_do_first() -> None:
     assert data["answers"][-1]["answer"].startswith(
         "Take out the barrier behind burn: by forecast that hands back 500 ms"
     )
+
+
+def advised(**facts: object) -> dict[str, object]:
+    return {"do": "run without barriers", "gain_s": 0.5, "bytes": 0, "memory_bytes": 0, "command": "", **facts}
+
+
+def test_advice_says_what_the_page_measured_and_what_is_not_certain() -> None:
+    lockstep, tasked = pair()
+    command = f"breakstep run x --workers {lockstep.manifest['workers']} --barriers tasked"
+    advice = [advised(command=command), advised(do="cut tiles of 8 x 8 zones", low_s=-0.1, high_s=1.1)]
+    data = page_data(runs_of([lockstep], [tasked]), {"advice": advice})
+    first, second = data["forecast"]["advice"]
+    assert first["measured"] == "measured on this page: 1 ms handed back of 13 ms"
+    assert (first["uncertain"], second["uncertain"], second["measured"]) == (False, True, "")
+    answer = data["answers"][-1]["answer"]
+    assert answer.startswith("Run without barriers: ")
+    assert first["measured"] in answer
+
+
+def grain(best: int, lockstep_best: float) -> dict[str, object]:
+    """Tiles of 8, 16 and 32 zones, recorded with 16; tasked is fastest at one of them."""
+    rows = [
+        {
+            "tile": [edge, edge], "tasks": 6400 // edge, "tiles": 64 // edge, "workers": 2,
+            "lockstep_s": lockstep_best if edge == 32 else 9.0, "tasked_s": 5.0 if edge == best else 6.0,
+        }
+        for edge in (32, 16, 8)
+    ]  # fmt: skip
+    return {"grain": {"recorded_tile": [16, 16, 1], "rows": rows}}
+
+
+def test_the_grain_in_words() -> None:
+    words = grain_words(grain(32, 5.5))
+    assert "lockstep with tiles of 32 \u00d7 32 zones, 5.50 s, is faster than tasked as recorded" in words
+    assert (
+        "The best tile (lockstep and tasked), 32 \u00d7 32, is the largest that was tried and leaves 2 tiles" in words
+    )
+    assert larger_is_better(grain(32, 5.5))
+    assert not larger_is_better(grain(16, 7.0))
+    assert "faster than tasked" not in grain_words(grain(16, 7.0))
+    assert "smallest that was tried and leaves 8 tiles for 2 workers" in grain_words(grain(8, 7.0))
 
 
 def test_numbers_that_json_cannot_hold_become_nothing() -> None:

@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from typing import Any
 
 from breakstep.report.page.cells import cells_of
+from breakstep.report.page.first import marked
 from breakstep.report.page.numbers import plain
 from breakstep.report.page.panels.accounts import accounts_panel
 from breakstep.report.page.panels.chain import chain_panel
@@ -48,6 +49,8 @@ def page_data(runs: Runs, forecast: Mapping[str, Any] | None = None) -> dict[str
         "measured": measured_panel(runs),
         "forecast": dict(forecast or {}),
     }
+    if data["forecast"].get("advice"):
+        data["forecast"]["advice"] = marked(runs, data["forecast"]["advice"])
     data["answers"] = answers(runs, data)
     found: dict[str, Any] = plain(data)
     return found

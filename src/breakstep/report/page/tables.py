@@ -9,8 +9,9 @@ import numpy as np
 
 from breakstep.report.page.figures.forecast import in_order
 from breakstep.report.page.formats import core, digits, percent
+from breakstep.report.page.grain import grain_words, larger_is_better, name_of
 from breakstep.report.page.panels.traffic import by_stage_table
-from breakstep.report.wording import listed, seconds, size
+from breakstep.report.wording import counted, listed, seconds, size
 
 
 def helpers(data: Mapping[str, Any]) -> dict[str, Callable[..., Any]]:
@@ -33,13 +34,17 @@ def helpers(data: Mapping[str, Any]) -> dict[str, Callable[..., Any]]:
         "barrier_rows": lambda: in_order(data["forecast"]["barriers"]),
         "barriers_alt": lambda: _barriers_alt(data["forecast"]["barriers"]),
         "grain_alt": lambda side: _grain_alt(data["forecast"]["grain"], side),
-        "tile_name": tile_name,
+        "tile_name": name_of,
+        "grain_words": lambda: grain_words(data["forecast"]),
+        "larger_is_better": lambda: larger_is_better(data["forecast"]),
+        "threads_words": threads_words,
     }
 
 
-def tile_name(tile: Any) -> str:
-    """A tile's extent, as a number or as numbers along axes."""
-    return " \u00d7 ".join(str(n) for n in tile if n != 1) or "1" if isinstance(tile, list | tuple) else str(tile)
+def threads_words(workers: int, threads: int) -> str:
+    """Workers, and the threads of each: ``2 workers, 1 thread each``."""
+    each = counted(threads // workers, "thread") + " each" if threads % workers == 0 else f"{threads} threads in all"
+    return f"{counted(workers, 'worker')}, {each}"
 
 
 def _front_title(data: Mapping[str, Any], side: str) -> str:
@@ -173,4 +178,4 @@ def _barriers_alt(panel: Mapping[str, Any]) -> str:
 def _grain_alt(panel: Mapping[str, Any], side: str) -> str:
     best = min(panel["rows"], key=lambda row: float(row[f"{side}_s"]))
     least = seconds(best[f"{side}_s"])
-    return f"Forecast run time over tile size, {side}: least {least} with tiles of {tile_name(best['tile'])}."
+    return f"Forecast run time over tile size, {side}: least {least} with tiles of {name_of(best['tile'])}."

@@ -27,10 +27,14 @@ def account_order(runs: Runs) -> list[str]:
     return [*others, *known]
 
 
+def idle_ns(profile: Profile) -> int:
+    """Time in which threads stood idle, all together [ns]."""
+    return sum(profile.ledger.accounts_ns[account] for account in IDLE_ACCOUNTS)
+
+
 def idle_share(profile: Profile) -> float:
     """Part of all core-seconds in which cores stood idle."""
-    ledger = profile.ledger
-    return sum(ledger.accounts_ns[account] for account in IDLE_ACCOUNTS) / max(ledger.available_ns, 1)
+    return idle_ns(profile) / max(profile.ledger.available_ns, 1)
 
 
 def costliest(profile: Profile, stage: str) -> str:

@@ -6,21 +6,33 @@ and what still ties the tiles together.
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
 
 from breakstep.profile.run import Profile
 from breakstep.profile.words import LABELS
-from breakstep.report.page.formats import capital, digits
+from breakstep.report.page.first import caution, first
+from breakstep.report.page.formats import digits
+from breakstep.report.page.grain import larger_is_better
 from breakstep.report.page.runs import Runs
 from breakstep.report.page.spots import HotSpot, hot_spot
-from breakstep.report.page.waits import IDLE_ACCOUNTS, PHRASES, blame, idle_share
-from breakstep.report.reasons import MUCH_ENGINE, MUCH_STOLEN, NOTABLE_SHARE, UNEVEN, share
+from breakstep.report.page.waits import IDLE_ACCOUNTS, PHRASES, blame, idle_ns, idle_share
+from breakstep.report.reasons import NOTABLE_SHARE, UNEVEN, share
 from breakstep.report.wording import in_mode, listed, ratio, seconds
 
-#: Steps named as the ones at fault: so many of the largest as make up this part of the waits, two at most.
-MOST_OF_IT = 0.7
+#: Steps are named as causes of waits where they cause more than this part of them.
+WORTH_NAMING = 0.05
+_TIES = {
+    "neighbour": "neighbour tiles that are not done yet",
+    "reduction": "reductions, values made from all tiles",
+}
+_BESIDES = {
+    "engine": "the dispatch",
+    "stolen": "kernels without a processor",
+    "transfer": "moving bytes and putting ghost zones together",
+}
 
 
 def answers(runs: Runs, data: dict[str, Any]) -> list[dict[str, str]]:
@@ -28,9 +40,10 @@ def answers(runs: Runs, data: dict[str, Any]) -> list[dict[str, str]]:
     found = [
         ("What would leaving lockstep buy?", _bought(runs, data)),
         ("Why do cores stand idle in lockstep?", _why(runs.lockstep) if runs.lockstep else ""),
-        ("Where?", _where(runs)),
-        ("What still ties the tiles together without barriers?", _ties(runs.tasked) if runs.tasked else ""),
-        ("What to do first?", _first(runs, data)),
+        ("Where?", _where(runs, data["forecast"])),
+        ("What still ties the tiles together without barriers?", _ties(runs)),
+        ("Was the machine quiet enough?", caution(runs)),
+        ("What to do first?", first(runs, data["forecast"])),
     ]
     return [{"question": question, "answer": answer} for question, answer in found if answer]
 
@@ -47,8 +60,9 @@ def _bought(runs: Runs, data: dict[str, Any]) -> str:
     gain = runs.comparison.gain
     spans = f"{seconds(left.span_ns / 1e9)} {in_mode(runs.lockstep)}, {seconds(right.span_ns / 1e9)} tasked"
     whole, handed = left.available_ns * 1e-9, (left.available_ns - right.available_ns) * 1e-9
+    saved = seconds(abs(left.span_ns - right.span_ns) / 1e9)
     change = (
-        f"{digits(handed)} of {digits(whole)} core-seconds handed back"
+        f"{digits(handed)} of {digits(whole)} core-seconds handed back (lockstep less tasked; {saved} of wall time)"
         if handed >= 0
         else f"{digits(-handed)} core-seconds more than lockstep's {digits(whole)}"
     )
@@ -81,31 +95,38 @@ def _evidence(median: float, low: float | None, high: float | None, pairs: int) 
     return f"Gain {ratio(median)}, the median of {pairs} pairs, 95 % interval {ratio(low)} to {ratio(high)}. {verdict}"
 
 
-def _culprits(profile: Profile, account: str) -> str:
-    """The steps that most of an account's waits are for: ``46 % of that for burn and 16 % for relax``."""
-    waits = blame(profile, account)
-    total = sum(waits.values())
-    named: list[str] = []
-    covered = 0
-    for step, ns in list(waits.items())[:2]:
-        if covered >= MOST_OF_IT * total or ns < 0.1 * total:
-            break
-        covered += ns
-        named.append(f"{100 * ns / total:.0f} %{'' if named else ' of that'} for {step}")
-    return listed(named)
-
-
 def _why(lockstep: Profile) -> str:
     if lockstep.ledger.threads == 1:
         return "One thread waits for nobody; more workers would show what barriers cost."
-    parts = [f"For {percent(idle_share(lockstep))} of their time {in_mode(lockstep)} cores have nothing to run."]
-    for account in sorted(IDLE_ACCOUNTS, key=lambda a: -share(lockstep, a)):
-        if share(lockstep, account) >= NOTABLE_SHARE:
-            culprits = _culprits(lockstep, account)
-            part = percent(share(lockstep, account))
-            parts.append(f"{part} is {PHRASES[account]}{f', {culprits}' if culprits else ''}.")
-    parts += _unevenness(lockstep)
-    return " ".join(parts)
+    causes = _shares(_idle_by_step(lockstep), idle_ns(lockstep))
+    blamed = f"Of all idle core-seconds in lockstep, these steps are waited for: {listed(causes)}. " if causes else ""
+    kinds = sorted(IDLE_ACCOUNTS, key=lambda a: -share(lockstep, a))
+    parts = [
+        f"{percent(share(lockstep, account))} {PHRASES[account]}"
+        for account in kinds
+        if share(lockstep, account) >= NOTABLE_SHARE
+    ]
+    spent = f": {listed(parts)}" if parts else ""
+    text = (
+        f"{blamed}For {percent(idle_share(lockstep))} of their time {in_mode(lockstep)} cores have nothing to"
+        f" run{spent}."
+    )
+    charged = "A wait is charged to the step at the root of its chain of causes." if causes else ""
+    return " ".join(part for part in [text, charged, *_unevenness(lockstep)] if part)
+
+
+def _idle_by_step(profile: Profile) -> dict[str, int]:
+    """Idle nanoseconds of all kinds by the step that they are for, the largest first."""
+    by_step: dict[str, int] = {}
+    for account in IDLE_ACCOUNTS:
+        for step, ns in blame(profile, account).items():
+            by_step[step] = by_step.get(step, 0) + ns
+    return dict(sorted(by_step.items(), key=lambda item: -item[1]))
+
+
+def _shares(by_step: dict[str, int], whole: int) -> list[str]:
+    """Steps with their part of a whole, those that are worth a word: ``burn 41 %``."""
+    return [f"{step} {percent(ns / whole)}" for step, ns in by_step.items() if ns > WORTH_NAMING * whole]
 
 
 def _unevenness(lockstep: Profile) -> list[str]:
@@ -124,12 +145,13 @@ def _unevenness(lockstep: Profile) -> list[str]:
     ]
 
 
-def _where(runs: Runs) -> str:
+def _where(runs: Runs, forecast: Mapping[str, Any]) -> str:
     spot = hot_spot(runs.either)
-    return "" if spot is None else _spot_words(spot)
+    remedy = "placement" if larger_is_better(forecast) else "placement or smaller tiles"
+    return "" if spot is None else _spot_words(spot, remedy)
 
 
-def _spot_words(spot: HotSpot) -> str:
+def _spot_words(spot: HotSpot, remedy: str) -> str:
     if spot.tiles_for_half > 0.35 * spot.tiles:
         return f"Nowhere in particular: {spot.step}, the most uneven step, is spread over most tiles."
     tiles = "tile" if len(spot.named) == 1 else "tiles"
@@ -138,29 +160,38 @@ def _spot_words(spot: HotSpot) -> str:
         f" {tiles} {listed(spot.named)}."
     )
     if spot.stays >= 0.8:
-        return text + " They stay the costliest throughout, so placement or smaller tiles would help, not only tasks."
+        return text + f" They stay the costliest throughout, so {remedy} would help, not only tasks."
     return text + f" The costliest tile changes: it is the same in {100 * spot.stays:.0f} % of the cycles."
 
 
-def _ties(tasked: Profile) -> str:
+def _ties(runs: Runs) -> str:
+    tasked = runs.tasked
+    if tasked is None:
+        return ""
     if tasked.ledger.threads == 1:
         return "Nothing: there is one thread."
-    idle = idle_share(tasked)
-    parts = [f"Tasked, cores still have nothing to run for {percent(idle)} of their time."]
-    causes = {
-        "neighbour": "neighbour tiles that are not done yet",
-        "reduction": "reductions, values made from all tiles",
-    }
-    for account in sorted(causes, key=lambda a: -share(tasked, a)):
+    parts = [f"Tasked, cores still have nothing to run for {percent(idle_share(tasked))} of their time."]
+    for account in sorted(_TIES, key=lambda a: -share(tasked, a)):
         part = share(tasked, account)
         if part >= NOTABLE_SHARE / 4:
-            culprits = _culprits(tasked, account)
-            parts.append(f"{percent(part)} waits for {causes[account]}{f', {culprits}' if culprits else ''}.")
-    if share(tasked, "transfer") >= NOTABLE_SHARE:
-        parts.append(
-            f"A further {percent(share(tasked, 'transfer'))} goes to moving bytes and putting ghost zones together."
-        )
-    return " ".join([*parts, *_lags(tasked)])
+            causes = _shares(blame(tasked, account), tasked.ledger.accounts_ns[account])
+            of_it = f"; of that {listed(causes)}" if causes else ""
+            parts.append(f"{percent(part)} waits for {_TIES[account]}{of_it}.")
+    return " ".join([*parts, *_besides(tasked), *_lags(tasked), *_same_lags(runs)])
+
+
+def _besides(tasked: Profile) -> list[str]:
+    """The large accounts that are no waiting."""
+    large = sorted((a for a in _BESIDES if share(tasked, a) >= NOTABLE_SHARE), key=lambda a: -share(tasked, a))
+    if not large:
+        return []
+    named = listed([f"{percent(share(tasked, account))} to {_BESIDES[account]}" for account in large])
+    return [f"Besides, {named}: no waiting, but no physics."]
+
+
+def _same_lags(runs: Runs) -> list[str]:
+    lags = [profile.manifest["notes"].get("lags", {}) for profile in runs.sides.values()]
+    return ["Both runs use the same lags."] if len(lags) == 2 and lags[0] and lags[0] == lags[1] else []
 
 
 def _lags(tasked: Profile) -> list[str]:
@@ -178,43 +209,3 @@ def _lags(tasked: Profile) -> list[str]:
         verb = "it is" if len(late) == 1 else "they are"
         found.append(f"The reductions {listed(late)} may be used late, so {verb} no barrier in disguise.")
     return found
-
-
-def _first(runs: Runs, data: dict[str, Any]) -> str:
-    """A caution where the machine was busy; then the forecast's first advice, or what the accounts suggest."""
-    profile = runs.tasked or runs.either
-    advice = data["forecast"].get("advice") or []
-    found = _advice(advice[0]) if advice else _remedy(runs, profile)
-    if share(profile, "stolen") <= MUCH_STOLEN:
-        return found
-    return (
-        f"Measure again on a quiet machine: for {percent(share(profile, 'stolen'))} of the time kernels had no"
-        f" processor, because something else had it. If the figures stay: {found[0].lower()}{found[1:]}"
-    )
-
-
-def _advice(best: dict[str, Any]) -> str:
-    of = f" of {seconds(float(best['baseline_s']))}" if "baseline_s" in best else ""
-    gain = seconds(float(best["gain_s"]))
-    return f"{capital(str(best['do']))}: by forecast that hands back {gain}{of}. The list at the end has more."
-
-
-def _remedy(runs: Runs, profile: Profile) -> str:
-    engine = share(profile, "engine")
-    if engine > MUCH_ENGINE:
-        mean = _mean_ms(profile)
-        return f"Use larger tiles: the dispatch takes {percent(engine)} of the time, with tasks of {mean:.2g} ms."
-    if runs.lockstep is not None and share(runs.lockstep, "barrier") >= NOTABLE_SHARE:
-        step = next(iter(blame(runs.lockstep, "barrier")), "")
-        return f"Take out the barrier behind {step}: more waiting at barriers is for {step} than for any other step."
-    if runs.lockstep is not None:
-        return "Leave the barriers as they are: little is lost at them."
-    step = next(iter(blame(profile, "neighbour")), "")
-    if step and share(profile, "neighbour") >= NOTABLE_SHARE:
-        return f"Spread {step} better, by placement or smaller tiles: most waiting for neighbour tiles is for {step}."
-    return "Nothing stands out. A lockstep run beside this one would say what barriers cost."
-
-
-def _mean_ms(profile: Profile) -> float:
-    steps = profile.tasks[(profile.tasks["kind"] == "step").to_numpy()]
-    return float((steps["end_ns"] - steps["start_ns"]).mean()) / 1e6 if len(steps) else 0.0
