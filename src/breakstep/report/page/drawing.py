@@ -15,6 +15,8 @@ from markupsafe import Markup
 from breakstep.report.page.palette import DASHES
 
 CELL = 10
+#: Centres this close are neighbours on the map, corner to corner at most; others meet around a periodic edge.
+NEAR = 1.6 * CELL
 _DASH_LENGTHS = {"solid": "", "dashed": "6 3", "dotted": "2 2", "dashdot": "6 2 2 2"}
 
 
@@ -45,25 +47,49 @@ def _centre(cells: Mapping[str, Any], cell: int) -> tuple[float, float]:
     return column * CELL + CELL / 2, row * CELL + CELL / 2
 
 
+def corners(cells: Mapping[str, Any]) -> tuple[str, str]:
+    """The names of the cells at a map's lower left and upper right; nothing where no cell is."""
+    at = {tuple(place): str(cells["labels"][cell]) for cell, place in enumerate(cells["places"])}
+    return at.get((0, cells["rows"] - 1), ""), at.get((cells["columns"] - 1, 0), "")
+
+
+def _apart(cells: Mapping[str, Any], a: int, b: int) -> float:
+    (x, y), (u, v) = _centre(cells, a), _centre(cells, b)
+    return math.hypot(u - x, v - y)
+
+
+def goes_around(data: Mapping[str, Any], side: str) -> bool:
+    """Whether bytes cross a periodic edge, from one rim of the map to the other."""
+    return any(_apart(data["cells"], a, b) >= NEAR for a, b, _ in data["traffic"][side]["faces"])
+
+
 def face_lines(data: Mapping[str, Any], side: str) -> Markup:
-    """Lines between cells that exchange bytes; stubs at both ends where they meet around a periodic edge."""
+    """Lines between cells that exchange bytes; arrows at both ends where they meet around a periodic edge."""
     cells, faces = data["cells"], data["traffic"][side]["faces"]
     most = max((count for _, _, count in faces), default=1)
     lines = []
     for a, b, count in faces:
-        (x, y), (u, v) = _centre(cells, a), _centre(cells, b)
+        start, end = _centre(cells, a), _centre(cells, b)
         width = 0.3 + 1.4 * count / most
-        apart = math.hypot(u - x, v - y)
-        paths = [(x, y, u, v)] if apart < 1.6 * CELL else [_stub(x, y, u, v, apart), _stub(u, v, x, y, apart)]
-        for p, q, r, s in paths:
-            lines.append(f'<path class="face" stroke-width="{width:.2f}" d="M{p:.1f} {q:.1f}L{r:.1f} {s:.1f}"/>')
+        if _apart(cells, a, b) < NEAR:
+            lines.append(_face(*start, *end, width))
+        else:
+            lines += [_arrow(*start, *end, width), _arrow(*end, *start, width)]
     return Markup("".join(lines))
 
 
-def _stub(x: float, y: float, u: float, v: float, apart: float) -> tuple[float, float, float, float]:
-    """A short line from one cell away from the other."""
-    reach = 0.55 * CELL / apart
-    return x, y, x - (u - x) * reach, y - (v - y) * reach
+def _face(x: float, y: float, u: float, v: float, width: float) -> str:
+    return f'<path class="face" stroke-width="{width:.2f}" d="M{x:.1f} {y:.1f}L{u:.1f} {v:.1f}"/>'
+
+
+def _arrow(x: float, y: float, u: float, v: float, width: float) -> str:
+    """From one cell's centre away from the other cell, with its tip inside the cell's edge."""
+    apart = math.hypot(u - x, v - y)
+    p, q = (x - u) / apart, (y - v) / apart
+    neck, tip, half = 0.2 * CELL, 0.44 * CELL, 0.55 * width + 0.5
+    left, right = (f"{x + neck * p + s * q:.1f} {y + neck * q - s * p:.1f}" for s in (half, -half))
+    head = f'<path class="tip-of-face" d="M{left}L{x + tip * p:.1f} {y + tip * q:.1f}L{right}Z"/>'
+    return _face(x, y, x + neck * p, y + neck * q, width).replace('class="face"', 'class="face to-rim"') + head
 
 
 def _balls(data: Mapping[str, Any], side: str) -> list[tuple[int, int]]:

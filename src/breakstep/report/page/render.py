@@ -22,6 +22,7 @@ from breakstep.report.page.figures.forecast import barriers_figure, grain_figure
 from breakstep.report.page.figures.fronts import fronts_figure
 from breakstep.report.page.figures.lines import kinds_figure, memory_figure, unevenness_figure
 from breakstep.report.page.palette import DARK, HATCHES, LIGHT, STEPS
+from breakstep.report.page.panels.accounts import FACTORS
 
 #: What ends or opens something inside a script element, as JSON can also write it.
 _UNSAFE = {"<": "\\u003c", ">": "\\u003e", "&": "\\u0026", "\u2028": "\\u2028", "\u2029": "\\u2029"}
@@ -55,6 +56,9 @@ def page_html(data: Mapping[str, Any]) -> str:
         box=drawing.box,
         borders=drawing.borders,
         face_lines=partial(drawing.face_lines, data),
+        goes_around=partial(drawing.goes_around, data),
+        corners=drawing.corners(data["cells"]),
+        factor_meanings=FACTORS,
         chain_marks=partial(drawing.chain_marks, data),
         link_number=partial(drawing.link_number, data),
         line_sample=partial(drawing.line_sample, tokens),

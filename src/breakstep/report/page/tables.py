@@ -6,6 +6,7 @@ from collections.abc import Callable, Mapping
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from breakstep.report.page.figures.forecast import in_order
 from breakstep.report.page.formats import core, digits, percent
@@ -67,16 +68,23 @@ def _front_alt(data: Mapping[str, Any], side: str) -> str:
 
 
 def _first_moment(fronts: Mapping[str, Any], most: int = 1000) -> int:
-    """The slider's first place: where tiles are spread over most cycles, the later of equals left out."""
+    """The slider's first place: off the first run's fronts, where tiles are spread over most cycles."""
     end = max(panel["span_s"] for panel in fronts.values())
     panel = list(fronts.values())[-1]
     moments = np.linspace(0.0, end, most + 1)
     lines = np.asarray(panel["front_s"][1:-1])
     if not len(lines):
         return most // 3
+    on_front = _on_front(next(iter(fronts.values())), moments, 0.012 * end)
     under_way = ((lines.min(axis=1)[:, None] <= moments) & (moments < lines.max(axis=1)[:, None])).sum(axis=0)
     ahead = np.abs((lines <= moments[:, None, None]).mean(axis=2) % 1.0 - 0.5).min(axis=1)
-    return int(np.lexsort((moments, ahead, -under_way))[0])
+    return int(np.lexsort((moments, ahead, -under_way, on_front))[0])
+
+
+def _on_front(panel: Mapping[str, Any], moments: NDArray[np.float64], room: float) -> NDArray[np.bool_]:
+    """Whether moments lie on a front, or so close that the eye cannot tell on which side."""
+    lines = np.asarray(panel["front_s"])
+    return np.asarray((np.abs(lines.reshape(1, -1) - moments[:, None]) < room).any(axis=1), dtype=np.bool_)
 
 
 def _front_rows(data: Mapping[str, Any]) -> list[list[str]]:

@@ -29,7 +29,7 @@ _TIES = {
     "reduction": "reductions, values made from all tiles",
 }
 _BESIDES = {
-    "engine": "the dispatch",
+    "engine": "dispatch",
     "stolen": "kernels without a processor",
     "transfer": "moving bytes and putting ghost zones together",
 }
@@ -185,8 +185,8 @@ def _besides(tasked: Profile) -> list[str]:
     large = sorted((a for a in _BESIDES if share(tasked, a) >= NOTABLE_SHARE), key=lambda a: -share(tasked, a))
     if not large:
         return []
-    named = listed([f"{percent(share(tasked, account))} to {_BESIDES[account]}" for account in large])
-    return [f"Besides, {named}: no waiting, but no physics."]
+    named = listed([f"{_BESIDES[account]} {percent(share(tasked, account))}" for account in large])
+    return [f"No waiting for tiles, but no physics either: {named}."]
 
 
 def _same_lags(runs: Runs) -> list[str]:

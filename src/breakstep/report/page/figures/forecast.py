@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from typing import Any
 
-from bokeh.models import ColumnDataSource, FixedTicker
+from bokeh.models import ColumnDataSource, FixedTicker, Span
 from bokeh.plotting import figure
 
 from breakstep.report.page.figures.style import hover, new_figure, on_paper, words
@@ -95,31 +95,42 @@ def barriers_figure(panel: dict[str, Any]) -> figure:
     left, right = min(0.0, *ends), max(*ends, 1e-9)
     reach = right - left
     plot = new_figure(
-        70 + 46 * count, (left - 0.03 * reach, right + 0.3 * reach), (-count + 0.4, 0.75), name="barriers"
+        70 + 46 * count, (left - 0.06 * reach, right + 0.3 * reach), (-count + 0.4, 0.75), name="barriers"
     )
-    plot.xaxis.axis_label = "seconds handed back of the lockstep run"
+    plot.xaxis.axis_label = "wall time handed back of the lockstep run, s"
     plot.yaxis.visible = False
     plot.ygrid.grid_line_color = None
     source = ColumnDataSource(
         {
             "y": places, "left": [row["from_s"] for row in rows], "right": [row["until_s"] for row in rows],
             "what": [row["what"] for row in rows], "alone": [row["alone_s"] for row in rows],
-            "alone_shown": [f"{row['alone_s']:.4g}" for row in rows],
-            "step_shown": [f"{row['in_order_s']:.4g}" for row in rows],
+            "alone_shown": [_minus(f"{row['alone_s']:.4g}") for row in rows],
+            "step_shown": [_minus(f"{row['in_order_s']:.4g}") for row in rows],
         }
     )  # fmt: skip
+    plot.segment([0.0] * count, places, [row["alone_s"] for row in rows], places, line_color=LIGHT["axis"])
+    plot.add_layout(Span(location=0, dimension="height", line_color=LIGHT["axis"]))
     bars = plot.hbar(y="y", left="left", right="right", height=0.22, source=source, fill_color=LIGHT["tasked"],
                      line_color=None, name="barrier-bars")  # fmt: skip
     plot.scatter("right", "y", source=source, size=11, fill_color=LIGHT["tasked"], line_color=LIGHT["paper"])
     diamonds = plot.scatter("alone", "y", source=source, size=9, marker="diamond", fill_color=LIGHT["paper"],
                             line_color=LIGHT["ink"], line_width=1.5)  # fmt: skip
     names = [f"{place + 1}. {row['what']}" for place, row in enumerate(rows)]
-    words(plot, x=[left - 0.02 * reach] * count, y=[0.36 + y for y in places], text=names)
+    words(plot, x=[left - 0.02 * reach] * count, y=[0.4 + y for y in places], text=names)
     words(plot, x=[max(row["from_s"], row["until_s"], row["alone_s"]) for row in rows], y=places,
-          text=[f"{row['in_order_s']:+.2g} s" for row in rows], text_color=LIGHT["tasked"], text_font_style="bold",
+          text=[f"{_signed(row['in_order_s'])} s" for row in rows], text_color=LIGHT["tasked"], text_font_style="bold",
           x_offset=12)  # fmt: skip
     hover(plot, [bars, diamonds], [("", "what"), ("in this order, s", "step_shown"), ("alone, s", "alone_shown")])
     return plot
+
+
+def _minus(text: str) -> str:
+    return text.replace("-", "\u2212")
+
+
+def _signed(value: float) -> str:
+    """With its sign, unless it is nothing."""
+    return _minus(f"{value:+.2g}") if value else "0"
 
 
 def grain_figure(panel: dict[str, Any], side: str) -> figure:
@@ -145,8 +156,9 @@ def grain_figure(panel: dict[str, Any], side: str) -> figure:
                         name=f"grain-dots-{side}")  # fmt: skip
     best = times.index(min(times))
     align = "left" if best == 0 else "right" if best == len(times) - 1 else "center"
-    words(plot, x=[best], y=[times[best]], text=[f"best: {names[best]}, {seconds(times[best])}"], y_offset=-22,
-          text_align=align, text_color=LIGHT[side], text_font_style="bold", **on_paper())  # fmt: skip
+    plot.segment([best], [times[best]], [best], [0.89 * top], line_color=LIGHT[side], line_dash="dotted")
+    words(plot, x=[best], y=[0.94 * top], text=[f"best: {names[best]}, {seconds(times[best])}"], text_align=align,
+          text_color=LIGHT[side], text_font_style="bold", **on_paper())  # fmt: skip
     hover(plot, [dots], [("tile", "tile"), ("tasks", "tasks"), ("run time", "shown")])
     return plot
 

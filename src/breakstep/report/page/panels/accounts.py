@@ -11,6 +11,14 @@ from breakstep.report.page.numbers import seconds, share, significant
 from breakstep.report.page.runs import Runs
 from breakstep.report.page.waits import blame, costliest
 
+#: What each efficiency factor means, 1 being perfect.
+FACTORS = {
+    "load balance": "mean thread\u2019s time in kernels over the busiest thread\u2019s",
+    "serialisation": "what is left after tasks wait for each other: 1 if the busiest thread never waits",
+    "transfer": "what is left after bytes and dispatch: 1 if both take no time",
+    "parallel efficiency": "time in kernels over threads \u00d7 time: the product of the three",
+}
+
 
 def accounts_panel(runs: Runs) -> dict[str, Any]:
     """For each run ``accounts``, ``steps``, ``waits_for``, ``factors``; whole nanoseconds where the ledger has them."""
