@@ -182,3 +182,16 @@ def test_the_head_says_what_the_numbers_say(opened: Open) -> None:
     for answer in found.data["answers"]:
         assert found.page.get_by_text(answer["question"], exact=True).count() == 1
         assert found.page.get_by_text(answer["answer"], exact=True).count() == 1
+
+
+def test_the_words_are_explained_and_advice_is_marked(opened: Open) -> None:
+    found = opened()
+    words = found.page.locator("details.words")
+    assert not words.locator("dl").is_visible()
+    words.locator("summary").click()
+    assert words.locator("dt", has_text="lockstep, tasked").is_visible()
+    listed = found.page.locator(".advice li").all_inner_texts()
+    for row, text in zip(found.data["forecast"]["advice"], listed, strict=True):
+        assert row["do"].lower() in text.lower()
+        assert ("Not certain to gain" in text) == row["uncertain"]
+    assert found.data["answers"][-1]["answer"].lower().startswith(found.data["forecast"]["advice"][0]["do"].lower())

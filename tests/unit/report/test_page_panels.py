@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import re
+
 import numpy as np
 import pandas as pd
 import pytest
@@ -10,6 +12,7 @@ from breakstep.errors import PairsError
 from breakstep.profile.run import Profile
 from breakstep.report.page.cells import Cells, cells_of
 from breakstep.report.page.data import page_data
+from breakstep.report.page.drawing import corners, face_lines, goes_around
 from breakstep.report.page.grain import grain_words, larger_is_better
 from breakstep.report.page.numbers import plain, significant
 from breakstep.report.page.panels.columns import columns_panel
@@ -17,6 +20,7 @@ from breakstep.report.page.panels.fronts import fronts_panel
 from breakstep.report.page.panels.idle import IdleTime
 from breakstep.report.page.panels.memory import binned_highest
 from breakstep.report.page.runs import Runs, runs_of
+from breakstep.report.page.tables import first_moment, threads_words
 from breakstep.report.page.waits import blame
 from tests.unit.profile.sketch import manifest
 from tests.unit.report.made import BARRED, FREE
@@ -196,3 +200,43 @@ def test_numbers_that_json_cannot_hold_become_nothing() -> None:
     assert significant(float("inf")) is None
     assert significant(123456.0, 3) == 123000.0
     assert significant(0.0) == 0.0
+
+
+ROW_OF_THREE = {"columns": 3, "rows": 1, "places": [[0, 0], [1, 0], [2, 0]], "labels": ["0", "1", "2"]}
+
+
+def test_bytes_across_a_periodic_edge_end_in_arrows_inside_the_map() -> None:
+    around = {"cells": ROW_OF_THREE, "traffic": {"tasked": {"faces": [[0, 1, 100], [0, 2, 100]]}}}
+    drawn = str(face_lines(around, "tasked"))
+    assert goes_around(around, "tasked")
+    assert drawn.count("tip-of-face") == 2
+    corners_of_heads = [float(x) for x in re.findall(r"[ML]([-\d.]+) ", drawn)]
+    assert 0 < min(corners_of_heads) < 1.5  # the tip of the arrow to the left: within the first cell, close to its edge
+    assert 28.5 < max(corners_of_heads) < 30
+    straight = {"cells": ROW_OF_THREE, "traffic": {"tasked": {"faces": [[0, 1, 100]]}}}
+    assert not goes_around(straight, "tasked")
+    assert "tip-of-face" not in face_lines(straight, "tasked")
+
+
+def test_corners_of_a_map_are_named() -> None:
+    square = {
+        "columns": 2, "rows": 2, "places": [[0, 1], [1, 1], [0, 0], [1, 0]], "labels": ["0,0", "1,0", "0,1", "1,1"],
+    }  # fmt: skip
+    assert corners(square) == ("0,0", "1,1")
+    assert corners({**square, "columns": 3}) == ("0,0", "")
+
+
+def test_the_slider_begins_off_the_first_runs_fronts() -> None:
+    """Lockstep begins cycles at 0, 1, 2, 3 s; tasked is spread most from 0.9 to 1.1 s, over that very front."""
+    lockstep = {"span_s": 4.0, "front_s": [[0.0, 0.0], [1.0, 1.0], [2.0, 2.0], [3.0, 3.0], [4.0, 4.0]]}
+    tasked = {"span_s": 4.0, "front_s": [[0.0, 0.0], [0.9, 1.1], [2.0, 2.0], [3.0, 3.0], [4.0, 4.0]]}
+    moment = first_moment({"lockstep": lockstep, "tasked": tasked}) * 4.0 / 1000
+    assert 0.9 <= moment < 1.0 - 0.04
+
+
+@pytest.mark.parametrize(
+    ("workers", "threads", "words"),
+    [(2, 2, "2 workers, 1 thread each"), (1, 4, "1 worker, 4 threads each"), (2, 3, "2 workers, 3 threads in all")],
+)
+def test_workers_and_their_threads(workers: int, threads: int, words: str) -> None:
+    assert threads_words(workers, threads) == words

@@ -20,7 +20,7 @@ def helpers(data: Mapping[str, Any]) -> dict[str, Callable[..., Any]]:
     return {
         "front_title": lambda side: _front_title(data, side),
         "front_alt": lambda side: _front_alt(data, side),
-        "first_moment": lambda: _first_moment(data["fronts"]),
+        "first_moment": lambda: first_moment(data["fronts"]),
         "front_rows": lambda: _front_rows(data),
         "columns_alt": lambda: _columns_alt(data),
         "costliest_bin": lambda: _costliest_bin(data),
@@ -67,7 +67,7 @@ def _front_alt(data: Mapping[str, Any], side: str) -> str:
     )
 
 
-def _first_moment(fronts: Mapping[str, Any], most: int = 1000) -> int:
+def first_moment(fronts: Mapping[str, Any], most: int = 1000) -> int:
     """The slider's first place: off the first run's fronts, where tiles are spread over most cycles."""
     end = max(panel["span_s"] for panel in fronts.values())
     panel = list(fronts.values())[-1]
