@@ -21,7 +21,7 @@ from distributed import Client
 
 from breakstep.profile.store import read_profile
 
-pytestmark = pytest.mark.cluster
+pytestmark = [pytest.mark.cluster, pytest.mark.slow]
 
 TINY = ("quiet_gas", "--set", "mesh.zones=[64, 64]", "--set", "mesh.tile=[16, 32]", "--set", "run.cycles=4")
 WORKERS = 2

@@ -30,7 +30,7 @@ from tests.cluster.hazards import PLANE, TILE, Killer, lasting_program, pids
 from tests.cluster.residents import CLEAN, record, serial, traces
 from tests.toys import Toy
 
-pytestmark = pytest.mark.cluster
+pytestmark = [pytest.mark.cluster, pytest.mark.slow]
 
 ROOT = Path(__file__).parents[2]
 LOST_SECONDS = 10.0  # a lost worker is noticed at the next look, each 0.25 s apart; the rest is a loaded machine's

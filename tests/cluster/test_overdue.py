@@ -20,7 +20,7 @@ from breakstep.profile.store import read_profile
 from tests.cluster.conftest import NOTHING, leftovers
 from tests.stuck import STUCK
 
-pytestmark = pytest.mark.cluster
+pytestmark = [pytest.mark.cluster, pytest.mark.slow]
 
 SENTENCE = re.compile(
     r"step smooth, tile 1, cycle 2, worker \d at tcp://\S+: the kernel has not returned for \S+ s, and 1 s are allowed;"

@@ -14,7 +14,7 @@ from breakstep.report.page.runs import Runs, runs_of
 from tests.page.conftest import Open, recorded, write_page
 from tests.page.test_reading import COLUMN, tip_at
 
-pytestmark = pytest.mark.page
+pytestmark = [pytest.mark.page, pytest.mark.slow]
 
 
 @pytest.mark.parametrize("theme", ["light", "dark"])

@@ -10,7 +10,7 @@ from playwright.sync_api import Page
 
 from tests.page.conftest import Open
 
-pytestmark = pytest.mark.page
+pytestmark = [pytest.mark.page, pytest.mark.slow]
 
 #: The middle of each run's column, on the figure's own axis.
 COLUMN = {"lockstep": 0.5, "tasked": 2.5}
