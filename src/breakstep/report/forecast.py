@@ -88,7 +88,7 @@ def _span(row: Mapping[str, Any], mode: str) -> str:
 
 
 def _short(value: float) -> str:
-    return f"{value:.3g}" if value < 100.0 else f"{value:.0f}"
+    return f"{value:#.3g}" if value < 100.0 else f"{value:.0f}"
 
 
 def notes(figures: Mapping[str, Any]) -> list[str]:
